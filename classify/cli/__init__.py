@@ -1,0 +1,1 @@
+"""See DEVELOPERS.md for what this room holds."""

@@ -1,0 +1,65 @@
+"""The command `landassay`: imports only the command asked for, and turns our errors into exit code 1."""
+
+from __future__ import annotations
+
+import sys
+from importlib import import_module
+
+import click
+
+from classify import __version__
+
+# command -> (module that defines `command`, one line of help). Kept here so that --help imports nothing else.
+COMMANDS = {
+    "new": ("classify.cli.new", "Start a project, or export the schema of project files."),
+    "check": ("classify.cli.check", "Read everything, touch nothing, list every problem."),
+    "train": ("classify.cli.train", "Fit the model and screen it on held-out polygons."),
+    "classify": ("classify.cli.classify", "Map the scene with the trained model."),
+    "assess": ("classify.cli.assess", "Estimate accuracy and areas from a labelled reference sample."),
+    "report": ("classify.cli.report", "Write the report."),
+    "run": ("classify.cli.run", "Run every stage that is stale, in order."),
+    "status": ("classify.cli.status", "Say which stages are done, stale or missing."),
+}
+
+
+class _LazyGroup(click.Group):
+    def list_commands(self, ctx: click.Context) -> list[str]:
+        return list(COMMANDS)
+
+    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:
+        if cmd_name not in COMMANDS:
+            return None
+        command = import_module(COMMANDS[cmd_name][0]).command
+        assert isinstance(command, click.Command), cmd_name
+        return command
+
+    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
+        with formatter.section("Commands"):
+            formatter.write_dl([(name, line) for name, (_, line) in COMMANDS.items()])
+
+
+@click.group(cls=_LazyGroup, context_settings={"help_option_names": ["-h", "--help"]})
+@click.version_option(__version__, prog_name="landassay")
+def cli() -> None:
+    """Land-cover maps from reflectance scenes, with accuracy and areas that say what evidence they rest on."""
+
+
+def entry() -> None:
+    """Run the command line. Exits 0 on success, 1 on a problem the user can mend, 2 on wrong usage."""
+    try:
+        cli.main(standalone_mode=False)
+    except click.exceptions.Abort:
+        click.echo("Stopped. Finished outputs are kept; run the same command again to go on.", err=True)
+        sys.exit(130)
+    except click.ClickException as error:
+        error.show()
+        sys.exit(error.exit_code)
+    except click.exceptions.Exit as error:
+        sys.exit(error.exit_code)
+    except Exception as error:
+        from classify.errors import LandassayError
+
+        if not isinstance(error, LandassayError):
+            raise
+        click.echo(f"landassay: {error}", err=True)
+        sys.exit(1)

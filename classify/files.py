@@ -1,0 +1,110 @@
+"""Files written whole or not at all, and their fingerprints.
+
+Every output goes to a temporary name beside its target, is flushed to disk and then renamed, so that a crash leaves
+the old file or the new one. Temporary names end in `TEMPORARY_SUFFIX`; stages remove leftovers of a killed run.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import os
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Any
+from uuid import uuid4
+
+from classify.errors import DataError, OutputError
+
+TEMPORARY_SUFFIX = ".landassay-part"
+
+
+@contextmanager
+def replacing(target: Path) -> Iterator[Path]:
+    """A temporary path beside `target`, with the same extension; renamed over it when the context ends well.
+
+    The caller writes the file and closes it inside the context. On any exception the temporary file is removed and
+    `target` is untouched. Raises OutputError when the folder or the file cannot be written.
+    """
+    temporary = target.with_name(f".{target.stem}.{uuid4().hex[:8]}{TEMPORARY_SUFFIX}{target.suffix}")
+    try:
+        target.parent.mkdir(parents=True, exist_ok=True)
+        yield temporary
+        _flush(temporary)
+        temporary.replace(target)
+        _flush_folder(target.parent)
+    except OSError as error:
+        reason = error.strerror or str(error)
+        raise OutputError(
+            f"cannot be written: {reason}", where=str(target), fix="free some space or choose a folder you may write to"
+        ) from error
+    finally:
+        temporary.unlink(missing_ok=True)
+
+
+def write_bytes(target: Path, content: bytes) -> None:
+    """Write a whole file, crash-safe. Raises OutputError."""
+    with replacing(target) as temporary:
+        temporary.write_bytes(content)
+
+
+def write_text(target: Path, content: str) -> None:
+    """Write a whole UTF-8 file with \\n line ends, crash-safe. Raises OutputError."""
+    write_bytes(target, content.encode("utf-8"))
+
+
+def write_json(target: Path, content: Mapping[str, Any]) -> None:
+    """Write JSON that any program reads: UTF-8, two-space indent, never NaN or Infinity. Raises OutputError."""
+    write_text(target, json.dumps(content, indent=2, ensure_ascii=False, allow_nan=False) + "\n")
+
+
+def read_json(path: Path) -> dict[str, Any]:
+    """Read a JSON object. Raises DataError naming file, line and column."""
+    try:
+        content = json.loads(path.read_text(encoding="utf-8-sig"))
+    except FileNotFoundError as error:
+        raise DataError("there is no such file", where=str(path)) from error
+    except (UnicodeDecodeError, json.JSONDecodeError) as error:
+        raise DataError(f"this is not valid JSON: {error}", where=str(path)) from error
+    except OSError as error:
+        raise DataError(f"the file cannot be read: {error.strerror}", where=str(path)) from error
+    if not isinstance(content, dict):
+        raise DataError("a JSON object is expected at the top", where=str(path))
+    return content
+
+
+def sha256(path: Path) -> str:
+    """SHA-256 of a file in hexadecimal, read in pieces. Raises DataError."""
+    digest = hashlib.sha256()
+    try:
+        with path.open("rb") as stream:
+            while piece := stream.read(1 << 20):
+                digest.update(piece)
+    except OSError as error:
+        raise DataError(f"the file cannot be read: {error.strerror}", where=str(path)) from error
+    return digest.hexdigest()
+
+
+def remove_leftovers(folder: Path) -> int:
+    """Delete temporary files that a killed run left in `folder` (not below it). Returns how many."""
+    found = [path for path in folder.glob(f".*{TEMPORARY_SUFFIX}*") if path.is_file()]
+    for path in found:
+        path.unlink(missing_ok=True)
+    return len(found)
+
+
+def _flush(path: Path) -> None:
+    with path.open("rb+") as stream:
+        os.fsync(stream.fileno())
+
+
+def _flush_folder(folder: Path) -> None:
+    # Windows cannot open a folder; there the rename itself is durable enough.
+    if os.name == "nt":
+        return
+    descriptor = os.open(folder, os.O_RDONLY)
+    try:
+        os.fsync(descriptor)
+    finally:
+        os.close(descriptor)

@@ -1,0 +1,37 @@
+"""The project file as typed models, and the presets that ship in configs/."""
+
+from classify.settings.load import load_project, parse_project, project_schema
+from classify.settings.model import (
+    BandSettings,
+    ClassSettings,
+    FeatureSettings,
+    MapSettings,
+    MaskSettings,
+    ModelSettings,
+    Project,
+    ReferenceSettings,
+    ReportSettings,
+    SceneSettings,
+    TrainingSettings,
+)
+from classify.settings.presets import configs_folder, load_preset, preset_names
+
+__all__ = [
+    "BandSettings",
+    "ClassSettings",
+    "FeatureSettings",
+    "MapSettings",
+    "MaskSettings",
+    "ModelSettings",
+    "Project",
+    "ReferenceSettings",
+    "ReportSettings",
+    "SceneSettings",
+    "TrainingSettings",
+    "configs_folder",
+    "load_preset",
+    "load_project",
+    "parse_project",
+    "preset_names",
+    "project_schema",
+]

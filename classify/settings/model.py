@@ -1,0 +1,209 @@
+"""Typed models of project.toml. Unknown keys are refused; every default is stated here and nowhere else.
+
+Paths are kept as written, relative to the project file; `Project.path` resolves them.
+"""
+
+from __future__ import annotations
+
+import re
+from pathlib import Path
+from typing import Annotated, Any, Literal
+
+from pydantic import BaseModel, ConfigDict, Field, PrivateAttr, field_validator, model_validator
+
+ModelKind = Literal["random forest", "support vector machine"]
+AreaUnit = Literal["ha", "km2", "m2", "acre"]
+
+# Okabe & Ito (2008), "Color universal design", the published colour-blind-safe scheme, then four tints of it for
+# projects with more classes than the scheme has colours. Used only for classes whose colour is not given.
+DEFAULT_COLOURS = (
+    "#009e73", "#e69f00", "#56b4e9", "#d55e00", "#0072b2", "#cc79a7", "#f0e442", "#000000",
+    "#66c5ab", "#f0c566", "#9ad2f2", "#e69e66",
+)  # fmt: skip
+
+# Names that formulas use for bands and features: letters, digits and underscores, not starting with a digit.
+_NAME = re.compile(r"^[A-Za-z_][A-Za-z0-9_]*$")
+
+
+class _Section(BaseModel):
+    model_config = ConfigDict(extra="forbid", frozen=True, str_strip_whitespace=True)
+
+
+class ProjectInfo(_Section):
+    """[project]: who made the map, for whom, and the seed of every stochastic step."""
+
+    title: str = Field(min_length=1)
+    client: str = ""
+    author: str = ""
+    seed: int = Field(default=0, ge=0, le=2**32 - 1)
+
+
+class BandSettings(_Section):
+    """One band: where it lies and how its stored numbers become reflectance = stored * scale + offset."""
+
+    file: str = Field(min_length=1)
+    band: int = Field(default=1, ge=1)
+    scale: float | None = None
+    offset: float | None = None
+    nodata: float | None = None
+    wavelength_nm: float | None = Field(default=None, gt=0)
+
+
+class MaskSettings(_Section):
+    """[scene.mask]: a raster that says which pixels not to use, by codes or by bits."""
+
+    file: str = Field(min_length=1)
+    band: int = Field(default=1, ge=1)
+    reject: list[int] = Field(default_factory=list)
+    bits: dict[str, Annotated[int, Field(ge=0, le=31)]] = Field(default_factory=dict)
+
+    @model_validator(mode="after")
+    def _says_what_to_reject(self) -> MaskSettings:
+        if bool(self.reject) == bool(self.bits):
+            raise ValueError("give either 'reject' (a list of codes) or 'bits' (name = bit number), and not both")
+        return self
+
+
+class SceneSettings(_Section):
+    """[scene]: the bands by role, the grid of the map, the mask."""
+
+    sensor: str | None = None
+    grid: str | float | None = Field(
+        default=None, description="a band role, or a pixel size in units of the first band's CRS; default: finest band"
+    )
+    bands: dict[str, BandSettings] = Field(min_length=1)
+    mask: MaskSettings | None = None
+
+    @field_validator("bands", mode="before")
+    @classmethod
+    def _file_alone_is_a_band(cls, value: Any) -> Any:  # noqa: ANN401 - whatever the file holds
+        if isinstance(value, dict):
+            return {role: {"file": band} if isinstance(band, str) else band for role, band in value.items()}
+        return value
+
+    @field_validator("bands")
+    @classmethod
+    def _roles_are_names(cls, value: dict[str, BandSettings]) -> dict[str, BandSettings]:
+        bad = [role for role in value if not _NAME.match(role)]
+        if bad:
+            raise ValueError(f"band role {bad[0]!r} must be letters, digits and underscores, as formulas use it")
+        return value
+
+    @model_validator(mode="after")
+    def _grid_names_a_band(self) -> SceneSettings:
+        if isinstance(self.grid, str) and self.grid not in self.bands:
+            raise ValueError(f"grid = {self.grid!r} is not one of the bands ({', '.join(self.bands)})")
+        if isinstance(self.grid, float) and self.grid <= 0:
+            raise ValueError(f"grid = {self.grid} must be a positive pixel size")
+        return self
+
+
+class ClassSettings(_Section):
+    """[[class]]: one cover class. Code 0 is no data in the map, so codes run from 1 to 255."""
+
+    code: int = Field(ge=1, le=255)
+    name: str = Field(min_length=1)
+    colour: str | None = Field(default=None, pattern=r"^#[0-9a-fA-F]{6}$")
+    material: str | None = None
+
+
+class TrainingSettings(_Section):
+    """[training]: the labelled polygons."""
+
+    polygons: str = Field(min_length=1)
+    layer: str | None = None
+    label: str = Field(min_length=1)
+
+
+class FeatureSettings(_Section):
+    """[features]: what the model sees of a pixel."""
+
+    bands: Literal["all"] | list[str] = "all"
+    indices: list[str] = Field(default_factory=list)
+    formulas: dict[str, str] = Field(default_factory=dict)
+
+    @field_validator("formulas")
+    @classmethod
+    def _formula_names(cls, value: dict[str, str]) -> dict[str, str]:
+        bad = [name for name in value if not _NAME.match(name)]
+        if bad:
+            raise ValueError(f"feature name {bad[0]!r} must be letters, digits and underscores")
+        return value
+
+
+class ModelSettings(_Section):
+    """[model]: which classifier."""
+
+    kind: ModelKind = "random forest"
+    trees: int = Field(default=300, ge=1, le=5000)
+
+
+class MapSettings(_Section):
+    """[map]: which layers to write."""
+
+    confidence: bool = True
+
+
+class ReferenceSettings(_Section):
+    """[reference]: the labelled reference sample and, where it was drawn from another map, its design."""
+
+    points: str = Field(min_length=1)
+    layer: str | None = None
+    label: str = Field(min_length=1)
+    design: str | None = Field(default=None, description="design.json written when the sample was drawn")
+    stratum: str | None = Field(default=None, description="column of the points that names the stratum")
+
+
+class ReportSettings(_Section):
+    """[report]: how results are expressed."""
+
+    confidence_level: float = Field(default=0.95, gt=0.5, lt=1)
+    area_unit: AreaUnit = "ha"
+
+
+class Project(_Section):
+    """The whole project file. Made by `load_project`; `folder` is where the file lies."""
+
+    project: ProjectInfo
+    scene: SceneSettings
+    classes: list[ClassSettings] = Field(alias="class", min_length=2)
+    training: TrainingSettings
+    features: FeatureSettings = FeatureSettings()
+    model: ModelSettings = ModelSettings()
+    map: MapSettings = MapSettings()
+    reference: ReferenceSettings | None = None
+    report: ReportSettings = ReportSettings()
+    _file: Path = PrivateAttr(default=Path("project.toml"))
+
+    @field_validator("classes")
+    @classmethod
+    def _distinct(cls, value: list[ClassSettings]) -> list[ClassSettings]:
+        given: dict[str, list[Any]] = {"code": [c.code for c in value], "name": [c.name.casefold() for c in value]}
+        for what, seen in given.items():
+            twice = {item for item in seen if seen.count(item) > 1}
+            if twice:
+                raise ValueError(f"{what} {sorted(twice, key=str)[0]!r} is given to more than one class")
+        spare = (colour for colour in DEFAULT_COLOURS * 32 if colour not in {c.colour for c in value})
+        return [c if c.colour else c.model_copy(update={"colour": next(spare)}) for c in value]
+
+    @property
+    def file(self) -> Path:
+        """The project file itself, absolute."""
+        return self._file
+
+    @property
+    def folder(self) -> Path:
+        """The folder that relative paths start from."""
+        return self._file.parent
+
+    def path(self, written: str) -> str:
+        """A path as written in the project file, made absolute; GDAL virtual paths and URLs are kept as they are."""
+        if written.startswith("/vsi") or re.match(r"^[A-Za-z][A-Za-z0-9+.-]+://", written):
+            return written
+        return str((self.folder / written).absolute())
+
+    def at(self, file: Path) -> Project:
+        """The same settings as read from `file` (absolute)."""
+        copy = self.model_copy()
+        copy._file = file
+        return copy
