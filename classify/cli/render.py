@@ -1,0 +1,78 @@
+"""Results as text for a terminal. Layout only: every number arrives computed."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from classify.workflow import StageName, StageResult
+
+
+def table(header: Sequence[str], rows: Sequence[Sequence[str]]) -> str:
+    """Columns lined up: the first to the left, the others to the right."""
+    widths = [max(len(row[i]) for row in (header, *rows)) for i in range(len(header))]
+    lines = []
+    for row in (header, *rows):
+        cells = [row[0].ljust(widths[0]), *(cell.rjust(width) for cell, width in zip(row[1:], widths[1:], strict=True))]
+        lines.append("  ".join(cells).rstrip())
+    return "\n".join(lines)
+
+
+def stage_text(name: StageName, result: StageResult | None) -> str:
+    """One stage's result in a few lines."""
+    if result is None:
+        return f"{name}: up to date"
+    return f"{name}: done\n" + "\n".join(f"  {line}" for line in _LINES[name](result.summary).splitlines())
+
+
+def percent(value: float | None) -> str:
+    """0.8312 as "83.1 %"; nothing known as "-"."""
+    return "-" if value is None else f"{100 * value:.1f} %"
+
+
+def _train(summary: Mapping[str, Any]) -> str:
+    lines = [f"{summary['polygons']} polygons, {summary['pixels']:,} pixels, {len(summary['features'])} features"]
+    screening = summary.get("screening")
+    if screening and screening.get("accuracy") is not None:
+        lines.append(f"screening accuracy on held-out polygons: {percent(screening['accuracy'])} (not map accuracy)")
+    return "\n".join(lines)
+
+
+def _classify(summary: Mapping[str, Any]) -> str:
+    rows = [[row["name"], f"{row['pixels']:,}", f"{row['area']:,.1f} {row['unit']}"] for row in summary["areas"]]
+    return table(["mapped", "pixels", "ground area"], rows)
+
+
+def _assess(summary: Mapping[str, Any]) -> str:
+    overall = summary["overall_accuracy"]
+    level = f"{summary['confidence_level']:.0%}"
+    rows = []
+    for name in summary["classes"]:
+        area = summary["area"][name]
+        users, producers = (summary[key][name]["estimate"] for key in ("users_accuracy", "producers_accuracy"))
+        rows.append([name, percent(users), percent(producers), _with_margin(area)])
+    lines = [f"overall accuracy {percent(overall['estimate'])} ({level} interval {_interval(overall)})"]
+    lines.append(table(["class", "user's", "producer's", f"area, {summary['area_unit']}"], rows))
+    return "\n".join(lines)
+
+
+def _interval(estimate: Mapping[str, Any]) -> str:
+    if estimate.get("lower") is None:
+        return "not known"
+    return f"{percent(estimate['lower'])} to {percent(estimate['upper'])}"
+
+
+def _with_margin(area: Mapping[str, Any]) -> str:
+    if area.get("estimate") is None:
+        return "-"
+    if area.get("lower") is None:
+        return f"{area['estimate']:,.1f}"
+    return f"{area['estimate']:,.1f} ({area['lower']:,.1f} to {area['upper']:,.1f})"
+
+
+def _report(summary: Mapping[str, Any]) -> str:
+    return "\n".join(summary["files"])
+
+
+_LINES = {"train": _train, "classify": _classify, "assess": _assess, "report": _report}

@@ -1,0 +1,18 @@
+"""`landassay train`: fit the model and screen it on held-out polygons."""
+
+from __future__ import annotations
+
+import click
+
+from classify.cli.common import Call, common_options
+from classify.cli.run import show_stages
+
+
+@click.command("train", help="Fit the model and screen it on held-out polygons.")
+@click.option("--force", is_flag=True, help="Do it again even if nothing has changed.")
+@common_options
+def command(call: Call, force: bool) -> None:
+    """Run the stage if it is stale."""
+    from classify.workflow import Job, run
+
+    show_stages(call, run(Job(call.project(), call.jobs, call.progress()), ["train"], force=force))

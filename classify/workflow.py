@@ -1,0 +1,314 @@
+"""Stages of a project: what each needs and makes, which are stale, and the record that lets a result be repeated.
+
+A stage is up to date when its outputs exist and its fingerprint - input files by SHA-256, the settings it reads, the
+fingerprints of the stages before it, the version of this package - equals the one recorded in run.json.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import platform
+import time
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
+from datetime import UTC, datetime
+from functools import cache
+from importlib.metadata import version
+from pathlib import Path
+from typing import Any, Literal
+
+from classify import __version__
+from classify.assessment import assess_project
+from classify.errors import DataError, Problem
+from classify.features import build_recipe
+from classify.files import read_json, remove_leftovers, sha256, write_json
+from classify.mapping.classify_scene import MapOptions, classify_scene
+from classify.models import fit_model, load_model, save_model
+from classify.progress import SILENT, Progress
+from classify.raster.scene import Scene, open_scene
+from classify.report import gather_facts, write_report
+from classify.settings import Project
+from classify.training import extract_pixels, read_polygons, write_pixels
+
+StageName = Literal["train", "classify", "assess", "report"]
+State = Literal["done", "stale", "missing", "not asked for"]
+
+_LIBRARIES = ("numpy", "scipy", "pandas", "scikit-learn", "rasterio", "geopandas", "pyproj", "shapely", "skops")
+
+
+@dataclass(frozen=True, slots=True)
+class Job:
+    """One project at work: its settings, how many workers, where progress goes."""
+
+    project: Project
+    jobs: int = 1
+    progress: Progress = SILENT
+
+    @property
+    def outputs(self) -> Path:
+        """The folder of everything that is written."""
+        return self.project.folder / "outputs"
+
+
+@dataclass(frozen=True, slots=True)
+class StageResult:
+    """What a stage says when it ends: a summary for people and programs, and warnings that travel to the report."""
+
+    summary: dict[str, Any]
+    warnings: tuple[Problem, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
+class Stage:
+    """One stage. `sections` are the parts of the project file it reads; `inputs` the files; `outputs` what it makes."""
+
+    name: StageName
+    after: tuple[StageName, ...]
+    sections: tuple[str, ...]
+    inputs: Callable[[Project], list[str]]
+    outputs: tuple[str, ...]
+    work: Callable[[Job], StageResult]
+    wanted: Callable[[Project], bool] = field(default=lambda project: True)
+
+
+@dataclass(frozen=True, slots=True)
+class StageStatus:
+    """State of a stage and, unless it is done, why."""
+
+    name: StageName
+    state: State
+    why: str = ""
+
+
+def status(project: Project) -> list[StageStatus]:
+    """State of every stage, in order, without running anything."""
+    now, record = _snapshot(project), _read_record(project)
+    return [_status(stage, project, now.fingerprints[stage.name], record) for stage in STAGES]
+
+
+def run(
+    job: Job, stages: Sequence[StageName] | None = None, *, force: bool = False
+) -> dict[StageName, StageResult | None]:
+    """Run the named stages (default: all) that are stale, in order. A stage that is up to date gives None.
+
+    Raises LandassayError from whichever stage cannot go on; stages before it keep their results and their record.
+    """
+    results: dict[StageName, StageResult | None] = {}
+    for stage in STAGES:
+        if (stages is not None and stage.name not in stages) or not stage.wanted(job.project):
+            continue
+        state = next(s for s in status(job.project) if s.name == stage.name)
+        if state.state == "done" and not force:
+            results[stage.name] = None
+            continue
+        _require_earlier(stage, job.project)
+        results[stage.name] = _run_stage(stage, job)
+    return results
+
+
+def _run_stage(stage: Stage, job: Job) -> StageResult:
+    for name in {Path(output).parent for output in stage.outputs}:
+        if (job.outputs / name).is_dir():
+            remove_leftovers(job.outputs / name)
+    # Taken before the work: if an input changes meanwhile, the stage counts as stale afterwards.
+    before = _snapshot(job.project)
+    start = time.perf_counter()
+    result = stage.work(job)
+    _record(stage, job.project, before, result, time.perf_counter() - start)
+    return result
+
+
+def _require_earlier(stage: Stage, project: Project) -> None:
+    for earlier in (s for s in STAGES if s.name in stage.after):
+        lacking = [path for path in earlier.outputs if not (project.folder / "outputs" / path).is_file()]
+        if lacking and earlier.wanted(project):
+            raise DataError(
+                f"'{stage.name}' needs the result of '{earlier.name}', which is missing",
+                where=str(project.folder / "outputs" / lacking[0]),
+                fix=f"run 'landassay {earlier.name}' first, or 'landassay run' for everything",
+            )
+
+
+# --- the stages -----------------------------------------------------------------------------------------------------
+
+
+def _train(job: Job) -> StageResult:
+    project = job.project
+    scene = open_scene(project.scene, project)
+    recipe = build_recipe(project.features, scene.roles)
+    polygons = read_polygons(project, scene.grid)
+    training = extract_pixels(polygons, scene, recipe, job.jobs, job.progress)
+    model = fit_model(training, project, recipe, project.project.seed, job.jobs, job.progress)
+    write_pixels(training, job.outputs / "training" / "pixels.parquet")
+    save_model(model, job.outputs / "model")
+    summary = {
+        "polygons": len(training.table), "pixels": len(training.codes), "features": list(recipe.names),
+        "screening": model.card.get("screening"),
+    }  # fmt: skip
+    return StageResult(summary, (*scene.warnings, *training.problems))
+
+
+def _classify(job: Job) -> StageResult:
+    project = job.project
+    model = load_model(job.outputs / "model")
+    scene = open_scene(project.scene, project)
+    options = MapOptions(jobs=job.jobs, confidence=project.map.confidence, area_unit=project.report.area_unit)
+    result = classify_scene(model, scene, job.outputs / "map", project.classes, options, job.progress)
+    summary = {
+        "areas": result.areas.to_dict("records"),
+        "unmapped_pixels": result.unmapped_pixels,
+        "unmapped_m2": result.unmapped_m2,
+    }
+    return StageResult(summary, scene.warnings)
+
+
+def _assess(job: Job) -> StageResult:
+    assessment = assess_project(job.project, job.outputs)
+    content = assessment.to_json()
+    return StageResult(content, tuple(Problem(text, severity="warning") for text in content["warnings"]))
+
+
+def _report(job: Job) -> StageResult:
+    written = write_report(gather_facts(job.project, job.outputs), job.outputs / "report")
+    return StageResult({"files": [str(path) for path in written]})
+
+
+def _scene_inputs(project: Project) -> list[str]:
+    files = [band.file for band in project.scene.bands.values()]
+    if project.scene.mask:
+        files.append(project.scene.mask.file)
+    return list(dict.fromkeys(files))
+
+
+def _training_inputs(project: Project) -> list[str]:
+    return [*_scene_inputs(project), *_with_companions(project, project.training.polygons)]
+
+
+def _reference_inputs(project: Project) -> list[str]:
+    reference = project.reference
+    if reference is None:
+        return []
+    return _with_companions(project, reference.points) + ([reference.design] if reference.design else [])
+
+
+def _with_companions(project: Project, written: str) -> list[str]:
+    """A vector file as written, and the files that belong to it: a Shapefile keeps its labels in a .dbf."""
+    if not written.lower().endswith(".shp"):
+        return [written]
+    stem = written[: -len(".shp")]
+    return [written] + [stem + end for end in (".dbf", ".shx", ".prj") if Path(project.path(stem + end)).is_file()]
+
+
+STAGES: tuple[Stage, ...] = (
+    Stage(
+        "train", (), ("project", "scene", "classes", "training", "features", "model"),
+        _training_inputs,
+        ("training/pixels.parquet", "model/model.skops", "model/model.json"), _train,
+    ),
+    Stage(
+        "classify", ("train",), ("scene", "classes", "map", "report"), _scene_inputs,
+        ("map/cover.tif", "map/areas.csv"), _classify,
+    ),
+    Stage(
+        "assess", ("classify",), ("classes", "reference", "report"), _reference_inputs,
+        ("assessment/assessment.json",), _assess, lambda project: project.reference is not None,
+    ),
+    Stage("report", ("train", "classify", "assess"), ("project", "classes", "report"), lambda project: [],
+          ("report/report.html",), _report),
+)  # fmt: skip
+
+
+# --- what is stale --------------------------------------------------------------------------------------------------
+
+
+def _status(stage: Stage, project: Project, fingerprint: str, record: Mapping[str, Any]) -> StageStatus:
+    if not stage.wanted(project):
+        return StageStatus(stage.name, "not asked for", "the project file has no section for it")
+    lacking = [path for path in stage.outputs if not (project.folder / "outputs" / path).is_file()]
+    if lacking:
+        return StageStatus(stage.name, "missing", f"outputs/{lacking[0]} is not there")
+    known = record.get("stages", {}).get(stage.name, {})
+    if known.get("fingerprint") != fingerprint:
+        return StageStatus(stage.name, "stale", "its inputs, settings or an earlier stage have changed")
+    return StageStatus(stage.name, "done")
+
+
+@dataclass(frozen=True, slots=True)
+class _Snapshot:
+    """Inputs (path as written -> size, time of change, SHA-256) and fingerprints of all stages at one moment."""
+
+    inputs: dict[str, dict[str, Any]]
+    fingerprints: dict[str, str]
+
+
+def _snapshot(project: Project) -> _Snapshot:
+    known = _read_record(project).get("inputs", {})
+    wanted = [stage for stage in STAGES if stage.wanted(project)]
+    inputs = {path: _input(project, path, known) for stage in wanted for path in stage.inputs(project)}
+    settings = project.model_dump(mode="json")
+    fingerprints: dict[str, str] = {}
+    for stage in STAGES:
+        parts = {
+            "version": __version__,
+            "settings": {name: settings[name] for name in stage.sections},
+            "inputs": {path: inputs[path]["sha256"] for path in stage.inputs(project) if path in inputs},
+            "earlier": {name: fingerprints[name] for name in stage.after},
+        }
+        fingerprints[stage.name] = hashlib.sha256(json.dumps(parts, sort_keys=True).encode()).hexdigest()
+    return _Snapshot(inputs, fingerprints)
+
+
+def _input(project: Project, written: str, known: Mapping[str, Any]) -> dict[str, Any]:
+    """Size, time and hash of an input file; the recorded hash is kept while size and time of change are the same."""
+    path = project.path(written)
+    file = Path(path)
+    if path.startswith("/vsi") or "://" in path or not file.is_file():
+        # Remote files have no cheap hash: the address stands for the content.
+        return {"sha256": None}
+    facts = file.stat()
+    before: dict[str, Any] = known.get(written, {})
+    if before.get("bytes") == facts.st_size and before.get("modified_ns") == facts.st_mtime_ns:
+        return before
+    digest = _hash_once(file, facts.st_size, facts.st_mtime_ns)
+    return {"bytes": facts.st_size, "modified_ns": facts.st_mtime_ns, "sha256": digest}
+
+
+@cache
+def _hash_once(file: Path, size: int, modified_ns: int) -> str:  # size and time are part of the key
+    return sha256(file)
+
+
+def _read_record(project: Project) -> dict[str, Any]:
+    path = project.folder / "outputs" / "run.json"
+    if not path.is_file():
+        return {}
+    try:
+        return read_json(path)
+    except DataError:
+        # A damaged record only means that every stage counts as stale; it is written anew by the next run.
+        return {}
+
+
+def _record(stage: Stage, project: Project, before: _Snapshot, result: StageResult, seconds: float) -> None:
+    outputs = project.folder / "outputs"
+    stages = _read_record(project).get("stages", {})
+    stages[stage.name] = {
+        "fingerprint": before.fingerprints[stage.name],
+        "finished": datetime.now(UTC).isoformat(timespec="seconds"),
+        "seconds": round(seconds, 2),
+        "outputs": {path: sha256(outputs / path) for path in stage.outputs},
+        "warnings": [str(warning) for warning in result.warnings],
+    }
+    record = {
+        "schema": 1,
+        "landassay": __version__,
+        "project_file": project.file.name,
+        "seed": project.project.seed,
+        "settings": project.model_dump(mode="json", by_alias=True),
+        "versions": {"python": platform.python_version(), **{name: version(name) for name in _LIBRARIES}},
+        "system": platform.system(),
+        "inputs": before.inputs,
+        "stages": stages,
+    }
+    write_json(outputs / "run.json", record)
