@@ -112,7 +112,13 @@ class TrainingSettings(_Section):
 
     polygons: str = Field(min_length=1)
     layer: str | None = None
-    label: str = Field(min_length=1)
+    label: str = Field(min_length=1, description="column with the class name or code")
+    exclude: list[Annotated[int, Field(ge=1)]] = Field(
+        default_factory=list, description="polygons to leave out, by their place in the file counted from 1"
+    )
+    inset_m: float = Field(default=0.0, ge=0, le=10_000, description="metres to keep away from polygon edges")
+    pixels_per_polygon: int | None = Field(default=None, ge=1, description="at most so many, drawn by the seed")
+    pixels_per_class: int | None = Field(default=None, ge=1, description="at most so many, drawn by the seed")
 
 
 class FeatureSettings(_Section):
