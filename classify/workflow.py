@@ -26,7 +26,7 @@ from classify.files import read_json, remove_leftovers, sha256, write_json
 from classify.mapping.classify_scene import MapOptions, classify_scene
 from classify.models import fit_model, load_model, save_model
 from classify.progress import SILENT, Progress
-from classify.raster.scene import Scene, open_scene
+from classify.raster.scene import open_scene
 from classify.report import gather_facts, write_report
 from classify.settings import Project
 from classify.training import extract_pixels, read_polygons, write_pixels
@@ -154,7 +154,9 @@ def _classify(job: Job) -> StageResult:
     model = load_model(job.outputs / "model")
     scene = open_scene(project.scene, project)
     options = MapOptions(jobs=job.jobs, confidence=project.map.confidence, area_unit=project.report.area_unit)
-    result = classify_scene(model, scene, job.outputs / "map", project.classes, options, job.progress)
+    result = classify_scene(
+        model, scene, job.outputs / "map", classes=project.classes, options=options, progress=job.progress
+    )
     summary = {
         "areas": result.areas.to_dict("records"),
         "unmapped_pixels": result.unmapped_pixels,

@@ -76,6 +76,7 @@ def classify_scene(
     model: TrainedModel,
     scene: Scene,
     folder: Path,
+    *,
     classes: Iterable[ClassSettings],
     options: MapOptions | None = None,
     progress: Progress = SILENT,

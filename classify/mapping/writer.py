@@ -118,7 +118,7 @@ def _rgb(colour: str) -> tuple[int, int, int]:
 
 
 def category_sidecar(layer: Layer) -> bytes:
-    """Class names as the XML side file that GDAL-based programs read beside a GeoTIFF (the format has no room inside)."""
+    """Class names as the XML side file that GDAL-based programs read beside a GeoTIFF (it has no room inside)."""
     root = ET.Element("PAMDataset")
     band = ET.SubElement(root, "PAMRasterBand", band="1")
     names = ET.SubElement(band, "CategoryNames")
