@@ -10,7 +10,7 @@ import hashlib
 import json
 import os
 from collections.abc import Iterator, Mapping
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 from typing import Any
 from uuid import uuid4
@@ -40,7 +40,8 @@ def replacing(target: Path) -> Iterator[Path]:
             f"cannot be written: {reason}", where=str(target), fix="free some space or choose a folder you may write to"
         ) from error
     finally:
-        temporary.unlink(missing_ok=True)
+        with suppress(OSError):
+            temporary.unlink(missing_ok=True)
 
 
 def write_bytes(target: Path, content: bytes) -> None:

@@ -9,7 +9,7 @@ import re
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, ConfigDict, Field, PrivateAttr, field_validator, model_validator
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, PrivateAttr, field_validator, model_validator
 
 ModelKind = Literal["random forest", "support vector machine"]
 AreaUnit = Literal["ha", "km2", "m2", "acre"]
@@ -49,6 +49,14 @@ class BandSettings(_Section):
     wavelength_nm: float | None = Field(default=None, gt=0)
 
 
+def _file_alone(value: Any) -> Any:  # noqa: ANN401 - whatever the file holds
+    return {"file": value} if isinstance(value, str) else value
+
+
+# blue = "b02.tif" is short for blue = { file = "b02.tif" }
+_FILE_ALONE = BeforeValidator(_file_alone, json_schema_input_type=BandSettings | str)
+
+
 class MaskSettings(_Section):
     """[scene.mask]: a raster that says which pixels not to use, by codes or by bits."""
 
@@ -71,15 +79,8 @@ class SceneSettings(_Section):
     grid: str | float | None = Field(
         default=None, description="a band role, or a pixel size in units of the first band's CRS; default: finest band"
     )
-    bands: dict[str, BandSettings] = Field(min_length=1)
+    bands: dict[str, Annotated[BandSettings, _FILE_ALONE]] = Field(min_length=1)
     mask: MaskSettings | None = None
-
-    @field_validator("bands", mode="before")
-    @classmethod
-    def _file_alone_is_a_band(cls, value: Any) -> Any:  # noqa: ANN401 - whatever the file holds
-        if isinstance(value, dict):
-            return {role: {"file": band} if isinstance(band, str) else band for role, band in value.items()}
-        return value
 
     @field_validator("bands")
     @classmethod
