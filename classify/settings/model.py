@@ -11,7 +11,7 @@ from typing import Annotated, Any, Literal
 
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, PrivateAttr, field_validator, model_validator
 
-ModelKind = Literal["random forest", "support vector machine"]
+ModelKind = Literal["random forest", "support vector machine", "linear support vector machine"]
 AreaUnit = Literal["ha", "km2", "m2", "acre"]
 
 # Okabe & Ito (2008), "Color universal design", the published colour-blind-safe scheme, then four tints of it for
@@ -143,6 +143,9 @@ class ModelSettings(_Section):
 
     kind: ModelKind = "random forest"
     trees: int = Field(default=300, ge=1, le=5000)
+    svm_pixels: int = Field(
+        default=20_000, ge=100, description="a support vector machine is fitted on at most so many, drawn by the seed"
+    )
 
 
 class MapSettings(_Section):
