@@ -1,0 +1,177 @@
+"""The model file: safe to open. Never a pickle; a closed list of types is checked before anything is built.
+
+`model.skops` is a zip with a JSON description and NumPy arrays. It is rewritten in a canonical form, so that the same
+model gives the same bytes on any day and in any process. `model.json` is the card, with the file's SHA-256.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import io
+import json
+import zipfile
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import skops.io
+from sklearn.ensemble import RandomForestClassifier
+
+from classify.errors import DataError, ModelError
+from classify.features.recipe import Recipe
+from classify.files import read_json, write_bytes, write_json
+from classify.models.trained import TrainedModel
+
+MODEL_FILE, CARD_FILE = "model.skops", "model.json"
+_DESCRIPTION = "schema.json"
+_TREE = "sklearn.tree._tree.Tree"
+# (loader, type) pairs that our own models are made of. Everything else is refused.
+_TRUSTED = {
+    ("ObjectNode", "sklearn.ensemble._forest.RandomForestClassifier"),
+    ("ObjectNode", "sklearn.tree._classes.DecisionTreeClassifier"),
+    ("ObjectNode", "sklearn.pipeline.Pipeline"),
+    ("ObjectNode", "sklearn.preprocessing._data.StandardScaler"),
+    ("ObjectNode", "sklearn.svm._classes.SVC"),
+    ("ObjectNode", "sklearn.svm._classes.LinearSVC"),
+    ("TreeNode", _TREE),
+    ("NdArrayNode", "numpy.ndarray"),
+    ("NdArrayNode", "numpy.float64"),
+    ("NdArrayNode", "numpy.int64"),
+    ("NdArrayNode", "numpy.int32"),
+    ("DictNode", "builtins.dict"),
+    ("ListNode", "builtins.list"),
+    ("TupleNode", "builtins.tuple"),
+    ("JsonNode", "builtins.str"),
+    ("TypeNode", "builtins.str"),
+    ("TypeNode", "numpy.dtype"),
+}  # fmt: skip
+_FIX = "train the model again, or get the file anew from whoever trained it"
+
+
+def save_model(model: TrainedModel, folder: Path) -> None:
+    """Write model.skops and model.json, crash-safe. Raises OutputError."""
+    content = _canonical(skops.io.dumps(model.estimator))
+    write_bytes(folder / MODEL_FILE, content)
+    write_json(folder / CARD_FILE, {**model.card, "model_sha256": hashlib.sha256(content).hexdigest()})
+
+
+def load_model(folder: Path) -> TrainedModel:
+    """Read a model that `save_model` wrote. Raises ModelError for anything unsafe, broken or of another schema."""
+    file = folder / MODEL_FILE
+    try:
+        card = read_json(folder / CARD_FILE)
+        content = file.read_bytes()
+    except DataError as error:
+        raise ModelError(error.problems[0].what, where=error.problems[0].where, fix=_FIX) from error
+    except OSError as error:
+        raise ModelError(
+            f"the model file cannot be read: {error.strerror}", where=str(file), fix="train first"
+        ) from error
+    _check_card(card, folder / CARD_FILE)
+    if hashlib.sha256(content).hexdigest() != card["model_sha256"]:
+        raise ModelError(
+            "the model file is not the one its card describes (its SHA-256 differs)", where=str(file), fix=_FIX
+        )
+    audit(content, str(file))
+    try:
+        estimator = skops.io.loads(content, trusted=[_TREE])
+        recipe = Recipe.from_json(card["recipe"])
+        _check_estimator(estimator, card, str(file))
+    except ModelError:
+        raise
+    except Exception as error:  # skops, NumPy and scikit-learn raise many kinds for a damaged file
+        raise ModelError(f"the model file is damaged: {error}", where=str(file), fix=_FIX) from error
+    return TrainedModel(estimator, card, recipe)
+
+
+def audit(content: bytes, where: str) -> None:
+    """Refuse an unsafe model file before anything in it is built. Raises ModelError naming every foreign type."""
+    try:
+        with zipfile.ZipFile(io.BytesIO(content)) as archive:
+            description = json.loads(archive.read(_DESCRIPTION))
+            names = [name for name in archive.namelist() if name != _DESCRIPTION]
+    except (zipfile.BadZipFile, KeyError, ValueError, RecursionError) as error:
+        raise ModelError(
+            "this is not a model file (a pickle, perhaps): it is not opened", where=where, fix=_FIX
+        ) from error
+    foreign = {f"{n.get('__module__')}.{n.get('__class__')}" for n in _nodes(description) if not _is_trusted(n)}
+    if foreign:
+        raise ModelError(
+            f"the model file holds types that no model of ours has: {', '.join(sorted(foreign))}", where=where, fix=_FIX
+        )
+    strange = [name for name in names if not name.endswith(".npy")]
+    if strange:
+        raise ModelError(
+            f"the model file holds other things than arrays: {', '.join(strange[:5])}", where=where, fix=_FIX
+        )
+
+
+def _is_trusted(node: dict[str, Any]) -> bool:
+    loader = node.get("__loader__")
+    return loader == "CachedNode" or (loader, f"{node.get('__module__')}.{node.get('__class__')}") in _TRUSTED
+
+
+def _nodes(part: Any) -> Iterator[dict[str, Any]]:  # noqa: ANN401 - any JSON
+    """Every described object, in the order of the file. Without recursion: the depth is the file's choice."""
+    waiting = [part]
+    while waiting:
+        item = waiting.pop()
+        if isinstance(item, dict):
+            if "__loader__" in item or "__class__" in item or "__module__" in item:
+                yield item
+            waiting.extend(reversed(list(item.values())))
+        elif isinstance(item, list):
+            waiting.extend(reversed(item))
+
+
+def _check_card(card: dict[str, Any], path: Path) -> None:
+    if card.get("schema") != 1:
+        raise ModelError(
+            f"the card follows schema {card.get('schema')!r}, this version reads 1", where=str(path), fix=_FIX
+        )
+    wanted = ("kind", "needs", "features", "recipe", "classes", "calibration", "model_sha256")
+    missing = [key for key in wanted if key not in card]
+    if missing:
+        raise ModelError(f"the card lacks {', '.join(missing)}", where=str(path), fix=_FIX)
+
+
+def _check_estimator(estimator: Any, card: dict[str, Any], where: str) -> None:  # noqa: ANN401
+    """What is built must be what the card says, and a tree may not point outside itself (it is walked in C)."""
+    codes = [entry["code"] for entry in card["classes"]]
+    if list(estimator.classes_) != codes or estimator.n_features_in_ != len(card["features"]):
+        raise ModelError("model file and card disagree on classes or features", where=where, fix=_FIX)
+    if isinstance(estimator, RandomForestClassifier):
+        for tree in (member.tree_ for member in estimator.estimators_):
+            node = np.arange(tree.node_count)
+            leaf = tree.children_left == -1
+            children = np.stack([tree.children_left[~leaf], tree.children_right[~leaf]])
+            sound = (children > node[~leaf]).all() and (children < tree.node_count).all()
+            if not sound or (tree.feature[~leaf] < 0).any() or (tree.feature[~leaf] >= estimator.n_features_in_).any():
+                raise ModelError("a tree of the model points outside itself", where=where, fix=_FIX)
+
+
+def _canonical(content: bytes) -> bytes:
+    """The same archive without memory addresses, dates or order of chance: objects numbered as they are listed."""
+    with zipfile.ZipFile(io.BytesIO(content)) as archive:
+        description = json.loads(archive.read(_DESCRIPTION))
+        number: dict[int, int] = {}
+        arrays: dict[str, bytes] = {}
+        # From 1: skops takes an identity of 0 for none.
+        for new, node in enumerate(_nodes(description), start=1):
+            old = node["__id__"]
+            if node["__loader__"] == "CachedNode" or ("file" in node and old in number):
+                node["__id__"] = number[old]
+            else:
+                node["__id__"] = number[old] = new
+            if "file" in node:
+                name = f"{node['__id__']}.npy"
+                arrays[name] = arrays.get(name) or archive.read(node["file"])
+                node["file"] = name
+    buffer = io.BytesIO()
+    with zipfile.ZipFile(buffer, "w", zipfile.ZIP_DEFLATED) as archive:
+        for name, data in [(_DESCRIPTION, json.dumps(description).encode()), *arrays.items()]:
+            info = zipfile.ZipInfo(name, date_time=(1980, 1, 1, 0, 0, 0))
+            info.compress_type, info.create_system, info.external_attr = zipfile.ZIP_DEFLATED, 3, 0o600 << 16
+            archive.writestr(info, data)
+    return buffer.getvalue()

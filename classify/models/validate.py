@@ -1,0 +1,154 @@
+"""Screening: repeated cross-validation that keeps polygons or spatial blocks whole."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from sklearn.model_selection import StratifiedKFold
+
+from classify.models.folds import Folds, group_folds
+from classify.models.kinds import kind_of, scorer, without_workers
+from classify.models.screening import Screening
+from classify.progress import SILENT, Progress
+from classify.training.dataset import TrainingSet
+from classify.training.draws import even_draw
+
+# seed -> unfitted estimator
+Maker = Callable[[int], Any]
+
+
+@dataclass(frozen=True)
+class ScreenOptions:
+    """folds: at most so many. repeats: rounds, each dealt anew. most_pixels: on the training side of a fit, drawn
+    evenly over polygons. leaky: also run one plain split of pixels, to show what leakage would claim.
+    kept_whole: "polygons", or words that say which blocks `groups` are."""
+
+    folds: int = 5
+    repeats: int = 3
+    most_pixels: int = 30_000
+    leaky: bool = True
+    seed: int = 0
+    jobs: int = 1
+    kept_whole: str = "polygons"
+
+
+def screen(
+    training: TrainingSet,
+    make: Maker,
+    options: ScreenOptions = ScreenOptions(),
+    *,
+    groups: NDArray[np.int32] | None = None,
+    progress: Progress = SILENT,
+) -> Screening:
+    """Hold out whole groups (polygons unless `groups` (n,) says otherwise) in turn and count how they are labelled.
+
+    Classes with a single group are never held out and are listed as unscreened. The same for the same seed, whatever
+    the number of jobs.
+    """
+    groups = training.polygon if groups is None else groups
+    classes = training.class_codes
+    rounds = [group_folds(training.codes, groups, options.folds, options.seed + r) for r in range(options.repeats)]
+    leaky = _leaky_folds(training.codes, options) if options.leaky else None
+    scores = held_out_scores(training, make, [*rounds, *([leaky] if leaky else [])], options, progress)
+    found = [_accuracies(training.codes, score, classes) for score in scores]
+    labels = held_out_labels(scores[0], classes)
+    return Screening(
+        class_codes=classes,
+        counts=_counts(training.codes, labels, classes),
+        repeats=np.array([pair for pair in found[: options.repeats] if pair], dtype=np.float64).reshape(-1, 2),
+        labels=labels,
+        scores=scores[0],
+        folds=rounds[0].count,
+        groups=options.kept_whole,
+        unscreened=rounds[0].alone,
+        leaky=found[-1][0] if leaky and found[-1] else None,
+    )
+
+
+def held_out_scores(
+    training: TrainingSet, make: Maker, rounds: Sequence[Folds], options: ScreenOptions, progress: Progress = SILENT
+) -> list[NDArray[np.float64]]:
+    """For each round float64 (n, k): scores of each pixel by the model that did not see its group; NaN if none did not.
+
+    Fits run side by side in threads: forests and machines let go of the interpreter lock while they work.
+    """
+    classes = training.class_codes
+    results = [np.full((len(training.codes), len(classes)), np.nan) for _ in rounds]
+    tasks = [
+        (result, folds, number) for result, folds in zip(results, rounds, strict=True) for number in range(folds.count)
+    ]
+    with progress.task("Screening on held-out polygons", len(tasks)) as task, ThreadPoolExecutor(options.jobs) as pool:
+
+        def run(job: tuple[NDArray[np.float64], Folds, int]) -> None:
+            result, folds, number = job
+            held = folds.held_out(number)
+            if held.any() and not held.all():
+                result[held] = _scores_of_held(training, held, make, options)
+            task.advance()
+
+        list(pool.map(run, tasks))
+    return results
+
+
+def _scores_of_held(
+    training: TrainingSet, held: NDArray[np.bool_], make: Maker, options: ScreenOptions
+) -> NDArray[np.float64]:
+    estimator = _fit(training, ~held, make, options)
+    score = scorer(estimator)(training.features[held])
+    classes = training.class_codes
+    known = np.searchsorted(classes, estimator.classes_)
+    # A class missing on the training side (its blocks all lie in this fold) can never be the highest.
+    least = 0.0 if kind_of(estimator) == "random forest" else float(score.min()) - 5
+    part = np.full((len(score), len(classes)), least)
+    part[:, known] = score
+    return part
+
+
+def _fit(training: TrainingSet, side: NDArray[np.bool_], make: Maker, options: ScreenOptions) -> Any:  # noqa: ANN401
+    chosen = np.flatnonzero(side)
+    chosen = chosen[even_draw(training.polygon[chosen], options.most_pixels, options.seed)]
+    return without_workers(make(options.seed).fit(training.features[chosen], training.codes[chosen]))
+
+
+def _leaky_folds(codes: NDArray[np.uint8], options: ScreenOptions) -> Folds | None:
+    """A split of pixels that ignores polygons: what leakage would claim. None if a class has too few pixels."""
+    _, size = np.unique(codes, return_counts=True)
+    if size.min() < options.folds:
+        return None
+    splitter = StratifiedKFold(options.folds, shuffle=True, random_state=options.seed)
+    fold = np.empty(len(codes), dtype=np.int16)
+    for number, (_, held) in enumerate(splitter.split(codes, codes)):
+        fold[held] = number
+    return Folds(fold, options.folds, ())
+
+
+def held_out_labels(scores: NDArray[np.float64], classes: NDArray[np.uint8]) -> NDArray[np.uint8]:
+    """uint8 (n,), the class of the highest score, 0 where never held out."""
+    held = np.isfinite(scores[:, 0])
+    labels = np.zeros(len(scores), dtype=np.uint8)
+    labels[held] = classes[np.argmax(scores[held], axis=1)]
+    return labels
+
+
+def _counts(codes: NDArray[np.uint8], labels: NDArray[np.uint8], classes: NDArray[np.uint8]) -> NDArray[np.int64]:
+    held = labels > 0
+    counts = np.zeros((len(classes), len(classes)), dtype=np.int64)
+    np.add.at(counts, (np.searchsorted(classes, codes[held]), np.searchsorted(classes, labels[held])), 1)
+    return counts
+
+
+def _accuracies(
+    codes: NDArray[np.uint8], scores: NDArray[np.float64], classes: NDArray[np.uint8]
+) -> tuple[float, float] | None:
+    """Overall share right and mean share right per class, or None if nothing was held out."""
+    counts = _counts(codes, held_out_labels(scores, classes), classes)
+    held = counts.sum(axis=1)
+    if not held.sum():
+        return None
+    right = np.diag(counts)
+    return float(right.sum() / held.sum()), float(np.mean(right[held > 0] / held[held > 0]))
