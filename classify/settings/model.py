@@ -62,13 +62,17 @@ class MaskSettings(_Section):
 
     file: str = Field(min_length=1)
     band: int = Field(default=1, ge=1)
-    reject: list[int] = Field(default_factory=list)
-    bits: dict[str, Annotated[int, Field(ge=0, le=31)]] = Field(default_factory=dict)
+    reject: list[int | str] = Field(
+        default_factory=list, description="codes, or meanings that the sensor's preset names, such as \"cloud\""
+    )
+    bits: dict[str, Annotated[int, Field(ge=0, le=31)]] = Field(
+        default_factory=dict, description="name = number of a bit that rejects the pixel where it is set"
+    )
 
     @model_validator(mode="after")
-    def _says_what_to_reject(self) -> MaskSettings:
-        if bool(self.reject) == bool(self.bits):
-            raise ValueError("give either 'reject' (a list of codes) or 'bits' (name = bit number), and not both")
+    def _one_way_to_reject(self) -> MaskSettings:
+        if self.reject and self.bits:
+            raise ValueError("give either 'reject' (codes or meanings) or 'bits' (name = bit number), and not both")
         return self
 
 
@@ -79,8 +83,25 @@ class SceneSettings(_Section):
     grid: str | float | None = Field(
         default=None, description="a band role, or a pixel size in units of the first band's CRS; default: finest band"
     )
+    scale: float | None = Field(default=None, description="reflectance = stored * scale + offset, for all bands")
+    offset: float | None = None
+    nodata: float | None = None
+    resampling: Literal["bilinear", "nearest"] = Field(
+        default="bilinear", description="how bands that do not lie on the grid are brought onto it"
+    )
     bands: dict[str, Annotated[BandSettings, _FILE_ALONE]] = Field(min_length=1)
     mask: MaskSettings | None = None
+
+    @model_validator(mode="after")
+    def _mask_says_what_to_reject(self) -> SceneSettings:
+        mask = self.mask
+        if mask and self.sensor is None and not mask.bits:
+            if not mask.reject:
+                raise ValueError("the mask needs 'reject' (codes) or 'bits' (name = bit number), as no sensor is named")
+            words = [item for item in mask.reject if isinstance(item, str)]
+            if words:
+                raise ValueError(f"the mask rejects {words[0]!r}, but no sensor is named whose preset could say what it is")
+        return self
 
     @field_validator("bands")
     @classmethod

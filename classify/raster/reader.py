@@ -1,0 +1,245 @@
+"""A scene: bands of any resolution and CRS, read as reflectance on one grid, window by window.
+
+A `Scene` is a plain value that can be sent to other threads or machines, each of which opens its own `SceneReader`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+from functools import cached_property
+from types import TracebackType
+
+import numpy as np
+from numpy.typing import NDArray
+
+from classify.errors import DataError, Problem
+from classify.raster.grid import Grid, Window
+from classify.raster.masks import MaskSource
+from classify.raster.resample import Array, Placement, Rule, gather_bilinear, gather_nearest, source_window
+from classify.raster.sources import BandSource, OpenFiles, own_mask, read_window, to_reflectance
+
+# A source so much finer than the grid is averaged; below this ratio it is interpolated.
+_MEAN_FROM_RATIO = 1.5
+# Source pixels read at once when a finer source is averaged.
+_MEAN_BUFFER_PX = 4_000_000
+
+
+@dataclass(frozen=True)
+class Scene:
+    """Bands on one grid, with an optional mask. warnings: findings that do not stop the work but belong in the report."""
+
+    grid: Grid
+    bands: tuple[BandSource, ...]
+    mask: MaskSource | None = None
+    warnings: tuple[Problem, ...] = ()
+    resampling: Rule = "bilinear"
+
+    @property
+    def roles(self) -> tuple[str, ...]:
+        """Names of the bands, in the order of the project file."""
+        return tuple(band.role for band in self.bands)
+
+    def band(self, role: str) -> BandSource:
+        """The band of a role. Raises DataError listing the roles there are."""
+        for band in self.bands:
+            if band.role == role:
+                return band
+        raise DataError(f"the scene has no band {role!r}", where="scene.bands", fix=f"it has: {', '.join(self.roles)}")
+
+    def open(self) -> SceneReader:
+        """A reader for the calling thread; closes with its context."""
+        return SceneReader(self)
+
+    @cached_property
+    def _groups(self) -> dict[str, tuple[BandSource, ...]]:
+        """Role -> the bands that are read together with it: those of one file, stored and placed alike."""
+        together: dict[tuple[str, Grid, bool], list[BandSource]] = {}
+        for band in self.bands:
+            together.setdefault((band.path, band.native, band.flagged), []).append(band)
+        return {band.role: tuple(group) for group in together.values() for band in group}
+
+    def __getstate__(self) -> dict[str, object]:
+        return {name: value for name, value in self.__dict__.items() if name != "_groups"}
+
+
+class SceneReader:
+    """Reads windows of a scene. For one thread at a time; files open when first needed and stay open until `close`."""
+
+    def __init__(self, scene: Scene) -> None:
+        self._scene = scene
+        self._files = OpenFiles()
+        self._placements: dict[Grid, Placement] = {}
+
+    def __enter__(self) -> SceneReader:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self.close()
+
+    def close(self) -> None:
+        """Close all files."""
+        self._files.close()
+
+    def read(self, window: Window, roles: Iterable[str] | None = None, halo_px: int = 0) -> dict[str, Array]:
+        """Reflectance by role (float32, (h + 2p, w + 2p) for a halo of p pixels), NaN where invalid.
+
+        Invalid is: no data in this band, rejected by the mask, or outside the scene. `window` may lie partly or wholly
+        outside the grid. A pixel's value does not depend on the window it is read in. Raises DataError for a role that
+        the scene lacks or a file that cannot be read.
+        """
+        scene = self._scene
+        wanted = scene.roles if roles is None else tuple(roles)
+        padded = window.pad(halo_px)
+        inside = padded.intersect(scene.grid.window)
+        if inside is None:
+            return {scene.band(role).role: np.full(padded.shape_yx, np.nan, np.float32) for role in wanted}
+        layers = self._bands([scene.band(role) for role in wanted], inside)
+        if scene.mask is not None and layers:
+            rejected = self.rejected(inside)
+            for layer in layers.values():
+                layer[rejected] = np.nan
+        if inside != padded:
+            layers = {role: _place(layer, inside, padded) for role, layer in layers.items()}
+        return {role: layers[role] for role in wanted}
+
+    def rejected(self, window: Window) -> NDArray[np.bool_]:
+        """bool (h, w) for a window inside the grid: True where the mask rejects the pixel or does not reach it.
+
+        Where the mask is finer than the grid, one rejected mask pixel in it rejects the pixel.
+        """
+        mask = self._scene.mask
+        if mask is None:
+            return np.zeros(window.shape_yx, dtype=bool)
+        placement = self._placement(mask.native)
+        result = np.zeros(window.shape_yx, dtype=bool)
+        for strip in _strips(window, placement):
+            target = result[strip.row - window.row : strip.row - window.row + strip.height]
+            parts = _sub_pixel_places(placement, strip, self._fineness(placement))
+            whole = _enclosing(mask.native, parts)
+            if whole is None:
+                target[:] = True
+                continue
+            stored = read_window(self._files.get(mask.path), mask.path, [mask.band], whole)[0]
+            bad = mask.rejects(stored)
+            for places in parts:
+                picked, held = gather_nearest(bad, whole, mask.native, places)
+                target |= picked.astype(bool) | ~held
+        return result
+
+    def _bands(self, bands: Sequence[BandSource], window: Window) -> dict[str, Array]:
+        layers: dict[str, Array] = {}
+        for band in bands:
+            if band.role not in layers:
+                together = [b for b in self._scene._groups[band.role] if any(b.role == w.role for w in bands)]
+                layers.update(zip((b.role for b in together), self._group(together, window), strict=True))
+        return layers
+
+    def _group(self, bands: list[BandSource], window: Window) -> Array:
+        """float32 (n, h, w) of bands of one file on the scene's grid; a window inside the grid."""
+        placement = self._placement(bands[0].native)
+        fineness = self._fineness(placement)
+        shift = placement.shift_yx
+        if shift is not None:
+            return self._direct(bands, window, shift)
+        if fineness != (1, 1):
+            return self._mean(bands, window, placement, fineness)
+        places = placement.places(window)
+        bilinear = self._scene.resampling == "bilinear"
+        part = source_window(placement.source, places, 1 if bilinear else 0)
+        if part is None:
+            return np.full((len(bands), *window.shape_yx), np.nan, np.float32)
+        values = self._values(bands, part)
+        if bilinear:
+            return gather_bilinear(values, part, placement.source, places)
+        picked, held = gather_nearest(values, part, placement.source, places)
+        return np.where(held, picked, np.float32(np.nan)).astype(np.float32, copy=False)
+
+    def _direct(self, bands: list[BandSource], window: Window, shift_yx: tuple[int, int]) -> Array:
+        wanted = window.shift(*shift_yx)
+        part = wanted.intersect(bands[0].native.window)
+        if part == wanted:
+            return self._values(bands, wanted)
+        result = np.full((len(bands), *window.shape_yx), np.nan, np.float32)
+        if part is not None:
+            rows, cols = part.shift(-wanted.row, -wanted.col).slices_yx
+            result[:, rows, cols] = self._values(bands, part)
+        return result
+
+    def _mean(self, bands: list[BandSource], window: Window, placement: Placement, fineness: tuple[int, int]) -> Array:
+        total = np.zeros((len(bands), *window.shape_yx), np.float32)
+        count = np.zeros(total.shape, np.int32)
+        for strip in _strips(window, placement):
+            parts = _sub_pixel_places(placement, strip, fineness)
+            whole = _enclosing(placement.source, parts)
+            if whole is None:
+                continue
+            values = self._values(bands, whole)
+            rows = slice(strip.row - window.row, strip.row - window.row + strip.height)
+            for places in parts:
+                picked, held = gather_nearest(values, whole, placement.source, places)
+                valid = held & ~np.isnan(picked)
+                # One addition per sub-pixel in a fixed order: a library mean could regroup by the window's shape.
+                total[:, rows] += np.where(valid, picked, 0)
+                count[:, rows] += valid
+        with np.errstate(invalid="ignore", divide="ignore"):
+            return np.asarray(np.where(count > 0, total / count, np.nan), dtype=np.float32)
+
+    def _values(self, bands: list[BandSource], part: Window) -> Array:
+        """Reflectance (n, rows, cols) of a window inside the bands' own grid."""
+        path = bands[0].path
+        dataset = self._files.get(path)
+        numbers = [band.band for band in bands]
+        stored = read_window(dataset, path, numbers, part)
+        values = np.empty(stored.shape, np.float32)
+        for layer, raw, band in zip(values, stored, bands, strict=True):
+            layer[:] = to_reflectance(raw, band)
+            if band.flagged:
+                layer[own_mask(dataset, path, band.band, part)] = np.nan
+        return values
+
+    def _placement(self, native: Grid) -> Placement:
+        if native not in self._placements:
+            self._placements[native] = Placement(native, self._scene.grid)
+        return self._placements[native]
+
+    @staticmethod
+    def _fineness(placement: Placement) -> tuple[int, int]:
+        """Source pixels to look at per target pixel along rows and columns: (1, 1) unless the source is finer."""
+        rows, cols = placement.ratio_yx
+        return max(1, round(rows)) if rows >= _MEAN_FROM_RATIO else 1, max(1, round(cols)) if cols >= _MEAN_FROM_RATIO else 1
+
+
+def _place(layer: Array, inside: Window, padded: Window) -> Array:
+    result = np.full(padded.shape_yx, np.nan, np.float32)
+    result[inside.shift(-padded.row, -padded.col).slices_yx] = layer
+    return result
+
+
+def _strips(window: Window, placement: Placement) -> list[Window]:
+    """The window in strips of rows, few enough that the finer source pixels under one fit the buffer."""
+    rows, cols = (max(1.0, ratio) for ratio in placement.ratio_yx)
+    height = max(1, int(_MEAN_BUFFER_PX / (rows * cols * window.width)))
+    return [
+        Window(row, window.col, min(height, window.row + window.height - row), window.width)
+        for row in range(window.row, window.row + window.height, height)
+    ]
+
+
+def _sub_pixel_places(
+    placement: Placement, window: Window, fineness: tuple[int, int]
+) -> list[tuple[NDArray[np.float64], NDArray[np.float64]]]:
+    return [
+        placement.places(window, ((i + 0.5) / fineness[0], (j + 0.5) / fineness[1]))
+        for i in range(fineness[0])
+        for j in range(fineness[1])
+    ]
+
+
+def _enclosing(source: Grid, parts: list[tuple[NDArray[np.float64], NDArray[np.float64]]]) -> Window | None:
+    """One source window that holds the places of all sub-pixels."""
+    rows = np.concatenate([part[0].ravel() for part in parts])
+    cols = np.concatenate([part[1].ravel() for part in parts])
+    return source_window(source, (rows, cols), 1)

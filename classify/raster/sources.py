@@ -1,0 +1,174 @@
+"""Raster files as sources of bands: opened, looked at and described; every fault a clear error with its file."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from contextlib import AbstractContextManager, contextmanager, nullcontext
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import rasterio
+from numpy.typing import NDArray
+from rasterio.enums import MaskFlags
+from rasterio.errors import RasterioError
+
+from classify.errors import DataError
+from classify.raster.grid import Grid, Window
+
+# An address that does not answer is given up after these times instead of hanging for minutes.
+REMOTE_OPTIONS = {
+    "GDAL_HTTP_CONNECTTIMEOUT": "15",
+    "GDAL_HTTP_TIMEOUT": "60",
+    "GDAL_HTTP_MAX_RETRY": "2",
+    "GDAL_HTTP_RETRY_DELAY": "1",
+    "GDAL_DISABLE_READDIR_ON_OPEN": "EMPTY_DIR",
+    "CPL_VSIL_CURL_ALLOWED_EXTENSIONS": ".tif,.tiff,.jp2,.vrt,.img,.hdr,.dat,.bsq,.bil,.bip",
+}
+
+
+@dataclass(frozen=True, slots=True)
+class BandSource:
+    """One band of a scene.
+
+    role: its name in formulas. path, band: where it is stored, bands counted from 1. scale, offset: reflectance =
+    stored * scale + offset. nodata: stored value that is no data, NaN for not-a-number, None if there is none.
+    wavelength_nm: centre wavelength, if known. native: the grid it is stored on. flagged: the file carries its own
+    mask (an alpha band or a mask band), which is honoured.
+    """
+
+    role: str
+    path: str
+    band: int
+    scale: float
+    offset: float
+    nodata: float | None
+    wavelength_nm: float | None
+    native: Grid
+    flagged: bool = False
+
+
+@dataclass(frozen=True, slots=True)
+class RasterFacts:
+    """What a raster file says of itself. Sequences are by band; scale 1 and offset 0 mean that it says nothing."""
+
+    path: str
+    native: Grid
+    count: int
+    dtypes: tuple[str, ...]
+    nodata: tuple[float | None, ...]
+    scales: tuple[float, ...]
+    offsets: tuple[float, ...]
+    flagged: tuple[bool, ...]
+    descriptions: tuple[str, ...]
+    tags: tuple[dict[str, str], ...]
+
+
+def is_remote(path: str) -> bool:
+    """Whether GDAL reads the path through the network or another virtual file system."""
+    return path.startswith("/vsi") or "://" in path
+
+
+@contextmanager
+def gdal_errors(path: str, doing: str) -> Iterator[None]:
+    """Turn errors of the raster library into a DataError about `path`."""
+    try:
+        yield
+    except RasterioError as error:
+        reason = str(error.__cause__ or error).strip().replace("\n", " ")
+        if is_remote(path):
+            fix = "check the address, your access to it and the network"
+        elif not Path(path).exists():
+            raise DataError("there is no such file", where=path, fix="check the path; it starts from the project file") from error
+        else:
+            fix = "the file may be cut off or damaged; copy it again from its source"
+        raise DataError(f"{doing}: {reason}", where=path, fix=fix) from error
+
+
+def _gdal_options(path: str) -> AbstractContextManager[Any]:
+    return rasterio.Env(**REMOTE_OPTIONS) if is_remote(path) else nullcontext()
+
+
+def open_raster(path: str) -> rasterio.DatasetReader:
+    """Open a raster for reading. Raises DataError."""
+    with gdal_errors(path, "this raster cannot be opened"), _gdal_options(path):
+        return rasterio.open(path)
+
+
+def read_window(dataset: rasterio.DatasetReader, path: str, bands: list[int], part: Window) -> NDArray[np.generic]:
+    """Stored values (bands, h, w) of a window inside the file. Raises DataError."""
+    with gdal_errors(path, f"reading rows {part.row} to {part.row + part.height - 1} failed"), _gdal_options(path):
+        stored: NDArray[np.generic] = dataset.read(bands, window=part.to_rasterio())
+    return stored
+
+
+def describe(path: str) -> RasterFacts:
+    """Read what a file says of itself. Raises DataError for a file that cannot be opened or has no place on earth."""
+    with open_raster(path) as dataset:
+        if dataset.crs is None:
+            raise DataError(
+                "this raster has no coordinate reference system", where=path,
+                fix="assign it the CRS it was made in (for instance with a GIS), do not guess one",
+            )  # fmt: skip
+        if dataset.transform.is_identity or dataset.transform.is_degenerate:
+            raise DataError(
+                "this raster has no georeferencing (no pixel size or origin)", where=path,
+                fix="export it again with georeferencing, or add its world file",
+            )  # fmt: skip
+        own_mask = {MaskFlags.per_dataset, MaskFlags.alpha}
+        return RasterFacts(
+            path=path,
+            native=Grid(dataset.crs, dataset.transform, dataset.height, dataset.width),
+            count=dataset.count,
+            dtypes=tuple(dataset.dtypes),
+            nodata=tuple(dataset.nodatavals),
+            scales=tuple(dataset.scales),
+            offsets=tuple(dataset.offsets),
+            flagged=tuple(bool(own_mask & set(flags)) and MaskFlags.nodata not in flags for flags in dataset.mask_flag_enums),
+            descriptions=tuple(text or "" for text in dataset.descriptions),
+            tags=tuple(dataset.tags(index) for index in dataset.indexes),
+        )
+
+
+def to_reflectance(stored: NDArray[np.generic], source: BandSource) -> NDArray[np.float32]:
+    """float32 reflectance of stored values, NaN for no data; a function of each value alone."""
+    exact_in_float32 = stored.dtype.kind in "iu" and stored.dtype.itemsize <= 2 or stored.dtype == np.float32
+    kind = np.float32 if exact_in_float32 else np.float64
+    values = stored.astype(kind)
+    if source.scale != 1 or source.offset != 0:
+        values *= kind(source.scale)
+        values += kind(source.offset)
+    result = values.astype(np.float32, copy=False)
+    if stored.dtype.kind == "f":
+        result[~np.isfinite(stored)] = np.nan
+    if source.nodata is not None and not np.isnan(source.nodata):
+        # Compared as stored, where the value is exact; a float32 file may declare it with more digits than it holds.
+        no_data = stored.dtype.type(source.nodata) if stored.dtype.kind == "f" else source.nodata
+        result[stored == no_data] = np.nan
+    return result
+
+
+class OpenFiles:
+    """Open files of one thread, each opened once and when first needed."""
+
+    def __init__(self) -> None:
+        self._open: dict[str, rasterio.DatasetReader] = {}
+
+    def get(self, path: str) -> rasterio.DatasetReader:
+        """The open file. Raises DataError."""
+        if path not in self._open:
+            self._open[path] = open_raster(path)
+        return self._open[path]
+
+    def close(self) -> None:
+        """Close all."""
+        for dataset in self._open.values():
+            dataset.close()
+        self._open.clear()
+
+
+def own_mask(dataset: Any, path: str, band: int, part: Window) -> NDArray[np.bool_]:  # noqa: ANN401 - a rasterio dataset
+    """bool (h, w): pixels that the file's own mask or alpha band calls invalid. Raises DataError."""
+    with gdal_errors(path, "reading its mask failed"), _gdal_options(path):
+        return np.asarray(dataset.read_masks(band, window=part.to_rasterio()) == 0)
