@@ -11,10 +11,9 @@ from __future__ import annotations
 from functools import lru_cache
 
 import numpy as np
+import pyproj
 from affine import Affine
 from numpy.typing import NDArray
-from pyproj import CRS as ProjCRS
-from pyproj import Transformer
 from rasterio.crs import CRS
 
 from classify.errors import DataError
@@ -43,7 +42,7 @@ class _Earth:
     """A CRS's way to longitude and latitude in radians, and its ellipsoid."""
 
     def __init__(self, crs: CRS) -> None:
-        projected = ProjCRS.from_user_input(crs.to_wkt())
+        projected = pyproj.CRS.from_user_input(crs.to_wkt())
         geodetic = projected.geodetic_crs
         if geodetic is None or geodetic.ellipsoid is None:
             raise DataError(
@@ -56,7 +55,7 @@ class _Earth:
         self.e = float(np.sqrt(flattening * (2 - flattening)))
         geodetic_2d = geodetic.to_2d()
         self.radians = geodetic_2d.axis_info[0].unit_conversion_factor
-        self._to_geodetic = Transformer.from_crs(projected.to_2d(), geodetic_2d, always_xy=True)
+        self._to_geodetic = pyproj.Transformer.from_crs(projected.to_2d(), geodetic_2d, always_xy=True)
 
     def equal_area_xy_m(self, x: NDArray[np.float64], y: NDArray[np.float64]) -> tuple[NDArray[np.float64], ...]:
         """CRS coordinates to (a * lon, a * q / 2) in metres, where areas are true."""

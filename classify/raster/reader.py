@@ -27,7 +27,7 @@ _MEAN_BUFFER_PX = 4_000_000
 
 @dataclass(frozen=True)
 class Scene:
-    """Bands on one grid, with an optional mask. warnings: findings that do not stop the work but belong in the report."""
+    """Bands on one grid, with an optional mask. warnings: findings that do not stop the work but travel on."""
 
     grid: Grid
     bands: tuple[BandSource, ...]
@@ -208,8 +208,8 @@ class SceneReader:
     @staticmethod
     def _fineness(placement: Placement) -> tuple[int, int]:
         """Source pixels to look at per target pixel along rows and columns: (1, 1) unless the source is finer."""
-        rows, cols = placement.ratio_yx
-        return max(1, round(rows)) if rows >= _MEAN_FROM_RATIO else 1, max(1, round(cols)) if cols >= _MEAN_FROM_RATIO else 1
+        rows, cols = (round(ratio) if ratio >= _MEAN_FROM_RATIO else 1 for ratio in placement.ratio_yx)
+        return rows, cols
 
 
 def _place(layer: Array, inside: Window, padded: Window) -> Array:

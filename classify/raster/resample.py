@@ -21,10 +21,9 @@ from functools import cached_property, lru_cache
 from typing import Literal
 
 import numpy as np
+import pyproj
 from affine import Affine
 from numpy.typing import NDArray
-from pyproj import CRS as ProjCRS
-from pyproj import Transformer
 from pyproj.aoi import AreaOfInterest
 from pyproj.transformer import TransformerGroup
 from rasterio.crs import CRS
@@ -52,12 +51,13 @@ class Placement:
     @cached_property
     def same_crs(self) -> bool:
         """Whether both grids share a CRS, so that placing is affine."""
-        return self.source.crs == self.target.crs
+        return bool(self.source.crs == self.target.crs)
 
     @cached_property
     def affine(self) -> Affine:
         """Target pixel coordinates to source pixel coordinates, when both share a CRS."""
-        return ~self.source.transform @ self.target.transform
+        found: Affine = ~self.source.transform @ self.target.transform
+        return found
 
     @cached_property
     def shift_yx(self) -> tuple[int, int] | None:
@@ -108,9 +108,11 @@ class Placement:
         """The largest lattice step whose error at the middle of cells over the whole grid is small enough."""
         height, width = self.target.shape_yx
         for step in _LATTICE_STEPS_PX:
-            rows = (np.unique(np.linspace(0, height // step, 9, dtype=np.int64)) + 0.5) * step
-            cols = (np.unique(np.linspace(0, width // step, 9, dtype=np.int64)) + 0.5) * step
-            row, col = rows[:, None], cols[None, :]
+            row, col = (
+                (np.unique(np.linspace(0, size // step, 9, dtype=np.int64)).astype(np.float64) + 0.5) * step
+                for size in (height, width)
+            )
+            row, col = row[:, None], col[None, :]
             guess = self._between_nodes(row, col, step)
             exact = self._exact(*np.broadcast_arrays(row, col))
             with np.errstate(invalid="ignore"):
@@ -140,18 +142,18 @@ class Placement:
 
 
 @lru_cache(maxsize=256)
-def _transformer(from_crs: CRS, to_crs: CRS, bounds: tuple[float, float, float, float]) -> Transformer:
+def _transformer(from_crs: CRS, to_crs: CRS, bounds: tuple[float, float, float, float]) -> pyproj.Transformer:
     """One fixed operation for the whole scene, so that neighbouring pixels never take different datum shifts."""
     try:
         west, south, east, north = transform_bounds(from_crs, "OGC:CRS84", *bounds)
         area = AreaOfInterest(west, south, east, north) if west < east else None
-    except Exception:  # noqa: BLE001 - bounds outside the CRS's domain only cost the choice of the best datum shift
+    except Exception:  # bounds outside the CRS's domain only cost the choice of the best datum shift
         area = None
-    source, target = (ProjCRS.from_user_input(crs.to_wkt()).to_2d() for crs in (from_crs, to_crs))
+    source, target = (pyproj.CRS.from_user_input(crs.to_wkt()).to_2d() for crs in (from_crs, to_crs))
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")  # the best operation may need a shift grid that is not installed
-        group = TransformerGroup(source, target, always_xy=True, area_of_interest=area)
-    return group.transformers[0] if group.transformers else Transformer.from_crs(source, target, always_xy=True)
+        group = TransformerGroup(source, target, always_xy=True, area_of_interest=area)  # type: ignore[arg-type]
+    return group.transformers[0] if group.transformers else pyproj.Transformer.from_crs(source, target, always_xy=True)
 
 
 def source_window(source: Grid, places: Places, margin_px: int) -> Window | None:
@@ -184,24 +186,30 @@ def gather_nearest(
 def gather_bilinear(values: Array, part: Window, source: Grid, places: Places) -> Array:
     """Bilinear values (n, h, w) at the places, NaN outside the source and where the nearest pixel is NaN."""
     nearest, inside = gather_nearest(values, part, source, places)
-    (r0, r1, fr), (c0, c1, fc) = (
-        _neighbours(place, size, first, length)
-        for place, size, first, length in (
-            (places[0], source.height, part.row, part.height),
-            (places[1], source.width, part.col, part.width),
-        )
-    )
-    result = _blend(values, r0, r1, c0, c1, fr, fc)
+    rows = _between(places[0], source.height, part.row, part.height)
+    cols = _between(places[1], source.width, part.col, part.width)
+    result = _blend(values, rows, cols)
     result[:, ~inside] = np.nan
     # Almost always nothing: pixels beside an invalid one, which must be told from those that are invalid themselves.
     hurt = np.isnan(result) & ~np.isnan(nearest) & inside
-    if hurt.any():
-        shape = result.shape[1:]
-        flat = [np.broadcast_to(array, shape) for array in (r0, r1, c0, c1, fr, fc)]
-        for layer in np.flatnonzero(hurt.any(axis=(1, 2))):
-            chosen = hurt[layer]
-            result[layer, chosen] = _blend_valid(values[layer], *(array[chosen] for array in flat))
+    for layer in np.flatnonzero(hurt.any(axis=(1, 2))):
+        chosen = hurt[layer]
+        result[layer, chosen] = _blend_valid(values[layer], rows.at(chosen), cols.at(chosen))
     return result
+
+
+@dataclass(frozen=True, slots=True)
+class _Between:
+    """Both neighbours of places along one axis, as indices into a window, and the weight of the second (float32)."""
+
+    low: NDArray[np.intp]
+    high: NDArray[np.intp]
+    weight: Array
+
+    def at(self, chosen: NDArray[np.bool_]) -> _Between:
+        """The chosen pixels alone, flat."""
+        low, high = (np.broadcast_to(array, chosen.shape)[chosen] for array in (self.low, self.high))
+        return _Between(low, high, np.broadcast_to(self.weight, chosen.shape)[chosen])
 
 
 def _index(place: NDArray[np.float64], size: int) -> tuple[NDArray[np.intp], NDArray[np.bool_]]:
@@ -210,43 +218,40 @@ def _index(place: NDArray[np.float64], size: int) -> tuple[NDArray[np.intp], NDA
     return np.where(inside, np.floor(np.where(inside, place, 0)), 0).astype(np.intp), inside
 
 
-def _neighbours(
-    place: NDArray[np.float64], size: int, first: int, length: int
-) -> tuple[NDArray[np.intp], NDArray[np.intp], Array]:
-    """Both neighbours along one axis, as indices into the window, and the weight of the second (float32)."""
+def _between(place: NDArray[np.float64], size: int, first: int, length: int) -> _Between:
     centre = np.clip(np.where(np.isfinite(place), place, 0) - 0.5, 0, size - 1)
     low = np.floor(centre)
-    weight = (centre - low).astype(np.float32)
     low_px = low.astype(np.intp)
     high_px = np.minimum(low_px + 1, size - 1)
-    return np.clip(low_px - first, 0, length - 1), np.clip(high_px - first, 0, length - 1), weight
+    return _Between(
+        np.clip(low_px - first, 0, length - 1),
+        np.clip(high_px - first, 0, length - 1),
+        (centre - low).astype(np.float32),
+    )
 
 
-def _blend(
-    values: Array, r0: NDArray[np.intp], r1: NDArray[np.intp], c0: NDArray[np.intp], c1: NDArray[np.intp], fr: Array, fc: Array
-) -> Array:
-    if r0.shape[-1] == 1 and c0.shape[0] == 1:
+def _blend(values: Array, rows: _Between, cols: _Between) -> Array:
+    if rows.low.shape[-1] == 1 and cols.low.shape[0] == 1:
         # Rows and columns are independent: blend along columns first, on the few source rows, then along rows.
-        left, right = values[..., c0[0]], values[..., c1[0]]
-        across = left + (right - left) * fc
-        top, bottom = across[..., r0[:, 0], :], across[..., r1[:, 0], :]
+        left, right = values[..., cols.low[0]], values[..., cols.high[0]]
+        across = left + (right - left) * cols.weight
+        top, bottom = across[..., rows.low[:, 0], :], across[..., rows.high[:, 0], :]
     else:
-        top = values[..., r0, c0] + (values[..., r0, c1] - values[..., r0, c0]) * fc
-        bottom = values[..., r1, c0] + (values[..., r1, c1] - values[..., r1, c0]) * fc
-    return np.asarray(top + (bottom - top) * fr)
+        top, bottom = (
+            values[..., row, cols.low] + (values[..., row, cols.high] - values[..., row, cols.low]) * cols.weight
+            for row in (rows.low, rows.high)
+        )
+    return np.asarray(top + (bottom - top) * rows.weight)
 
 
-def _blend_valid(
-    layer: Array, r0: NDArray[np.intp], r1: NDArray[np.intp], c0: NDArray[np.intp], c1: NDArray[np.intp], fr: Array, fc: Array
-) -> Array:
-    """Bilinear over the valid neighbours only. All index and weight arrays (n,)."""
-    total, weights = np.zeros_like(fr), np.zeros_like(fr)
+def _blend_valid(layer: Array, rows: _Between, cols: _Between) -> Array:
+    """Bilinear over the valid neighbours only; all index and weight arrays (n,)."""
+    total, weights = np.zeros_like(rows.weight), np.zeros_like(rows.weight)
     one = np.float32(1)
-    for row, col, weight in (
-        (r0, c0, (one - fr) * (one - fc)), (r0, c1, (one - fr) * fc), (r1, c0, fr * (one - fc)), (r1, c1, fr * fc)
-    ):  # fmt: skip
-        value = layer[row, col]
-        valid = ~np.isnan(value)
-        total += np.where(valid, value * weight, 0)
-        weights += np.where(valid, weight, 0)
+    for row, row_weight in ((rows.low, one - rows.weight), (rows.high, rows.weight)):
+        for col, col_weight in ((cols.low, one - cols.weight), (cols.high, cols.weight)):
+            value, weight = layer[row, col], row_weight * col_weight
+            valid = ~np.isnan(value)
+            total += np.where(valid, value * weight, 0)
+            weights += np.where(valid, weight, 0)
     return np.asarray(total / weights)

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -18,7 +19,7 @@ from classify.raster.grid import Grid, Window
 from classify.raster.masks import MaskSource
 from classify.raster.reader import Scene, SceneReader
 from classify.raster.resample import Placement
-from classify.raster.sensors import Sensor, SensorBand, first_known, load_sensor, mask_fields
+from classify.raster.sensors import Sensor, SensorBand, load_sensor, mask_fields
 from classify.raster.sources import BandSource, OpenFiles, RasterFacts, describe, read_window
 from classify.settings import BandSettings, Project, SceneSettings
 
@@ -34,7 +35,8 @@ def open_scene(settings: SceneSettings, project: Project) -> Scene:
     """The scene of a project file, checked. Raises DataError or SettingsError listing every problem found."""
     sensor = load_sensor(settings.sensor) if settings.sensor else None
     files = _Files()
-    bands, problems = [], []
+    bands: list[BandSource] = []
+    problems: list[Problem] = []
     for role, band in settings.bands.items():
         try:
             facts = files.facts(project.path(band.file))
@@ -52,9 +54,10 @@ def open_scene(settings: SceneSettings, project: Project) -> Scene:
     raise_if_errors(problems, DataError)
     grid = _choose_grid(settings, bands)
     ground_areas_m2(grid, Window(0, 0, 1, 1))  # refuses a CRS that is not tied to the earth
-    problems = [problem for band in bands for problem in _placement_problems(band.native, grid, band.role, band.path)]
+    for band in bands:
+        problems += _placement_problems(band.native, grid, repr(band.role), band.path)
     if mask:
-        problems += [p for p in _placement_problems(mask.native, grid, "mask", mask.path) if "shifted" not in p.what]
+        problems += _placement_problems(mask.native, grid, "the mask", mask.path)
     problems += files.probe()
     raise_if_errors(problems, DataError)
     scene = Scene(grid, tuple(bands), mask, (), settings.resampling)
@@ -80,7 +83,8 @@ class _Files:
 
     def probe(self) -> list[Problem]:
         """Read the last row of every file: a file cut off in copying opens well and fails only there."""
-        problems, opened = [], OpenFiles()
+        problems: list[Problem] = []
+        opened = OpenFiles()
         for path, facts in self._facts.items():
             if isinstance(facts, DataError):
                 continue
@@ -104,30 +108,27 @@ def _band_source(
     _refuse_missing_band(band.band, facts)
     index = band.band - 1
     if facts.dtypes[index].startswith("complex"):
-        raise DataError("this band holds complex numbers", where=facts.path, fix="convert it to amplitude or reflectance")
-    preset = sensor.bands.get(role, SensorBand()) if sensor else SensorBand()
-    own_scale, own_offset = facts.scales[index], facts.offsets[index]
-    said = (own_scale, own_offset) != (1.0, 0.0)
-    nodata = next(
-        (v for v in (band.nodata, settings.nodata, facts.nodata[index], preset.nodata, sensor.nodata if sensor else None)
-         if v is not None),
-        None,
-    )  # fmt: skip
+        raise DataError("this band holds complex numbers", where=facts.path, fix="convert it to reflectance")
+    of_all = sensor or Sensor(title="", source="")
+    preset = of_all.bands.get(role, SensorBand())
+    said = (facts.scales[index], facts.offsets[index])
+    file_scale, file_offset = said if said != (1.0, 0.0) else (None, None)
     return BandSource(
         role=role,
         path=facts.path,
         band=band.band,
-        scale=first_known(
-            band.scale, settings.scale, own_scale if said else None, preset.scale, sensor and sensor.scale, default=1.0
-        ),
-        offset=first_known(
-            band.offset, settings.offset, own_offset if said else None, preset.offset, sensor and sensor.offset, default=0.0
-        ),
-        nodata=nodata,
-        wavelength_nm=band.wavelength_nm or preset.wavelength_nm,
+        scale=_first(band.scale, settings.scale, file_scale, preset.scale, of_all.scale, 1.0),
+        offset=_first(band.offset, settings.offset, file_offset, preset.offset, of_all.offset, 0.0),
+        nodata=_first(band.nodata, settings.nodata, facts.nodata[index], preset.nodata, of_all.nodata, None),
+        wavelength_nm=_first(band.wavelength_nm, preset.wavelength_nm, None),
         native=facts.native,
         flagged=facts.flagged[index],
     )
+
+
+def _first(*values_then_default: float | None) -> Any:  # noqa: ANN401 - None only where the last value is
+    """The first value that is known, or the last one, which may be None."""
+    return next((value for value in values_then_default if value is not None), None)
 
 
 def _refuse_missing_band(number: int, facts: RasterFacts) -> None:
@@ -208,29 +209,26 @@ def _placement_problems(native: Grid, grid: Grid, name: str, path: str) -> list[
         return []
     fit = _fit(native, grid)
     if fit.share == 0:
-        what = f"{name!r} does not overlap the grid of the map" if name != "mask" else "the mask does not overlap the scene"
+        what = f"{name} does not overlap the grid of the map"
         return [Problem(what, path, "check that it is of the same place, and its CRS")]
     problems = []
     if fit.share < 0.995:
-        what = f"{name!r} covers only {fit.share:.0%} of the map; the rest will be no data"
-        problems.append(Problem(what, path, "choose a 'grid' band that all others cover, if that is not meant", "warning"))
+        what = f"{name} covers only {fit.share:.0%} of the map; the rest will be no data"
+        fix = "if that is not meant, choose a 'grid' band that all others cover"
+        problems.append(Problem(what, path, fix, "warning"))
     if fit.shift_xy_px:
         x, y = fit.shift_xy_px
-        what = f"the grid of {name!r} is shifted by {abs(x):.2f} pixels in x and {abs(y):.2f} in y against the map's"
-        problems.append(Problem(what, path, "it is interpolated; if the files should match, check their origins", "warning"))
+        what = f"the grid of {name} is shifted by {abs(x):.2f} pixels in x and {abs(y):.2f} in y against the map's"
+        fix = "it is interpolated; if the files should match, check their origins"
+        problems.append(Problem(what, path, fix, "warning"))
     return problems
 
 
 def _value_warnings(scene: Scene) -> list[Problem]:
     """Warnings from the values themselves, looked at in windows spread over the scene."""
-    rows, cols = (
-        np.unique(np.linspace(0, max(size - _SAMPLE_PX, 0), _SAMPLES_PER_SIDE).astype(int)) for size in scene.grid.shape_yx
-    )
-    windows = [
-        Window(int(row), int(col), _SAMPLE_PX, _SAMPLE_PX).intersect(scene.grid.window) for row in rows for col in cols
-    ]
+    windows = _sample_windows(scene.grid)
     with Scene(scene.grid, scene.bands, None, (), "nearest").open() as reader:
-        samples = [reader.read(window) for window in windows if window]
+        samples = [reader.read(window) for window in windows]
     problems = []
     for band in scene.bands:
         values = np.concatenate([sample[band.role].ravel() for sample in samples])
@@ -239,21 +237,29 @@ def _value_warnings(scene: Scene) -> list[Problem]:
             problems.append(_unscaled(band, median))
     if scene.mask:
         with scene.open() as reader:
-            if all(reader.rejected(window).all() for window in windows if window):
-                problems.append(
-                    Problem(
-                        "the mask rejects every pixel looked at", scene.mask.path,
-                        "check the codes or bits that it rejects", "warning",
-                    )  # fmt: skip
-                )
+            all_rejected = all(reader.rejected(window).all() for window in windows)
+        if all_rejected:
+            what, fix = "the mask rejects every pixel looked at", "check the codes or bits that it rejects"
+            problems.append(Problem(what, scene.mask.path, fix, "warning"))
     return problems
 
 
+def _sample_windows(grid: Grid) -> list[Window]:
+    rows, cols = (
+        np.unique(np.linspace(0, max(size - _SAMPLE_PX, 0), _SAMPLES_PER_SIDE).astype(int)) for size in grid.shape_yx
+    )
+    cut = (Window(int(row), int(col), _SAMPLE_PX, _SAMPLE_PX).intersect(grid.window) for row in rows for col in cols)
+    return [window for window in cut if window is not None]
+
+
+# The usual ways to store reflectance, by the largest median that each leaves plausible: percent, eight-bit
+# brightness, ten-thousandths, and the full range of sixteen bits.
+_USUAL_SCALES = ((100, "0.01"), (255, "0.00392157 (1/255)"), (10_000, "0.0001"), (np.inf, "0.0000152590 (1/65535)"))
+
+
 def _unscaled(band: BandSource, median: float) -> Problem:
-    # The usual ways to store reflectance: whole numbers of a hundredth, a ten-thousandth; or brightness of 8 bits.
-    likely = next(scale for limit, scale in ((100, "0.01"), (255, "0.00392157 (1/255)"), (20000, "0.0001"), (np.inf, "0.00001"))
-                  if median * band.scale <= limit)  # fmt: skip
-    return Problem(
-        f"the median of {band.role!r} is {median:.4g}, which is no reflectance (0 to 1); a scale of {likely} is likely",
-        band.path, f"set scale under [scene] or in scene.bands.{band.role}", "warning",
-    )  # fmt: skip
+    likely = next(scale for limit, scale in _USUAL_SCALES if median <= limit)
+    scaled = f" after its scale of {band.scale:g}" if band.scale != 1 else ""
+    what = f"the median of {band.role!r} is {median:.4g}{scaled}, which is no reflectance (0 to 1)"
+    fix = f"set 'scale' under [scene] or in scene.bands.{band.role}; {likely} times the present one is likely"
+    return Problem(what, band.path, fix, "warning")

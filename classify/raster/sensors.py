@@ -57,7 +57,7 @@ class SensorMask(_Preset):
         return (*self.codes, *self.bits)
 
     def field(self, meaning: str) -> MaskField | None:
-        """What rejects a meaning, whatever its case and with spaces, hyphens or underscores; None if it is not known."""
+        """What rejects a meaning (any case; spaces, hyphens or underscores); None if it is not known."""
         wanted = _plain(meaning)
         for name, values in self.codes.items():
             if _plain(name) == wanted:
@@ -124,13 +124,8 @@ def mask_fields(settings: MaskSettings, sensor: Sensor | None) -> tuple[MaskFiel
     return tuple(field for field in fields if field.values)
 
 
-def first_known(*values: float | None, default: float) -> float:
-    """The first value that is not None."""
-    return next((value for value in values if value is not None), default)
-
-
 def _plain(text: str) -> str:
     return " ".join(text.replace("_", " ").replace("-", " ").casefold().split())
 
 
-__all__ = ["BitField", "Sensor", "SensorBand", "SensorMask", "first_known", "load_sensor", "mask_fields"]
+__all__ = ["BitField", "Sensor", "SensorBand", "SensorMask", "load_sensor", "mask_fields"]

@@ -80,7 +80,8 @@ def gdal_errors(path: str, doing: str) -> Iterator[None]:
         if is_remote(path):
             fix = "check the address, your access to it and the network"
         elif not Path(path).exists():
-            raise DataError("there is no such file", where=path, fix="check the path; it starts from the project file") from error
+            fix = "check the path; it starts from the folder of the project file"
+            raise DataError("there is no such file", where=path, fix=fix) from error
         else:
             fix = "the file may be cut off or damaged; copy it again from its source"
         raise DataError(f"{doing}: {reason}", where=path, fix=fix) from error
@@ -116,7 +117,7 @@ def describe(path: str) -> RasterFacts:
                 "this raster has no georeferencing (no pixel size or origin)", where=path,
                 fix="export it again with georeferencing, or add its world file",
             )  # fmt: skip
-        own_mask = {MaskFlags.per_dataset, MaskFlags.alpha}
+        outside = {MaskFlags.per_dataset, MaskFlags.alpha}
         return RasterFacts(
             path=path,
             native=Grid(dataset.crs, dataset.transform, dataset.height, dataset.width),
@@ -125,20 +126,19 @@ def describe(path: str) -> RasterFacts:
             nodata=tuple(dataset.nodatavals),
             scales=tuple(dataset.scales),
             offsets=tuple(dataset.offsets),
-            flagged=tuple(bool(own_mask & set(flags)) and MaskFlags.nodata not in flags for flags in dataset.mask_flag_enums),
+            flagged=tuple(bool(outside & set(flags)) for flags in dataset.mask_flag_enums),
             descriptions=tuple(text or "" for text in dataset.descriptions),
             tags=tuple(dataset.tags(index) for index in dataset.indexes),
         )
 
 
-def to_reflectance(stored: NDArray[np.generic], source: BandSource) -> NDArray[np.float32]:
+def to_reflectance(stored: NDArray[Any], source: BandSource) -> NDArray[np.float32]:
     """float32 reflectance of stored values, NaN for no data; a function of each value alone."""
-    exact_in_float32 = stored.dtype.kind in "iu" and stored.dtype.itemsize <= 2 or stored.dtype == np.float32
+    exact_in_float32 = stored.dtype == np.float32 or (stored.dtype.kind in "iu" and stored.dtype.itemsize <= 2)
     kind = np.float32 if exact_in_float32 else np.float64
     values = stored.astype(kind)
     if source.scale != 1 or source.offset != 0:
-        values *= kind(source.scale)
-        values += kind(source.offset)
+        values = values * kind(source.scale) + kind(source.offset)
     result = values.astype(np.float32, copy=False)
     if stored.dtype.kind == "f":
         result[~np.isfinite(stored)] = np.nan
