@@ -1,1 +1,26 @@
-"""See DEVELOPERS.md for what this room holds."""
+"""Accuracy and areas from a labelled reference sample, design-based, each with its uncertainty and its evidence."""
+
+from classify.assessment.assess import assess, assess_matrix, write_assessment
+from classify.assessment.evidence import EVIDENCE, Evidence
+from classify.assessment.intervals import Estimate
+from classify.assessment.options import AssessmentOptions
+from classify.assessment.reference import assess_project, read_reference
+from classify.assessment.result import AreaEstimate, Assessment, StratumSummary
+from classify.assessment.sample import ReferenceSample, Stratum
+
+__all__ = [
+    "EVIDENCE",
+    "AreaEstimate",
+    "Assessment",
+    "AssessmentOptions",
+    "Estimate",
+    "Evidence",
+    "ReferenceSample",
+    "Stratum",
+    "StratumSummary",
+    "assess",
+    "assess_matrix",
+    "assess_project",
+    "read_reference",
+    "write_assessment",
+]

@@ -13,6 +13,8 @@ from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, PrivateAttr,
 
 ModelKind = Literal["random forest", "support vector machine", "linear support vector machine"]
 AreaUnit = Literal["ha", "km2", "m2", "acre"]
+# The acre is the international one.
+M2_PER_UNIT: dict[str, float] = {"ha": 10_000.0, "km2": 1_000_000.0, "m2": 1.0, "acre": 4046.8564224}
 
 # Okabe & Ito (2008), "Color universal design", the published colour-blind-safe scheme, then four tints of it for
 # projects with more classes than the scheme has colours. Used only for classes whose colour is not given.
@@ -100,7 +102,7 @@ class SceneSettings(_Section):
                 raise ValueError("the mask needs 'reject' (codes) or 'bits' (name = bit number), as no sensor is named")
             words = [item for item in mask.reject if isinstance(item, str)]
             if words:
-                raise ValueError(f"the mask rejects {words[0]!r}, but no sensor is named whose preset could say what it is")
+                raise ValueError(f"the mask rejects {words[0]!r}, but no sensor is named that could say what it is")
         return self
 
     @field_validator("bands")

@@ -1,0 +1,52 @@
+"""The way in from data frames and tables, and the way out to files."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import pandas as pd
+
+from classify.assessment.inputs import sample_from_matrix, sample_from_points
+from classify.assessment.options import AssessmentOptions
+from classify.assessment.result import Assessment
+from classify.assessment.statistics import estimate_sample
+from classify.files import write_json, write_text
+
+DEFAULTS = AssessmentOptions()
+
+
+def assess(
+    points: pd.DataFrame, strata: pd.DataFrame | None = None, options: AssessmentOptions = DEFAULTS
+) -> Assessment:
+    """Estimate accuracy and areas from labelled points.
+
+    points: columns stratum, map, reference and, optionally, cluster; one row per point.
+    strata: columns stratum and area (or pixels with `options.pixel_area`), optionally mapped_as, clusters; None for a simple
+    random sample of an area of unknown size. Raises SampleError naming table, row and column of every problem.
+    """
+    return estimate_sample(sample_from_points(points, strata, options), options)
+
+
+def assess_matrix(
+    matrix: pd.DataFrame, strata: pd.DataFrame | None = None, options: AssessmentOptions = DEFAULTS
+) -> Assessment:
+    """Estimate accuracy and areas from a square matrix of counts: the first column names the map class of each row, the other
+    columns the reference classes. strata: as for `assess`; its strata are the map classes, or it is a single one.
+    Raises SampleError."""
+    return estimate_sample(sample_from_matrix(matrix, strata, options), options)
+
+
+def write_assessment(assessment: Assessment, folder: Path) -> list[Path]:
+    """Write assessment.json and the tables as CSV into `folder`, each whole or not at all. Returns the paths."""
+    written = [folder / "assessment.json"]
+    write_json(written[0], assessment.to_json())
+    tables = {
+        "accuracy.csv": assessment.accuracy_frame,
+        "areas.csv": assessment.area_frame,
+        "matrix.csv": assessment.matrix_frame,
+        "strata.csv": assessment.strata_frame,
+    }
+    for name, table in tables.items():
+        write_text(folder / name, table.to_csv(index=False, lineterminator="\n"))
+        written.append(folder / name)
+    return written

@@ -1,0 +1,53 @@
+"""What a caller may choose about an assessment, and how messages name the tables it is made from."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Literal, get_args
+
+from classify.assessment.evidence import EvidenceName
+from classify.assessment.sample import DesignKind
+
+IntervalName = Literal["automatic", "normal", "wilson", "student", "bootstrap"]
+INTERVALS: tuple[IntervalName, ...] = get_args(IntervalName)
+
+
+@dataclass(frozen=True, slots=True)
+class TableName:
+    """How messages call a table: its file or "points", and the row number of its first record."""
+
+    name: str
+    first_row: int = 1
+
+    def column(self, column: str) -> str:
+        """Where a column lies."""
+        return f"{self.name}, column {column!r}"
+
+    def row(self, place: int, column: str) -> str:
+        """Where the value of the record at `place` (from 0) lies."""
+        return f"{self.name}, row {place + self.first_row}, column {column!r}"
+
+
+@dataclass(frozen=True, slots=True)
+class AssessmentOptions:
+    """How to assess.
+
+    confidence_level: in (0.5, 1). interval: "automatic" picks normal or Wilson by a documented rule.
+    finite_population: correct for the part of the population that was sampled, where strata give counts of its units.
+    classes: names in order; None for those that occur. kind: how points were drawn; None for stratified, or simple
+    random with one stratum. area_unit: carried through. pixel_area: area of a pixel where strata give pixels only.
+    mapped_area: mapped area by class where strata do not say it. points, strata: what messages call the tables.
+    """
+
+    confidence_level: float = 0.95
+    interval: IntervalName = "automatic"
+    finite_population: bool = True
+    classes: tuple[str, ...] | None = None
+    kind: DesignKind | None = None
+    area_unit: str = ""
+    pixel_area: float | None = None
+    mapped_area: Mapping[str, float] = field(default_factory=dict)
+    evidence: EvidenceName = "probability sample"
+    points: TableName = TableName("points")
+    strata: TableName = TableName("strata")
