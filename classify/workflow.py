@@ -29,7 +29,7 @@ from classify.progress import SILENT, Progress
 from classify.raster.scene import open_scene
 from classify.report import gather_facts, write_report
 from classify.settings import Project
-from classify.training import extract_pixels, read_polygons, write_pixels
+from classify.training import PixelCaps, extract_pixels, read_polygons, write_pixels
 
 StageName = Literal["train", "classify", "assess", "report"]
 State = Literal["done", "stale", "missing", "not asked for"]
@@ -138,13 +138,16 @@ def _train(job: Job) -> StageResult:
     scene = open_scene(project.scene, project)
     recipe = build_recipe(project.features, scene.roles)
     polygons = read_polygons(project, scene.grid)
-    training = extract_pixels(polygons, scene, recipe, job.jobs, job.progress)
+    caps = PixelCaps(
+        project.training.pixels_per_polygon, project.training.pixels_per_class, seed=project.project.seed
+    )
+    training = extract_pixels(polygons, scene, recipe, job.jobs, job.progress, caps=caps)
     model = fit_model(training, project, recipe, project.project.seed, job.jobs, job.progress)
-    write_pixels(training, job.outputs / "training" / "pixels.parquet")
+    write_pixels(training, job.outputs / "training" / "pixels.parquet", recipe=recipe.to_json())
     save_model(model, job.outputs / "model")
     summary = {
         "polygons": len(training.table), "pixels": len(training.codes), "features": list(recipe.names),
-        "screening": model.card.get("screening"),
+        "screening": model.card["screening"],
     }  # fmt: skip
     return StageResult(summary, (*scene.warnings, *training.problems))
 

@@ -33,9 +33,11 @@ def percent(value: float | None) -> str:
 
 def _train(summary: Mapping[str, Any]) -> str:
     lines = [f"{summary['polygons']} polygons, {summary['pixels']:,} pixels, {len(summary['features'])} features"]
-    screening = summary.get("screening")
-    if screening and screening.get("accuracy") is not None:
-        lines.append(f"screening accuracy on held-out polygons: {percent(screening['accuracy'])} (not map accuracy)")
+    accuracy = summary["screening"]["screening_accuracy"]
+    if accuracy is None:
+        lines.append("screening accuracy: not known, as no polygons could be held out")
+    else:
+        lines.append(f"screening accuracy on held-out polygons: {percent(accuracy)} (this is not map accuracy)")
     return "\n".join(lines)
 
 
@@ -44,7 +46,8 @@ def _classify(summary: Mapping[str, Any]) -> str:
     return table(["mapped", "pixels", "ground area"], rows)
 
 
-def _assess(summary: Mapping[str, Any]) -> str:
+def assessment_text(summary: Mapping[str, Any]) -> str:
+    """An assessment (as in assessment.json) in one table."""
     overall = summary["overall_accuracy"]
     level = f"{summary['confidence_level']:.0%}"
     rows = []
@@ -75,4 +78,4 @@ def _report(summary: Mapping[str, Any]) -> str:
     return "\n".join(summary["files"])
 
 
-_LINES = {"train": _train, "classify": _classify, "assess": _assess, "report": _report}
+_LINES = {"train": _train, "classify": _classify, "assess": assessment_text, "report": _report}

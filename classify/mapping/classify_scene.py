@@ -29,11 +29,10 @@ from classify.raster.area import ground_areas_m2
 from classify.raster.grid import Grid, Window
 from classify.raster.scene import Scene, SceneReader
 from classify.settings import ClassSettings
+from classify.settings.model import M2_PER_UNIT
 
 _In = TypeVar("_In")
 _Out = TypeVar("_Out")
-
-M2_PER_UNIT = {"ha": 10_000.0, "km2": 1_000_000.0, "m2": 1.0, "acre": 4046.8564224}
 
 
 @dataclass(frozen=True, slots=True)
@@ -186,8 +185,7 @@ def _labels(
     if len(rows) and percent is None:
         codes[valid] = model.predict(rows)
     elif len(rows) and percent is not None:
-        probabilities = model.probabilities(rows)
-        codes[valid] = model.class_codes[probabilities.argmax(axis=1)]
+        codes[valid], probabilities = model.predict_both(rows)
         percent[valid] = np.rint(100 * probabilities.max(axis=1)).astype(np.uint8)
     return codes, percent
 
