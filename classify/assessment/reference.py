@@ -57,6 +57,19 @@ def read_reference(project: Project, cover: Path, outputs: Path) -> ReferenceSam
     return _read(project, cover, outputs)[0]
 
 
+def read_labels(project: Project) -> dict[str, int]:
+    """Number of points by label (class name; "" for points without one), read without a map.
+
+    Raises DataError or SampleError, as `read_reference` does for the same file.
+    """
+    settings = project.reference
+    if settings is None:
+        return {}
+    frame = _read_points(project, settings)
+    labels = _labels(project, frame[settings.label], settings.label, TableName(settings.points))
+    return {str(name): int(count) for name, count in labels.value_counts().sort_index().items()}
+
+
 def read_design(path: Path) -> RecordedDesign:
     """Read design.json as the sample was drawn. Raises DataError."""
     content = read_json(path)
