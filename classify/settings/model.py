@@ -143,6 +143,7 @@ class TrainingSettings(_Section):
     inset_m: float = Field(default=0.0, ge=0, le=10_000, description="metres to keep away from polygon edges")
     pixels_per_polygon: int | None = Field(default=None, ge=1, description="at most so many, drawn by the seed")
     pixels_per_class: int | None = Field(default=None, ge=1, description="at most so many, drawn by the seed")
+    materials: str | None = Field(default=None, description="folder with materials of your own, one TOML file each")
 
 
 class FeatureSettings(_Section):
