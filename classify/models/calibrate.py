@@ -46,7 +46,7 @@ def calibrate(
 
     Temperature scaling: Guo et al. 2017, "On calibration of modern neural networks", ICML. codes, polygon: (n,).
     """
-    held = screening.labels > 0
+    held = screening.rounds[0] > 0
     if not held.any():
         return Calibration(1.0, "none")
     scores, truth = screening.scores[held], np.searchsorted(screening.class_codes, codes[held])

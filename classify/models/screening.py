@@ -21,15 +21,15 @@ class Screening:
 
     class_codes: uint8 (k,). counts: int64 (k, k), held-out pixels, rows as labelled by polygons, columns as by the
     model, from the first repeat. repeats: overall and balanced accuracy (mean share right per class) of each repeat,
-    float64 (r, 2). labels: uint8 (n,), held-out label per training pixel of the first repeat, 0 where never held out.
-    scores: float64 (n, k), NaN there. unscreened: codes that could not be held out, for want of a second group.
-    leaky: overall accuracy that a random split of pixels would claim, or None.
+    float64 (r, 2). rounds: uint8 (r, n), held-out label per repeat and training pixel, 0 where never held out.
+    scores: float64 (n, k), of the first repeat, NaN there. unscreened: codes that could not be held out, for want of a
+    second group. leaky: overall accuracy that a random split of pixels would claim, or None.
     """
 
     class_codes: NDArray[np.uint8]
     counts: NDArray[np.int64]
     repeats: NDArray[np.float64]
-    labels: NDArray[np.uint8]
+    rounds: NDArray[np.uint8]
     scores: NDArray[np.float64]
     folds: int
     groups: str = "polygons"

@@ -56,12 +56,12 @@ def screen(
     leaky = _leaky_folds(training.codes, options) if options.leaky else None
     scores = held_out_scores(training, make, [*rounds, *([leaky] if leaky else [])], options, progress)
     found = [_accuracies(training.codes, score, classes) for score in scores]
-    labels = held_out_labels(scores[0], classes)
+    labels = np.stack([held_out_labels(score, classes) for score in scores[: options.repeats]])
     return Screening(
         class_codes=classes,
-        counts=_counts(training.codes, labels, classes),
+        counts=_counts(training.codes, labels[0], classes),
         repeats=np.array([pair for pair in found[: options.repeats] if pair], dtype=np.float64).reshape(-1, 2),
-        labels=labels,
+        rounds=labels,
         scores=scores[0],
         folds=rounds[0].count,
         groups=options.kept_whole,

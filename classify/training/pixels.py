@@ -6,7 +6,7 @@ import threading
 from collections.abc import Iterator
 from concurrent.futures import ThreadPoolExecutor
 from contextlib import ExitStack
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
@@ -15,8 +15,8 @@ from numpy.typing import NDArray
 from classify.errors import Problem, TrainingError
 from classify.features.recipe import Recipe
 from classify.progress import SILENT, Progress
-from classify.raster.grid import Grid, Window
-from classify.raster.scene import Scene, SceneReader
+from classify.raster.grid import Window
+from classify.raster.reader import Scene, SceneReader
 from classify.training.dataset import TrainingSet
 from classify.training.draws import even_draw
 from classify.training.polygons import PolygonSet, polygon_list
@@ -63,7 +63,7 @@ def extract_pixels(
     TrainingError when nothing is left, or when a feature has no value anywhere.
     """
     claims = _claim(polygons)
-    features = _read_features(claims, scene, recipe, jobs, progress)
+    features, reflectance = _read_features(claims, scene, recipe, jobs, progress)
     finite = np.isfinite(features)
     valid = finite.all(axis=1)
     table = claims.table
@@ -81,13 +81,15 @@ def extract_pixels(
         feature_names=recipe.names,
         table=table,
         grid=polygons.grid,
+        reflectance=reflectance[valid],
+        roles=scene.roles,
+        wavelengths_nm=tuple(np.nan if b.wavelength_nm is None else b.wavelength_nm for b in scene.bands),
         conflicts=claims.conflicts,
     )
     training = training.subset(_capped(training, caps))
     used = training.table["polygon"].map(pd.Series(training.polygon).value_counts()).fillna(0).astype(int)
     training.table["used"] = used
-    problems = (*polygons.problems, *_findings(training))
-    return TrainingSet(**{**training.__dict__, "problems": problems})
+    return replace(training, problems=(*polygons.problems, *_findings(training)))
 
 
 def _claim(polygons: PolygonSet) -> _Claims:
@@ -128,13 +130,16 @@ def _pairs(numbers: NDArray[np.int32], code: NDArray[np.uint8], group: NDArray[n
     return pairs.sort_values(["pixels", "polygon", "other"], ascending=[False, True, True], ignore_index=True)
 
 
-def _read_features(claims: _Claims, scene: Scene, recipe: Recipe, jobs: int, progress: Progress) -> NDArray[np.float32]:
-    """float32 (n, f) in the order of `claims`; NaN where invalid."""
+def _read_features(
+    claims: _Claims, scene: Scene, recipe: Recipe, jobs: int, progress: Progress
+) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
+    """Features (n, f) and reflectance (n, b), float32, in the order of `claims`; NaN where invalid."""
     across = -(-scene.grid.width // BLOCK_PX)
     block = (claims.row // BLOCK_PX) * across + claims.col // BLOCK_PX
     order = np.argsort(block, kind="stable")
     groups = np.split(order, np.flatnonzero(np.diff(block[order])) + 1) if len(order) else []
     features = np.full((len(block), len(recipe.names)), np.nan, dtype=np.float32)
+    reflectance = np.full((len(block), len(scene.roles)), np.nan, dtype=np.float32)
     local = threading.local()
     with ExitStack() as stack, progress.task("Reading training pixels", len(groups)) as task:
         lock = threading.Lock()
@@ -144,33 +149,37 @@ def _read_features(claims: _Claims, scene: Scene, recipe: Recipe, jobs: int, pro
             if not hasattr(local, "reader"):
                 with lock:
                     local.reader = stack.enter_context(scene.open())
-            features[chosen] = _block_features(claims.row[chosen], claims.col[chosen], local.reader, recipe)
+            row, col = claims.row[chosen], claims.col[chosen]
+            features[chosen], reflectance[chosen] = _read_block(row, col, scene, local.reader, recipe)
             task.advance()
 
         with ThreadPoolExecutor(max_workers=max(jobs, 1)) as pool:
             list(pool.map(read, groups))
-    return features
+    return features, reflectance
 
 
-def _block_features(
-    row: NDArray[np.int64], col: NDArray[np.int64], reader: SceneReader, recipe: Recipe
-) -> NDArray[np.float32]:
+def _read_block(
+    row: NDArray[np.int64], col: NDArray[np.int64], scene: Scene, reader: SceneReader, recipe: Recipe
+) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
+    """Features (n, f) and reflectance (n, b) of pixels of one block."""
     window = _bounding(row, col)
     halo = recipe.halo_px
-    layers = reader.read(window, roles=recipe.needs, halo_px=halo)
+    roles = tuple(dict.fromkeys((*scene.roles, *recipe.needs)))
+    layers = reader.read(window, roles=roles, halo_px=halo)
     row, col = row - window.row, col - window.col
+    picked = {role: layer[row + halo, col + halo] for role, layer in layers.items()}
+    reflectance = np.stack([picked[role] for role in scene.roles], axis=1)
     if halo == 0:
         # Without neighbours a feature depends on its own pixel alone: compute it only where polygons are.
-        picked = {role: layer[row, col][None, :] for role, layer in layers.items()}
-        return recipe.compute(picked)[:, 0, :].T
+        return recipe.compute({role: picked[role][None, :] for role in recipe.needs})[:, 0, :].T, reflectance
     features = np.empty((len(row), len(recipe.names)), dtype=np.float32)
     for chosen in _tiles(row, col):
         tile = _bounding(row[chosen], col[chosen])
         # `layers` already reach `halo` beyond the window, so a tile grown by the halo starts at its own row and column.
         part = np.s_[tile.row : tile.row + tile.height + 2 * halo, tile.col : tile.col + tile.width + 2 * halo]
-        computed = recipe.compute({role: layer[part] for role, layer in layers.items()})
+        computed = recipe.compute({role: layers[role][part] for role in recipe.needs})
         features[chosen] = computed[:, row[chosen] - tile.row, col[chosen] - tile.col].T
-    return features
+    return features, reflectance
 
 
 def _tiles(row: NDArray[np.int64], col: NDArray[np.int64]) -> Iterator[NDArray[np.int64]]:
@@ -245,11 +254,3 @@ def _findings(training: TrainingSet) -> list[Problem]:
             )
         )
     return found
-
-
-def grid_pixel_size_m(grid: Grid) -> float:
-    """Edge of a pixel in metres at the middle of the grid (geometric mean of both sides), on the ground."""
-    from classify.raster.area import ground_areas_m2
-
-    middle = Window(grid.height // 2, grid.width // 2, 1, 1)
-    return float(np.sqrt(ground_areas_m2(grid, middle)[0, 0]))

@@ -1,0 +1,39 @@
+"""The review of the training data with what models say about it, before any model is kept."""
+
+from __future__ import annotations
+
+from classify.models.fit import check_classes
+from classify.models.kinds import make_estimator
+from classify.models.learning import learning_curve
+from classify.models.validate import ScreenOptions, screen
+from classify.progress import SILENT, Progress
+from classify.settings import Project
+from classify.training.dataset import TrainingSet
+from classify.training.review import Evidence, TrainingReview, review_training
+
+# A small forest is enough to see what a polygon looks like; the review must not take longer than training.
+_TREES = 100
+
+
+def inspect_training(
+    training: TrainingSet, project: Project, jobs: int = 1, progress: Progress = SILENT
+) -> TrainingReview:
+    """Review polygons with grouped cross-validation and a learning curve of a small forest, whatever model is chosen.
+
+    Nothing is refused here: what cannot be screened is said in `problems`. Seeded by the project.
+    """
+    seed = project.project.seed
+    problems = check_classes(training, project)
+    if any(problem.severity == "error" for problem in problems):
+        return review_training(training, project, Evidence.none(len(training.codes)), problems, seed)
+
+    def forest(forest_seed: int) -> object:
+        params = {"n_estimators": _TREES}
+        return make_estimator("random forest", params, features=len(training.feature_names), seed=forest_seed)
+
+    screening = screen(training, forest, ScreenOptions(seed=seed, jobs=jobs, most_pixels=10_000), progress=progress)
+    options = ScreenOptions(seed=seed, jobs=jobs, repeats=10, most_pixels=5_000)
+    curve = learning_curve(training, forest, options, progress=progress)
+    names = {c.code: c.name for c in project.classes}
+    evidence = Evidence(screening.rounds, screening.to_json(), curve.to_json(names))
+    return review_training(training, project, evidence, problems, seed)
