@@ -54,8 +54,8 @@ def open_scene(settings: SceneSettings, project: Project) -> Scene:
     raise_if_errors(problems, DataError)
     grid = _choose_grid(settings, bands)
     ground_areas_m2(grid, Window(0, 0, 1, 1))  # refuses a CRS that is not tied to the earth
-    for band in bands:
-        problems += _placement_problems(band.native, grid, repr(band.role), band.path)
+    for source in bands:
+        problems += _placement_problems(source.native, grid, repr(source.role), source.path)
     if mask:
         problems += _placement_problems(mask.native, grid, "the mask", mask.path)
     problems += files.probe()
@@ -161,7 +161,9 @@ def _choose_grid(settings: SceneSettings, bands: Sequence[BandSource]) -> Grid:
     if isinstance(settings.grid, str):
         return next(band.native for band in bands if band.role == settings.grid)
     if settings.grid is None:
-        return min((band.native for band in bands), key=_pixel_m2)
+        # Pixels of one size differ a little on the ground from place to place; among equals the first band counts.
+        finest_m2 = min(_pixel_m2(band.native) for band in bands)
+        return next(band.native for band in bands if _pixel_m2(band.native) <= 1.02 * finest_m2)
     size, first = float(settings.grid), bands[0].native
     for band in bands:
         t = band.native.transform

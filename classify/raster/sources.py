@@ -135,8 +135,8 @@ def describe(path: str) -> RasterFacts:
 def to_reflectance(stored: NDArray[Any], source: BandSource) -> NDArray[np.float32]:
     """float32 reflectance of stored values, NaN for no data; a function of each value alone."""
     exact_in_float32 = stored.dtype == np.float32 or (stored.dtype.kind in "iu" and stored.dtype.itemsize <= 2)
-    kind = np.float32 if exact_in_float32 else np.float64
-    values = stored.astype(kind)
+    kind: type[np.floating[Any]] = np.float32 if exact_in_float32 else np.float64
+    values: NDArray[Any] = stored.astype(kind)
     if source.scale != 1 or source.offset != 0:
         values = values * kind(source.scale) + kind(source.offset)
     result = values.astype(np.float32, copy=False)
