@@ -149,9 +149,8 @@ def _check(expectation: Expectation, spectra: Spectra) -> Check:
     if not len(values):
         return Check(expectation.name, None, *limits, None, "not checked: the formula has no value here")
     value = float(np.median(values))
-    limit = " and ".join(
-        [f"above {limits[0]:g}"] * (limits[0] is not None) + [f"below {limits[1]:g}"] * (limits[1] is not None)
-    )
+    words = zip(("above", "below"), limits, strict=True)
+    limit = " and ".join(f"{word} {number:g}" for word, number in words if number is not None)
     measured = f"{expectation.formula} is {value:.3g}, expected {limit}"
     if expectation.holds(value):
         return Check(expectation.name, value, *limits, True, f"{expectation.name}: {measured}")
