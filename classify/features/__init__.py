@@ -1,1 +1,18 @@
-"""See DEVELOPERS.md for what this room holds."""
+"""What the model sees of a pixel: bands, published indices, the user's formulas; made block by block from a recipe."""
+
+from classify.features.build import build_recipe
+from classify.features.formula import Formula, FormulaError, parse_formula
+from classify.features.indices import Availability, Index, index_availability, index_catalogue
+from classify.features.recipe import Recipe
+
+__all__ = [
+    "Availability",
+    "Formula",
+    "FormulaError",
+    "Index",
+    "Recipe",
+    "build_recipe",
+    "index_availability",
+    "index_catalogue",
+    "parse_formula",
+]
