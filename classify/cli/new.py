@@ -1,0 +1,31 @@
+"""`landassay new`: start a project, or export the schema of project files."""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+
+import click
+
+from classify.cli.common import Call, common_options
+
+
+@click.command("new", help="Start a project in FOLDER (default: the current one), or export the schema.")
+@click.argument("folder", required=False, type=click.Path(path_type=Path, file_okay=False))
+@click.option("--seed", type=click.IntRange(0, 2**32 - 1), default=1, show_default=True, help="The project's seed.")
+@click.option("--schema", is_flag=True, help="Only print the JSON Schema of project files, for editors.")
+@common_options
+def command(call: Call, folder: Path | None, seed: int, schema: bool) -> None:
+    """Write a commented project file, never over one that is there."""
+    from classify.settings import project_schema
+    from classify.settings.starter import PLACEHOLDER, start_project
+
+    if schema:
+        click.echo(json.dumps(project_schema(), indent=2, ensure_ascii=False))
+        return
+    draft = PLACEHOLDER
+    written = start_project(folder or call.project_path, draft, seed=seed)
+    result = {"project": str(written), "assumptions": list(draft.assumptions)}
+    lines = [f"Started {written}", *(f"  assumed: {text}" for text in draft.assumptions)]
+    lines.append("Next: edit it, then 'landassay check' lists what is still wrong or missing.")
+    call.show(result, "\n".join(lines))
