@@ -180,10 +180,7 @@ def _report(job: Job) -> StageResult:
 
 
 def _scene_inputs(project: Project) -> list[str]:
-    files = [band.file for band in project.scene.bands.values()]
-    if project.scene.mask:
-        files.append(project.scene.mask.file)
-    return list(dict.fromkeys(files))
+    return project.scene.files
 
 
 def _training_inputs(project: Project) -> list[str]:

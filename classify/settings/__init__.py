@@ -2,8 +2,11 @@
 
 from classify.settings.load import load_project, parse_project, project_schema
 from classify.settings.model import (
+    AncillarySettings,
     BandSettings,
     ClassSettings,
+    CompositeSettings,
+    DateSettings,
     FeatureSettings,
     MapSettings,
     MaskSettings,
@@ -17,8 +20,11 @@ from classify.settings.model import (
 from classify.settings.presets import configs_folder, load_preset, preset_names
 
 __all__ = [
+    "AncillarySettings",
     "BandSettings",
     "ClassSettings",
+    "CompositeSettings",
+    "DateSettings",
     "FeatureSettings",
     "MapSettings",
     "MaskSettings",
