@@ -53,7 +53,7 @@ def canopy(background: Spectrum, *, cab: float, brown: float, water: float, dry:
     import prosail
 
     result: Spectrum = prosail.run_prosail(
-        n, cab, 2 + 0.18 * cab, brown, water, dry, lai, angle, 0.1, SUN_ZENITH_DEG, VIEW_ZENITH_DEG, AZIMUTH_DEG,
+        n, cab, 0.5 + 0.2 * cab, brown, water, dry, lai, angle, 0.1, SUN_ZENITH_DEG, VIEW_ZENITH_DEG, AZIMUTH_DEG,
         prospect_version="D", rsoil0=background,
     )  # fmt: skip
     return result
@@ -68,18 +68,18 @@ def drawn(points: dict[float, float]) -> Spectrum:
 def spectra() -> dict[tuple[str, str], Spectrum]:
     """Every cover's variants, between which the landscape mixes."""
     # Litter brightens the dry sward until, from blue to near infrared, nothing parts it from soil.
-    sand = soil(0.78, 0.1, clay=0.04, iron=0.25, tilt=1.15)
-    red_sand = soil(0.80, 0.2, clay=0.10, iron=0.6, tilt=1.40)
-    clay = soil(0.86, 0.2, clay=0.60, iron=0.35, tilt=1.30)
-    moist_clay = soil(0.80, 0.5, clay=0.85, iron=0.2, tilt=1.20)
-    straw = canopy(clay, cab=0.3, brown=0.65, water=0.0005, dry=0.005, lai=1.4, n=2.6)
+    sand = soil(0.78, 0.1, clay=0.04, iron=0.25, tilt=1.20)
+    red_sand = soil(0.78, 0.2, clay=0.10, iron=0.5, tilt=1.30)
+    clay = soil(0.88, 0.2, clay=0.55, iron=0.30, tilt=1.20)
+    moist_clay = soil(0.80, 0.4, clay=0.75, iron=0.40, tilt=1.15)
+    straw = canopy(clay, cab=0, brown=0.6, water=0.0005, dry=0.005, lai=1.4, n=2.6)
     return {
         ("Irrigated pasture", "lush"): canopy(clay, cab=46, brown=0, water=0.016, dry=0.005, lai=4.2),
         ("Irrigated pasture", "grazed"): canopy(clay, cab=31, brown=0.05, water=0.011, dry=0.005, lai=1.5),
         ("Woodland", "dense"): 0.74 * canopy(straw, cab=40, brown=0.1, water=0.013, dry=0.015, lai=3.4, n=1.9),
         ("Woodland", "open"): 0.72 * canopy(straw, cab=28, brown=0.3, water=0.010, dry=0.015, lai=1.1, n=1.9),
         ("Dry grass", "standing"): straw,
-        ("Dry grass", "grazed"): canopy(clay, cab=0, brown=0.8, water=0.0004, dry=0.005, lai=0.85, n=2.6),
+        ("Dry grass", "grazed"): canopy(clay, cab=0, brown=0.5, water=0.0004, dry=0.005, lai=0.85, n=2.6),
         ("Clay loam", "dry"): clay,
         ("Clay loam", "moist"): moist_clay,
         ("Sandy soil", "pale"): sand,
