@@ -117,16 +117,13 @@ def test_what_the_bands_cannot_show_is_said_and_not_judged() -> None:
 
 
 def test_materials_of_the_users_own_and_wrong_ones(tmp_path: Path) -> None:
-    (tmp_path / "Reed beds.toml").write_text(
-        'title = "Reeds"\n[[expect]]\nname = "x"\nof = { nir = [800, 900] }\nformula = "nir"\nabove = 0.3\nsays = "no reeds"\n'
+    one = (
+        'title = "Reeds"\n[[expect]]\nname = "x"\nof = { nir = [800, 900] }\nformula = "nir"\nabove = 0.3\nsays = "s"\n'
     )
+    (tmp_path / "Reed beds.toml").write_text(one)
     assert load_materials(["reed beds", "water"], tmp_path)["reed beds"].title == "Reeds"
-    (tmp_path / "bad.toml").write_text(
-        'title = "Bad"\n[[expect]]\nname = "x"\nof = { nir = [800, 900] }\nformula = "nir / red"\nabove = 0.3\nsays = "s"\n'
-    )
-    (tmp_path / "worse.toml").write_text(
-        'title = "Bad"\n[[expect]]\nname = "x"\nof = { nir = [800, 900] }\nformula = "nir"\nsays = "s"\n'
-    )
+    (tmp_path / "bad.toml").write_text(one.replace('"nir"', '"nir / red"'))
+    (tmp_path / "worse.toml").write_text(one.replace("above = 0.3\n", ""))
     with pytest.raises(SettingsError) as caught:
         load_materials(["bad", "worse", "treacle"], tmp_path)
     text = str(caught.value)

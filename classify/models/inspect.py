@@ -11,8 +11,8 @@ from classify.settings import Project
 from classify.training.dataset import TrainingSet
 from classify.training.review import Evidence, TrainingReview, review_training
 
-# A small forest is enough to see what a polygon looks like; the review must not take longer than training.
-_TREES = 100
+# A small forest on a few pixels of each polygon is enough to see what a polygon looks like.
+_TREES, _PIXELS = 60, 4_000
 
 
 def inspect_training(
@@ -31,8 +31,8 @@ def inspect_training(
         params = {"n_estimators": _TREES}
         return make_estimator("random forest", params, features=len(training.feature_names), seed=forest_seed)
 
-    screening = screen(training, forest, ScreenOptions(seed=seed, jobs=jobs, most_pixels=10_000), progress=progress)
-    options = ScreenOptions(seed=seed, jobs=jobs, repeats=10, most_pixels=5_000)
+    screening = screen(training, forest, ScreenOptions(seed=seed, jobs=jobs, most_pixels=_PIXELS), progress=progress)
+    options = ScreenOptions(seed=seed, jobs=jobs, repeats=6, most_pixels=_PIXELS)
     curve = learning_curve(training, forest, options, progress=progress)
     names = {c.code: c.name for c in project.classes}
     evidence = Evidence(screening.rounds, screening.to_json(), curve.to_json(names))

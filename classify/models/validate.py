@@ -25,7 +25,7 @@ Maker = Callable[[int], Any]
 @dataclass(frozen=True)
 class ScreenOptions:
     """folds: at most so many. repeats: rounds, each dealt anew. most_pixels: on the training side of a fit, drawn
-    evenly over polygons. leaky: also run one plain split of pixels, to show what leakage would claim.
+    evenly over polygons. leaky: also hold out pixels instead of polygons once, to show what leakage would claim.
     kept_whole: "polygons", or words that say which blocks `groups` are."""
 
     folds: int = 5
@@ -124,7 +124,9 @@ def _leaky_folds(codes: NDArray[np.uint8], options: ScreenOptions) -> Folds | No
     fold = np.empty(len(codes), dtype=np.int16)
     for number, (_, held) in enumerate(splitter.split(codes, codes)):
         fold[held] = number
-    return Folds(fold, options.folds, ())
+    # One part is enough to show it: every other pixel is always learnt from.
+    fold[fold > 0] = -1
+    return Folds(fold, 1, ())
 
 
 def held_out_labels(scores: NDArray[np.float64], classes: NDArray[np.uint8]) -> NDArray[np.uint8]:

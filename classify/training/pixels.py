@@ -247,7 +247,7 @@ def _findings(training: TrainingSet) -> list[Problem]:
     for pair in training.conflicts.itertuples():
         found.append(
             Problem(
-                f"polygons {pair.polygon} and {pair.other} of different classes claim {pair.pixels} pixels in common",
+                f"polygons {pair.polygon} and {pair.other} of different classes claim the same pixels ({pair.pixels})",
                 "training polygons",
                 "these pixels are left out; redraw one of the two, or exclude it",
                 "warning",
