@@ -9,10 +9,21 @@ import re
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, PrivateAttr, field_validator, model_validator
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    PrivateAttr,
+    field_validator,
+    model_validator,
+)
 
 ModelKind = Literal["random forest", "support vector machine", "linear support vector machine"]
 AreaUnit = Literal["ha", "km2", "m2", "acre"]
+IntervalName = Literal["automatic", "normal", "wilson", "student", "bootstrap"]
+SampleEvidence = Literal["probability sample", "purposive sample"]
 # The acre is the international one.
 M2_PER_UNIT: dict[str, float] = {"ha": 10_000.0, "km2": 1_000_000.0, "m2": 1.0, "acre": 4046.8564224}
 
@@ -65,7 +76,7 @@ class MaskSettings(_Section):
     file: str = Field(min_length=1)
     band: int = Field(default=1, ge=1)
     reject: list[int | str] = Field(
-        default_factory=list, description="codes, or meanings that the sensor's preset names, such as \"cloud\""
+        default_factory=list, description='codes, or meanings that the sensor\'s preset names, such as "cloud"'
     )
     bits: dict[str, Annotated[int, Field(ge=0, le=31)]] = Field(
         default_factory=dict, description="name = number of a bit that rejects the pixel where it is set"
@@ -140,7 +151,7 @@ class CompositeSettings(_Section):
     @model_validator(mode="after")
     def _of_where_needed(self) -> CompositeSettings:
         if (self.method == "median") != (self.of is None):
-            raise ValueError("'of' (two roles) belongs to the methods \"highest\" and \"lowest\", which need it")
+            raise ValueError('\'of\' (two roles) belongs to the methods "highest" and "lowest", which need it')
         return self
 
 
@@ -229,12 +240,103 @@ class TrainingSettings(_Section):
     materials: str | None = Field(default=None, description="folder with materials of your own, one TOML file each")
 
 
+TextureStatistic = Literal["mean", "standard deviation", "range", "contrast", "homogeneity", "entropy", "correlation"]
+TerrainStatistic = Literal["slope", "aspect sine", "aspect cosine", "topographic position", "hillshade"]
+AbsorptionMeasure = Literal["depth", "area", "position", "asymmetry", "slope"]
+
+
+def _odd(size: int) -> int:
+    if size % 2 == 0:
+        raise ValueError(
+            f"a window has a pixel at its centre, so its size must be odd; {size} is even, take {size + 1}"
+        )
+    return size
+
+
+WindowSize = Annotated[int, Field(ge=3, le=101), AfterValidator(_odd)]
+FeatureName = Annotated[str, Field(pattern=r"^[A-Za-z_][A-Za-z0-9_]*$")]
+
+
+class TextureSettings(_Section):
+    """[[features.texture]]: a statistic of a layer in a square window around each pixel."""
+
+    of: str = Field(description="a band, or an index or another feature")
+    statistic: TextureStatistic
+    size: WindowSize = Field(default=3, description="pixels on a side, odd")
+    levels: int = Field(default=16, ge=2, le=64, description="grey levels of the co-occurrence statistics")
+    range: tuple[float, float] | None = Field(
+        default=None,
+        description="values of the lowest and highest grey level; default: 0 to 1, or an index's usual range",
+    )
+    name: FeatureName | None = None
+
+    @model_validator(mode="after")
+    def _range_rises(self) -> TextureSettings:
+        if self.range is not None and not self.range[0] < self.range[1]:
+            raise ValueError(f"range = [{self.range[0]}, {self.range[1]}] must give the lower value first")
+        return self
+
+
+class TerrainSettings(_Section):
+    """[[features.terrain]]: a shape of the ground from a layer of elevations in metres."""
+
+    statistic: TerrainStatistic
+    of: str = "elevation"
+    size: WindowSize = Field(default=3, description="window of the topographic position, pixels on a side, odd")
+    sun_azimuth: float = Field(
+        default=315.0, ge=0, le=360, description="degrees clockwise from north, of the hillshade"
+    )
+    sun_elevation: float = Field(default=45.0, gt=0, le=90, description="degrees above the horizon, of the hillshade")
+    name: FeatureName | None = None
+
+
+class AbsorptionSettings(_Section):
+    """[[features.absorption]]: measures of an absorption dip below the straight line between its shoulders."""
+
+    dip: str = Field(description="a dip of configs/absorptions.toml, or one of a date: clay_2200@wet")
+    measures: list[AbsorptionMeasure] = Field(min_length=1)
+
+
+class SmoothingSettings(_Section):
+    """[features.smoothing]: Savitzky-Golay smoothing of the bands along wavelength, before anything else."""
+
+    window: WindowSize = Field(default=7, description="bands that a polynomial is fitted to, odd")
+    order: int = Field(default=2, ge=1, le=5, description="degree of the polynomial")
+
+    @model_validator(mode="after")
+    def _window_holds_order(self) -> SmoothingSettings:
+        if self.order >= self.window:
+            raise ValueError(f"order = {self.order} must be less than window = {self.window}")
+        return self
+
+
+class ComponentSettings(_Section):
+    """[features.components]: a few components in place of many bands, fitted on a sample of the scene in training."""
+
+    method: Literal["principal components", "minimum noise fraction"] = "principal components"
+    count: int = Field(default=5, ge=1, le=100)
+    of: Literal["bands"] | list[str] = Field(
+        default="bands", description="the bands with a wavelength, or any features"
+    )
+
+
 class FeatureSettings(_Section):
     """[features]: what the model sees of a pixel."""
 
-    bands: Literal["all"] | list[str] = "all"
+    bands: Literal["all", "all dates"] | list[str] = Field(
+        default="all", description="the main date's bands, those of every date too, or some by name; [] for none"
+    )
+    layers: list[str] = Field(default_factory=list, description="other layers as they are: ancillary ones, clear_count")
+    bad_bands_nm: list[tuple[float, float]] = Field(
+        default_factory=list, description="ranges of wavelength, in nm, whose bands are not used unless named"
+    )
+    smoothing: SmoothingSettings | None = None
     indices: list[str] = Field(default_factory=list)
     formulas: dict[str, str] = Field(default_factory=dict)
+    texture: list[TextureSettings] = Field(default_factory=list)
+    terrain: list[TerrainSettings] = Field(default_factory=list)
+    absorption: list[AbsorptionSettings] = Field(default_factory=list)
+    components: ComponentSettings | None = None
 
     @field_validator("formulas")
     @classmethod
@@ -266,15 +368,22 @@ class ReferenceSettings(_Section):
 
     points: str = Field(min_length=1)
     layer: str | None = None
-    label: str = Field(min_length=1)
+    label: str = Field(min_length=1, description="column with the class name or code; blank: could not be labelled")
+    alternate: str | None = Field(default=None, description="column with a second label that is also acceptable")
     design: str | None = Field(default=None, description="design.json written when the sample was drawn")
     stratum: str | None = Field(default=None, description="column of the points that names the stratum")
+    cluster: str | None = Field(default=None, description="column that names the cluster drawn as one unit")
+    region: str | None = Field(default=None, description="column that names the region to report separately")
+    unlabelled: list[str] = Field(default_factory=list, description="labels that mean 'could not tell'")
+    merge: dict[str, str] = Field(default_factory=dict, description="class = class that it counts as")
+    evidence: SampleEvidence = "probability sample"
 
 
 class ReportSettings(_Section):
     """[report]: how results are expressed."""
 
     confidence_level: float = Field(default=0.95, gt=0.5, lt=1)
+    interval: IntervalName = "automatic"
     area_unit: AreaUnit = "ha"
 
 
