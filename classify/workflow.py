@@ -88,11 +88,16 @@ def status(project: Project) -> list[StageStatus]:
 
 
 def run(
-    job: Job, stages: Sequence[StageName] | None = None, *, force: bool = False
+    job: Job,
+    stages: Sequence[StageName] | None = None,
+    *,
+    force: bool = False,
+    done: Callable[[StageName, StageResult | None], None] = lambda name, result: None,
 ) -> dict[StageName, StageResult | None]:
     """Run the named stages (default: all) that are stale, in order. A stage that is up to date gives None.
 
-    Raises LandassayError from whichever stage cannot go on; stages before it keep their results and their record.
+    `done` is called after each, so that a caller can show results as they come. Raises LandassayError from whichever
+    stage cannot go on; stages before it keep their results and their record.
     """
     results: dict[StageName, StageResult | None] = {}
     for stage in STAGES:
@@ -101,9 +106,10 @@ def run(
         state = next(s for s in status(job.project) if s.name == stage.name)
         if state.state == "done" and not force:
             results[stage.name] = None
-            continue
-        _require_earlier(stage, job.project)
-        results[stage.name] = _run_stage(stage, job)
+        else:
+            _require_earlier(stage, job.project)
+            results[stage.name] = _run_stage(stage, job)
+        done(stage.name, results[stage.name])
     return results
 
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import click
 
 from classify.cli.common import Call, common_options
-from classify.cli.run import show_stages
+from classify.cli.run import run_stages
 
 
 @click.command("classify", help="Map the scene with the trained model.")
@@ -13,6 +13,4 @@ from classify.cli.run import show_stages
 @common_options
 def command(call: Call, force: bool) -> None:
     """Run the stage if it is stale."""
-    from classify.workflow import Job, run
-
-    show_stages(call, run(Job(call.project(), call.jobs, call.progress()), ["classify"], force=force))
+    run_stages(call, ["classify"], force=force)

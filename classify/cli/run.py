@@ -1,7 +1,8 @@
-"""`landassay run`: every stage that is stale, in order."""
+"""`landassay run`: every stage that is stale, in order; and how any stage is run and shown."""
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 import click
@@ -17,27 +18,29 @@ if TYPE_CHECKING:
 @common_options
 def command(call: Call, force: bool) -> None:
     """Run and say what was done."""
-    from classify.workflow import Job, run
-
-    job = Job(call.project(), call.jobs, call.progress())
-    results = run(job, force=force)
-    show_stages(call, results)
-    report = job.outputs / "report" / "report.html"
+    run_stages(call, None, force=force)
+    report = call.project().folder / "outputs" / "report" / "report.html"
     if not call.as_json and not call.quiet and report.is_file():
         click.echo(f"\nThe report: {report}")
 
 
-def show_stages(call: Call, results: dict[StageName, StageResult | None]) -> None:
-    """Render stage results: one paragraph per stage as text, everything as JSON."""
+def run_stages(call: Call, stages: Sequence[StageName] | None, *, force: bool) -> None:
+    """Run stages of the project, showing each as it ends: a few lines as text, everything at the end as JSON."""
     from classify.cli.render import stage_text
+    from classify.workflow import Job, run
 
-    content = {
-        name: {"state": "up to date"}
-        if result is None
-        else {"state": "run", **result.summary, "warnings": [str(w) for w in result.warnings]}
-        for name, result in results.items()
-    }
-    call.show(content, "\n".join(stage_text(name, result) for name, result in results.items()))
-    for result in results.values():
+    def show(name: StageName, result: StageResult | None) -> None:
+        if not call.as_json:
+            call.show({}, stage_text(name, result))
         for warning in result.warnings if result else ():
             call.warn(f"warning: {warning}")
+
+    results = run(Job(call.project(), call.jobs, call.progress()), stages, force=force, done=show)
+    if call.as_json:
+        call.show({name: _content(result) for name, result in results.items()}, "")
+
+
+def _content(result: StageResult | None) -> dict[str, object]:
+    if result is None:
+        return {"state": "up to date"}
+    return {"state": "run", **result.summary, "warnings": [str(warning) for warning in result.warnings]}

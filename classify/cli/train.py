@@ -5,7 +5,7 @@ from __future__ import annotations
 import click
 
 from classify.cli.common import Call, common_options
-from classify.cli.run import show_stages
+from classify.cli.run import run_stages
 
 
 @click.command("train", help="Fit the model and screen it on held-out polygons.")
@@ -13,6 +13,4 @@ from classify.cli.run import show_stages
 @common_options
 def command(call: Call, force: bool) -> None:
     """Run the stage if it is stale."""
-    from classify.workflow import Job, run
-
-    show_stages(call, run(Job(call.project(), call.jobs, call.progress()), ["train"], force=force))
+    run_stages(call, ["train"], force=force)
