@@ -6,10 +6,10 @@ from pathlib import Path
 
 import pandas as pd
 
+from classify.assessment.estimation import estimate_sample
 from classify.assessment.inputs import sample_from_matrix, sample_from_points
 from classify.assessment.options import AssessmentOptions
 from classify.assessment.result import Assessment
-from classify.assessment.statistics import estimate_sample
 from classify.files import write_json, write_text
 
 DEFAULTS = AssessmentOptions()
@@ -20,9 +20,10 @@ def assess(
 ) -> Assessment:
     """Estimate accuracy and areas from labelled points.
 
-    points: columns stratum, map, reference and, optionally, cluster; one row per point.
-    strata: columns stratum and area (or pixels with `options.pixel_area`), optionally mapped_as, clusters; None for a simple
-    random sample of an area of unknown size. Raises SampleError naming table, row and column of every problem.
+    points: one row per point; columns stratum, map, reference (blank: could not be labelled); optional alternate
+    (second label), cluster, region, id. strata: columns stratum and area (or pixels with `options.pixel_area`),
+    optional mapped_as, clusters; None for a simple random sample of an area of unknown size. Raises SampleError naming
+    table, row and column of every problem.
     """
     return estimate_sample(sample_from_points(points, strata, options), options)
 
@@ -30,9 +31,11 @@ def assess(
 def assess_matrix(
     matrix: pd.DataFrame, strata: pd.DataFrame | None = None, options: AssessmentOptions = DEFAULTS
 ) -> Assessment:
-    """Estimate accuracy and areas from a square matrix of counts: the first column names the map class of each row, the other
-    columns the reference classes. strata: as for `assess`; its strata are the map classes, or it is a single one.
-    Raises SampleError."""
+    """Estimate accuracy and areas from a square matrix of counts.
+
+    matrix: the first column names the map class of each row, the other columns the reference classes. strata: as for
+    `assess`; they are the map classes, or there is a single one. Raises SampleError.
+    """
     return estimate_sample(sample_from_matrix(matrix, strata, options), options)
 
 
@@ -46,6 +49,8 @@ def write_assessment(assessment: Assessment, folder: Path) -> list[Path]:
         "matrix.csv": assessment.matrix_frame,
         "strata.csv": assessment.strata_frame,
     }
+    if assessment.regions:
+        tables["regions.csv"] = assessment.region_frame
     for name, table in tables.items():
         write_text(folder / name, table.to_csv(index=False, lineterminator="\n"))
         written.append(folder / name)

@@ -28,8 +28,8 @@ EVIDENCE: dict[EvidenceName, Evidence] = {
         "probability sample",
         "map accuracy",
         True,
-        "Every part of the mapped area had a known chance of being sampled, so accuracy and areas are estimated for the "
-        "whole mapped area, with confidence intervals.",
+        "Every part of the mapped area had a known chance of being sampled, so accuracy and areas are estimated for "
+        "the whole mapped area, with confidence intervals.",
         "The intervals cover chance in drawing the sample. They do not cover mistakes of the interpreters, places that "
         "the points miss by position, or change between the dates of the scene and of the reference labels.",
     ),

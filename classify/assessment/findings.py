@@ -2,22 +2,42 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 
 import numpy as np
 
-from classify.assessment.estimate import Tally
+from classify.assessment.estimate import Floats, Tally
 from classify.assessment.evidence import EVIDENCE
 from classify.assessment.sample import ReferenceSample
 from classify.errors import Problem
 
+# With fewer points in a region, or fewer clusters in all, intervals are rough (common practice).
+_FEW_POINTS = 30
+_FEW_CLUSTERS = 30
 
-def findings(sample: ReferenceSample, t: Tally, proportions: np.ndarray) -> tuple[Problem, ...]:
+
+def findings(sample: ReferenceSample, t: Tally, proportions: Floats) -> tuple[Problem, ...]:
     """Warnings about a sample and its tally. proportions: the area matrix, float64 (k, k)."""
+    inferential = EVIDENCE[sample.evidence].has_intervals
+    about_chance = (*_design(sample, t), *_empty_strata(sample, t), *_lone_units(sample, t)) if inferential else ()
     return (
-        *_evidence(sample), *_unlabelled(sample), *_empty_strata(sample, t), *_lone_units(sample, t),
-        *_one_sided_classes(sample, proportions), *_unmapped(sample),
+        *_evidence(sample), *_off_map(sample), *_unlabelled(sample), *about_chance,
+        *_one_sided_classes(sample, proportions), *_mapped_areas(sample),
     )  # fmt: skip
+
+
+def region_findings(sample: ReferenceSample, t: Tally) -> Iterator[Problem]:
+    """Warnings about regions with few points or none."""
+    here = t.mapped * np.asarray(t.units.T @ t.repeats).ravel()
+    for region, name in enumerate(sample.regions):
+        n = round(float(here @ (t.region == region)))
+        if n == 0:
+            yield _warning(f"no labelled point on the map lies in region {name!r}, so nothing is estimated for it")
+        elif n < _FEW_POINTS:
+            yield _warning(
+                f"region {name!r} has {n} labelled points; its figures are rough and its intervals may be too narrow",
+                "draw more points there before a decision rests on them",
+            )
 
 
 def _warning(what: str, fix: str = "") -> Problem:
@@ -27,15 +47,38 @@ def _warning(what: str, fix: str = "") -> Problem:
 def _evidence(sample: ReferenceSample) -> Iterator[Problem]:
     evidence = EVIDENCE[sample.evidence]
     if not evidence.has_intervals:
-        yield _warning(f"standard errors and intervals are left out: {evidence.caution}")
+        yield _warning(f"this rests on a {sample.evidence}, so standard errors, intervals and areas are left out. "
+                       f"{evidence.caution}")  # fmt: skip
+
+
+def _design(sample: ReferenceSample, t: Tally) -> Iterator[Problem]:
+    if sample.kind == "systematic":
+        yield _warning(
+            "standard errors of a systematic sample are those of a random one of the same size, which are as a rule "
+            "somewhat too large",
+        )
+    if t.clustered and int(t.group_size.sum()) < _FEW_CLUSTERS:
+        yield _warning(
+            f"the sample has {int(t.group_size.sum())} clusters; it is their number, not that of the points, that "
+            "makes intervals narrow, and with so few they are rough",
+        )
+
+
+def _off_map(sample: ReferenceSample) -> Iterator[Problem]:
+    off = int(sample.count[sample.off_map].sum())
+    if off:
+        yield _warning(
+            f"{off} of {int(sample.count.sum())} points lie outside the map or where it has no data; the estimates "
+            "stand for the mapped part of the sampled area, whose size is estimated from the points"
+        )
 
 
 def _unlabelled(sample: ReferenceSample) -> Iterator[Problem]:
-    missing = int(sample.count[~sample.labelled].sum())
+    missing = int(sample.count[~sample.usable].sum())
     if missing:
         yield _warning(
-            f"{missing} of {int(sample.count.sum())} points have no reference label and are left out, as if they were "
-            "like the labelled points of their stratum",
+            f"{missing} of {int(sample.count.sum())} points have no reference label; the estimates take them to be "
+            "like the labelled points of their stratum, and bounds say what they could change at most",
         )
 
 
@@ -44,50 +87,54 @@ def _empty_strata(sample: ReferenceSample, t: Tally) -> Iterator[Problem]:
     if empty:
         area, total = sum(s.area for s in empty), sum(s.area for s in sample.strata)
         yield _warning(
-            f"no labelled point lies in {_listed([s.name for s in empty], 'stratum', 'strata')}; the estimates leave out "
-            f"its {area:,.6g}{_unit(sample)} ({area / total:.1%} of the total area)",
+            f"no labelled point lies in {_listed([s.name for s in empty], 'stratum', 'strata')}; the estimates leave "
+            f"out the {area:,.6g}{_unit(sample)} there, {area / total:.1%} of the total area",
             "draw points there, or merge the stratum with one like it before sampling",
         )
 
 
 def _lone_units(sample: ReferenceSample, t: Tally) -> Iterator[Problem]:
-    lone = [
-        s.name for s, n, f in zip(sample.strata, t.group_size, t.fraction, strict=True) if n == 1 and f < 1
-    ]  # fmt: skip
-    if lone:
-        unit = "cluster" if t.clustered else "labelled point"
-        yield _warning(
-            f"{_listed(lone, 'stratum', 'strata')} has a single {unit}, so how units differ within it is unknown and "
-            "standard errors that it bears on are left out",
-            "label at least one more there, or merge the stratum with one like it",
-        )
+    lone = [s.name for s, n, f in zip(sample.strata, t.group_size, t.fraction, strict=True) if n == 1 and f < 1]
+    if not lone:
+        return
+    if t.clustered and int(t.group_size.sum()) == 1:
+        yield _warning("there is a single cluster, so no standard error can be given", "sample at least two clusters")
+        return
+    unit = "cluster" if t.clustered else "labelled point"
+    has = "has" if len(lone) == 1 else "have"
+    yield _warning(
+        f"{_listed(lone, 'stratum', 'strata')} {has} a single {unit}, so how units differ within it is unknown and the "
+        "standard errors that it bears on are left out",
+        "label at least one more there, or merge the stratum with one like it",
+    )
 
 
-def _one_sided_classes(sample: ReferenceSample, proportions: np.ndarray) -> Iterator[Problem]:
+def _one_sided_classes(sample: ReferenceSample, proportions: Floats) -> Iterator[Problem]:
     rows, columns = proportions.sum(axis=1), proportions.sum(axis=0)
     for c, name in enumerate(sample.classes):
         if rows[c] == 0 and columns[c] == 0:
-            yield _warning(f"class {name!r} occurs in no labelled point, so nothing is known of it but that it is rare")
+            yield _warning(
+                f"class {name!r} occurs in no labelled point, neither mapped nor as reference, so its accuracies "
+                "cannot be estimated",
+            )
         elif rows[c] == 0:
             yield _warning(
-                f"class {name!r} occurs among the reference labels but no point is mapped as it, so it has no user's "
-                "accuracy",
+                f"class {name!r} is a reference label but no point is mapped as it, so it has no user's accuracy"
             )
         elif columns[c] == 0:
             yield _warning(
-                f"class {name!r} is mapped but no reference label names it, so it has no producer's accuracy; its area "
-                "is estimated as 0 and its upper limit says how large it may still be",
+                f"class {name!r} is mapped but is no point's reference label, so it has no producer's accuracy; its "
+                "area is estimated as 0, and the upper limit says how large it may still be",
             )
 
 
-def _unmapped(sample: ReferenceSample) -> Iterator[Problem]:
-    unknown = [
-        c for c, m in zip(sample.classes, sample.mapped_area or [None] * len(sample.classes), strict=True) if m is None
-    ]
+def _mapped_areas(sample: ReferenceSample) -> Iterator[Problem]:
+    mapped = sample.mapped_area or (None,) * len(sample.classes)
+    unknown = [name for name, area in zip(sample.classes, mapped, strict=True) if area is None]
     if unknown:
         yield _warning(
-            f"the mapped area of {_listed(unknown, 'class', 'classes')} is not known from the strata",
-            "give 'mapped_as' in the strata table where strata are map classes",
+            f"the mapped area of {_listed(unknown, 'class', 'classes')} is not known, as the strata do not say it",
+            "give 'mapped_as' in the table of strata where strata are map classes",
         )
 
 
@@ -95,6 +142,6 @@ def _unit(sample: ReferenceSample) -> str:
     return f" {sample.area_unit}" if sample.area_unit else ""
 
 
-def _listed(names: list[str], one: str, many: str) -> str:
+def _listed(names: Sequence[str], one: str, many: str) -> str:
     quoted = ", ".join(repr(name) for name in names)
     return f"{one} {quoted}" if len(names) == 1 else f"{many} {quoted}"

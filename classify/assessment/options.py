@@ -4,12 +4,12 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from typing import Literal, get_args
+from typing import get_args
 
 from classify.assessment.evidence import EvidenceName
 from classify.assessment.sample import DesignKind
+from classify.settings.model import IntervalName
 
-IntervalName = Literal["automatic", "normal", "wilson", "student", "bootstrap"]
 INTERVALS: tuple[IntervalName, ...] = get_args(IntervalName)
 
 
@@ -33,21 +33,27 @@ class TableName:
 class AssessmentOptions:
     """How to assess.
 
-    confidence_level: in (0.5, 1). interval: "automatic" picks normal or Wilson by a documented rule.
-    finite_population: correct for the part of the population that was sampled, where strata give counts of its units.
-    classes: names in order; None for those that occur. kind: how points were drawn; None for stratified, or simple
-    random with one stratum. area_unit: carried through. pixel_area: area of a pixel where strata give pixels only.
-    mapped_area: mapped area by class where strata do not say it. points, strata: what messages call the tables.
+    confidence_level: in (0.5, 1). interval: "automatic" picks by the rule stated in `intervals.chosen_interval`.
+    replicates, seed: of the bootstrap. finite_population: correct for the part of the population that was sampled,
+    where the strata give counts of its units. kind: how points were drawn; None for stratified, or simple random with
+    one stratum. evidence: what the sample may claim. classes: names in order; None for those that occur. merge: class
+    -> class that it counts as. unlabelled: reference labels that mean "could not tell", beside blanks. area_unit:
+    carried through. pixel_area: area of a pixel, where strata give pixels only. mapped_area: mapped area by class
+    (before merging) where strata do not say it. points, strata: what messages call the tables.
     """
 
     confidence_level: float = 0.95
     interval: IntervalName = "automatic"
+    replicates: int = 2000
+    seed: int = 0
     finite_population: bool = True
-    classes: tuple[str, ...] | None = None
     kind: DesignKind | None = None
+    evidence: EvidenceName = "probability sample"
+    classes: tuple[str, ...] | None = None
+    merge: Mapping[str, str] = field(default_factory=dict)
+    unlabelled: tuple[str, ...] = ()
     area_unit: str = ""
     pixel_area: float | None = None
     mapped_area: Mapping[str, float] = field(default_factory=dict)
-    evidence: EvidenceName = "probability sample"
     points: TableName = TableName("points")
     strata: TableName = TableName("strata")

@@ -1,10 +1,12 @@
-"""A project's reference sample read against a map: labels from any vector file, the map class at each point, strata from
-the recorded design, so that a sample drawn from an older map still serves a newer one."""
+"""A project's reference sample read against a map.
+
+Labels come from any vector file and the map class is read at each point. Strata come from the recorded design, so that
+a sample drawn from an older map still serves a newer one.
+"""
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from dataclasses import dataclass
+from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
@@ -14,47 +16,69 @@ import pandas as pd
 import rasterio
 from numpy.typing import NDArray
 from rasterio.errors import RasterioError
+from rasterio.windows import Window as RasterWindow
 
 from classify.assessment.assess import write_assessment
+from classify.assessment.columns import Labels, faults, plain_text
+from classify.assessment.design_file import RecordedDesign, read_design
+from classify.assessment.estimation import estimate_sample
 from classify.assessment.inputs import sample_from_points
 from classify.assessment.options import AssessmentOptions, TableName
 from classify.assessment.result import Assessment
-from classify.assessment.sample import DesignKind, ReferenceSample
-from classify.assessment.statistics import estimate_sample
+from classify.assessment.sample import NO_LABEL, DesignKind, ReferenceSample
 from classify.errors import DataError, Problem, SampleError, raise_if_errors
-from classify.files import read_json
 from classify.raster.grid import Grid
-from classify.settings import Project, ReferenceSettings
+from classify.settings import ClassSettings, Project, ReferenceSettings
 from classify.settings.model import M2_PER_UNIT
 
 _BLOCK_PX = 512
-_ROWS_NAMED = 5
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class RecordedDesign:
-    """How a sample was drawn. strata: columns stratum, area_m2, pixels, mapped_as. stratum_of: point id -> stratum."""
-
-    kind: str
-    strata: pd.DataFrame
-    stratum_of: Mapping[str, str]
+_ASSUMED = Problem(
+    "no design was recorded for the sample, so it is taken as a simple random one, post-stratified by map class",
+    fix="if it was drawn otherwise, name its design with 'design'; if places were chosen, set evidence to "
+    "'purposive sample', as no interval holds then",
+    severity="warning",
+)
 
 
 def assess_project(project: Project, outputs: Path) -> Assessment:
-    """Assess the map in `outputs` on the project's reference sample; writes outputs/assessment/. Raises LandassayError."""
-    sample, options = _read(project, outputs / "map" / "cover.tif", outputs)
-    assessment = estimate_sample(sample, options)
+    """Assess the map in `outputs` on the project's sample; writes outputs/assessment/. Raises LandassayError."""
+    sample = read_reference(project, outputs / "map" / "cover.tif", outputs)
+    assessment = estimate_sample(sample, project_options(project))
     write_assessment(assessment, outputs / "assessment")
     return assessment
 
 
-def read_reference(project: Project, cover: Path, outputs: Path) -> ReferenceSample:
-    """The project's labelled sample with the classes of the map `cover` at its points.
+def read_reference(project: Project, cover: Path, outputs: Path, *, other: Path | None = None) -> ReferenceSample:
+    """The project's labelled sample with the classes of the map `cover` at its points, and those of a second map.
 
-    cover: a map of class codes, 0 where there is no data; outputs: the folder with map/areas.csv and, where the sample
-    was drawn here, sample/design.json. Raises DataError, SampleError.
+    cover, other: maps of the project's class codes, 0 where there is no data. outputs: the folder with map/areas.csv
+    and, where the sample was drawn here, sample/design.json. Raises DataError, SampleError.
     """
-    return _read(project, cover, outputs)[0]
+    settings = _settings(project)
+    frame = _read_points(project, settings)
+    areas = read_areas(outputs / "map" / "areas.csv")
+    design = _design(project, settings, frame, outputs)
+    points = _points_table(frame, settings, project.classes)
+    points["map"] = _classes_at(cover, frame, project.classes)
+    if other is not None:
+        points["other_map"] = _classes_at(other, frame, project.classes)
+    on_map = points["map"] != ""
+    if not on_map.any():
+        raise SampleError("no point of the reference sample lies on the map", where=settings.points,
+                          fix="check the CRS of the points, and that this is the map they were drawn for")  # fmt: skip
+    if design is None:
+        points["stratum"] = points["map"]
+        # Strata made of map classes hold no point off the map: such points lie outside of what is estimated.
+        points = points[on_map].reset_index(drop=True)
+        strata = areas[areas["area_m2"] > 0].rename(columns={"name": "stratum"})
+    else:
+        points["stratum"] = _stratum_of(frame, settings, design)
+        strata = design.strata
+    unit = M2_PER_UNIT[project.report.area_unit]
+    options = project_options(project, kind="post-stratified" if design is None else design.kind, areas=areas)
+    strata = strata[["stratum", "pixels"]].assign(area=strata["area_m2"] / unit)
+    sample = sample_from_points(points, strata, options, may_lie_off_map=True)
+    return sample.with_problems(() if design is not None else (_ASSUMED, *_left_out(on_map.to_numpy())))
 
 
 def read_labels(project: Project) -> dict[str, int]:
@@ -65,81 +89,22 @@ def read_labels(project: Project) -> dict[str, int]:
     settings = project.reference
     if settings is None:
         return {}
-    frame = _read_points(project, settings)
-    labels = _labels(project, frame[settings.label], settings.label, TableName(settings.points))
+    labels = _points_table(_read_points(project, settings), settings, project.classes)["reference"]
     return {str(name): int(count) for name, count in labels.value_counts().sort_index().items()}
 
 
-def read_design(path: Path) -> RecordedDesign:
-    """Read design.json as the sample was drawn. Raises DataError."""
-    content = read_json(path)
-    try:
-        strata = pd.DataFrame(content["strata"])[["stratum", "area_m2", "pixels", "mapped_as"]]
-        points = {str(key): str(entry["stratum"]) for key, entry in content["points"].items()}
-        return RecordedDesign(str(content["kind"]), strata.astype({"stratum": str, "area_m2": float}), points)
-    except (KeyError, TypeError, ValueError, AttributeError) as error:
-        raise DataError(
-            f"this is not a recorded design: {error!r} is missing or of the wrong kind", where=str(path),
-            fix="name the design.json that was written when the sample was drawn",
-        ) from error  # fmt: skip
-
-
-def codes_at(cover: Path, points: geopandas.GeoSeries) -> tuple[NDArray[np.uint8], NDArray[np.bool_]]:
-    """Class codes (uint8, (n,)) of a map at points in any CRS, and whether each lies on the map at all (bool (n,)).
-
-    Only the blocks that points fall on are read. Raises DataError.
-    """
-    try:
-        with rasterio.open(cover) as source:
-            grid = Grid(source.crs, source.transform, source.height, source.width)
-            there = points.to_crs(source.crs)
-            rows, cols = grid.rowcol(there.x.to_numpy(), there.y.to_numpy())
-            inside = grid.contains(rows, cols)
-            codes = np.zeros(len(there), dtype=np.uint8)
-            block = np.where(inside, rows // _BLOCK_PX * (1 + grid.width // _BLOCK_PX) + cols // _BLOCK_PX, -1)
-            for number in np.unique(block[inside]):
-                here = np.flatnonzero(block == number)
-                row, col = int(rows[here].min()), int(cols[here].min())
-                height, width = int(rows[here].max()) - row + 1, int(cols[here].max()) - col + 1
-                values = source.read(1, window=rasterio.windows.Window(col, row, width, height))
-                codes[here] = values[rows[here] - row, cols[here] - col]
-    except RasterioError as error:
-        raise DataError(f"the map cannot be read: {error}", where=str(cover)) from error
-    return codes, inside
-
-
-def _read(project: Project, cover: Path, outputs: Path) -> tuple[ReferenceSample, AssessmentOptions]:
-    settings = project.reference
-    if settings is None:
-        raise SampleError("the project has no reference sample", where=f"{project.file.name}: reference",
-                          fix="add a section [reference] with 'points' and 'label'")  # fmt: skip
-    frame = _read_points(project, settings)
-    name = TableName(settings.points)
-    labels = _labels(project, frame[settings.label], settings.label, name)
-    codes, inside = codes_at(cover, frame.geometry)
-    areas = read_areas(outputs / "map" / "areas.csv")
-    design, key = _design(project, settings, frame, outputs)
-    if design is None:
-        strata = areas.rename(columns={"name": "stratum"})[["stratum", "area_m2", "pixels"]]
-        strata, kind = strata[strata["area_m2"] > 0], "post-stratified"
-    else:
-        strata, kind = design.strata.drop(columns="mapped_as"), design.kind
-    unit = project.report.area_unit
-    strata = strata.assign(area=strata["area_m2"] / M2_PER_UNIT[unit]).drop(columns="area_m2")
-    names = {c.code: c.name for c in project.classes}
-    mapped = pd.Series([names.get(int(code), "") for code in codes], index=frame.index)
-    points = pd.DataFrame({"stratum": mapped if key is None else key, "map": mapped, "reference": labels})
-    on_map = (mapped != "").to_numpy()
-    options = AssessmentOptions(
-        confidence_level=project.report.confidence_level, classes=tuple(names.values()), area_unit=unit,
-        kind=_kind(kind), mapped_area=dict(zip(areas["name"], areas["area_m2"] / M2_PER_UNIT[unit], strict=True)),
-        points=name,
+def project_options(
+    project: Project, *, kind: DesignKind | None = None, areas: pd.DataFrame | None = None
+) -> AssessmentOptions:
+    """What a project file says of how to assess. areas: mapped areas as `read_areas` gives them."""
+    settings = _settings(project)
+    unit = M2_PER_UNIT[project.report.area_unit]
+    mapped = {} if areas is None else dict(zip(areas["name"], areas["area_m2"] / unit, strict=True))
+    return AssessmentOptions(
+        confidence_level=project.report.confidence_level, interval=project.report.interval, seed=project.project.seed,
+        kind=kind, evidence=settings.evidence, classes=tuple(c.name for c in project.classes), merge=settings.merge,
+        area_unit=project.report.area_unit, mapped_area=mapped, points=TableName(settings.points),
     )  # fmt: skip
-    if not on_map.any():
-        raise SampleError("no point of the reference sample lies on the map", where=settings.points,
-                          fix="check the CRS of the points")  # fmt: skip
-    sample = sample_from_points(points[on_map].reset_index(drop=True), strata, options)
-    return sample.with_problems(_off_map(inside, on_map) + _assumed(design)), options
 
 
 def read_areas(path: Path) -> pd.DataFrame:
@@ -151,104 +116,140 @@ def read_areas(path: Path) -> pd.DataFrame:
                         fix="run 'landassay classify' again") from error  # fmt: skip
 
 
+def codes_at(cover: Path, points: geopandas.GeoSeries) -> NDArray[np.uint8]:
+    """Class codes (uint8, (n,)) of a map at points in any CRS; 0 where it has no data, and outside of it.
+
+    Only the blocks that points fall on are read. Raises DataError.
+    """
+    try:
+        with rasterio.open(cover) as source:
+            if source.crs is None:
+                raise DataError("the map has no CRS", where=str(cover))
+            grid = Grid(source.crs, source.transform, source.height, source.width)
+            there = points.to_crs(source.crs)
+            rows, cols = grid.rowcol(there.x.to_numpy(), there.y.to_numpy())
+            inside = grid.contains(rows, cols)
+            codes = np.zeros(len(there), dtype=np.uint8)
+            block = rows // _BLOCK_PX * (1 + grid.width // _BLOCK_PX) + cols // _BLOCK_PX
+            for number in np.unique(block[inside]):
+                here = np.flatnonzero(inside & (block == number))
+                row, col = int(rows[here].min()), int(cols[here].min())
+                height, width = int(rows[here].max()) - row + 1, int(cols[here].max()) - col + 1
+                values = source.read(1, window=RasterWindow(col, row, width, height))
+                codes[here] = values[rows[here] - row, cols[here] - col]
+    except RasterioError as error:
+        raise DataError(f"the map cannot be read: {error}", where=str(cover)) from error
+    return codes
+
+
+def _settings(project: Project) -> ReferenceSettings:
+    if project.reference is None:
+        raise SampleError("the project has no reference sample", where=project.file.name,
+                          fix="add a section [reference] with 'points' and 'label'")  # fmt: skip
+    return project.reference
+
+
 def _read_points(project: Project, settings: ReferenceSettings) -> geopandas.GeoDataFrame:
     path = project.path(settings.points)
     try:
-        frame = geopandas.read_file(path, layer=settings.layer) if settings.layer else geopandas.read_file(path)
-    except Exception as error:  # pyogrio raises errors of many kinds, none of a common type
+        frame = geopandas.read_file(path, **({"layer": settings.layer} if settings.layer else {}))
+    except Exception as error:  # pyogrio raises errors of many kinds, with no common type below Exception
         raise DataError(f"the reference sample cannot be read: {error}", where=path) from error
     if not isinstance(frame, geopandas.GeoDataFrame) or frame.geometry.isna().all():
-        raise DataError("the reference sample has no geometries", where=path)
+        raise DataError("the reference sample has no points", where=path)
     if frame.crs is None:
         raise DataError("the reference sample has no CRS", where=path, fix="save it with the CRS of its coordinates")
+    there = [column for column in frame.columns if column != frame.geometry.name]
+    wanted = (settings.label, settings.alternate, settings.stratum, settings.cluster, settings.region)
     problems = [
-        Problem(f"there is no column {column!r}", f"{path}", f"its columns are {', '.join(map(repr, frame.columns[:-1]))}")
-        for column in (settings.label, settings.stratum) if column is not None and column not in frame.columns
+        Problem(f"there is no column {column!r}", path, f"its columns are {', '.join(map(repr, there))}")
+        for column in wanted if column is not None and column not in there
     ]  # fmt: skip
     odd = np.flatnonzero((frame.geometry.geom_type != "Point").to_numpy())
     if len(odd):
-        problems.append(Problem(f"{len(odd)} features are not single points, first feature {odd[0] + 1}", path,
-                                "give one point per record; convert polygons to points before"))  # fmt: skip
+        problems.append(
+            Problem(f"{len(odd)} records are not single points, first record {odd[0] + 1}", path,
+                    "give one point per record; turn polygons into points before")
+        )  # fmt: skip
     raise_if_errors(problems, DataError)
     return frame.reset_index(drop=True)
 
 
-def _labels(project: Project, given: pd.Series, column: str, name: TableName) -> pd.Series:
-    """Class names; "" where there is no label. A label is a class name, whatever its case, or a class code."""
-    lookup = {c.name.casefold(): c.name for c in project.classes} | {str(c.code): c.name for c in project.classes}
-    text = given.map(_plain)
-    labels = text.map(lambda value: lookup.get(value.casefold(), ""))
-    faulty = np.flatnonzero((text != "") & (labels == ""))
-    problems = [Problem(f"{text.iat[i]!r} is no class", name.row(int(i), column)) for i in faulty[:_ROWS_NAMED]]
-    if len(faulty) > _ROWS_NAMED:
-        problems.append(Problem(f"{len(faulty) - _ROWS_NAMED} more rows with such a label", name.column(column)))
-    if problems:
-        classes = ", ".join(repr(c.name) for c in project.classes)
-        problems.append(Problem("labels must be class names or codes", name.column(column), f"classes are {classes}"))
+def _points_table(
+    frame: geopandas.GeoDataFrame, settings: ReferenceSettings, classes: Sequence[ClassSettings]
+) -> pd.DataFrame:
+    """Labels as class names ("" where there is none), by name whatever its case, or by code; and the other columns."""
+    lookup = {c.name.casefold(): c.name for c in classes} | {str(c.code): c.name for c in classes}
+    name, table, problems = TableName(settings.points), pd.DataFrame(index=frame.index), []
+    # Two records at one place are one point.
+    table["id"] = [f"{x!r}, {y!r}" for x, y in zip(frame.geometry.x, frame.geometry.y, strict=True)]
+    for target, column in (("reference", settings.label), ("alternate", settings.alternate)):
+        if column is None:
+            continue
+        labels = Labels.of(frame[column]).without(settings.unlabelled)
+        labels = labels.renamed({given: lookup.get(given.casefold(), given) for given in labels.names})
+        strange = ~labels.blank & (labels.places_in([c.name for c in classes]) == NO_LABEL)
+        fix = (
+            f"classes are {', '.join(repr(c.name) for c in classes)}; list labels for 'could not tell' in 'unlabelled'"
+        )
+        problems += faults(strange, labels, column, name, lambda value: f"{value!r} is no class", fix)
+        table[target] = [labels.text(i) for i in range(len(frame))]
     raise_if_errors(problems, SampleError)
-    return labels
+    for target, column in (("cluster", settings.cluster), ("region", settings.region)):
+        if column is not None:
+            table[target] = frame[column]
+    return table
 
 
-def _plain(value: Any) -> str:  # noqa: ANN401 - whatever the vector file holds
-    if value is None or (isinstance(value, float) and np.isnan(value)) or value is pd.NA:
-        return ""
-    return str(int(value)) if isinstance(value, float) and value.is_integer() else str(value).strip()
+def _classes_at(cover: Path, frame: geopandas.GeoDataFrame, classes: Sequence[ClassSettings]) -> list[str]:
+    """Class names of a map at the points, "" off the map."""
+    codes = codes_at(cover, frame.geometry)
+    names = {0: ""} | {c.code: c.name for c in classes}
+    strange = sorted({int(code) for code in np.unique(codes)} - set(names))
+    if strange:
+        raise DataError(f"the map holds code {strange[0]}, which is no class of the project", where=str(cover))
+    return [names[int(code)] for code in codes]
 
 
 def _design(
     project: Project, settings: ReferenceSettings, frame: geopandas.GeoDataFrame, outputs: Path
-) -> tuple[RecordedDesign | None, pd.Series | None]:
-    """The recorded design and the stratum of each point; None where the sample has none."""
-    drawn_here = outputs / "sample" / "design.json"
-    ids = frame["id"].map(_plain) if "id" in frame.columns else None
+) -> RecordedDesign | None:
+    """The recorded design; None where the sample has none."""
     if settings.design is not None:
-        design = read_design(Path(project.path(settings.design)))
-    elif drawn_here.is_file():
+        return read_design(Path(project.path(settings.design)))
+    drawn_here = outputs / "sample" / "design.json"
+    if drawn_here.is_file():
         design = read_design(drawn_here)
-        if settings.stratum is None and (ids is None or not ids.isin(list(design.stratum_of)).all()):
-            return None, None  # the sample is another one than that drawn here
-    elif settings.stratum is None:
-        return None, None
-    else:
-        raise SampleError("strata are named, but their areas are not known", where=f"{project.file.name}: reference.stratum",
-                          fix="name the recorded design with 'design', or leave 'stratum' out if strata are map classes")  # fmt: skip
+        if settings.stratum is not None:
+            return design
+        if "id" in frame.columns and frame["id"].map(plain_text).isin(list(design.stratum_of)).all():
+            return design
     if settings.stratum is not None:
-        return design, frame[settings.stratum].map(_plain)
-    if ids is None:
+        raise SampleError(
+            "a column with strata is named, but their areas are not known", where=f"{project.file.name}: reference",
+            fix="name the recorded design with 'design', or leave 'stratum' out if strata are the map's classes",
+        )  # fmt: skip
+    return None
+
+
+def _stratum_of(frame: geopandas.GeoDataFrame, settings: ReferenceSettings, design: RecordedDesign) -> pd.Series[Any]:
+    """Stratum of each point: from its column where one is named, else by the key of the design."""
+    if settings.stratum is not None:
+        return pd.Series(frame[settings.stratum])
+    if "id" not in frame.columns:
         raise SampleError("there is no column 'id'", where=settings.points,
-                          fix="keep the ids of the drawn points: the design finds the stratum by them")  # fmt: skip
-    strange = ids[~ids.isin(list(design.stratum_of))]
-    if len(strange):
-        raise SampleError(f"{len(strange)} points are not in the recorded design, first id {strange.iloc[0]!r}",
-                          where=settings.points, fix="name the design that this sample was drawn by")  # fmt: skip
-    return design, ids.map(design.stratum_of)
+                          fix="keep the ids of the drawn points, by which the design finds their strata")  # fmt: skip
+    ids = Labels.of(frame["id"])
+    known = [design.stratum_of.get(ids.text(i), "") for i in range(len(frame))]
+    strange = np.array([not stratum for stratum in known])
+    raise_if_errors(
+        faults(strange, ids, "id", TableName(settings.points), lambda value: f"point {value!r} is not in the design",
+               "name the design that this sample was drawn by"), SampleError,
+    )  # fmt: skip
+    return pd.Series(known, index=frame.index)
 
 
-def _kind(written: str) -> DesignKind:
-    for kind in ("post-stratified", "systematic", "stratified", "simple random"):
-        if written.startswith(kind):
-            return kind  # type: ignore[return-value]
-    return "stratified"
-
-
-def _off_map(inside: NDArray[np.bool_], on_map: NDArray[np.bool_]) -> tuple[Problem, ...]:
-    outside, no_data = int((~inside).sum()), int((inside & ~on_map).sum())
-    found = []
-    if outside:
-        found.append(f"{outside} points lie outside the map")
-    if no_data:
-        found.append(f"{no_data} points lie where the map has no data")
-    text = " and ".join(found)
-    return (Problem(f"{text}; they are left out", severity="warning"),) if found else ()
-
-
-def _assumed(design: RecordedDesign | None) -> tuple[Problem, ...]:
-    if design is not None:
-        return ()
-    return (
-        Problem(
-            "no design was recorded for the sample, so it is taken as a simple random one, post-stratified by map class",
-            fix="if it was drawn otherwise, name its design with [reference] design; if places were chosen, no interval holds",
-            severity="warning",
-        ),
-    )
+def _left_out(on_map: NDArray[np.bool_]) -> tuple[Problem, ...]:
+    n = int((~on_map).sum())
+    what = f"{n} points lie outside the map or where it has no data, and are left out"
+    return (Problem(what, severity="warning"),) if n else ()

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from typing import Literal
+from typing import Literal, get_args
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,13 +12,14 @@ from classify.assessment.evidence import EvidenceName
 from classify.errors import Problem
 
 DesignKind = Literal["simple random", "systematic", "stratified", "post-stratified"]
+DESIGN_KINDS: tuple[DesignKind, ...] = get_args(DesignKind)
 NO_LABEL = -1
 
 
 @dataclass(frozen=True, slots=True)
 class Stratum:
-    """One stratum: its area in the sample's unit, where known the pixels it holds and the primary units (clusters) it
-    holds, and the map class that it is, if strata are classes of the assessed map."""
+    """One stratum: its area in the sample's unit; where known the pixels and the primary units (clusters) that it
+    holds; and the map class that it is, if strata are classes of the assessed map."""
 
     name: str
     area: float
@@ -32,10 +33,12 @@ class ReferenceSample:
     """A labelled reference sample, checked. Arrays have one entry per point (or per cell of a matrix of counts).
 
     classes: names, in the order of all tables. strata: in order. kind: how the points were drawn.
-    stratum, map, reference: int64 (n,), places in `strata` and `classes`; reference is NO_LABEL where the interpreter
-    could not tell. alternate: int64 (n,) second label or NO_LABEL, or None. cluster: int64 (n,) primary unit, or None
-    when points are drawn one by one. region: int64 (n,) place in `regions`, or None. count: int64 (n,) points that the
-    entry stands for. mapped_area: per class, in `area_unit`; None where it is not known. problems: warnings.
+    stratum: int64 (n,), places in `strata`. map: int64 (n,), places in `classes`, or NO_LABEL where the point lies off
+    the map. reference: int64 (n,), NO_LABEL where the interpreter could not tell. count: int64 (n,), points that the
+    entry stands for. Optional, int64 (n,) or None: alternate, the interpreter's second label, NO_LABEL where there is
+    none; other_map, the class of a second map; cluster, the primary unit (None where points are drawn one by one);
+    region, a place in `regions`. mapped_area: per class, in `area_unit`; None where it is not known. problems:
+    warnings.
     """
 
     classes: tuple[str, ...]
@@ -46,6 +49,7 @@ class ReferenceSample:
     reference: NDArray[np.int64]
     count: NDArray[np.int64]
     alternate: NDArray[np.int64] | None = None
+    other_map: NDArray[np.int64] | None = None
     cluster: NDArray[np.int64] | None = None
     region: NDArray[np.int64] | None = None
     regions: tuple[str, ...] = ()
@@ -55,9 +59,20 @@ class ReferenceSample:
     problems: tuple[Problem, ...] = ()
 
     @property
-    def labelled(self) -> NDArray[np.bool_]:
-        """bool (n,): entries with a reference label."""
-        return self.reference != NO_LABEL
+    def off_map(self) -> NDArray[np.bool_]:
+        """bool (n,): entries that lie outside the map, or where it has no data; on both maps of a comparison."""
+        off: NDArray[np.bool_] = self.map == NO_LABEL
+        return off if self.other_map is None else np.asarray(off | (self.other_map == NO_LABEL))
+
+    @property
+    def usable(self) -> NDArray[np.bool_]:
+        """bool (n,): entries that estimates rest on: labelled, or known to be off the map."""
+        return np.asarray((self.reference != NO_LABEL) | self.off_map)
+
+    def unweighted(self) -> ReferenceSample:
+        """The same points with no stratum weights, as befits places that were chosen and not drawn."""
+        everywhere = Stratum("sampled places", sum(s.area for s in self.strata))
+        return replace(self, strata=(everywhere,), stratum=np.zeros_like(self.stratum))
 
     def with_problems(self, problems: tuple[Problem, ...]) -> ReferenceSample:
         """The same sample with more warnings."""

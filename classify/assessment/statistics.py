@@ -1,82 +1,82 @@
-"""All that is reported of a reference sample: each statistic is its y and x, handed to the one estimator."""
+"""The statistics of a reference sample, each as its y and x for the one estimator. To add one, write its y and x."""
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 
-from classify.assessment.agreement import disagreement, kappa
-from classify.assessment.estimate import Floats, Ratio, Tally, linearise, tally
-from classify.assessment.evidence import EVIDENCE
-from classify.assessment.intervals import Estimate, proportion, unbounded
-from classify.assessment.findings import findings
-from classify.assessment.options import AssessmentOptions
-from classify.assessment.result import AreaEstimate, Assessment, StratumSummary
-from classify.assessment.sample import ReferenceSample
-from classify.errors import SampleError
+from classify.assessment.estimate import Floats, Ints, Ratio, Tally
+from classify.assessment.sample import NO_LABEL
 
 
 def overall_accuracy(t: Tally) -> Ratio:
-    """Proportion of the area that the map has right."""
-    return Ratio((t.map == t.reference).astype(np.float64), np.ones(len(t.share)))
+    """Proportion of the mapped area that the map has right."""
+    return Ratio(_right(t), t.mapped)
 
 
 def users_accuracy(t: Tally, c: int) -> Ratio:
     """Of the area mapped as class c, the proportion that is c."""
-    return Ratio(_both(t, c), (t.map == c).astype(np.float64), map_class=c)
+    return Ratio(_both(t.map, t.reference, c), _is(t.map, c), map_class=c)
 
 
 def producers_accuracy(t: Tally, c: int) -> Ratio:
     """Of the area that is class c, the proportion mapped as c."""
-    return Ratio(_both(t, c), (t.reference == c).astype(np.float64))
+    return Ratio(_both(t.map, t.reference, c), _is(t.reference, c))
 
 
 def f1(t: Tally, c: int) -> Ratio:
     """Harmonic mean of user's and producer's accuracy: twice the agreement over the two class areas added."""
-    return Ratio(2 * _both(t, c), (t.map == c).astype(np.float64) + (t.reference == c))
+    return Ratio(2 * _both(t.map, t.reference, c), _is(t.map, c) + _is(t.reference, c))
 
 
 def area_proportion(t: Tally, c: int) -> Ratio:
-    """Proportion of the area that is class c."""
-    return Ratio((t.reference == c).astype(np.float64), np.ones(len(t.share)))
+    """Proportion of the mapped area that is class c."""
+    return Ratio(_is(t.reference, c), t.mapped)
 
 
-def estimate_sample(sample: ReferenceSample, options: AssessmentOptions) -> Assessment:
-    """Estimate accuracy, areas and agreement. Raises SampleError when no point has a label."""
-    if not sample.labelled.any():
-        raise SampleError("no point of the reference sample has a label", fix="label the points first")
-    t = tally(sample, finite_population=options.finite_population)
-    k = len(sample.classes)
-    proportions, counts = np.zeros((k, k)), np.zeros((k, k), dtype=np.int64)
-    np.add.at(proportions, (t.map, t.reference), t.share)
-    labelled = sample.labelled
-    np.add.at(counts, (sample.map[labelled], sample.reference[labelled]), sample.count[labelled])
-    statistics = [
-        overall_accuracy(t),
-        *(make(t, c) for make in (users_accuracy, producers_accuracy, f1, area_proportion) for c in range(k)),
-    ]
-    level, method = options.confidence_level, options.interval
-    shown = iter([_shown(sample, proportion(found, level, method)) for found in linearise(t, statistics)])
-    overall = next(shown)
-    users, producers, harmonic, areas = ({name: next(shown) for name in sample.classes} for _ in range(4))
-    total = float(sum(s.area for s, n in zip(sample.strata, t.points, strict=True) if n))
-    differing = disagreement(proportions)
-    mapped = sample.mapped_area or (None,) * k
-    return Assessment(
-        evidence_name=sample.evidence, confidence_level=level, classes=sample.classes,
-        area_unit=sample.area_unit, total_area=total, design_kind=sample.kind,
-        strata=tuple(StratumSummary(s.name, s.area, int(n)) for s, n in zip(sample.strata, t.points, strict=True)),
-        matrix_counts=counts, matrix_area_proportions=proportions, overall_accuracy=overall,
-        users_accuracy=users, producers_accuracy=producers, f1=harmonic,
-        area={c: AreaEstimate(m, areas[c].scaled(total)) for c, m in zip(sample.classes, mapped, strict=True)},
-        kappa=_shown(sample, unbounded(kappa(t, proportions), level, method)),
-        quantity_disagreement=differing.quantity, allocation_disagreement=differing.allocation,
-        problems=(*sample.problems, *findings(sample, t, proportions)),
-    )  # fmt: skip
+def either_overall(t: Tally) -> Ratio:
+    """Proportion of the mapped area where the map agrees with the first or the alternate label."""
+    return Ratio(_right_either(t), t.mapped)
 
 
-def _both(t: Tally, c: int) -> Floats:
-    return ((t.map == c) & (t.reference == c)).astype(np.float64)
+def either_users(t: Tally, c: int) -> Ratio:
+    """Of the area mapped as class c, the proportion where the first or the alternate label is c."""
+    return Ratio(_right_either(t) * _is(t.map, c), _is(t.map, c), map_class=c)
 
 
-def _shown(sample: ReferenceSample, estimate: Estimate) -> Estimate:
-    return estimate if EVIDENCE[sample.evidence].has_intervals else Estimate(estimate.estimate)
+def within(ratio: Ratio, t: Tally, region: int) -> Ratio:
+    """The same statistic of one region (domain): y and x are 0 elsewhere (Cochran 1977, section 2.13)."""
+    inside = _is(t.region, region)
+    return Ratio(ratio.y * inside, ratio.x * inside, ratio.map_class)
+
+
+def region_share(t: Tally, region: int) -> Ratio:
+    """Proportion of the mapped area that lies in a region."""
+    return Ratio(t.mapped * _is(t.region, region), t.mapped)
+
+
+def area_in_region(t: Tally, c: int, region: int) -> Ratio:
+    """Proportion of the mapped area that is class c and lies in a region."""
+    return Ratio(_is(t.reference, c) * _is(t.region, region), t.mapped)
+
+
+def on_other_map(t: Tally) -> Tally:
+    """The same tally with the second map in place of the first. Its strata are no classes of that map."""
+    return replace(t, map=t.other_map, pure=np.full_like(t.pure, NO_LABEL))
+
+
+def _is(classes: Ints, c: int) -> Floats:
+    return np.asarray(classes == c, dtype=np.float64)
+
+
+def _both(first: Ints, second: Ints, c: int) -> Floats:
+    return np.asarray((first == c) & (second == c), dtype=np.float64)
+
+
+def _right(t: Tally) -> Floats:
+    return np.asarray((t.map == t.reference) * t.mapped)
+
+
+def _right_either(t: Tally) -> Floats:
+    return np.asarray(((t.map == t.reference) | (t.map == t.alternate)) * t.mapped)

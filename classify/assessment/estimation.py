@@ -1,0 +1,171 @@
+"""From a checked sample to everything that is reported of it."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from classify.assessment import bootstrap
+from classify.assessment import statistics as st
+from classify.assessment.agreement import area_matrix, disagreement, kappa, kappa_values
+from classify.assessment.estimate import Floats, Linearised, Ratio, Tally, linearise, tally
+from classify.assessment.evidence import EVIDENCE
+from classify.assessment.findings import findings, region_findings
+from classify.assessment.intervals import Bounds, Estimate, proportion, unbounded
+from classify.assessment.options import AssessmentOptions
+from classify.assessment.result import (
+    AreaEstimate,
+    Assessment,
+    EitherLabel,
+    RegionEstimate,
+    StratumSummary,
+    Unlabelled,
+)
+from classify.assessment.sample import NO_LABEL, ReferenceSample
+from classify.errors import SampleError
+
+
+def estimate_sample(sample: ReferenceSample, options: AssessmentOptions) -> Assessment:
+    """Estimate accuracy, areas and agreement. Raises SampleError when no point on the map has a label."""
+    require_labels(sample)
+    if not EVIDENCE[sample.evidence].has_intervals:
+        sample = sample.unweighted()
+    t = tally(sample, finite_population=options.finite_population)
+    k = len(sample.classes)
+    estimator = Estimator(t, sample, options)
+    proportions = area_matrix(t.share, t, k)
+    makers = (st.users_accuracy, st.producers_accuracy, st.f1, st.area_proportion)
+    ratios = [st.overall_accuracy(t), *(make(t, c) for make in makers for c in range(k))]
+    shown = iter(estimator.proportions(ratios))
+    overall = next(shown)
+    users, producers, harmonic, areas = ({name: next(shown) for name in sample.classes} for _ in makers)
+    differing = disagreement(proportions)
+    total = mapped_total(sample, t)
+    return Assessment(
+        evidence_name=sample.evidence, confidence_level=options.confidence_level, classes=sample.classes,
+        area_unit=sample.area_unit, total_area=total, design_kind=sample.kind, clustered=t.clustered,
+        strata=tuple(StratumSummary(s.name, s.area, int(n)) for s, n in zip(sample.strata, t.points, strict=True)),
+        matrix_counts=counts_matrix(sample), matrix_area_proportions=proportions, overall_accuracy=overall,
+        users_accuracy=users, producers_accuracy=producers, f1=harmonic,
+        area={c: _area(sample, i, areas[c], total) for i, c in enumerate(sample.classes)},
+        kappa=estimator.kappa(proportions), disagreement=differing,
+        either_label=_either_label(sample, t, estimator),
+        unlabelled=_unlabelled(sample, options),
+        regions=_regions(sample, t, estimator, total),
+        problems=(*sample.problems, *findings(sample, t, proportions), *region_findings(sample, t)),
+    )  # fmt: skip
+
+
+def require_labels(sample: ReferenceSample) -> None:
+    """Raise SampleError unless a point on the map has a label."""
+    if not (sample.usable & ~sample.off_map).any():
+        raise SampleError("no point on the map has a reference label", fix="label the points before assessing")
+
+
+def counts_matrix(sample: ReferenceSample) -> np.ndarray:
+    """Labelled points, int64 (k, k), rows map, columns reference."""
+    counts = np.zeros((len(sample.classes),) * 2, dtype=np.int64)
+    here = (sample.reference != NO_LABEL) & ~sample.off_map
+    np.add.at(counts, (sample.map[here], sample.reference[here]), sample.count[here])
+    return counts
+
+
+def mapped_total(sample: ReferenceSample, t: Tally) -> float:
+    """Area that the estimates stand for: the sampled strata, less the part of them that lies off the map."""
+    sampled = sum(s.area for s, n in zip(sample.strata, t.points, strict=True) if n)
+    return float(sampled * (t.share @ t.mapped))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Estimator:
+    """The estimator with one choice of intervals: turns statistics into figures as they are shown."""
+
+    t: Tally
+    sample: ReferenceSample
+    options: AssessmentOptions
+
+    def proportions(self, ratios: Sequence[Ratio]) -> list[Estimate]:
+        """Estimates of quantities in 0..1, in the order of `ratios`."""
+        limits = self._limits(bootstrap.ratios_of(ratios), len(ratios))
+        level, method = self.options.confidence_level, self.options.interval
+        found = linearise(self.t, ratios)
+        return [self._shown(proportion(f, level, method, b)) for f, b in zip(found, limits, strict=True)]
+
+    def kappa(self, proportions: Floats) -> Estimate:
+        """Kappa of an area matrix (k, k)."""
+
+        def values(shares: Floats) -> Floats:
+            return kappa_values(area_matrix(shares, self.t, len(proportions)))[:, None]
+
+        return self.unbounded([kappa(self.t, proportions)], values)[0]
+
+    def unbounded(self, found: Sequence[Linearised], values: bootstrap.Statistic) -> list[Estimate]:
+        """Estimates of quantities that are no proportions. values: the same from the shares of replicates."""
+        level, method = self.options.confidence_level, self.options.interval
+        limits = self._limits(values, len(found))
+        return [self._shown(unbounded(f, level, method, b)) for f, b in zip(found, limits, strict=True)]
+
+    def _limits(self, values: bootstrap.Statistic, n: int) -> Sequence[Bounds | None]:
+        o = self.options
+        if o.interval != "bootstrap" or not EVIDENCE[self.sample.evidence].has_intervals:
+            return [None] * n
+        return bootstrap.bounds(self.t, values, o.confidence_level, o.replicates, o.seed)
+
+    def _shown(self, estimate: Estimate) -> Estimate:
+        return estimate if EVIDENCE[self.sample.evidence].has_intervals else estimate.without_interval()
+
+
+def _area(sample: ReferenceSample, c: int, share: Estimate, total: float) -> AreaEstimate:
+    mapped = sample.mapped_area[c] if sample.mapped_area else None
+    # Places that were chosen say nothing about the size of a class.
+    estimated = share.scaled(total) if EVIDENCE[sample.evidence].has_intervals else Estimate(None)
+    return AreaEstimate(mapped, estimated)
+
+
+def _either_label(sample: ReferenceSample, t: Tally, estimator: Estimator) -> EitherLabel | None:
+    if sample.alternate is None:
+        return None
+    with_one = (sample.alternate != NO_LABEL) & (sample.reference != NO_LABEL) & ~sample.off_map
+    ratios = [st.either_overall(t), *(st.either_users(t, c) for c in range(len(sample.classes)))]
+    overall, *users = estimator.proportions(ratios)
+    return EitherLabel(int(sample.count[with_one].sum()), overall, dict(zip(sample.classes, users, strict=True)))
+
+
+def _unlabelled(sample: ReferenceSample, options: AssessmentOptions) -> Unlabelled | None:
+    missing = ~sample.usable
+    if not missing.any():
+        return None
+    # Wrong in any way: the class after the mapped one, as nothing but agreement is taken from it.
+    wrong = (sample.map + 1) % max(len(sample.classes), 2)
+    bounds = []
+    for supposed in (wrong, sample.map):
+        full = replace(sample, reference=np.where(missing, supposed, sample.reference))
+        t = tally(full, finite_population=options.finite_population)
+        ratios = [st.overall_accuracy(t), *(st.users_accuracy(t, c) for c in range(len(sample.classes)))]
+        bounds.append([None if np.isnan(f.value) else f.value for f in linearise(t, ratios)])
+    overall, *users = zip(*bounds, strict=True)
+    return Unlabelled(int(sample.count[missing].sum()), overall, dict(zip(sample.classes, users, strict=True)))
+
+
+def _regions(sample: ReferenceSample, t: Tally, estimator: Estimator, total: float) -> tuple[RegionEstimate, ...]:
+    found = []
+    for region, name in enumerate(sample.regions):
+        here = t.mapped * (t.region == region)
+        n = round(float((t.units.T @ t.repeats) @ here))
+        if not n:
+            found.append(
+                RegionEstimate(name, 0, Estimate(None), Estimate(None), {c: Estimate(None) for c in sample.classes})
+            )
+            continue
+        ratios = [
+            st.within(st.overall_accuracy(t), t, region),
+            st.region_share(t, region),
+            *(st.area_in_region(t, c, region) for c in range(len(sample.classes))),
+        ]
+        overall, share, *areas = estimator.proportions(ratios)
+        sized = EVIDENCE[sample.evidence].has_intervals
+        of_class = {c: a.scaled(total) if sized else Estimate(None) for c, a in zip(sample.classes, areas, strict=True)}
+        found.append(RegionEstimate(name, n, overall, share.scaled(total) if sized else Estimate(None), of_class))
+    return tuple(found)
