@@ -355,6 +355,17 @@ class ModelSettings(_Section):
     svm_pixels: int = Field(
         default=20_000, ge=100, description="a support vector machine is fitted on at most so many, drawn by the seed"
     )
+    compare: list[ModelKind] = Field(
+        default_factory=list, description="further kinds to try; the simplest within one standard error of the best wins"
+    )
+    tune: bool = Field(default=False, description="search for good settings, with polygons kept whole")
+    tuning_draws: int = Field(default=20, ge=1, le=1000, description="settings tried per kind, the default among them")
+    folds: int = Field(default=5, ge=2, le=50, description="parts that polygons are dealt into for screening")
+    repeats: int = Field(default=3, ge=1, le=100, description="how often they are dealt anew")
+    block_m: float | None = Field(
+        default=None, gt=0, description="keep square blocks of so many metres whole instead of single polygons"
+    )
+    importance: bool = Field(default=True, description="measure what each feature and group of features contributes")
 
 
 class MapSettings(_Section):
