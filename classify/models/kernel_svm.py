@@ -25,6 +25,7 @@ from sklearn.svm import SVC
 
 from classify.errors import ModelError
 
+_EPS = float(np.finfo(np.float64).eps)
 _Kind = type[np.float32] | type[np.float64]
 
 # Pixels by support vectors of a block: their kernel values stay in a second-level cache. Always whole blocks of pixels,
@@ -133,16 +134,22 @@ class CompiledSvm:
     def _decide(self, rows: NDArray[np.float64], kind: _Kind) -> _Decisions:
         norms = np.sqrt((rows**2).sum(axis=1))
         if self.gamma:
-            values, weights = self._kernel_sums(rows, norms, kind)
-            shares = self._error_shares(norms, kind)
+            shares, hopeless = self._error_shares(norms, kind)
+            near = np.where(hopeless, 0, norms)
+            values, weights = self._kernel_sums(np.where(hopeless[:, None], 0, rows), near, kind)
         else:
             planes, sizes = self._planes
             values, weights = rows @ planes, norms[:, None] * sizes
-            shares = np.full(
-                len(rows), np.finfo(np.float64).eps * (2 * len(self.machine.support_vectors_) + rows.shape[1])
-            )
-        offset = 4 * float(np.finfo(np.float64).eps) * np.abs(self.machine.intercept_)
-        return _Decisions(values + self.machine.intercept_, weights * shares[:, None] + offset)
+            shares = np.full(len(rows), _EPS * (2 * len(self.machine.support_vectors_) + rows.shape[1]))
+            hopeless = np.zeros(len(rows), dtype=bool)
+        # Rounding of the offset, and kernel values too small for the type.
+        least = (
+            4 * _EPS * np.abs(self.machine.intercept_)
+            + float(np.finfo(kind).tiny) * np.abs(self.machine.dual_coef_).sum()
+        )
+        bounds = weights * shares[:, None] + least
+        bounds[hopeless] = np.inf
+        return _Decisions(values + self.machine.intercept_, bounds)
 
     def _kernel_sums(
         self, rows: NDArray[np.float64], norms: NDArray[np.float64], kind: _Kind
@@ -170,17 +177,19 @@ class CompiledSvm:
             weights[here] = (parts[one, :count, -1] + parts[other, :count, -1]).T
         return values, weights
 
-    def _error_shares(self, norms: NDArray[np.float64], kind: _Kind) -> NDArray[np.float64]:
-        """Bound on a decision value's error as a share of its summed sizes, (n,): ours and scikit-learn's together."""
-        unit, own = float(np.finfo(kind).eps) / 2, float(np.finfo(np.float64).eps) / 2
+    def _error_shares(self, norms: NDArray[np.float64], kind: _Kind) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
+        """Bound on a decision value's error, ours and scikit-learn's together, as a share of its summed sizes, (n,).
+
+        And whether kernel values are too far off for a share of them to bound anything, (n,).
+        """
+        unit, own = float(np.finfo(kind).eps) / 2, _EPS / 2
         vectors, terms = len(self.machine.support_vectors_), len(self.centre) + 8
         # An exponent is a sum of `terms` rounded products whose sizes add up to gamma (|x| + |v|)^2 at most; an
         # exponential is good to 4 units in the last place, 8 roundings.
         exponents = self.gamma * (norms + self.reach) ** 2
         kernel = unit * (terms * exponents + 8)
-        shares: NDArray[np.float64] = 1.1 * (kernel + unit * (_VECTORS + 4) + own * (2 * vectors + terms * exponents))
-        shares[kernel > _LARGEST_ERROR] = np.inf
-        return shares
+        sums = unit * (_VECTORS + 4) + own * (2 * vectors + terms * exponents)
+        return 1.1 * (kernel + sums), kernel > _LARGEST_ERROR
 
     @cached_property
     def _planes(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
