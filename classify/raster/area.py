@@ -38,6 +38,19 @@ def ground_areas_m2(grid: Grid, window: Window) -> NDArray[np.float64]:
     return _by_lattice(grid, window, earth)
 
 
+def pixel_size_m(grid: Grid) -> tuple[float, float]:
+    """Ground distance in metres between centres of neighbouring rows and of neighbouring columns, mid-grid (geodesic).
+
+    Raises DataError for a CRS that is not tied to the earth.
+    """
+    earth = _earth(grid.crs)
+    row, col = grid.height // 2, grid.width // 2
+    x, y = grid.xy(np.array([row, row + 1, row]), np.array([col, col, col + 1]))
+    lon, lat = earth.degrees(x, y)
+    _, _, metres = earth.geod.inv([lon[0]] * 2, [lat[0]] * 2, lon[1:], lat[1:])
+    return float(metres[0]), float(metres[1])
+
+
 class _Earth:
     """A CRS's way to longitude and latitude in radians, and its ellipsoid."""
 
@@ -55,7 +68,15 @@ class _Earth:
         self.e = float(np.sqrt(flattening * (2 - flattening)))
         geodetic_2d = geodetic.to_2d()
         self.radians = geodetic_2d.axis_info[0].unit_conversion_factor
+        self.geod = pyproj.Geod(a=self.a_m, f=flattening)
         self._to_geodetic = pyproj.Transformer.from_crs(projected.to_2d(), geodetic_2d, always_xy=True)
+
+    def degrees(
+        self, x: NDArray[np.float64], y: NDArray[np.float64]
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """CRS coordinates to longitude and latitude in degrees."""
+        lon, lat = (x, y) if self.geographic else self._to_geodetic.transform(x, y)
+        return np.degrees(np.asarray(lon) * self.radians), np.degrees(np.asarray(lat) * self.radians)
 
     def equal_area_xy_m(self, x: NDArray[np.float64], y: NDArray[np.float64]) -> tuple[NDArray[np.float64], ...]:
         """CRS coordinates to (a * lon, a * q / 2) in metres, where areas are true."""

@@ -5,8 +5,8 @@ A `Scene` is a plain value that can be sent to other threads or machines, each o
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass, field
 from functools import cached_property
 from types import TracebackType
 
@@ -14,8 +14,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from classify.errors import DataError, Problem
+from classify.raster.area import pixel_size_m
+from classify.raster.composite import CLEAR_COUNT, Composite
 from classify.raster.grid import Grid, Window
-from classify.raster.masks import MaskSource
+from classify.raster.masks import Disc, MaskSource
 from classify.raster.resample import Array, Placement, Rule, gather_bilinear, gather_nearest, source_window
 from classify.raster.sources import BandSource, OpenFiles, own_mask, read_window, to_reflectance
 
@@ -27,25 +29,34 @@ _MEAN_BUFFER_PX = 4_000_000
 
 @dataclass(frozen=True)
 class Scene:
-    """Bands on one grid, with an optional mask. warnings: findings that do not stop the work but travel on."""
+    """Bands on one grid.
+
+    masks: by name of the date that they belong to. warnings: findings that do not stop the work but travel on.
+    composite: if there is one, its layers are called by role alone, and bands of every date role@date.
+    """
 
     grid: Grid
     bands: tuple[BandSource, ...]
-    mask: MaskSource | None = None
+    masks: Mapping[str, MaskSource] = field(default_factory=dict)
     warnings: tuple[Problem, ...] = ()
     resampling: Rule = "bilinear"
+    composite: Composite | None = None
 
     @property
     def roles(self) -> tuple[str, ...]:
-        """Names of the bands, in the order of the project file."""
-        return tuple(band.role for band in self.bands)
+        """Names of all layers: those without a date first, in the order of the project file."""
+        made = (*self.composite.roles, CLEAR_COUNT) if self.composite else ()
+        stored = tuple(band.role for band in self.bands)
+        return (*made, *(r for r in stored if "@" not in r), *(r for r in stored if "@" in r))
 
     def band(self, role: str) -> BandSource:
-        """The band of a role. Raises DataError listing the roles there are."""
-        for band in self.bands:
-            if band.role == role:
-                return band
-        raise DataError(f"the scene has no band {role!r}", where="scene.bands", fix=f"it has: {', '.join(self.roles)}")
+        """The stored band of a role; of a composite, that of its first date. Raises DataError listing the layers."""
+        for name in (role, f"{role}@{self.composite.dates[0]}" if self.composite else role):
+            for band in self.bands:
+                if band.role == name:
+                    return band
+        fix = f"it has: {', '.join(self.roles)}"
+        raise DataError(f"the scene has no band {role!r}", where="scene.bands", fix=fix)
 
     def open(self) -> SceneReader:
         """A reader for the calling thread; closes with its context."""
@@ -54,13 +65,20 @@ class Scene:
     @cached_property
     def _groups(self) -> dict[str, tuple[BandSource, ...]]:
         """Role -> the bands that are read together with it: those of one file, stored and placed alike."""
-        together: dict[tuple[str, Grid, bool], list[BandSource]] = {}
+        together: dict[tuple[str, Grid, bool, bool], list[BandSource]] = {}
         for band in self.bands:
-            together.setdefault((band.path, band.native, band.flagged), []).append(band)
+            together.setdefault((band.path, band.native, band.flagged, band.categorical), []).append(band)
         return {band.role: tuple(group) for group in together.values() for band in group}
 
+    @cached_property
+    def _discs(self) -> dict[str, Disc]:
+        """Date -> what its mask grows by."""
+        grown = {date: mask.buffer_m for date, mask in self.masks.items() if mask.buffer_m > 0}
+        pixel_m_yx = pixel_size_m(self.grid) if grown else (1.0, 1.0)
+        return {date: Disc.of_radius(buffer_m, pixel_m_yx) for date, buffer_m in grown.items()}
+
     def __getstate__(self) -> dict[str, object]:
-        return {name: value for name, value in self.__dict__.items() if name != "_groups"}
+        return {name: value for name, value in self.__dict__.items() if not name.startswith("_")}
 
 
 class SceneReader:
@@ -92,42 +110,67 @@ class SceneReader:
         """
         scene = self._scene
         wanted = scene.roles if roles is None else tuple(roles)
+        if unknown := [role for role in wanted if role not in scene.roles]:
+            scene.band(unknown[0])  # raises
         padded = window.pad(halo_px)
         inside = padded.intersect(scene.grid.window)
         if inside is None:
-            return {scene.band(role).role: np.full(padded.shape_yx, np.nan, np.float32) for role in wanted}
-        layers = self._bands([scene.band(role) for role in wanted], inside)
-        if scene.mask is not None and layers:
-            rejected = self.rejected(inside)
-            for layer in layers.values():
-                layer[rejected] = np.nan
+            return {role: np.full(padded.shape_yx, np.nan, np.float32) for role in wanted}
+        layers = self._layers(wanted, inside)
         if inside != padded:
             layers = {role: _place(layer, inside, padded) for role, layer in layers.items()}
         return {role: layers[role] for role in wanted}
 
-    def rejected(self, window: Window) -> NDArray[np.bool_]:
-        """bool (h, w) for a window inside the grid: True where the mask rejects the pixel or does not reach it.
+    def _layers(self, wanted: Sequence[str], window: Window) -> dict[str, Array]:
+        scene = self._scene
+        made = {*scene.composite.roles, CLEAR_COUNT}.intersection(wanted) if scene.composite else set()
+        stored = dict.fromkeys(role for role in wanted if role not in made)
+        if scene.composite and made:
+            stored.update(dict.fromkeys(scene.composite.needs))
+        layers = self._bands([scene.band(role) for role in stored], window)
+        dates = {role: scene.band(role).date for role in layers}
+        for date in dict.fromkeys(dates.values()):
+            if date is not None and date in scene.masks:
+                rejected = self.rejected(window, date)
+                for role, layer in layers.items():
+                    if dates[role] == date:
+                        layer[rejected] = np.nan
+        if scene.composite and made:
+            layers.update(scene.composite.compute(layers))
+        return layers
+
+    def rejected(self, window: Window, date: str) -> NDArray[np.bool_]:
+        """bool (h, w): True where the mask of a date rejects the pixel or does not reach it.
 
         Where the mask is finer than the grid, one rejected mask pixel in it rejects the pixel.
         """
-        mask = self._scene.mask
-        if mask is None:
-            return np.zeros(window.shape_yx, dtype=bool)
+        mask, disc = self._scene.masks[date], self._scene._discs.get(date)
+        if disc is None:
+            bad, held = self._mask(mask, window)
+            return bad | ~held
+        halo = disc.halo_px
+        bad, held = self._mask(mask, window.pad(halo))
+        # Pixels that the mask does not reach are unusable, but not what the buffer is meant to keep away from.
+        return np.asarray(disc.grow(bad) | ~held[halo : halo + window.height, halo : halo + window.width])
+
+    def _mask(self, mask: MaskSource, window: Window) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
+        """bool (h, w): what the mask rejects, and where it reaches; the window may lie outside the grid."""
         placement = self._placement(mask.native)
-        result = np.zeros(window.shape_yx, dtype=bool)
+        rejects, reaches = np.zeros(window.shape_yx, dtype=bool), np.ones(window.shape_yx, dtype=bool)
         for strip in _strips(window, placement):
-            target = result[strip.row - window.row : strip.row - window.row + strip.height]
+            rows = slice(strip.row - window.row, strip.row - window.row + strip.height)
             parts = _sub_pixel_places(placement, strip, self._fineness(placement))
             whole = _enclosing(mask.native, parts)
             if whole is None:
-                target[:] = True
+                reaches[rows] = False
                 continue
             stored = read_window(self._files.get(mask.path), mask.path, [mask.band], whole)[0]
             bad = mask.rejects(stored)
             for places in parts:
                 picked, held = gather_nearest(bad, whole, mask.native, places)
-                target |= picked.astype(bool) | ~held
-        return result
+                rejects[rows] |= picked.astype(bool) & held
+                reaches[rows] &= held
+        return rejects, reaches
 
     def _bands(self, bands: Sequence[BandSource], window: Window) -> dict[str, Array]:
         layers: dict[str, Array] = {}
@@ -144,10 +187,10 @@ class SceneReader:
         shift = placement.shift_yx
         if shift is not None:
             return self._direct(bands, window, shift)
-        if fineness != (1, 1):
+        bilinear = self._scene.resampling == "bilinear" and not bands[0].categorical
+        if fineness != (1, 1) and not bands[0].categorical:
             return self._mean(bands, window, placement, fineness)
         places = placement.places(window)
-        bilinear = self._scene.resampling == "bilinear"
         part = source_window(placement.source, places, 1 if bilinear else 0)
         if part is None:
             return np.full((len(bands), *window.shape_yx), np.nan, np.float32)

@@ -2,66 +2,143 @@
 
 Where a value comes from, first known wins. Scale and offset: the band's keys in the project file, [scene], the file's
 own metadata, the sensor's preset, 1 and 0. No data: the band's keys, [scene], the file, the preset, none. Wavelength:
-the band's keys, the preset.
+the band's keys, the file, the preset.
 """
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass
+import difflib
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
 
-from classify.errors import DataError, LandassayError, Problem, SettingsError, raise_if_errors
+from classify.errors import DataError, Problem, SettingsError, raise_if_errors
 from classify.raster.area import ground_areas_m2
+from classify.raster.checks import placement_problems, value_warnings
+from classify.raster.composite import Composite
 from classify.raster.grid import Grid, Window
 from classify.raster.masks import MaskSource
 from classify.raster.reader import Scene, SceneReader
-from classify.raster.resample import Placement
-from classify.raster.sensors import Sensor, SensorBand, load_sensor, mask_fields
+from classify.raster.sensors import NO_SENSOR, Sensor, SensorBand, load_sensor, mask_fields
 from classify.raster.sources import BandSource, OpenFiles, RasterFacts, describe, read_window
-from classify.settings import BandSettings, Project, SceneSettings
+from classify.settings import AncillarySettings, BandSettings, DateSettings, MaskSettings, Project, SceneSettings
 
 __all__ = ["BandSource", "Scene", "SceneReader", "open_scene"]
-
-# Windows on a lattice of this many per side, this large, stand for the whole scene in checks of its values.
-_SAMPLES_PER_SIDE = 4
-_SAMPLE_PX = 64
-_UNSCALED_MEDIAN = 2.0
 
 
 def open_scene(settings: SceneSettings, project: Project) -> Scene:
     """The scene of a project file, checked. Raises DataError or SettingsError listing every problem found."""
-    sensor = load_sensor(settings.sensor) if settings.sensor else None
-    files = _Files()
-    bands: list[BandSource] = []
-    problems: list[Problem] = []
-    for role, band in settings.bands.items():
-        try:
-            facts = files.facts(project.path(band.file))
-            bands.append(_band_source(role, band, facts, settings, sensor))
-        except LandassayError as error:
-            problems += [_at(problem, f"scene.bands.{role}") for problem in error.problems]
-    mask = None
-    if settings.mask:
-        try:
-            mask = _mask_source(settings, project, files, sensor)
-        except SettingsError as error:
-            problems += [_at(problem, project.file.name) for problem in error.problems]
-        except DataError as error:
-            problems += [_at(problem, "scene.mask") for problem in error.problems]
-    raise_if_errors(problems, DataError)
-    grid = _choose_grid(settings, bands)
+    opening = _Opening(project, settings)
+    opening.acquisition(settings, settings.date, "scene")
+    for number, date in enumerate(settings.dates, 1):
+        opening.acquisition(date, date.name, f"scene.dates[{number}]")
+    opening.ancillary()
+    raise_if_errors(opening.problems, DataError)
+    grid = _choose_grid(settings, opening.bands)
     ground_areas_m2(grid, Window(0, 0, 1, 1))  # refuses a CRS that is not tied to the earth
-    for source in bands:
-        problems += _placement_problems(source.native, grid, repr(source.role), source.path)
-    if mask:
-        problems += _placement_problems(mask.native, grid, "the mask", mask.path)
-    problems += files.probe()
+    problems = list(opening.problems)
+    for source in opening.bands:
+        problems += placement_problems(source.native, grid, repr(source.role), source.path)
+    for mask in opening.masks.values():
+        problems += placement_problems(mask.native, grid, "the mask", mask.path)
+    problems += opening.files.probe()
     raise_if_errors(problems, DataError)
-    scene = Scene(grid, tuple(bands), mask, (), settings.resampling)
-    return Scene(grid, scene.bands, mask, (*problems, *_value_warnings(scene)), settings.resampling)
+    scene = Scene(grid, tuple(opening.bands), opening.masks, (), settings.resampling, _composite(settings))
+    return replace(scene, warnings=(*problems, *value_warnings(scene)))
+
+
+def _composite(settings: SceneSettings) -> Composite | None:
+    chosen = settings.composite
+    if chosen is None:
+        return None
+    assert settings.date is not None, "settings are validated"
+    dates = (settings.date, *(date.name for date in settings.dates))
+    return Composite(tuple(settings.bands), dates, chosen.method, chosen.of, chosen.minimum_clear)
+
+
+class _Opening:
+    """Sources gathered so far, and every problem met on the way."""
+
+    def __init__(self, project: Project, settings: SceneSettings) -> None:
+        self.project, self.settings, self.files = project, settings, _Files()
+        self.bands: list[BandSource] = []
+        self.masks: dict[str, MaskSource] = {}
+        self.problems: list[Problem] = []
+
+    def acquisition(self, one: SceneSettings | DateSettings, date: str | None, key: str) -> None:
+        """Add the bands and the mask of one date. Layers get its name unless they are of a single main date."""
+        rules = _Rules()
+        with self._collecting(f"{key}.sensor"):
+            rules = _Rules.of(one, self.settings)
+        suffix = "" if one is self.settings and self.settings.composite is None else f"@{date}"
+        for role, band in one.bands.items():
+            with self._collecting(f"{key}.bands.{role}"):
+                source = _band_source(role, band, self._facts(band), rules)
+                self.bands.append(replace(source, role=role + suffix, date=date or ""))
+            self.problems += rules.unknown_role(role, f"{self.project.file.name}: {key}.bands.{role}")
+        if one.mask:
+            with self._collecting(f"{key}.mask"):
+                self.masks[date or ""] = _mask_source(one.mask, self._facts(one.mask), rules)
+
+    def ancillary(self) -> None:
+        """Add the rasters that are no bands; nothing of the sensor or of [scene] holds for them."""
+        for name, raster in self.settings.ancillary.items():
+            with self._collecting(f"scene.ancillary.{name}"):
+                band = BandSettings.model_validate(raster.model_dump(exclude={"categorical"}))
+                source = _band_source(name, band, self._facts(raster), _Rules())
+                self.bands.append(replace(source, date=None, categorical=raster.categorical))
+
+    def _facts(self, part: BandSettings | AncillarySettings | MaskSettings) -> RasterFacts:
+        facts = self.files.facts(self.project.path(part.file))
+        if part.band > facts.count:
+            bands = "1 band" if facts.count == 1 else f"{facts.count} bands"
+            what = f"band {part.band} is asked for, but the file has {bands}"
+            raise DataError(what, where=facts.path, fix="correct 'band'; bands are counted from 1")
+        return facts
+
+    @contextmanager
+    def _collecting(self, key: str) -> Iterator[None]:
+        try:
+            yield
+        except (DataError, SettingsError) as error:
+            for problem in error.problems:
+                where = f"{key} ({problem.where})" if problem.where else key
+                self.problems.append(replace(problem, where=f"{self.project.file.name}: {where}"))
+
+
+@dataclass(frozen=True, slots=True)
+class _Rules:
+    """What holds for all bands of a date unless they or their files say otherwise."""
+
+    sensor: Sensor = NO_SENSOR
+    name: str | None = None
+    scale: float | None = None
+    offset: float | None = None
+    nodata: float | None = None
+
+    @classmethod
+    def of(cls, one: SceneSettings | DateSettings, main: SceneSettings) -> _Rules:
+        """A date without a sensor of its own takes from [scene] what it does not say."""
+        given = {key: getattr(one, key) for key in ("scale", "offset", "nodata")}
+        if one.sensor is None:
+            given = {key: getattr(main, key) if value is None else value for key, value in given.items()}
+        name = one.sensor or main.sensor
+        return cls(load_sensor(name) if name else NO_SENSOR, name, **given)
+
+    def unknown_role(self, role: str, where: str) -> list[Problem]:
+        """A warning when the preset has bands, but none of this role."""
+        if not self.sensor.bands or role in self.sensor.bands:
+            return []
+        close = difflib.get_close_matches(role, self.sensor.bands, n=1)
+        fix = f"did you mean {close[0]!r}?" if close else f"it has: {', '.join(self.sensor.bands)}"
+        return [
+            Problem(
+                f"the preset {self.name!r} has no band {role!r}, so its wavelength is unknown", where, fix, "warning"
+            )
+        ]
 
 
 class _Files:
@@ -97,30 +174,21 @@ class _Files:
         return problems
 
 
-def _at(problem: Problem, key: str) -> Problem:
-    where = f"{key} ({problem.where})" if problem.where else key
-    return Problem(problem.what, where, problem.fix, problem.severity)
-
-
-def _band_source(
-    role: str, band: BandSettings, facts: RasterFacts, settings: SceneSettings, sensor: Sensor | None
-) -> BandSource:
-    _refuse_missing_band(band.band, facts)
+def _band_source(role: str, band: BandSettings, facts: RasterFacts, rules: _Rules) -> BandSource:
     index = band.band - 1
     if facts.dtypes[index].startswith("complex"):
         raise DataError("this band holds complex numbers", where=facts.path, fix="convert it to reflectance")
-    of_all = sensor or Sensor(title="", source="")
-    preset = of_all.bands.get(role, SensorBand())
+    sensor, preset = rules.sensor, rules.sensor.bands.get(role, SensorBand())
     said = (facts.scales[index], facts.offsets[index])
     file_scale, file_offset = said if said != (1.0, 0.0) else (None, None)
     return BandSource(
         role=role,
         path=facts.path,
         band=band.band,
-        scale=_first(band.scale, settings.scale, file_scale, preset.scale, of_all.scale, 1.0),
-        offset=_first(band.offset, settings.offset, file_offset, preset.offset, of_all.offset, 0.0),
-        nodata=_first(band.nodata, settings.nodata, facts.nodata[index], preset.nodata, of_all.nodata, None),
-        wavelength_nm=_first(band.wavelength_nm, preset.wavelength_nm, None),
+        scale=_first(band.scale, rules.scale, file_scale, preset.scale, sensor.scale, 1.0),
+        offset=_first(band.offset, rules.offset, file_offset, preset.offset, sensor.offset, 0.0),
+        nodata=_first(band.nodata, rules.nodata, facts.nodata[index], preset.nodata, sensor.nodata, None),
+        wavelength_nm=_first(band.wavelength_nm, facts.wavelengths_nm[index], preset.wavelength_nm, None),
         native=facts.native,
         flagged=facts.flagged[index],
     )
@@ -131,29 +199,17 @@ def _first(*values_then_default: float | None) -> Any:  # noqa: ANN401 - None on
     return next((value for value in values_then_default if value is not None), None)
 
 
-def _refuse_missing_band(number: int, facts: RasterFacts) -> None:
-    if number > facts.count:
-        bands = "1 band" if facts.count == 1 else f"{facts.count} bands"
-        raise DataError(f"band {number} is asked for, but the file has {bands}", where=facts.path, fix="correct 'band'")
-
-
-def _mask_source(settings: SceneSettings, project: Project, files: _Files, sensor: Sensor | None) -> MaskSource:
-    assert settings.mask is not None
-    fields = mask_fields(settings.mask, sensor)
-    facts = files.facts(project.path(settings.mask.file))
-    _refuse_missing_band(settings.mask.band, facts)
-    dtype = np.dtype(facts.dtypes[settings.mask.band - 1])
+def _mask_source(mask: MaskSettings, facts: RasterFacts, rules: _Rules) -> MaskSource:
+    fields = mask_fields(mask, rules.sensor.mask)
+    dtype = np.dtype(facts.dtypes[mask.band - 1])
     if dtype.kind not in "iu":
-        raise DataError(
-            f"a mask holds whole numbers, but this file holds {dtype}", where=facts.path, fix="name the mask's own file"
-        )
-    too_high = [f.first for f in fields if f.width is not None and f.first + f.width > 8 * dtype.itemsize]
-    if too_high:
-        raise DataError(
-            f"bit {too_high[0]} is asked for, but the mask has {8 * dtype.itemsize} bits", where=facts.path,
-            fix="count bits from 0, the lowest",
-        )  # fmt: skip
-    return MaskSource(facts.path, settings.mask.band, facts.native, fields)
+        what = f"a mask holds whole numbers, but this file holds {dtype}"
+        raise DataError(what, where=facts.path, fix="name the mask's own file")
+    size = 8 * dtype.itemsize
+    if too_high := [field.first for field in fields if field.width is not None and field.first + field.width > size]:
+        what = f"bit {too_high[0]} is asked for, but the mask has {size} bits"
+        raise DataError(what, where=facts.path, fix="count bits from 0, the lowest")
+    return MaskSource(facts.path, mask.band, facts.native, fields, mask.buffer_m)
 
 
 def _choose_grid(settings: SceneSettings, bands: Sequence[BandSource]) -> Grid:
@@ -178,90 +234,3 @@ def _choose_grid(settings: SceneSettings, bands: Sequence[BandSource]) -> Grid:
 def _pixel_m2(grid: Grid) -> float:
     area = float(ground_areas_m2(grid, Window(grid.height // 2, grid.width // 2, 1, 1))[0, 0])
     return area if area > 0 else np.inf
-
-
-@dataclass(frozen=True, slots=True)
-class _Fit:
-    """How a raster lies on the grid: the share of the grid that it covers, and its shift in pixels, if any."""
-
-    share: float
-    shift_xy_px: tuple[float, float] | None
-
-
-def _fit(native: Grid, grid: Grid) -> _Fit:
-    placement = Placement(native, grid)
-    rows = np.linspace(0, grid.height - 1, 33).astype(int)
-    cols = np.linspace(0, grid.width - 1, 33).astype(int)
-    held = 0
-    for row in rows:
-        r, c = placement.places(Window(int(row), 0, 1, grid.width))
-        r, c = (np.broadcast_to(values, (1, grid.width))[0, cols] for values in (r, c))
-        with np.errstate(invalid="ignore"):
-            held += int(((r >= 0) & (r < native.height) & (c >= 0) & (c < native.width)).sum())
-    shift = None
-    if placement.same_crs and placement.shift_yx is None:
-        a = placement.affine
-        if abs(a.a - 1) < 1e-3 and abs(a.e - 1) < 1e-3 and abs(a.b) + abs(a.d) < 1e-3:
-            shift = a.c - round(a.c), a.f - round(a.f)
-    return _Fit(held / (len(rows) * len(cols)), shift)
-
-
-def _placement_problems(native: Grid, grid: Grid, name: str, path: str) -> list[Problem]:
-    if native == grid:
-        return []
-    fit = _fit(native, grid)
-    if fit.share == 0:
-        what = f"{name} does not overlap the grid of the map"
-        return [Problem(what, path, "check that it is of the same place, and its CRS")]
-    problems = []
-    if fit.share < 0.995:
-        what = f"{name} covers only {fit.share:.0%} of the map; the rest will be no data"
-        fix = "if that is not meant, choose a 'grid' band that all others cover"
-        problems.append(Problem(what, path, fix, "warning"))
-    if fit.shift_xy_px:
-        x, y = fit.shift_xy_px
-        what = f"the grid of {name} is shifted by {abs(x):.2f} pixels in x and {abs(y):.2f} in y against the map's"
-        fix = "it is interpolated; if the files should match, check their origins"
-        problems.append(Problem(what, path, fix, "warning"))
-    return problems
-
-
-def _value_warnings(scene: Scene) -> list[Problem]:
-    """Warnings from the values themselves, looked at in windows spread over the scene."""
-    windows = _sample_windows(scene.grid)
-    with Scene(scene.grid, scene.bands, None, (), "nearest").open() as reader:
-        samples = [reader.read(window) for window in windows]
-    problems = []
-    for band in scene.bands:
-        values = np.concatenate([sample[band.role].ravel() for sample in samples])
-        values = values[np.isfinite(values)]
-        if values.size and (median := float(np.median(values))) > _UNSCALED_MEDIAN:
-            problems.append(_unscaled(band, median))
-    if scene.mask:
-        with scene.open() as reader:
-            all_rejected = all(reader.rejected(window).all() for window in windows)
-        if all_rejected:
-            what, fix = "the mask rejects every pixel looked at", "check the codes or bits that it rejects"
-            problems.append(Problem(what, scene.mask.path, fix, "warning"))
-    return problems
-
-
-def _sample_windows(grid: Grid) -> list[Window]:
-    rows, cols = (
-        np.unique(np.linspace(0, max(size - _SAMPLE_PX, 0), _SAMPLES_PER_SIDE).astype(int)) for size in grid.shape_yx
-    )
-    cut = (Window(int(row), int(col), _SAMPLE_PX, _SAMPLE_PX).intersect(grid.window) for row in rows for col in cols)
-    return [window for window in cut if window is not None]
-
-
-# The usual ways to store reflectance, by the largest median that each leaves plausible: percent, eight-bit
-# brightness, ten-thousandths, and the full range of sixteen bits.
-_USUAL_SCALES = ((100, "0.01"), (255, "0.00392157 (1/255)"), (10_000, "0.0001"), (np.inf, "0.0000152590 (1/65535)"))
-
-
-def _unscaled(band: BandSource, median: float) -> Problem:
-    likely = next(scale for limit, scale in _USUAL_SCALES if median <= limit)
-    scaled = f" after its scale of {band.scale:g}" if band.scale != 1 else ""
-    what = f"the median of {band.role!r} is {median:.4g}{scaled}, which is no reflectance (0 to 1)"
-    fix = f"set 'scale' under [scene] or in scene.bands.{band.role}; {likely} times the present one is likely"
-    return Problem(what, band.path, fix, "warning")

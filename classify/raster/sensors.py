@@ -80,6 +80,9 @@ class Sensor(_Preset):
     mask: SensorMask | None = None
 
 
+NO_SENSOR = Sensor(title="", source="")
+
+
 def load_sensor(name: str) -> Sensor:
     """A preset by name. Raises SettingsError listing the valid names, or saying what is wrong in the preset's file."""
     data = load_preset("sensors", name)
@@ -94,29 +97,28 @@ def load_sensor(name: str) -> Sensor:
         ) from error
 
 
-def mask_fields(settings: MaskSettings, sensor: Sensor | None) -> tuple[MaskField, ...]:
+def mask_fields(settings: MaskSettings, preset: SensorMask | None) -> tuple[MaskField, ...]:
     """What a mask rejects: the codes, meanings or bits of the settings, else the preset's usual ones.
 
     Raises SettingsError for a meaning that the preset does not know.
     """
     if settings.bits:
         return tuple(bit(number) for number in settings.bits.values())
-    preset = sensor.mask if sensor and sensor.mask else SensorMask()
+    preset = preset or SensorMask()
     wanted: tuple[int | str, ...] = tuple(settings.reject) or preset.reject
     if not wanted:
         raise SettingsError(
-            "the sensor's preset does not say what its mask rejects", where="scene.mask",
-            fix="add reject = [codes] or bits = { name = number }",
-        )  # fmt: skip
+            "it is not said what the mask rejects, and no sensor's preset says it either",
+            fix="add reject = [codes] or bits = { name = number }, or name the sensor",
+        )
     fields = [codes(item for item in wanted if isinstance(item, int))]
     problems = []
     for meaning in (item for item in wanted if isinstance(item, str)):
         field = preset.field(meaning)
         if field is None:
-            known = ", ".join(preset.meanings) or "none"
-            problems.append(
-                Problem(f"the sensor's mask has no meaning {meaning!r}", "scene.mask.reject", f"it knows: {known}")
-            )
+            known = ", ".join(preset.meanings)
+            fix = f"it knows: {known}" if known else "name a sensor whose preset knows its meanings, or give codes"
+            problems.append(Problem(f"the sensor's mask has no meaning {meaning!r}", "", fix))
         else:
             fields.append(field)
     if problems:
@@ -128,4 +130,4 @@ def _plain(text: str) -> str:
     return " ".join(text.replace("_", " ").replace("-", " ").casefold().split())
 
 
-__all__ = ["BitField", "Sensor", "SensorBand", "SensorMask", "load_sensor", "mask_fields"]
+__all__ = ["NO_SENSOR", "BitField", "Sensor", "SensorBand", "SensorMask", "load_sensor", "mask_fields"]

@@ -24,7 +24,6 @@ REMOTE_OPTIONS = {
     "GDAL_HTTP_MAX_RETRY": "2",
     "GDAL_HTTP_RETRY_DELAY": "1",
     "GDAL_DISABLE_READDIR_ON_OPEN": "EMPTY_DIR",
-    "CPL_VSIL_CURL_ALLOWED_EXTENSIONS": ".tif,.tiff,.jp2,.vrt,.img,.hdr,.dat,.bsq,.bil,.bip",
 }
 
 
@@ -35,7 +34,8 @@ class BandSource:
     role: its name in formulas. path, band: where it is stored, bands counted from 1. scale, offset: reflectance =
     stored * scale + offset. nodata: stored value that is no data, NaN for not-a-number, None if there is none.
     wavelength_nm: centre wavelength, if known. native: the grid it is stored on. flagged: the file carries its own
-    mask (an alpha band or a mask band), which is honoured.
+    mask (an alpha band or a mask band), which is honoured. date: the name of its date, whose mask holds for it, or None
+    for an ancillary raster, which no mask rejects. categorical: values are codes, not quantities.
     """
 
     role: str
@@ -47,11 +47,16 @@ class BandSource:
     wavelength_nm: float | None
     native: Grid
     flagged: bool = False
+    date: str | None = ""
+    categorical: bool = False
 
 
 @dataclass(frozen=True, slots=True)
 class RasterFacts:
-    """What a raster file says of itself. Sequences are by band; scale 1 and offset 0 mean that it says nothing."""
+    """What a raster file says of itself. Sequences are by band; scale 1 and offset 0 mean that it says nothing.
+
+    wavelengths_nm: centre wavelengths. good: False for bands that an imaging spectrometer's bad-band list leaves out.
+    """
 
     path: str
     native: Grid
@@ -62,7 +67,9 @@ class RasterFacts:
     offsets: tuple[float, ...]
     flagged: tuple[bool, ...]
     descriptions: tuple[str, ...]
-    tags: tuple[dict[str, str], ...]
+    colours: tuple[str, ...]
+    wavelengths_nm: tuple[float | None, ...]
+    good: tuple[bool, ...]
 
 
 def is_remote(path: str) -> bool:
@@ -128,8 +135,37 @@ def describe(path: str) -> RasterFacts:
             offsets=tuple(dataset.offsets),
             flagged=tuple(bool(outside & set(flags)) for flags in dataset.mask_flag_enums),
             descriptions=tuple(text or "" for text in dataset.descriptions),
-            tags=tuple(dataset.tags(index) for index in dataset.indexes),
+            colours=tuple(colour.name for colour in dataset.colorinterp),
+            wavelengths_nm=tuple(_wavelength_nm(dataset, index) for index in dataset.indexes),
+            good=_good_bands(dataset),
         )
+
+
+def _wavelength_nm(dataset: rasterio.DatasetReader, band: int) -> float | None:
+    """Centre wavelength from the band's metadata: GDAL's own item in micrometres, else the header's with its unit."""
+    own, header = dataset.tags(band, ns="IMAGERY"), dataset.tags(band)
+    text, unit = own.get("CENTRAL_WAVELENGTH_UM"), "micrometers"
+    if text is None:
+        text, unit = (
+            header.get("wavelength"),
+            header.get("wavelength_units", dataset.tags().get("wavelength_units", "")),
+        )
+    try:
+        value = float(text) if text is not None else 0.0
+    except ValueError:
+        return None
+    if not 0 < value < 1e6:
+        return None
+    # Without a unit: optical wavelengths are below 30 in micrometres and above 200 in nanometres.
+    in_micrometres = unit.casefold().startswith(("micro", "um", "µm")) or (not unit and value < 30)
+    return round(value * 1000, 3) if in_micrometres else value
+
+
+def _good_bands(dataset: rasterio.DatasetReader) -> tuple[bool, ...]:
+    """The header's bad-band list ("bbl", 1 good and 0 bad), if there is one of the right length; else all are good."""
+    listed = dataset.tags(ns="ENVI").get("bbl", "").strip(" {}")
+    flags = [item.strip() not in ("0", "0.0", "0.00") for item in listed.split(",")] if listed else []
+    return tuple(flags) if len(flags) == dataset.count else (True,) * dataset.count
 
 
 def to_reflectance(stored: NDArray[Any], source: BandSource) -> NDArray[np.float32]:
