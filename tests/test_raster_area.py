@@ -39,7 +39,8 @@ GRIDS = {
     "degrees, 1 km, other ellipsoid": Grid(CRS.from_epsg(4267), Affine(0.01, 0, -110, 0, -0.01, 65), 400, 300),
     "feet, state plane": Grid(CRS.from_epsg(2263), Affine(3, 0, 950_000, 0, -3, 200_000), 500, 500),
     "rotated drone grid": Grid(
-        CRS.from_epsg(32734), Affine.translation(641200, 6471800) @ Affine.rotation(33) @ Affine.scale(0.1, -0.1), 300, 300
+        CRS.from_epsg(32734), Affine.translation(641200, 6471800) @ Affine.rotation(33) @ Affine.scale(0.1, -0.1),
+        300, 300,
     ),
     "equal area": Grid(CRS.from_epsg(3035), Affine(100, 0, 4_000_000, 0, -100, 3_000_000), 500, 500),
     "grads from Paris": Grid(CRS.from_epsg(4807), Affine(0.001, 0, 1.0, 0, -0.001, 52.0), 200, 200),

@@ -152,7 +152,8 @@ STACK = {
     "other_zone": ("EPSG:32735", Affine(15, 0, 73_400, 0, -15, 6_464_100), (130, 140)),
     "degrees": ("EPSG:4326", Affine(0.00015, 0, 22.4925, 0, -0.00015, -31.8804), (102, 134)),
     "rotated": (
-        UTM, Affine.translation(ORIGIN[0] - 500, ORIGIN[1] - 100) @ Affine.rotation(25) @ Affine.scale(12, -12), (230, 240)
+        UTM, Affine.translation(ORIGIN[0] - 500, ORIGIN[1] - 100) @ Affine.rotation(25) @ Affine.scale(12, -12),
+        (230, 240),
     ),
     "south_up": (UTM, Affine(10, 0, ORIGIN[0], 0, 10, ORIGIN[1] - 1600), (160, 180)),
 }  # fmt: skip

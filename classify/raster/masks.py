@@ -62,8 +62,8 @@ class Disc:
     @classmethod
     def of_radius(cls, radius_m: float, pixel_m_yx: tuple[float, float]) -> Disc:
         """The disc of a radius in metres on pixels of the given height and width in metres."""
-        # Slack of two in a thousand: on the ground a UTM pixel of "10 m" measures up to 10.004 m, and a radius of 30 m is
-        # meant to reach three of them.
+        # Slack of two in a thousand: on the ground a UTM pixel of "10 m" measures up to 10.004 m, and a radius of 30 m
+        # is meant to reach three of them.
         radius_m *= 1.002
         rows = int(radius_m / pixel_m_yx[0])
         reach = (math.sqrt(max(radius_m**2 - (row * pixel_m_yx[0]) ** 2, 0.0)) for row in range(rows + 1))
