@@ -356,7 +356,7 @@ class ModelSettings(_Section):
         default=20_000, ge=100, description="a support vector machine is fitted on at most so many, drawn by the seed"
     )
     compare: list[ModelKind] = Field(
-        default_factory=list, description="further kinds to try; the simplest within one standard error of the best wins"
+        default_factory=list, description="more kinds to try; the simplest within one standard error of the best wins"
     )
     tune: bool = Field(default=False, description="search for good settings, with polygons kept whole")
     tuning_draws: int = Field(default=20, ge=1, le=1000, description="settings tried per kind, the default among them")
