@@ -1,0 +1,143 @@
+"""Three finished projects for tests of the report, written without running the pipeline.
+
+The first carries the worked example of Olofsson et al. 2014 (Remote Sensing of Environment 148, section 5; counts and
+mapped areas from memory), the second 25 classes with long and hostile names, the third no reference sample.
+"""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import numpy as np
+import pandas as pd
+from affine import Affine
+from rasterio.crs import CRS
+
+from classify.assessment import AssessmentOptions, assess_matrix, write_assessment
+from classify.files import write_json
+from classify.mapping.classify_scene import CONFIDENCE_LAYER, cover_layer
+from classify.mapping.writer import cog_writer
+from classify.raster.grid import Grid
+from classify.settings import Project, load_project
+
+CHANGE = ("Deforestation", "Forest gain", "Stable forest", "Stable non-forest")
+CHANGE_PIXELS = (200_000, 150_000, 3_200_000, 6_450_000)
+CHANGE_COUNTS = ((66, 0, 5, 4), (0, 55, 8, 12), (1, 0, 153, 11), (2, 1, 9, 313))
+HOSTILE = (
+    "<script>alert(1)</script>", "=1+1", "@SUM(A1)", "Wald & Wiese", '"quoted" \'name\'', "مراعٍ مروية",
+    "Forêt mésophile à canopée fermée, régénérée depuis plus de vingt ans", "{braces} *stars* #set $x$ _under_",
+    "草地", "Tree 🌳 savanna", "-2+3", "Überschwemmungsfläche",
+)  # fmt: skip
+
+
+def change_project(folder: Path) -> Project:
+    """The published worked example."""
+    return _finish(folder, "Forest change, Upper Tansy Valley", CHANGE, CHANGE_PIXELS, CHANGE_COUNTS)
+
+
+def many_classes_project(folder: Path) -> Project:
+    """25 classes, hostile and long names, a matrix with a few confusions."""
+    names = (*HOSTILE, *(f"Class with a rather long descriptive name, number {i}" for i in range(len(HOSTILE), 25)))
+    random = np.random.default_rng(5)
+    pixels = tuple(int(value) for value in random.integers(2_000, 400_000, 25))
+    counts = np.diag(random.integers(18, 50, 25)) + random.binomial(3, 0.08, (25, 25))
+    return _finish(folder, "Ground cover in twenty-five classes <b>&", names, pixels, counts.tolist())
+
+
+def screening_project(folder: Path) -> Project:
+    """Trained and mapped, without a reference sample."""
+    return _finish(folder, "Ground cover, Sorrel Basin", ("Pasture", "Bare soil", "Water"), (90_000, 55_000, 7_000), None)
+
+
+def _finish(folder, title, names, pixels, counts) -> Project:
+    folder.mkdir(parents=True, exist_ok=True)
+    (folder / "project.toml").write_text(_toml(title, names, counts is not None), encoding="utf-8")
+    project, outputs = load_project(folder), folder / "outputs"
+    _map(outputs / "map", project, pixels)
+    write_json(outputs / "model" / "model.json", _card(project))
+    write_json(outputs / "run.json", _record())
+    if counts is not None:
+        areas = [count * 0.09 for count in pixels]
+        matrix = pd.DataFrame([[n, *row] for n, row in zip(names, counts, strict=True)], columns=["map", *names])
+        strata = pd.DataFrame({"stratum": names, "area": areas})
+        options = AssessmentOptions(
+            area_unit="ha", mapped_area=dict(zip(names, areas, strict=True)), finite_population=False, interval="normal"
+        )
+        write_assessment(assess_matrix(matrix, strata, options), outputs / "assessment")
+    return project
+
+
+def _toml(title: str, names, with_reference: bool) -> str:
+    classes = "\n".join(f"[[class]]\ncode = {i}\nname = {_quoted(n)}" for i, n in enumerate(names, start=1))
+    reference = '[reference]\npoints = "reference.gpkg"\nlabel = "observed"' if with_reference else ""
+    return f"""
+[project]
+title = {_quoted(title)}
+client = "Sorrel Basin Water Board"
+author = "Land survey desk (invented)"
+seed = 7
+[scene.bands]
+red = "red.tif"
+nir = "nir.tif"
+{classes}
+[training]
+polygons = "training.gpkg"
+label = "cover"
+{reference}
+"""
+
+
+def _quoted(text: str) -> str:
+    return '"' + text.replace("\\", "\\\\").replace('"', '\\"') + '"'
+
+
+def _map(folder: Path, project: Project, pixels) -> None:
+    """A map of patches whose class shares follow `pixels`, its confidence, and the areas of the whole."""
+    height, width = 300, 420
+    rows, cols = np.mgrid[:height, :width]
+    field = np.sin(rows / 23) + np.cos(cols / 31 + rows / 57) + 0.4 * np.sin(cols / 7) * np.cos(rows / 9)
+    edges = np.quantile(field, np.cumsum(pixels) / np.sum(pixels))
+    codes = np.minimum(1 + np.searchsorted(edges, field), len(pixels)).astype(np.uint8)
+    codes[:30, :50] = 0
+    percent = np.clip(40 + 60 * np.abs(np.sin(field * 3)), 0, 100).astype(np.uint8)
+    percent[codes == 0] = 255
+    grid = Grid(CRS.from_epsg(32633), Affine(30, 0, 500_000, 0, -30, 4_200_000), height, width)
+    for name, values, layer in (
+        ("cover.tif", codes, cover_layer(project.classes)), ("confidence.tif", percent, CONFIDENCE_LAYER)
+    ):  # fmt: skip
+        with cog_writer(folder / name, grid, layer) as writer:
+            writer.write(grid.window, values)
+    table = pd.DataFrame({
+        "code": [c.code for c in project.classes], "name": [c.name for c in project.classes], "pixels": pixels,
+        "area_m2": [900.0 * count for count in pixels], "area": [0.09 * count for count in pixels], "unit": "ha",
+    })  # fmt: skip
+    table.to_csv(folder / "areas.csv", index=False)
+
+
+def _card(project: Project) -> dict:
+    k = len(project.classes)
+    counts = (np.diag(np.arange(k) * 7 + 90) + 2).tolist()
+    right = [counts[i][i] for i in range(k)]
+    return {
+        "schema": 1, "kind": "random forest", "features": ["red", "nir", "ndvi"],
+        "classes": [{"code": c.code, "name": c.name, "colour": c.colour} for c in project.classes],
+        "training": {"polygons": 4 * k, "pixels": 200 * k}, "settings": {"trees": 300},
+        "calibration": {"temperature": 1.2, "error": 0.021},
+        "warnings": ["class 'Water' has few polygons"],
+        "screening": {
+            "evidence": "held-out training polygons", "screening_accuracy": 0.934, "folds": 5, "repeats": 3,
+            "kept_whole": "polygons", "held_out_pixels": int(np.sum(counts)), "leaky_split_accuracy": 0.981,
+            "class_codes": [c.code for c in project.classes], "counts": counts, "unscreened_codes": [], "notes": [],
+            "share_found": [r / sum(row) for r, row in zip(right, counts, strict=True)],
+            "share_right": [r / sum(col) for r, col in zip(right, zip(*counts, strict=True), strict=True)],
+        },
+    }  # fmt: skip
+
+
+def _record() -> dict:
+    stage = {"finished": "2026-06-11T09:30:00+00:00", "seconds": 12.5, "warnings": []}
+    return {
+        "landassay": "0.1.0", "seed": 7, "system": "Linux", "versions": {"python": "3.12.4", "numpy": "2.1.0"},
+        "inputs": {"red.tif": {"bytes": 1234567, "sha256": "ab" * 32}, "/vsicurl/far.tif": {"sha256": None}},
+        "stages": {"train": stage, "classify": {**stage, "warnings": ["band red has 3 % no data"]}, "assess": stage},
+    }  # fmt: skip
