@@ -1,7 +1,7 @@
 """The kinds of model behind one small interface: make an unfitted estimator, score pixels with a fitted one.
 
 Scores are float64 (n, k) in the order of the estimator's classes; the label is always the class of the highest score,
-the first of equals. Compiled inference for the same estimators plugs in here: see `scorer`.
+the first of equals. `compiled` has a faster form of the same scores for whole scenes.
 """
 
 from __future__ import annotations

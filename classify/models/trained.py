@@ -11,6 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from classify.features.recipe import Recipe
+from classify.models.compiled import Compiled, compile_estimator
 from classify.models.kinds import Scorer, kind_of, scorer, to_probabilities
 
 # Rows scored at a time: bounds the memory of float64 scores whatever the caller hands over.
@@ -37,12 +38,27 @@ class TrainedModel:
         return tuple(names[int(code)] for code in self.class_codes)
 
     @cached_property
+    def _compiled(self) -> Compiled | None:
+        return compile_estimator(self.estimator)
+
+    @cached_property
     def _scorer(self) -> Scorer:
-        return scorer(self.estimator)
+        return self._compiled.scores if self._compiled else scorer(self.estimator)
 
     def predict(self, features: NDArray[np.float32]) -> NDArray[np.uint8]:
-        """Class code of each pixel, uint8 (n,), from features (n, f); 0 where a feature is not finite."""
-        return self.predict_both(features)[0]
+        """Class code of each pixel, uint8 (n,), from features (n, f); 0 where a feature is not finite.
+
+        The same labels as `predict_both`, sooner.
+        """
+        if self._compiled is None:
+            return self.predict_both(features)[0]
+        codes = np.zeros(len(features), dtype=np.uint8)
+        for start in range(0, len(features), _ROWS):
+            part = features[start : start + _ROWS]
+            valid = np.flatnonzero(np.isfinite(part).all(axis=1))
+            if len(valid):
+                codes[start + valid] = self.class_codes[self._compiled.predict_index(part[valid])]
+        return codes
 
     def probabilities(self, features: NDArray[np.float32]) -> NDArray[np.float32]:
         """Probabilities, float32 (n, k) in the order of `class_codes`; 0 where a feature is not finite.
