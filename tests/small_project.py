@@ -90,8 +90,8 @@ def make_small_project(folder: Path, *, project: str = PROJECT) -> Path:
 
 def pixel_box(row: int, col: int, height: int, width: int):
     """A rectangle of whole pixels as a shape."""
-    x0, y0 = TRANSFORM * (col, row)
-    x1, y1 = TRANSFORM * (col + width, row + height)
+    x0, y0 = TRANSFORM @ (col, row)
+    x1, y1 = TRANSFORM @ (col + width, row + height)
     return box(x0, y1, x1, y0)
 
 
@@ -106,7 +106,7 @@ def _training(truth: np.ndarray) -> gpd.GeoDataFrame:
 def _reference(truth: np.ndarray, random: np.random.Generator) -> gpd.GeoDataFrame:
     chosen = random.choice(HEIGHT * WIDTH, 150, replace=False)
     rows, cols = np.unravel_index(chosen, truth.shape)
-    x, y = TRANSFORM * (cols + 0.5, rows + 0.5)
+    x, y = TRANSFORM @ (cols + 0.5, rows + 0.5)
     labels = truth[rows, cols].copy()
     wrong = random.random(len(labels)) < 0.04
     labels[wrong] = (labels[wrong] + 1) % 3

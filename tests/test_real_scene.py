@@ -75,8 +75,8 @@ def mapped(request, tmp_path_factory):
     rows, shapes, trained = [], [], np.zeros(bands.shape[1:], dtype=bool)
     for name, rectangles in PLACES.items():
         for left, top, right, bottom in rectangles:
-            x0, y0 = transform * (left, top)
-            x1, y1 = transform * (right, bottom)
+            x0, y0 = transform @ (left, top)
+            x1, y1 = transform @ (right, bottom)
             rows.append(name)
             shapes.append(box(x0, y1, x1, y0))
             trained[top:bottom, left:right] = True

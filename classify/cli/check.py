@@ -22,7 +22,7 @@ def command(call: Call) -> None:
     facts = result.to_json()
     call.show(facts, _text(facts))
     if not call.as_json:
-        for problem in result.problems:
+        for problem in result.errors if call.quiet else result.problems:
             click.echo(f"{problem.severity}: {problem}", err=True)
     if result.errors:
         sys.exit(1)
