@@ -14,11 +14,23 @@ __version__ = "0.1.0"
 _PUBLIC = {
     "assess": "classify.assessment",
     "Assessment": "classify.assessment",
+    "AssessmentOptions": "classify.assessment",
+    "Comparison": "classify.assessment",
+    "compare": "classify.assessment",
     "LandassayError": "classify.errors",
     "load_project": "classify.settings",
 }
 
-__all__ = ["Assessment", "LandassayError", "__version__", "assess", "load_project"]
+__all__ = [
+    "Assessment",
+    "AssessmentOptions",
+    "Comparison",
+    "LandassayError",
+    "__version__",
+    "assess",
+    "compare",
+    "load_project",
+]
 
 
 def __getattr__(name: str) -> Any:  # noqa: ANN401 - the type is that of whichever object is asked for

@@ -257,4 +257,4 @@ def _fractions(sample: ReferenceSample, group: Ints, group_size: Ints) -> Floats
     total = np.array([np.inf if not size else float(size) for size in known])
     if sample.cluster is not None and not group.any():
         total[0] = total.sum()
-    return np.minimum(group_size / total, 1.0)
+    return np.asarray(np.minimum(group_size / total, 1.0))

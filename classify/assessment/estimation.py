@@ -13,7 +13,7 @@ from classify.assessment.agreement import area_matrix, disagreement, kappa, kapp
 from classify.assessment.estimate import Floats, Linearised, Ratio, Tally, linearise, tally
 from classify.assessment.evidence import EVIDENCE
 from classify.assessment.findings import findings, region_findings
-from classify.assessment.intervals import Bounds, Estimate, proportion, unbounded
+from classify.assessment.intervals import Bounds, Estimate, proportion, signed
 from classify.assessment.options import AssessmentOptions
 from classify.assessment.result import (
     AreaEstimate,
@@ -99,13 +99,13 @@ class Estimator:
         def values(shares: Floats) -> Floats:
             return kappa_values(area_matrix(shares, self.t, len(proportions)))[:, None]
 
-        return self.unbounded([kappa(self.t, proportions)], values)[0]
+        return self.signed([kappa(self.t, proportions)], values)[0]
 
-    def unbounded(self, found: Sequence[Linearised], values: bootstrap.Statistic) -> list[Estimate]:
-        """Estimates of quantities that are no proportions. values: the same from the shares of replicates."""
+    def signed(self, found: Sequence[Linearised], values: bootstrap.Statistic) -> list[Estimate]:
+        """Estimates of quantities in -1..1. values: the same from the shares of replicates."""
         level, method = self.options.confidence_level, self.options.interval
         limits = self._limits(values, len(found))
-        return [self._shown(unbounded(f, level, method, b)) for f, b in zip(found, limits, strict=True)]
+        return [self._shown(signed(f, level, method, b)) for f, b in zip(found, limits, strict=True)]
 
     def _limits(self, values: bootstrap.Statistic, n: int) -> Sequence[Bounds | None]:
         o = self.options

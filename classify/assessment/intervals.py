@@ -73,15 +73,12 @@ def proportion(found: Linearised, level: float, method: IntervalName, bounds: Bo
     if chosen == "wilson":
         lower, upper = _wilson(value, found, level)
         return Estimate(value, found.standard_error, lower, upper, "wilson")
-    half = _quantile(found, level, chosen) * found.standard_error
-    lower, upper = value - half, value + half
-    name = f"{chosen}, clipped to 0..1" if lower < 0 or upper > 1 else chosen
-    return Estimate(value, found.standard_error, max(lower, 0.0), min(upper, 1.0), name)
+    return _symmetric(value, found, level, chosen, (0, 1))
 
 
-def unbounded(found: Linearised, level: float, method: IntervalName, bounds: Bounds | None = None) -> Estimate:
-    """An estimate of a quantity that is no proportion (kappa, a difference). Wilson does not apply to it: Student's t
-    stands in where degrees of freedom are few."""
+def signed(found: Linearised, level: float, method: IntervalName, bounds: Bounds | None = None) -> Estimate:
+    """An estimate of a quantity in -1..1 (kappa, a difference of accuracies) with its interval. Wilson does not apply
+    to it: Student's t stands in where degrees of freedom are few. bounds: from the bootstrap."""
     if math.isnan(found.value):
         return Estimate(None)
     if math.isnan(found.standard_error):
@@ -89,9 +86,7 @@ def unbounded(found: Linearised, level: float, method: IntervalName, bounds: Bou
     if bounds is not None:
         return _bootstrapped(found.value, found.standard_error, bounds)
     student = method == "student" or (method in ("automatic", "wilson") and found.freedom < _FEW)
-    chosen: IntervalName = "student" if student else "normal"
-    half = _quantile(found, level, chosen) * found.standard_error
-    return Estimate(found.value, found.standard_error, found.value - half, found.value + half, chosen)
+    return _symmetric(found.value, found, level, "student" if student else "normal", (-1, 1))
 
 
 # Below so many degrees of freedom the normal quantile is more than 2 % short of Student's at 95 %.
@@ -106,6 +101,15 @@ def chosen_interval(found: Linearised) -> IntervalName:
     """
     rarer = min(found.value, 1 - found.value) * found.effective_size
     return "normal" if rarer >= 10 and found.freedom >= _FEW else "wilson"
+
+
+def _symmetric(
+    value: float, found: Linearised, level: float, method: IntervalName, limits: tuple[int, int]
+) -> Estimate:
+    half, (lowest, highest) = _quantile(found, level, method) * found.standard_error, limits
+    lower, upper = value - half, value + half
+    name = f"{method}, clipped to {lowest}..{highest}" if lower < lowest or upper > highest else method
+    return Estimate(value, found.standard_error, max(lower, float(lowest)), min(upper, float(highest)), name)
 
 
 def _bootstrapped(value: float, standard_error: float, bounds: Bounds) -> Estimate:

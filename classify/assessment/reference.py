@@ -18,10 +18,11 @@ from numpy.typing import NDArray
 from rasterio.errors import RasterioError
 from rasterio.windows import Window as RasterWindow
 
-from classify.assessment.assess import write_assessment
 from classify.assessment.columns import Labels, faults, plain_text
+from classify.assessment.compare import Comparison, compare_sample, write_comparison
 from classify.assessment.design_file import RecordedDesign, read_design
 from classify.assessment.estimation import estimate_sample
+from classify.assessment.frames import write_assessment
 from classify.assessment.inputs import sample_from_points
 from classify.assessment.options import AssessmentOptions, TableName
 from classify.assessment.result import Assessment
@@ -46,6 +47,17 @@ def assess_project(project: Project, outputs: Path) -> Assessment:
     assessment = estimate_sample(sample, project_options(project))
     write_assessment(assessment, outputs / "assessment")
     return assessment
+
+
+def compare_project(project: Project, outputs: Path, other: Path) -> Comparison:
+    """Compare the project's map (first) with another map of the same classes; writes outputs/comparison/.
+
+    Raises LandassayError.
+    """
+    sample = read_reference(project, outputs / "map" / "cover.tif", outputs, other=other)
+    comparison = compare_sample(sample, project_options(project), names=("the project's map", other.name))
+    write_comparison(comparison, outputs / "comparison")
+    return comparison
 
 
 def read_reference(project: Project, cover: Path, outputs: Path, *, other: Path | None = None) -> ReferenceSample:

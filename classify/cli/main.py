@@ -16,6 +16,7 @@ COMMANDS = {
     "train": ("classify.cli.train", "Fit the model and screen it on held-out polygons."),
     "classify": ("classify.cli.classify", "Map the scene with the trained model."),
     "assess": ("classify.cli.assess", "Estimate accuracy and areas from a labelled reference sample."),
+    "compare": ("classify.cli.compare", "Compare two maps on one reference sample."),
     "report": ("classify.cli.report", "Write the report."),
     "run": ("classify.cli.run", "Run every stage that is stale, in order."),
     "status": ("classify.cli.status", "Say which stages are done, stale or missing."),
