@@ -155,7 +155,8 @@ def _train(job: Job) -> StageResult:
         "polygons": len(training.table), "pixels": len(training.codes), "features": list(recipe.names),
         "screening": model.card["screening"],
     }  # fmt: skip
-    return StageResult(summary, (*scene.warnings, *training.problems))
+    said = (Problem(text, severity="warning") for text in model.card["warnings"])
+    return StageResult(summary, (*scene.warnings, *training.problems, *said))
 
 
 def _classify(job: Job) -> StageResult:
@@ -210,7 +211,7 @@ def _with_companions(project: Project, written: str) -> list[str]:
 
 STAGES: tuple[Stage, ...] = (
     Stage(
-        "train", (), ("project", "scene", "classes", "training", "features", "model"),
+        "train", (), ("project.seed", "scene", "classes", "training", "features", "model"),
         _training_inputs,
         ("training/pixels.parquet", "model/model.skops", "model/model.json"), _train,
     ),
@@ -259,12 +260,18 @@ def _snapshot(project: Project) -> _Snapshot:
     for stage in STAGES:
         parts = {
             "version": __version__,
-            "settings": {name: settings[name] for name in stage.sections},
+            "settings": {name: _section(settings, name) for name in stage.sections},
             "inputs": {path: inputs[path]["sha256"] for path in stage.inputs(project) if path in inputs},
             "earlier": {name: fingerprints[name] for name in stage.after},
         }
         fingerprints[stage.name] = hashlib.sha256(json.dumps(parts, sort_keys=True).encode()).hexdigest()
     return _Snapshot(inputs, fingerprints)
+
+
+def _section(settings: Mapping[str, Any], dotted: str) -> Any:  # noqa: ANN401 - any setting
+    for key in dotted.split("."):
+        settings = settings[key]
+    return settings
 
 
 def _input(project: Project, written: str, known: Mapping[str, Any]) -> dict[str, Any]:
