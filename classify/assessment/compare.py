@@ -96,9 +96,12 @@ class Comparison:
             self.overall_accuracy.first, self.overall_accuracy.second, self.overall_accuracy.difference))  # fmt: skip
         assert first is not None and second is not None and difference is not None, "both maps have labelled points"
         where = "of the mapped area" if EVIDENCE[self.evidence_name].has_intervals else "of the sampled places"
-        text = f"{self.second[:1].upper()}{self.second[1:]} is right on {second:.1%} {where} and {self.first} on
-        {first:.1%}: " text += "no difference" if difference == 0 else f"{100 * abs(difference):.1f} percentage points "
-        text += "" if difference == 0 else "more" if difference > 0 else "less"
+        text = f"{self.second[:1].upper()}{self.second[1:]} is right on {second:.1%} {where} "
+        text += f"and {self.first} on {first:.1%}: "
+        if difference == 0:
+            text += "no difference"
+        else:
+            text += f"{100 * abs(difference):.1f} percentage points {'more' if difference > 0 else 'less'}"
         low, high = self.overall_accuracy.difference.lower, self.overall_accuracy.difference.upper
         if low is None or high is None:
             return f"{text}. What chance in the sample contributes to that is not known."
