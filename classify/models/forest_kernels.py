@@ -73,10 +73,8 @@ def _transpose(bits, pixels, count, lanes):
         pixel = pixels[slot]
         for j in range(features):
             value = bits[pixel, j]
-            if value < 0:
-                # Minus zero becomes zero; other negative numbers are turned round.
-                value = np.int32(0) if value == np.int32(-2147483648) else value ^ np.int32(0x7FFFFFFF)
-            lanes[base + j * LANES] = value
+            # Negative numbers are turned round; minus zero becomes -1, which no threshold is, and so compares as zero.
+            lanes[base + j * LANES] = value ^ np.int32(0x7FFFFFFF) if value < 0 else value
 
 
 @_jit
