@@ -4,11 +4,12 @@ from __future__ import annotations
 
 from pathlib import Path
 
-from classify.files import write_text
+from classify.files import write_bytes, write_text
 from classify.report.content import write_document
 from classify.report.facts import ReportFacts
 from classify.report.gather import gather_facts
 from classify.report.html import render_html
+from classify.report.pdf import render_pdf
 
 __all__ = ["ReportFacts", "gather_facts", "write_report"]
 
@@ -18,4 +19,6 @@ def write_report(facts: ReportFacts, folder: Path) -> list[Path]:
     document = write_document(facts)
     page = folder / "report.html"
     write_text(page, render_html(document, facts))
-    return [page]
+    pdf = render_pdf(document, facts)
+    write_bytes(folder / "report.pdf", pdf.data)
+    return [page, folder / "report.pdf"]

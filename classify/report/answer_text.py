@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from typing import Literal
 
-from classify.report.document import Block, Column, Paragraph, Section, Table
+from classify.report.document import Block, Column, EvidenceKind, Paragraph, Section, Table
 from classify.report.facts import AccuracyFacts, ReportFacts
 from classify.report.figures import area_decimals
 from classify.report.messages import Messages, Rich
@@ -27,7 +27,7 @@ def answer_section(facts: ReportFacts, words: Messages) -> Section:
     missing = [words.text(f"stage.{stage}") for stage in facts.missing]
     if missing:
         blocks.append(Paragraph(words.rich("answer.missing", stages=", ".join(missing)), "caution"))
-    evidence = "training" if kind == "screening" else "sample"
+    evidence: EvidenceKind = "training" if kind == "screening" else "sample"
     return Section("answer", words.text("answer.title"), tuple(blocks), evidence, intro=True)
 
 

@@ -23,7 +23,7 @@ _ROW = 30.0
 
 def map_drawing(fact: MapFact, layer: Layer, title: str, style: NumberStyle, width: float = _WIDTH) -> Drawing:
     """A layer with frame, coordinates, scale bar and north arrow."""
-    left, top, bottom = 46.0, 8.0, 58.0
+    left, top, bottom = 30.0, 8.0, 58.0
     across = width - left - 10
     # Pictures are set by ground size, so that a map in degrees is not stretched.
     down = across * (fact.picture_yx[0] * fact.step_m[0]) / (fact.picture_yx[1] * fact.step_m[1])
@@ -32,15 +32,20 @@ def map_drawing(fact: MapFact, layer: Layer, title: str, style: NumberStyle, wid
     drawing = Drawing(left + across + 10, top + down + bottom, title, 11)
     drawing.add("image", href=data_uri(layer), x=left, y=top, width=round(across, 2), height=round(down, 2),
                 preserveAspectRatio="none", style="image-rendering:pixelated")  # fmt: skip
-    drawing.rect(left, top, across, down, "none", stroke="#17242b", stroke_width=0.8)
+    drawing.rect(left, top, across, down, "none", "ink")
     for share, label in fact.x_ticks:
         x = left + share * across
         drawing.line(x, top + down, x, top + down + 5, "ink")
-        drawing.text(x, top + down + 17, label, anchor="middle", colour="soft")
+        half = 3.1 * len(label)
+        middle = min(max(x, half), drawing.width - half)
+        drawing.text(middle, top + down + 17, label, anchor="middle", colour="soft")
     for share, label in fact.y_ticks:
         y = top + share * down
         drawing.line(left - 5, y, left, y, "ink")
-        drawing.text(0, 0, label, anchor="middle", colour="soft", transform=f"translate({left - 9:.1f} {y:.1f}) rotate(-90)")
+        half = 3.1 * len(label)
+        middle = min(max(y, half), drawing.height - half)
+        turn = f"translate({left - 9:.1f} {middle:.1f}) rotate(-90)"
+        drawing.text(0, 0, label, anchor="middle", colour="soft", transform=turn)
     _scale_bar(drawing, left, top + down + 40, fact.picture_yx[1] * fact.step_m[1] / across, style)
     _north(drawing, left + across - 14, top + down + 40, fact.north_deg)
     return drawing
@@ -52,7 +57,7 @@ def _scale_bar(drawing: Drawing, x: float, y: float, m_per_px: float, style: Num
     half = half_m / m_per_px
     unit, per = ("km", 1000.0) if half_m >= 1000 else ("m", 1.0)
     drawing.rect(x, y, half, 5, "ink")
-    drawing.rect(x + half, y, half, 5, "paper", stroke="#17242b", stroke_width=0.8)
+    drawing.rect(x + half, y, half, 5, "paper", "ink")
     for i, label in enumerate((0.0, half_m / per, 2 * half_m / per)):
         text = style.number(label, 0 if label == int(label) else 1) + (f" {unit}" if i == 2 else "")
         drawing.text(x + i * half, y + 17, text, anchor="start" if i == 0 else "middle", colour="soft")
@@ -132,6 +137,10 @@ def area_drawing(
 
 
 def _area_row(drawing: Drawing, axis: Axis, c: ClassFact, estimate: Estimate, y: float, style: NumberStyle) -> None:
+    if estimate.estimate is None and c.mapped is not None:
+        drawing.rect(axis.x0, y - 6, axis.at(c.mapped) - axis.x0, 12, c.colour, "ink")
+        drawing.text(_WIDTH - _VALUES + 12, y + 4, style.rounded(c.mapped), font_size=12)
+        return
     _interval(drawing, axis, estimate, y, "accent")
     if c.mapped is not None:
         drawing.square(axis.at(c.mapped), y)
@@ -139,8 +148,6 @@ def _area_row(drawing: Drawing, axis: Axis, c: ClassFact, estimate: Estimate, y:
         drawing.dot(axis.at(estimate.estimate), y)
         text = style.with_margin(estimate.estimate, estimate.lower, estimate.upper)
         drawing.text(_WIDTH - _VALUES + 12, y + 4, text, font_size=12)
-    elif c.mapped is not None:
-        drawing.text(_WIDTH - _VALUES + 12, y + 4, style.rounded(c.mapped), font_size=12)
 
 
 def _panels(classes: Sequence[ClassFact], estimates: Sequence[Estimate], ratio: float = 8.0) -> list[list[int]]:
@@ -171,9 +178,10 @@ def _grid(
 
 
 def _class_label(drawing: Drawing, c: ClassFact, y: float) -> None:
-    drawing.rect(0, y - 6, 12, 12, c.colour, stroke="#17242b", stroke_width=0.5)
-    name = fitted(c.name, _NAME - 34)
-    drawing.text(20, y + 4.5, name, direction="ltr", unicode_bidi="plaintext")
+    drawing.rect(0, y - 6, 12, 12, c.colour, "ink")
+    lines = fitted(c.name, _NAME - 36, 12)
+    for i, line in enumerate(lines):
+        drawing.text(20, y + 4.5 + 13 * (i - (len(lines) - 1) / 2), line, font_size=12)
 
 
 def _interval(drawing: Drawing, axis: Axis, estimate: Estimate, y: float, colour: str) -> None:

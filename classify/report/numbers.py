@@ -29,9 +29,7 @@ class NumberStyle:
             return MISSING
         text = f"{round(value, decimals):,.{max(decimals, 0)}f}"
         whole, _, rest = text.partition(".")
-        # Four digits read well in one piece; a separator starts at five, as the SI brochure has it.
-        digits = whole.lstrip("-")
-        whole = whole.replace(",", "" if len(digits) <= len("9,999") else self.thousands).replace("-", "−")
+        whole = whole.replace(",", self.thousands).replace("-", "−")
         return f"{whole}{self.decimal}{rest}" if rest else whole
 
     def percent(self, share: float | None, decimals: int = 1) -> str:

@@ -78,6 +78,7 @@ def record_section(facts: ReportFacts, words: Messages) -> Section:
     if not record.inputs and not record.stages:
         return Section("record", words.text("record.title"), (Paragraph(words.rich("record.none"), "caution"),), "record")
     inputs = tuple((path, size, digest or words.text("record.remote")) for path, size, digest in record.inputs)
+    versions = ", ".join(f"{name} {number}" for name, number in record.versions.items())
     blocks: list[Block] = [
         Paragraph(words.rich("record.text")),
         Subheading(words.text("record.command")),
@@ -96,7 +97,7 @@ def record_section(facts: ReportFacts, words: Messages) -> Section:
                   for n, t, s in record.stages),
         ),
         Subheading(words.text("record.versions")),
-        Paragraph(plain(", ".join(f"{name} {number}" for name, number in record.versions.items()) + f" · {record.system}"), "note"),
+        Paragraph(plain(f"{versions} · {record.system}"), "note"),
         Subheading(words.text("record.settings")),
         Code("\n".join(_settings(record.settings))),
     ]  # fmt: skip

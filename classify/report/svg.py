@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import textwrap
 from dataclasses import dataclass, field
 from html import escape
 
@@ -24,15 +25,22 @@ class Drawing:
         """Add an element; underscores in attribute names become hyphens. `content` is escaped."""
         self._parts.append(element(tag, None if content is None else escape(content), **attributes))
 
-    def line(self, x1: float, y1: float, x2: float, y2: float, colour: str = "line", width: float = 1) -> None:
+    def line(  # noqa: PLR0917 - two points
+        self, x1: float, y1: float, x2: float, y2: float, colour: str = "line", width: float = 1
+    ) -> None:
         """A straight line in a colour of the identity."""
         self.add("line", x1=_px(x1), y1=_px(y1), x2=_px(x2), y2=_px(y2), stroke=_ink(colour), stroke_width=width)
 
-    def rect(self, x: float, y: float, width: float, height: float, fill: str, **more: object) -> None:
-        """A rectangle."""
-        self.add("rect", x=_px(x), y=_px(y), width=_px(width), height=_px(height), fill=_ink(fill), **more)
+    def rect(  # noqa: PLR0917 - place, size and fill
+        self, x: float, y: float, width: float, height: float, fill: str, outline: str | None = None
+    ) -> None:
+        """A rectangle, with a hairline around it in a colour of the identity if asked for."""
+        edge = {"stroke": _ink(outline), "stroke_width": 0.7} if outline else {}
+        self.add("rect", None, x=_px(x), y=_px(y), width=_px(width), height=_px(height), fill=_ink(fill), **edge)
 
-    def text(self, x: float, y: float, content: str, *, anchor: str = "start", colour: str = "ink", **more: object) -> None:
+    def text(
+        self, x: float, y: float, content: str, *, anchor: str = "start", colour: str = "ink", **more: object
+    ) -> None:
         """One line of text with its baseline at y. Each piece finds its own direction (left or right to left)."""
         self.add("text", content, x=_px(x), y=_px(y), text_anchor=anchor, fill=_ink(colour), **more)
 
@@ -69,10 +77,17 @@ def element(tag: str, content: str | None = None, **attributes: object) -> str:
     return f"<{tag}{listed}/>" if content is None else f"<{tag}{listed}>{content}</{tag}>"
 
 
-def fitted(text: str, width_px: float, font_px: float = 13) -> str:
-    """`text` cut to about `width_px` with an ellipsis; average glyph widths, as no font is known here."""
-    room = int(width_px / (0.54 * font_px))
-    return text if len(text) <= room else text[: max(room - 1, 1)].rstrip() + "…"
+def fitted(text: str, width_px: float, font_px: float = 13, lines: int = 2) -> list[str]:
+    """`text` in at most `lines` lines of about `width_px`; what is too long loses its middle, as ends tell names apart.
+
+    Average glyph widths are taken, as no font is known here.
+    """
+    room = max(8, int(width_px / (0.53 * font_px)))
+    wrapped = textwrap.wrap(text, room) or [""]
+    if len(wrapped) > lines:
+        keep = room * lines - 4
+        wrapped = textwrap.wrap(f"{text[: keep - keep // 2].rstrip()}…{text[-(keep // 2) :].lstrip()}", room)[:lines]
+    return wrapped
 
 
 def _ink(colour: str) -> str:
