@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Hashable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
+from types import MappingProxyType
 
 import numpy as np
 from numpy.typing import NDArray
@@ -183,13 +184,16 @@ class Program:
     buffers: int
 
     @classmethod
-    def compile(cls, definitions: Mapping[str, Node], wanted: Sequence[str]) -> Program:
+    def compile(
+        cls, definitions: Mapping[str, Node], wanted: Sequence[str], replaced: Mapping[str, Node] = MappingProxyType({})
+    ) -> Program:
         """The program that computes the names `wanted`: names of `definitions`, or of layers that are passed through.
 
-        A definition may use the names of those before it. Equal parts of definitions are computed once.
+        A definition may use the names of those before it. A layer that is `replaced` is so everywhere, by a node over
+        layers as they are read. Equal parts of definitions are computed once.
         """
         values = _Values()
-        known: dict[str, int] = {}
+        known = {name: values.number(node, {}) for name, node in replaced.items()}
         for name, node in definitions.items():
             known[name] = values.number(node, known)
         results = [known[name] if name in known else values.number(Name(name), known) for name in wanted]
