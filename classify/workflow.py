@@ -21,7 +21,7 @@ from typing import Any, Literal
 from classify import __version__
 from classify.assessment import assess_project
 from classify.errors import DataError, Problem
-from classify.features import build_recipe
+from classify.features import build_recipe, fit_recipe, scene_facts
 from classify.files import read_json, remove_leftovers, sha256, write_json
 from classify.mapping.classify_scene import MapOptions, classify_scene
 from classify.models import fit_model, load_model, save_model
@@ -142,7 +142,8 @@ def _require_earlier(stage: Stage, project: Project) -> None:
 def _train(job: Job) -> StageResult:
     project = job.project
     scene = open_scene(project.scene, project)
-    recipe = build_recipe(project.features, scene.roles)
+    recipe = build_recipe(project.features, scene.roles, scene_facts(scene))
+    recipe = fit_recipe(recipe, scene, project.project.seed, job.progress)
     polygons = read_polygons(project, scene.grid)
     caps = PixelCaps(
         project.training.pixels_per_polygon, project.training.pixels_per_class, seed=project.project.seed
