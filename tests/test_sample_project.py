@@ -1,0 +1,98 @@
+"""The sample project, whole: what a newcomer gets from the first command, held against the truth that it was made from."""
+
+from __future__ import annotations
+
+import re
+import shutil
+from pathlib import Path
+
+import numpy as np
+import pandas as pd
+import pytest
+import rasterio
+from click.testing import CliRunner
+from rio_cogeo.cogeo import cog_validate
+from small_project import read_json
+
+from classify.cli.main import cli
+
+SAMPLE = Path(__file__).parent.parent / "sample_project"
+# What the pipeline may read; the truth is not among it.
+GIVEN = ("project.toml", "training.gpkg", "reference.gpkg", "reference_design.json")
+
+
+@pytest.fixture(scope="module")
+def finished(tmp_path_factory):
+    """The sample project after `landassay run`, in a folder without the truth."""
+    folder = tmp_path_factory.mktemp("sorrel basin")
+    for name in GIVEN:
+        shutil.copy(SAMPLE / name, folder)
+    shutil.copytree(SAMPLE / "scene", folder / "scene")
+    result = CliRunner().invoke(cli, ["run", "--project", str(folder), "--quiet", "--jobs", "2"], catch_exceptions=False)
+    assert result.exit_code == 0
+    return folder
+
+
+@pytest.fixture(scope="module")
+def assessment(finished):
+    return read_json(finished / "outputs" / "assessment" / "assessment.json")
+
+
+@pytest.fixture(scope="module")
+def mapped_and_true(finished):
+    """Codes of the map and of the truth where the map has a class."""
+    with rasterio.open(finished / "outputs" / "map" / "cover.tif") as cover, rasterio.open(SAMPLE / "truth.tif") as truth:
+        codes, true = cover.read(1), truth.read(1)
+    return codes[codes > 0], true[codes > 0]
+
+
+def test_the_interval_of_overall_accuracy_holds_the_true_accuracy(assessment, mapped_and_true):
+    codes, true = mapped_and_true
+    overall = assessment["overall_accuracy"]
+    assert overall["lower"] < (codes == true).mean() < overall["upper"]
+    assert overall["upper"] - overall["lower"] < 0.08
+
+
+def test_estimated_areas_are_nearer_to_the_truth_than_their_intervals_are_wide(assessment, mapped_and_true):
+    codes, true = mapped_and_true
+    total = assessment["total_area"]
+    held = 0
+    for code, name in enumerate(assessment["classes"], start=1):
+        area = assessment["area"][name]
+        true_area = total * (true == code).mean()
+        held += area["lower"] <= true_area <= area["upper"]
+        # Interpreters make mistakes that no interval covers; three standard errors leave room for the few per cent here.
+        assert abs(area["estimate"] - true_area) < 3 * area["standard_error"] + 0.01 * total, name
+    assert held >= 5
+
+
+def test_areas_add_up_to_the_mapped_ground(finished, assessment):
+    areas = pd.read_csv(finished / "outputs" / "map" / "areas.csv")
+    assert assessment["total_area"] == pytest.approx(areas["area"].sum(), rel=1e-6)
+    assert sum(a["estimate"] for a in assessment["area"].values()) == pytest.approx(assessment["total_area"])
+    assert areas["area_m2"].sum() / areas["pixels"].sum() == pytest.approx(100, rel=2e-3)
+
+
+def test_dry_grass_and_soils_part_only_with_the_short_wave_infrared(mapped_and_true):
+    codes, true = mapped_and_true
+    alike = np.isin(true, (3, 4, 5)) & np.isin(codes, (3, 4, 5))
+    assert (codes[alike] == true[alike]).mean() > 0.85
+
+
+def test_maps_are_valid_cloud_optimised_geotiffs(finished):
+    for name in ("cover", "confidence"):
+        valid, errors, _ = cog_validate(finished / "outputs" / "map" / f"{name}.tif")
+        assert valid, errors
+
+
+def test_planted_faults_of_the_training_polygons_are_said(finished):
+    warnings = " ".join(read_json(finished / "outputs" / "run.json")["stages"]["train"]["warnings"])
+    assert re.search(r"polygon 96\b.*masked", warnings)
+    assert re.search(r"polygons 84 and 95\b", warnings)
+
+
+def test_the_report_is_one_file_that_names_its_evidence(finished):
+    page = (finished / "outputs" / "report" / "report.html").read_text(encoding="utf-8")
+    assert not re.search(r"""(?:src|href)\s*=\s*["']?(?:https?:)?//""", page)
+    assert "screening accuracy" in page.casefold()
+    assert "Sorrel Basin Water Board" in page
