@@ -1,31 +1,55 @@
-"""Fit the model of a project: check the training set, screen on held-out polygons, calibrate, fit, write the card."""
+"""Fit the model of a project: check, choose settings, screen on held-out polygons, calibrate, measure reach, fit."""
 
 from __future__ import annotations
 
-import platform
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
-import sklearn
-import skops
+from numpy.typing import NDArray
 
-from classify import __version__
-from classify.errors import Problem, TrainingError, raise_if_errors
+from classify.errors import TrainingError, raise_if_errors
 from classify.features.recipe import Recipe
 from classify.models.calibrate import calibrate
+from classify.models.card import describe
+from classify.models.checks import check_classes
+from classify.models.folds import spatial_blocks
+from classify.models.importance import Importance, feature_groups, measure_importance
 from classify.models.kinds import make_estimator, without_workers
+from classify.models.reach import fit_reach
+from classify.models.screening import Screening
 from classify.models.trained import TrainedModel
-from classify.models.validate import ScreenOptions, screen
+from classify.models.tuning import TUNING_PIXELS, Choice, choose, draw_settings, load_space
+from classify.models.validate import Maker, ScreenOptions, screen
 from classify.progress import SILENT, Progress
+from classify.raster.area import ground_areas_m2
+from classify.raster.grid import Grid, Window
 from classify.settings import Project
+from classify.settings.model import ModelKind
 from classify.training.dataset import TrainingSet
 from classify.training.draws import even_draw
 
-SCHEMA = 1
-# A class needs a few pixels for a tree or a margin to stand on; below this nothing is learnt but chance.
-MIN_PIXELS = 5
-# Quantiles of each feature kept in the card, to notice a scene that is not like the training one.
-_LEVELS = (0.01, 0.25, 0.5, 0.75, 0.99)
+# Trees beyond these change a screening accuracy by less than its spread.
+_SCREENING_TREES, _IMPORTANCE_TREES, _IMPORTANCE_PIXELS = 100, 60, 6_000
+
+
+@dataclass(frozen=True, eq=False)
+class _Plan:
+    """What is fixed before anything is fitted."""
+
+    training: TrainingSet
+    project: Project
+    groups: NDArray[np.int32]
+    options: ScreenOptions
+    progress: Progress
+
+    def maker(self, kind: ModelKind, params: dict[str, Any], trees: int | None = None) -> Maker:
+        """How to make an estimator of the chosen kind, with fewer trees where `trees` says so."""
+        settings = dict(params)
+        if kind == "random forest":
+            settings["n_estimators"] = min(trees or self.project.model.trees, self.project.model.trees)
+        width = len(self.training.feature_names)
+        return lambda seed: make_estimator(kind, settings, features=width, seed=seed)
 
 
 def fit_model(  # noqa: PLR0917 - a fixed contract
@@ -36,113 +60,88 @@ def fit_model(  # noqa: PLR0917 - a fixed contract
     jobs: int = 1,
     progress: Progress = SILENT,
 ) -> TrainedModel:
-    """Screen, calibrate and fit; `seed` None means the project's. The same seed gives the same model whatever `jobs`.
+    """Choose, screen, calibrate and fit; `seed` None means the project's. The same model whatever `jobs`.
 
     Raises TrainingError listing every class that cannot be learnt.
     """
     seed = project.project.seed if seed is None else seed
     problems = check_classes(training, project)
     raise_if_errors(problems, TrainingError)
-    kind, params = project.model.kind, _params(project)
-    options = ScreenOptions(seed=seed, jobs=jobs)
-    width = len(recipe.names)
-    screening = screen(
-        training, lambda s: make_estimator(kind, params, features=width, seed=s), options, progress=progress
-    )
+    plan = _plan(training, project, seed, jobs, progress)
+    choice = _choose(plan)
+    kind, params = (choice.chosen.kind, choice.chosen.params) if choice else (project.model.kind, {})
+    screening = _screen(plan, plan.maker(kind, params, _SCREENING_TREES), choice)
     calibration = calibrate(screening, training.codes, training.polygon, kind)
-    chosen = _thinned(training, project, seed)
-    progress.note(f"Fitting the {kind} on {len(chosen.codes)} pixels")
-    estimator = without_workers(
-        make_estimator(kind, params, features=width, seed=seed, jobs=jobs).fit(chosen.features, chosen.codes)
-    )
-    card = _card(training, project, recipe, seed) | {
-        "settings": {"params": params, "pixels_fitted": len(chosen.codes)},
+    importance = _importance(plan, plan.maker(kind, params, _IMPORTANCE_TREES), recipe)
+    weights = importance.weights(training.feature_names) if importance else np.ones(len(training.feature_names))
+    reach = fit_reach(training, weights, project.model.folds, seed)
+    fitted_on = _thinned(training, kind, project, seed)
+    progress.note(f"Fitting the {kind} on {len(fitted_on.codes)} pixels")
+    estimator = plan.maker(kind, params)(seed)
+    if kind == "random forest":
+        estimator.set_params(n_jobs=jobs)
+    estimator = without_workers(estimator.fit(fitted_on.features, fitted_on.codes))
+    card = describe(training, project, recipe, kind, seed) | {
+        "settings": {"params": params, "trees": project.model.trees, "pixels_fitted": len(fitted_on.codes)},
         "screening": screening.to_json(),
         "calibration": calibration.to_json(),
-        "warnings": [problem.what for problem in problems],
+        "tuning": choice.to_json() if choice else None,
+        "importance": importance.to_json() if importance else None,
+        "reach": reach.to_json() if reach else None,
+        "warnings": [problem.what for problem in (*training.problems, *problems)],
     }
-    return TrainedModel(estimator, card, recipe)
+    return TrainedModel(estimator, card, recipe, reach)
 
 
-def check_classes(training: TrainingSet, project: Project) -> list[Problem]:
-    """Findings on whether every class can be learnt and screened; errors for those that cannot be learnt."""
-    names = {c.code: c.name for c in project.classes}
-    codes, pixels = np.unique(training.codes, return_counts=True)
-    found = []
-    if len(codes) < 2:
-        only = ", ".join(names.get(int(code), str(code)) for code in codes) or "no class"
-        found.append(
-            Problem(
-                f"the training pixels hold one class only ({only}): there is nothing to tell apart",
-                "training polygons",
-                "add polygons of another class",
-            )
-        )
-    for code, count in zip(codes, pixels, strict=True):
-        name = names.get(int(code), str(code))
-        polygons = len(np.unique(training.polygon[training.codes == code]))
-        if count < MIN_PIXELS:
-            found.append(
-                Problem(
-                    f"class {name!r} has {count} usable pixels; at least {MIN_PIXELS} are needed",
-                    "training polygons",
-                    "draw more or larger polygons of it",
-                )
-            )
-        elif polygons < 2:
-            found.append(
-                Problem(
-                    f"class {name!r} has one usable polygon: it can be mapped but not screened",
-                    "training polygons",
-                    "draw a second polygon of it, some way off",
-                    "warning",
-                )
-            )
-    missing = [c.name for c in project.classes if c.code not in set(codes.tolist())]
-    if missing:
-        listed = ", ".join(repr(name) for name in missing)
-        found.append(
-            Problem(
-                f"no usable training pixel for {listed}: never mapped",
-                "training polygons",
-                "draw polygons of it, or drop the class",
-                "warning",
-            )
-        )
-    return found
+def _plan(training: TrainingSet, project: Project, seed: int, jobs: int, progress: Progress) -> _Plan:
+    settings = project.model
+    options = ScreenOptions(folds=settings.folds, repeats=settings.repeats, seed=seed, jobs=jobs)
+    if settings.block_m is None:
+        return _Plan(training, project, training.polygon, options, progress)
+    size_px = max(1, round(settings.block_m / pixel_size_m(training.grid)))
+    groups = spatial_blocks(training.rows, training.cols, training.polygon, size_px)
+    options = replace(options, kept_whole=f"blocks of {settings.block_m:g} m")
+    return _Plan(training, project, groups, options, progress)
 
 
-def _params(project: Project) -> dict[str, Any]:
-    return {"n_estimators": project.model.trees} if project.model.kind == "random forest" else {}
+def pixel_size_m(grid: Grid) -> float:
+    """Edge in metres on the ground of the pixel in the middle of a grid (square root of its area)."""
+    middle = Window(grid.height // 2, grid.width // 2, 1, 1)
+    return float(np.sqrt(ground_areas_m2(grid, middle)[0, 0]))
 
 
-def _thinned(training: TrainingSet, project: Project, seed: int) -> TrainingSet:
+def _choose(plan: _Plan) -> Choice | None:
+    settings = plan.project.model
+    kinds = tuple(dict.fromkeys((settings.kind, *settings.compare)))
+    if not settings.tune and len(kinds) == 1:
+        return None
+    space = load_space()
+    draws = settings.tuning_draws if settings.tune else 1
+    wanted = [(kind, params) for kind in kinds for params in draw_settings(kind, draws, plan.options.seed, space)]
+    options = replace(plan.options, most_pixels=TUNING_PIXELS)
+    return choose(plan.training, wanted, options, groups=plan.groups, progress=plan.progress)
+
+
+def _screen(plan: _Plan, make: Maker, choice: Choice | None) -> Screening:
+    # Dealt by another seed than the folds on which settings were chosen; the polygons are still the same ones.
+    options = replace(plan.options, seed=plan.options.seed + 1)
+    found = screen(plan.training, make, options, groups=plan.groups, progress=plan.progress)
+    if choice is None:
+        return found
+    note = "Settings were chosen on the same polygons, dealt otherwise: this screening accuracy is a little too good."
+    return replace(found, notes=(*found.notes, note))
+
+
+def _importance(plan: _Plan, make: Maker, recipe: Recipe) -> Importance | None:
+    if not plan.project.model.importance:
+        return None
+    options = replace(plan.options, most_pixels=_IMPORTANCE_PIXELS)
+    groups = feature_groups(recipe, plan.training)
+    return measure_importance(plan.training, make, groups, options, progress=plan.progress)
+
+
+def _thinned(training: TrainingSet, kind: ModelKind, project: Project, seed: int) -> TrainingSet:
     """A kernel machine's time grows with the square of its pixels: it is fitted on at most `svm_pixels` of them."""
-    if project.model.kind != "support vector machine":
+    if kind != "support vector machine":
         return training
     return training.subset(even_draw(training.polygon, project.model.svm_pixels, seed))
-
-
-def _card(training: TrainingSet, project: Project, recipe: Recipe, seed: int) -> dict[str, Any]:
-    present = set(training.class_codes.tolist())
-    classes = sorted((c for c in project.classes if c.code in present), key=lambda c: c.code)
-    quantiles = np.quantile(training.features.astype(np.float64), _LEVELS, axis=0).T.tolist()
-    return {
-        "schema": SCHEMA,
-        "kind": project.model.kind,
-        "needs": list(recipe.needs),
-        "features": list(recipe.names),
-        "recipe": recipe.to_json(),
-        "classes": [{"code": c.code, "name": c.name, "colour": c.colour} for c in classes],
-        "seed": seed,
-        "versions": {
-            "landassay": __version__, "python": platform.python_version(), "scikit-learn": sklearn.__version__,
-            "numpy": np.__version__, "skops": skops.__version__,
-        },
-        "training": {
-            "data_sha256": training.digest(),
-            "pixels": len(training.codes),
-            "polygons": len(np.unique(training.polygon)),
-            "quantiles": {"levels": list(_LEVELS), "values": dict(zip(recipe.names, quantiles, strict=True))},
-        },
-    }  # fmt: skip

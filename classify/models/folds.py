@@ -21,7 +21,8 @@ class Folds:
 
     def held_out(self, number: int) -> NDArray[np.bool_]:
         """Mask (n,) of the pixels held out in one fold."""
-        return self.fold == number
+        held: NDArray[np.bool_] = self.fold == number
+        return held
 
 
 def group_folds(codes: NDArray[np.uint8], groups: NDArray[np.int32], most: int, seed: int) -> Folds:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from classify.models.fit import check_classes
+from classify.models.checks import check_classes
 from classify.models.kinds import make_estimator
 from classify.models.learning import learning_curve
 from classify.models.validate import ScreenOptions, screen

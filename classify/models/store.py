@@ -21,9 +21,10 @@ from sklearn.ensemble import RandomForestClassifier
 from classify.errors import DataError, ModelError
 from classify.features.recipe import Recipe
 from classify.files import read_json, write_bytes, write_json
+from classify.models.reach import Reach
 from classify.models.trained import TrainedModel
 
-MODEL_FILE, CARD_FILE = "model.skops", "model.json"
+MODEL_FILE, CARD_FILE, REACH_FILE = "model.skops", "model.json", "reach.npz"
 _DESCRIPTION = "schema.json"
 _TREE = "sklearn.tree._tree.Tree"
 # (loader, type) pairs that our own models are made of. Everything else is refused.
@@ -50,10 +51,16 @@ _FIX = "train the model again, or get the file anew from whoever trained it"
 
 
 def save_model(model: TrainedModel, folder: Path) -> None:
-    """Write model.skops and model.json, crash-safe. Raises OutputError."""
+    """Write model.skops, reach.npz and model.json, each crash-safe. Raises OutputError."""
     content = _canonical(skops.io.dumps(model.estimator))
     write_bytes(folder / MODEL_FILE, content)
-    write_json(folder / CARD_FILE, {**model.card, "model_sha256": hashlib.sha256(content).hexdigest()})
+    hashes = {"model_sha256": hashlib.sha256(content).hexdigest(), "reach_sha256": None}
+    if model.reach is not None:
+        reach = model.reach.to_bytes()
+        write_bytes(folder / REACH_FILE, reach)
+        hashes["reach_sha256"] = hashlib.sha256(reach).hexdigest()
+    # The card comes last: until it is there, a half-written model does not match its card and is refused.
+    write_json(folder / CARD_FILE, {**model.card, **hashes})
 
 
 def load_model(folder: Path) -> TrainedModel:
@@ -82,7 +89,23 @@ def load_model(folder: Path) -> TrainedModel:
         raise
     except Exception as error:  # skops, NumPy and scikit-learn raise many kinds for a damaged file
         raise ModelError(f"the model file is damaged: {error}", where=str(file), fix=_FIX) from error
-    return TrainedModel(estimator, card, recipe)
+    return TrainedModel(estimator, card, recipe, _load_reach(folder / REACH_FILE, card))
+
+
+def _load_reach(path: Path, card: dict[str, Any]) -> Reach | None:
+    if card.get("reach_sha256") is None:
+        return None
+    try:
+        content = path.read_bytes()
+    except OSError as error:
+        raise ModelError(
+            f"the file of the model's reach cannot be read: {error.strerror}", where=str(path), fix=_FIX
+        ) from error
+    if hashlib.sha256(content).hexdigest() != card["reach_sha256"]:
+        raise ModelError(
+            "this is not the reach that the card describes (its SHA-256 differs)", where=str(path), fix=_FIX
+        )
+    return Reach.from_bytes(content, len(card["features"]))
 
 
 def audit(content: bytes, where: str) -> None:

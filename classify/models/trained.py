@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from classify.features.recipe import Recipe
 from classify.models.compiled import Compiled, compile_estimator
 from classify.models.kinds import Scorer, kind_of, scorer, to_probabilities
+from classify.models.reach import Reach
 
 # Rows scored at a time: bounds the memory of float64 scores whatever the caller hands over.
 _ROWS = 65_536
@@ -20,11 +21,13 @@ _ROWS = 65_536
 
 @dataclass(frozen=True, eq=False)
 class TrainedModel:
-    """estimator: fitted scikit-learn estimator. card: content of model.json. recipe: features, in order."""
+    """estimator: fitted scikit-learn estimator. card: content of model.json. recipe: features, in order. reach: what
+    the training data cover, or None where that could not be measured."""
 
     estimator: Any
     card: Mapping[str, Any]
     recipe: Recipe
+    reach: Reach | None = None
 
     @property
     def class_codes(self) -> NDArray[np.uint8]:

@@ -88,17 +88,18 @@ def held_out_scores(
             result, folds, number = job
             held = folds.held_out(number)
             if held.any() and not held.all():
-                result[held] = _scores_of_held(training, held, make, options)
+                result[held] = scores_of_held(training, held, make, options)
             task.advance()
 
         list(pool.map(run, tasks))
     return results
 
 
-def _scores_of_held(
+def scores_of_held(
     training: TrainingSet, held: NDArray[np.bool_], make: Maker, options: ScreenOptions
 ) -> NDArray[np.float64]:
-    estimator = _fit(training, ~held, make, options)
+    """Scores float64 (m, k) of the m held-out pixels by a model of the others, in the order of the set's classes."""
+    estimator = fit_side(training, ~held, make, options)
     score = scorer(estimator)(training.features[held])
     classes = training.class_codes
     known = np.searchsorted(classes, estimator.classes_)
@@ -109,7 +110,8 @@ def _scores_of_held(
     return part
 
 
-def _fit(training: TrainingSet, side: NDArray[np.bool_], make: Maker, options: ScreenOptions) -> Any:  # noqa: ANN401
+def fit_side(training: TrainingSet, side: NDArray[np.bool_], make: Maker, options: ScreenOptions) -> Any:  # noqa: ANN401
+    """A model of the pixels in `side` (mask (n,)), thinned evenly over polygons to `options.most_pixels`."""
     chosen = np.flatnonzero(side)
     chosen = chosen[even_draw(training.polygon[chosen], options.most_pixels, options.seed)]
     return without_workers(make(options.seed).fit(training.features[chosen], training.codes[chosen]))
@@ -154,3 +156,9 @@ def _accuracies(
         return None
     right = np.diag(counts)
     return float(right.sum() / held.sum()), float(np.mean(right[held > 0] / held[held > 0]))
+
+
+def balanced_by_fold(training: TrainingSet, held: NDArray[np.bool_], scores: NDArray[np.float64]) -> float:
+    """Mean share right per class among held-out pixels, from their scores (m, k); NaN without any."""
+    found = _accuracies(training.codes[held], scores, training.class_codes)
+    return float("nan") if found is None else found[1]

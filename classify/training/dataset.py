@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
@@ -72,6 +72,11 @@ class TrainingSet:
         """The same set with only the pixels that `keep` (mask or indices, in order) selects; the table is kept."""
         per_pixel = ("features", "codes", "polygon", "rows", "cols", "reflectance")
         return replace(self, **{name: getattr(self, name)[keep] for name in per_pixel})
+
+    def with_features(self, columns: Sequence[int]) -> TrainingSet:
+        """The same pixels with only some features, by their places in order."""
+        names = tuple(self.feature_names[place] for place in columns)
+        return replace(self, features=np.ascontiguousarray(self.features[:, list(columns)]), feature_names=names)
 
     def digest(self) -> str:
         """SHA-256 (hexadecimal) of pixels, labels and feature names: equal sets have the same, whatever the file."""

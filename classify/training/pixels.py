@@ -199,7 +199,7 @@ def _refuse_nothing_left(finite: NDArray[np.bool_], names: tuple[str, ...]) -> N
             "no polygon holds the centre of a pixel, or all their pixels are in conflict",
             fix="draw larger polygons, and do not let polygons of different classes overlap",
         )
-    dead = [name for name, seen in zip(names, finite.any(axis=0), strict=True) if not seen]
+    dead = [name for place, name in enumerate(names) if not finite[:, place].any()]
     if len(dead) == len(names):
         raise TrainingError(
             "every training pixel is masked or without data", fix="check the mask codes and where the polygons lie"

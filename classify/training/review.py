@@ -192,7 +192,7 @@ def _signature(pixels: NDArray[np.float64]) -> dict[str, list[float | None]]:
 
 def _pair(pair: Pair) -> dict[str, Any]:
     best = [{"feature": name, "jeffries_matusita": distance} for name, distance in pair.best_features]
-    advice = _ADVICE[pair.verdict].format(best=", ".join(entry["feature"] for entry in best))
+    advice = _ADVICE[pair.verdict].format(best=", ".join(name for name, _ in pair.best_features))
     return {
         "a": pair.a,
         "b": pair.b,
@@ -206,8 +206,10 @@ def _pair(pair: Pair) -> dict[str, Any]:
 
 def _lonlat(training: TrainingSet, table: pd.DataFrame) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Longitude and latitude of each polygon's middle pixel, NaN without one."""
-    x, y = training.grid.transform @ (table["col"].to_numpy() + 0.5, table["row"].to_numpy() + 0.5)
-    return Transformer.from_crs(training.grid.crs.to_wkt(), "EPSG:4326", always_xy=True).transform(x, y)  # type: ignore[no-any-return]
+    t, col, row = training.grid.transform, table["col"].to_numpy() + 0.5, table["row"].to_numpy() + 0.5
+    x, y = t.a * col + t.b * row + t.c, t.d * col + t.e * row + t.f
+    longitude, latitude = Transformer.from_crs(training.grid.crs.to_wkt(), "EPSG:4326", always_xy=True).transform(x, y)
+    return longitude, latitude
 
 
 def _spectrum(values: NDArray[np.float64]) -> list[float | None]:

@@ -7,6 +7,7 @@ Quantitative Approach).
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from itertools import combinations
 from typing import Literal
@@ -47,7 +48,7 @@ def jeffries_matusita(mean_a: Array, cov_a: Array, mean_b: Array, cov_b: Array) 
     bhattacharyya = gap @ np.linalg.solve(middle, gap) / 8 + 0.5 * (
         _log_det(middle) - 0.5 * (_log_det(cov_a) + _log_det(cov_b))
     )
-    return float(np.sqrt(2 * -np.expm1(-max(bhattacharyya, 0.0))))
+    return math.sqrt(2 * -math.expm1(-max(float(bhattacharyya), 0.0)))
 
 
 def transformed_divergence(mean_a: Array, cov_a: Array, mean_b: Array, cov_b: Array) -> float:
@@ -55,7 +56,7 @@ def transformed_divergence(mean_a: Array, cov_a: Array, mean_b: Array, cov_b: Ar
     gap = mean_a - mean_b
     inverse_a, inverse_b = np.linalg.inv(cov_a), np.linalg.inv(cov_b)
     divergence = 0.5 * np.trace((cov_a - cov_b) @ (inverse_b - inverse_a)) + 0.5 * gap @ (inverse_a + inverse_b) @ gap
-    return float(2 * -np.expm1(-max(divergence, 0.0) / 8))
+    return 2 * -math.expm1(-max(float(divergence), 0.0) / 8)
 
 
 def separability(training: TrainingSet, seed: int = 0) -> tuple[Pair, ...]:

@@ -77,7 +77,7 @@ def class_distances(training: TrainingSet) -> dict[int, float]:
     middle = {code: np.median(means[codes == code], axis=0) for code in judged}
     spread = {code: 1.4826 * np.median(np.abs(means[codes == code] - middle[code]), axis=0) for code in judged}
     common = np.median(list(spread.values()), axis=0)
-    result = {}
+    result: dict[int, float] = {}
     for code in judged:
         scale = np.maximum(spread[code], common)
         z = (means[codes == code] - middle[code]) / np.where(scale > 0, scale, np.inf)
@@ -99,13 +99,13 @@ def find_suspects(
     """
     failed = {finding.polygon: finding for finding in materials if not finding.met}
     suspects = []
-    for row in table.to_dict("records"):
-        number, code = int(row["polygon"]), int(row["code"])
+    columns = ("polygon", "code", "class_name", "pixels", "conflicting", "invalid")
+    for number, code, name, *counts in zip(*(table[column].tolist() for column in columns), strict=True):
         found: list[tuple[Reason, float, str]] = []
         _from_held_out(held_out.get(number), class_names, found)
         _from_distance(distances.get(number), found)
         _from_material(failed.get(number), found)
-        _from_counts(row, found)
+        _from_counts(counts[0], counts[1], counts[2], found)
         if found:
             seen = held_out.get(number)
             looks_like = max(seen.others, key=lambda c: seen.others[c]) if seen and seen.right < _WRONG_SHARE else None
@@ -114,7 +114,7 @@ def find_suspects(
                 Suspect(
                     polygon=number,
                     code=code,
-                    class_name=str(row["class_name"]),
+                    class_name=name,
                     score=round(1 - float(np.prod([1 - strength for _, strength, _ in found])), 4),
                     looks_like=looks_like,
                     reasons=tuple(reason for reason, _, _ in found),
@@ -149,11 +149,10 @@ def _from_material(finding: MaterialFinding | None, found: list[tuple[Reason, fl
     found.append(("material", 0.4 + 0.5 * len(broken) / len(checked), text))
 
 
-def _from_counts(row: Mapping[str, float], found: list[tuple[Reason, float, str]]) -> None:
-    pixels = row["pixels"]
+def _from_counts(pixels: int, conflicting: int, invalid: int, found: list[tuple[Reason, float, str]]) -> None:
     if not pixels:
         return
-    conflict, masked = row["conflicting"] / pixels, row["invalid"] / pixels
+    conflict, masked = conflicting / pixels, invalid / pixels
     if conflict >= _CONFLICT_SHARE:
         text = f"a polygon of another class claims {conflict:.0%} of its pixels too"
         found.append(("conflict", 0.5 + 0.5 * conflict, text))
