@@ -18,6 +18,7 @@ COMMANDS = {
     "assess": ("classify.cli.assess", "Estimate accuracy and areas from a labelled reference sample."),
     "compare": ("classify.cli.compare", "Compare two maps on one reference sample."),
     "report": ("classify.cli.report", "Write the report."),
+    "verify": ("classify.cli.verify", "Check a delivered report: fingerprints, and every number derived again."),
     "run": ("classify.cli.run", "Run every stage that is stale, in order."),
     "status": ("classify.cli.status", "Say which stages are done, stale or missing."),
 }

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 
+from classify.errors import SettingsError
 from classify.report.accuracy_text import accuracy_section, agreement_section, areas_section, matrix_section
 from classify.report.answer_text import answer_section, report_kind
 from classify.report.document import Document, Section
@@ -58,6 +59,10 @@ def _heading(facts: ReportFacts, words: Messages) -> Iterator[tuple[str, str]]:
 
 
 def _sections(facts: ReportFacts, words: Messages) -> Iterator[Section]:
+    unknown = [key for key in facts.sections or () if key not in SECTIONS]
+    if unknown:
+        raise SettingsError(f"there is no section {unknown[0]!r}", where="report.sections",
+                            fix=f"sections are {', '.join(SECTIONS)}")  # fmt: skip
     for key, write in SECTIONS.items():
         if facts.sections is None or key in facts.sections or key in ALWAYS:
             section = write(facts, words)

@@ -6,6 +6,8 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any, Literal
 
+import pandas as pd
+
 from classify.assessment.evidence import EvidenceName
 from classify.assessment.intervals import Estimate
 
@@ -138,6 +140,20 @@ class PointFact:
     stratum: str
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class SampleFacts:
+    """The labelled sample behind the accuracy, so that a reader can derive the numbers again.
+
+    points: columns id, stratum, map, reference and, where present, alternate, cluster, region. strata: columns stratum,
+    area, pixels. method: how it was assessed (keywords of `AssessmentOptions`). assessment: assessment.json.
+    """
+
+    points: pd.DataFrame
+    strata: pd.DataFrame
+    method: Mapping[str, Any]
+    assessment: Mapping[str, Any]
+
+
 @dataclass(frozen=True, slots=True)
 class Provenance:
     """The run record: inputs (path, bytes, SHA-256), versions, seed, stage times, settings as plain data."""
@@ -170,6 +186,7 @@ class ReportFacts:
     warnings: tuple[tuple[str, str], ...] = ()
     sections: tuple[str, ...] | None = None
     response_design: str = ""
+    sample: SampleFacts | None = None
 
     def colour(self, name: str) -> str:
         """Colour of a class by name."""

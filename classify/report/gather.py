@@ -21,7 +21,8 @@ from classify.report.facts import (
     StageKey,
     StratumFact,
 )
-from classify.report.picture import map_fact
+from classify.report.picture import map_fact, read_logo
+from classify.report.sample import sample_facts
 from classify.settings import Project
 from classify.settings.model import M2_PER_UNIT
 
@@ -39,11 +40,13 @@ def gather_facts(project: Project, outputs: Path) -> ReportFacts:
     record = _json(outputs / "run.json") or {}
     classes = _classes(project, outputs)
     card, assessment = _json(outputs / _MADE_BY["train"]), _json(outputs / _MADE_BY["assess"])
+    sample, points = (None, ()) if assessment is None else sample_facts(project, outputs, assessment)
     return ReportFacts(
         heading=Heading(
-            project.project.title, project.project.client, project.project.author, _date(record), __version__
+            project.project.title, project.project.client, project.project.author, _date(record), __version__,
+            None if project.report.logo is None else read_logo(Path(project.path(project.report.logo))),
         ),
-        language="en",
+        language=project.report.language,
         unit=project.report.area_unit,
         level=project.report.confidence_level,
         classes=classes,
@@ -51,10 +54,13 @@ def gather_facts(project: Project, outputs: Path) -> ReportFacts:
         accuracy=None if assessment is None else accuracy_facts(assessment, outputs / _MADE_BY["assess"]),
         model=None if card is None else _model(card),
         review=_json(outputs / "training" / "review.json"),
-        points=(),
+        points=points,
         provenance=_provenance(project, record),
         missing=missing,
         warnings=_warnings(record),
+        sections=None if project.report.sections is None else tuple(project.report.sections),
+        response_design=project.report.response_design,
+        sample=sample,
     )
 
 

@@ -23,6 +23,7 @@ from classify.report.facts import ClassFact, Layer, MapFact
 LONG_SIDE_PX = 1600
 _TICKS = 4
 _PIECE_ROWS = 2048
+_LOGO_PX = 600
 
 
 def map_fact(folder: Path, classes: Sequence[ClassFact], more: Sequence[Layer], low_percent: int = 50) -> MapFact:
@@ -143,6 +144,19 @@ def _png(values: NDArray[np.uint8], palette: NDArray[np.uint8], clear: int = 0) 
     buffer = io.BytesIO()
     image.save(buffer, "PNG", optimize=True, transparency=clear)
     return buffer.getvalue()
+
+
+def read_logo(path: Path) -> bytes:
+    """A logo as PNG bytes, whatever picture it was. Raises DataError when it is not a picture."""
+    try:
+        with Image.open(path) as image:
+            image.thumbnail((_LOGO_PX, _LOGO_PX))
+            buffer = io.BytesIO()
+            image.convert("RGBA").save(buffer, "PNG", optimize=True)
+            return buffer.getvalue()
+    except (OSError, ValueError, Image.DecompressionBombError) as error:
+        raise DataError("the logo is not a picture that can be read", where=str(path),
+                        fix="give a PNG, JPEG or TIFF file under [report] logo") from error  # fmt: skip
 
 
 def _share_below(path: Path, percent: int) -> float | None:
