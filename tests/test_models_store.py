@@ -10,6 +10,9 @@ import subprocess
 import sys
 import zipfile
 from collections.abc import Callable
+from copy import deepcopy
+from dataclasses import replace
+from functools import cache
 from pathlib import Path
 from typing import Any
 
@@ -21,14 +24,15 @@ from sklearn.linear_model import LogisticRegression
 from training_sets import project_of, recipe_of, training_set
 
 from classify.errors import ModelError
-from classify.models import TrainedModel, fit_model, load_model, save_model
+from classify.models import Reach, TrainedModel, fit_model, load_model, save_model
 
 KINDS = ["random forest", "support vector machine", "linear support vector machine"]
 
 
+@cache
 def fitted(kind: str = "random forest", jobs: int = 1) -> TrainedModel:
     training = training_set()
-    project = project_of(training, kind=kind)
+    project = project_of(training, kind=kind, repeats=1, folds=3, trees=8)
     return fit_model(training, project, recipe_of(project), jobs=jobs)
 
 
@@ -44,8 +48,8 @@ def test_same_labels_after_reload_and_in_a_fresh_process(tmp_path: Path, kind: s
     assert back.recipe == model.recipe
     np.save(tmp_path / "features.npy", features)
     code = (
-        "import sys, numpy as np; from pathlib import Path; from classify.models import load_model; f = Path(sys.argv[1]);"
-        "np.save(f / 'labels.npy', load_model(f).predict(np.load(f / 'features.npy')))"
+        "import sys, numpy as np; from pathlib import Path; from classify.models import load_model;"
+        "f = Path(sys.argv[1]); np.save(f / 'labels.npy', load_model(f).predict(np.load(f / 'features.npy')))"
     )
     subprocess.run([sys.executable, "-c", code, str(tmp_path)], check=True)
     assert np.array_equal(np.load(tmp_path / "labels.npy"), labels)
@@ -56,7 +60,7 @@ def test_same_labels_after_reload_and_in_a_fresh_process(tmp_path: Path, kind: s
 def test_same_bytes_whatever_the_jobs(tmp_path: Path, kind: str) -> None:
     save_model(fitted(kind, jobs=1), tmp_path / "one")
     save_model(fitted(kind, jobs=3), tmp_path / "three")
-    for name in ("model.skops", "model.json"):
+    for name in ("model.skops", "model.json", "reach.npz"):
         assert (tmp_path / "one" / name).read_bytes() == (tmp_path / "three" / name).read_bytes(), name
 
 
@@ -94,7 +98,7 @@ def test_pickles_are_refused_before_anything_runs(tmp_path: Path) -> None:
             target.writestr(name, arrays.getvalue() if name == first else source.read(name))
     for content in (pickle.dumps(Trap(sprung)), buffer.getvalue(), hidden.getvalue()):
         replaced(tmp_path, content)
-        with pytest.raises(ModelError, match="not a model file|damaged"):
+        with pytest.raises(ModelError, match=r"not a model file|damaged"):
             load_model(tmp_path)
         assert not sprung.exists()
     pickle.loads(pickle.dumps(Trap(sprung)))
@@ -124,9 +128,8 @@ def test_types_outside_the_closed_list_are_refused(tmp_path: Path) -> None:
         load_model(tmp_path)
 
     def call_system(schema: dict[str, Any]) -> None:
-        schema["content"]["content"]["steps"] = {
-            "__class__": "system", "__module__": "os", "__loader__": "FunctionNode", "content": {"module_path": "os", "function": "system"},
-        }  # fmt: skip
+        node = {"__class__": "system", "__module__": "os", "__loader__": "FunctionNode"}
+        schema["content"]["content"]["steps"] = {**node, "content": {"module_path": "os", "function": "system"}}
 
     replaced(tmp_path, with_schema(good, call_system))
     with pytest.raises(ModelError, match=r"os\.system"):
@@ -148,12 +151,12 @@ def test_tampering_is_noticed(tmp_path: Path) -> None:
     with pytest.raises(ModelError, match="SHA-256 differs"):
         load_model(tmp_path)
     replaced(tmp_path, bytes(content))
-    with pytest.raises(ModelError, match="damaged|not a model file"):
+    with pytest.raises(ModelError, match=r"damaged|not a model file"):
         load_model(tmp_path)
 
 
 def test_a_tree_that_points_outside_itself_is_refused(tmp_path: Path) -> None:
-    model = fitted()
+    model = replace(fitted(), estimator=deepcopy(fitted().estimator))
     state = model.estimator.estimators_[0].tree_.__getstate__()
     state["nodes"]["left_child"][0] = 10**6
     model.estimator.estimators_[0].tree_.__setstate__(state)
@@ -173,4 +176,25 @@ def test_missing_or_foreign_cards(tmp_path: Path) -> None:
             load_model(tmp_path)
     (tmp_path / "model.json").write_text(json.dumps({k: v for k, v in card.items() if k != "recipe"}))
     with pytest.raises(ModelError, match="lacks recipe"):
+        load_model(tmp_path)
+
+
+def test_reach_is_kept_and_guarded(tmp_path: Path) -> None:
+    model = fitted()
+    assert model.reach is not None
+    save_model(model, tmp_path)
+    features = np.random.default_rng(2).uniform(-1, 1, (50, 4)).astype(np.float32)
+    back = load_model(tmp_path)
+    assert back.reach is not None
+    assert np.array_equal(back.reach.of(features), model.reach.of(features))
+    content = bytearray((tmp_path / "reach.npz").read_bytes())
+    (tmp_path / "reach.npz").write_bytes(bytes(content[:-9]))
+    with pytest.raises(ModelError, match="SHA-256 differs"):
+        load_model(tmp_path)
+    with pytest.raises(ModelError, match="reach is damaged"):
+        Reach.from_bytes(bytes(content[:-9]), 4)
+    with pytest.raises(ModelError, match="reach is damaged"):
+        Reach.from_bytes(bytes(content), 5)
+    (tmp_path / "reach.npz").unlink()
+    with pytest.raises(ModelError, match="cannot be read"):
         load_model(tmp_path)

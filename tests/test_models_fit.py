@@ -1,0 +1,179 @@
+"""Fitting and screening: against scikit-learn, against leakage, and with data that cannot support what is asked."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+from sklearn.metrics import accuracy_score, balanced_accuracy_score, confusion_matrix
+from training_sets import project_of, recipe_of, training_set
+
+from classify.errors import TrainingError
+from classify.models import ScreenOptions, TrainedModel, fit_model, screen
+from classify.models.calibrate import calibrate
+from classify.models.kinds import make_estimator, to_probabilities
+from classify.models.screening import Screening
+from classify.models.tuning import Candidate, choose, draw_settings, load_space
+from classify.training import TrainingSet
+
+
+def forest(seed: int, trees: int = 20) -> object:
+    return make_estimator("random forest", {"n_estimators": trees}, features=4, seed=seed)
+
+
+def fit(training: TrainingSet, jobs: int = 1, **model: object) -> TrainedModel:
+    project = project_of(training, **{"repeats": 1, "folds": 3, "importance": False, **model})
+    return fit_model(training, project, recipe_of(project), jobs=jobs)
+
+
+def test_screening_counts_are_those_of_scikit_learn() -> None:
+    training = training_set(between=0.05)
+    found = screen(training, forest, ScreenOptions(folds=4, repeats=2, seed=3))
+    labels = found.rounds[0]
+    assert (labels > 0).all()
+    assert np.array_equal(found.counts, confusion_matrix(training.codes, labels))
+    for (overall, balanced), labels in zip(found.repeats, found.rounds, strict=True):
+        assert overall == pytest.approx(accuracy_score(training.codes, labels))
+        assert balanced == pytest.approx(balanced_accuracy_score(training.codes, labels))
+    content = found.to_json()
+    assert content["screening_accuracy"] == pytest.approx(found.repeats[:, 0].mean())
+    assert content["screening_accuracy_spread"] == pytest.approx(found.repeats[:, 0].std(ddof=1))
+    assert content["evidence"] == "held-out training polygons" and "not the accuracy of the map" in content["meaning"]
+
+
+def test_a_split_of_pixels_claims_what_polygons_do_not_hold() -> None:
+    """Labels that say nothing, on polygons that differ: held-out polygons show it, held-out pixels do not."""
+    training = training_set(polygons=(12, 12), between=0.05, within=0.002)
+    codes = np.random.default_rng(8).permutation(np.repeat([1, 2], 12))[training.polygon - 1].astype(np.uint8)
+    centred = replace(
+        training, features=training.features - np.repeat([[0.0], [1.0]], 12 * 25, axis=0).astype(np.float32)
+    )
+    found = screen(replace(centred, codes=codes), forest, ScreenOptions(folds=4, repeats=3, seed=1))
+    assert found.leaky is not None and found.leaky > 0.95
+    assert found.balanced is not None and found.balanced < 0.75
+
+
+def test_jobs_change_nothing() -> None:
+    one, three = (screen(training_set(), forest, ScreenOptions(seed=2, jobs=jobs)) for jobs in (1, 3))
+    assert np.array_equal(one.scores, three.scores)
+    assert np.array_equal(one.repeats, three.repeats)
+
+
+def test_a_class_with_one_polygon_is_mapped_and_said_to_be_unscreened() -> None:
+    model = fit(training_set(polygons=(6, 6, 1)))
+    assert model.card["screening"]["unscreened_codes"] == [3]
+    assert model.card["screening"]["counts"][2] == [0, 0, 0]
+    assert model.card["screening"]["share_found"][2] is None
+    assert any("class 'class 3' has one usable polygon" in text for text in model.card["warnings"])
+    assert model.class_codes.tolist() == [1, 2, 3]
+
+
+def test_every_class_with_one_polygon() -> None:
+    model = fit(training_set(polygons=(1, 1)))
+    assert model.card["screening"]["screening_accuracy"] is None
+    assert model.card["calibration"]["source"] == "none"
+
+
+def test_what_cannot_be_learnt_is_one_clear_error() -> None:
+    training = training_set(polygons=(3, 3))
+    with pytest.raises(TrainingError, match=r"one class only \(class 1\)"):
+        fit(training.subset(training.codes == 1))
+    few = training.subset((training.codes == 1) | (np.cumsum(training.codes == 2) <= 3) & (training.codes == 2))
+    with pytest.raises(TrainingError, match=r"'class 2' has 3 usable pixels; at least 5"):
+        fit(few)
+    broken = training.features.copy()
+    broken[4, 2] = np.nan
+    with pytest.raises(TrainingError, match="values that are not numbers in: red"):
+        fit(replace(training, features=broken))
+
+
+@pytest.mark.parametrize("kind", ["random forest", "support vector machine", "linear support vector machine"])
+def test_constant_features_are_said_and_harmless(kind: str) -> None:
+    training = training_set()
+    constant = training.features.copy()
+    constant[:, 1] = 0.5
+    model = fit(replace(training, features=constant), kind=kind)
+    assert any("the same value in every training pixel: green" in text for text in model.card["warnings"])
+    assert np.mean(model.predict(constant) == training.codes) > 0.95
+
+
+def test_labels_are_those_of_scikit_learn_and_of_the_highest_probability() -> None:
+    training = training_set(between=0.06)
+    features = np.random.default_rng(5).uniform(0, 0.5, (300, 4)).astype(np.float32)
+    for kind in ("random forest", "support vector machine", "linear support vector machine"):
+        model = fit(training, kind=kind)
+        labels, probabilities = model.predict_both(features)
+        assert np.array_equal(labels, model.estimator.predict(features))
+        assert np.array_equal(labels, model.class_codes[probabilities.argmax(axis=1)])
+        np.testing.assert_allclose(probabilities.sum(axis=1), 1, rtol=1e-5)
+    features[7, 1] = np.nan
+    labels, probabilities = model.predict_both(features)
+    assert labels[7] == 0 and (probabilities[7] == 0).all() and (labels[:7] > 0).all()
+
+
+def test_a_kernel_machine_is_fitted_on_a_stated_number_of_pixels() -> None:
+    model = fit(training_set(polygons=(8, 8, 8), pixels=30), kind="support vector machine", svm_pixels=120)
+    assert model.card["settings"]["pixels_fitted"] == 120
+    assert model.estimator[-1].shape_fit_[0] == 120
+
+
+def test_spatial_blocks_are_kept_whole() -> None:
+    model = fit(training_set(between=0.04), block_m=1000.0)
+    assert model.card["screening"]["kept_whole"] == "blocks of 1000 m"
+
+
+def test_search_is_seeded_and_finds_the_setting_that_matters() -> None:
+    space = load_space()
+    drawn = draw_settings("support vector machine", 6, 4, space)
+    assert (
+        drawn
+        == draw_settings("support vector machine", 6, 4, space)
+        != draw_settings("support vector machine", 6, 5, space)
+    )
+    assert drawn[0] == {} and all(0.3 <= params["C"] <= 300 for params in drawn[1:])
+    training = training_set(between=0.03)
+    wanted = [("support vector machine", {"C": 10.0, "gamma_times_features": g}) for g in (1e5, 1.0)]
+    options = ScreenOptions(seed=1)
+    choice = choose(training, wanted, options)
+    assert choice.best.params["gamma_times_features"] == 1.0
+    other = choose(training, wanted, replace(options, jobs=3))
+    assert [c.by_fold.tolist() for c in choice.tried] == [c.by_fold.tolist() for c in other.tried]
+
+
+def test_the_simplest_within_one_standard_error_is_chosen() -> None:
+    """Classes that a plane parts: the linear machine does as well as any, and is the simplest."""
+    training = training_set(between=0.01)
+    model = fit(training, kind="support vector machine", compare=["random forest", "linear support vector machine"])
+    tuning = model.card["tuning"]
+    chosen, best = tuning["chosen"], tuning["best"]
+    assert model.card["kind"] == chosen["kind"] == "linear support vector machine"
+    assert chosen["mean"] >= best["mean"] - best["standard_error"]
+    assert len(tuning["tried"]) == 3
+    assert any("chosen on the same polygons" in note for note in model.card["screening"]["notes"])
+
+
+def test_standard_error_of_a_candidate() -> None:
+    found = Candidate("random forest", {}, np.array([0.8, 0.9, 0.85, np.nan]))
+    assert found.mean == pytest.approx(0.85)
+    assert found.error == pytest.approx(0.05 / np.sqrt(3))
+
+
+def test_calibration_finds_the_temperature_that_made_the_labels() -> None:
+    """Labels drawn from a softmax at temperature 2.5: least log loss must give it back, and reliable probabilities."""
+    random = np.random.default_rng(3)
+    scores = random.normal(0, 4, (20_000, 3))
+    truth = to_probabilities(scores, "support vector machine", 2.5)
+    drawn = (truth.cumsum(axis=1) > random.random((len(truth), 1))).argmax(axis=1)
+    codes = (drawn + 1).astype(np.uint8)
+    classes = np.array([1, 2, 3], dtype=np.uint8)
+    labels = classes[scores.argmax(axis=1)]
+    screening = Screening(classes, np.zeros((3, 3), np.int64), np.zeros((1, 2)), labels[None], scores, 5)
+    polygon = np.repeat(np.arange(4000), 5).astype(np.int32)
+    found = calibrate(screening, codes, polygon, "support vector machine")
+    assert found.temperature == pytest.approx(2.5, rel=0.05)
+    assert found.error is not None and found.raw_error is not None
+    assert found.error < 0.015
+    assert found.raw_error > 0.05
+    assert all(abs(row["said"] - row["right"]) < 0.04 for row in found.reliability if row["pixels"] > 500)
+    assert sum(row["share"] for row in found.reliability) == pytest.approx(1)
