@@ -12,7 +12,7 @@ from typing import Any, TypeVar
 
 from classify.assessment.reference import read_labels
 from classify.errors import LandassayError, Problem
-from classify.features import Recipe, build_recipe
+from classify.features import Recipe, build_recipe, fit_recipe, scene_facts
 from classify.models.fit import check_classes
 from classify.progress import SILENT, Progress
 from classify.raster.scene import Scene, open_scene
@@ -58,13 +58,21 @@ def check_project(project: Project, jobs: int = 1, progress: Progress = SILENT) 
     result = CheckResult()
     scene = result.scene = _attempt(result, lambda: open_scene(project.scene, project))
     roles = tuple(project.scene.bands) if scene is None else scene.roles
-    recipe = result.recipe = _attempt(result, lambda: build_recipe(project.features, roles))
+    recipe = result.recipe = _attempt(result, lambda: _recipe(project, scene, roles, progress))
     if scene is not None:
         _add(result, scene.warnings)
         _check_training(result, project, scene, recipe, jobs, progress)
     if project.reference is not None:
         result.reference = _attempt(result, lambda: read_labels(project))
     return result
+
+
+def _recipe(project: Project, scene: Scene | None, roles: tuple[str, ...], progress: Progress) -> Recipe:
+    """The recipe, fitted if there is a scene."""
+    if scene is None:
+        return build_recipe(project.features, roles)
+    recipe = build_recipe(project.features, roles, scene_facts(scene))
+    return fit_recipe(recipe, scene, project.project.seed, progress)
 
 
 def balance(training: TrainingSet) -> list[dict[str, Any]]:
