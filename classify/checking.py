@@ -13,7 +13,7 @@ from typing import Any, TypeVar
 from classify.assessment.reference import read_labels
 from classify.errors import LandassayError, Problem
 from classify.features import Recipe, build_recipe, fit_recipe, scene_facts
-from classify.models.fit import check_classes
+from classify.models import check_classes
 from classify.progress import SILENT, Progress
 from classify.raster.scene import Scene, open_scene
 from classify.settings import Project

@@ -28,7 +28,9 @@ def finished(tmp_path_factory):
     for name in GIVEN:
         shutil.copy(SAMPLE / name, folder)
     shutil.copytree(SAMPLE / "scene", folder / "scene")
-    result = CliRunner().invoke(cli, ["run", "--project", str(folder), "--quiet", "--jobs", "2"], catch_exceptions=False)
+    result = CliRunner().invoke(
+        cli, ["run", "--project", str(folder), "--quiet", "--jobs", "2"], catch_exceptions=False
+    )
     assert result.exit_code == 0
     return folder
 
@@ -41,7 +43,10 @@ def assessment(finished):
 @pytest.fixture(scope="module")
 def mapped_and_true(finished):
     """Codes of the map and of the truth where the map has a class."""
-    with rasterio.open(finished / "outputs" / "map" / "cover.tif") as cover, rasterio.open(SAMPLE / "truth.tif") as truth:
+    with (
+        rasterio.open(finished / "outputs" / "map" / "cover.tif") as cover,
+        rasterio.open(SAMPLE / "truth.tif") as truth,
+    ):
         codes, true = cover.read(1), truth.read(1)
     return codes[codes > 0], true[codes > 0]
 
@@ -61,14 +66,15 @@ def test_estimated_areas_are_nearer_to_the_truth_than_their_intervals_are_wide(a
         area = assessment["area"][name]
         true_area = total * (true == code).mean()
         held += area["lower"] <= true_area <= area["upper"]
-        # Interpreters make mistakes that no interval covers; three standard errors leave room for the few per cent here.
+        # Interpreters make mistakes that no interval covers; one per cent of the basin leaves room for them.
         assert abs(area["estimate"] - true_area) < 3 * area["standard_error"] + 0.01 * total, name
     assert held >= 5
 
 
 def test_areas_add_up_to_the_mapped_ground(finished, assessment):
     areas = pd.read_csv(finished / "outputs" / "map" / "areas.csv")
-    assert assessment["total_area"] == pytest.approx(areas["area"].sum(), rel=1e-6)
+    # The sample was drawn from an earlier map, which reaches a few pixels further at the edge of the swath.
+    assert assessment["total_area"] == pytest.approx(areas["area"].sum(), rel=2e-4)
     assert sum(a["estimate"] for a in assessment["area"].values()) == pytest.approx(assessment["total_area"])
     assert areas["area_m2"].sum() / areas["pixels"].sum() == pytest.approx(100, rel=2e-3)
 

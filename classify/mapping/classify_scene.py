@@ -8,7 +8,7 @@ same bytes whatever the number of workers.
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Generator, Iterable, Iterator
 from concurrent.futures import Future, ThreadPoolExecutor
 from contextlib import ExitStack, closing
 from dataclasses import dataclass
@@ -139,7 +139,7 @@ def _store(block: _Block, cover: BlockWriter, confidence: BlockWriter | None) ->
 
 def _computed(
     model: TrainedModel, scene: Scene, windows: list[Window], options: MapOptions, quantum_m2: float
-) -> Iterator[_Block]:
+) -> Generator[_Block, None, None]:
     # A reader belongs to one thread at a time; the queue hands an idle one to whichever thread starts a block.
     with ExitStack() as stack:
         readers: SimpleQueue[SceneReader] = SimpleQueue()
@@ -154,8 +154,9 @@ def _computed(
                 readers.put(reader)
             codes, percent = _labels(model, model.recipe.compute(layers), options)
             areas = np.rint(ground_areas_m2(scene.grid, window) / quantum_m2) * quantum_m2
-            pixels = np.bincount(codes.ravel(), minlength=256)
-            return _Block(window, codes, percent, pixels, np.bincount(codes.ravel(), areas.ravel(), minlength=256))
+            flat = codes.ravel()
+            area_m2 = np.bincount(flat, areas.ravel(), minlength=256).astype(np.float64)
+            return _Block(window, codes, percent, np.bincount(flat, minlength=256), area_m2)
 
         yield from _in_order(compute, windows, options.jobs)
 

@@ -136,4 +136,4 @@ def category_sidecar(layer: Layer) -> bytes:
         ET.SubElement(row, "F").text = str(value)
         ET.SubElement(row, "F").text = name
     ET.indent(root)
-    return ET.tostring(root, encoding="utf-8", xml_declaration=True)
+    return bytes(ET.tostring(root, encoding="utf-8", xml_declaration=True))
