@@ -8,18 +8,20 @@ from __future__ import annotations
 
 from pathlib import Path
 
+import geopandas as gpd
 import numpy as np
 import pandas as pd
 from affine import Affine
 from rasterio.crs import CRS
 
-from classify.assessment import AssessmentOptions, assess_matrix, write_assessment
+from classify.assessment import assess_project
 from classify.files import write_json
 from classify.mapping.classify_scene import CONFIDENCE_LAYER, cover_layer
 from classify.mapping.writer import cog_writer
 from classify.raster.grid import Grid
 from classify.settings import Project, load_project
 
+TRANSFORM = Affine(30, 0, 500_000, 0, -30, 4_200_000)
 CHANGE = ("Deforestation", "Forest gain", "Stable forest", "Stable non-forest")
 CHANGE_PIXELS = (200_000, 150_000, 3_200_000, 6_450_000)
 CHANGE_COUNTS = ((66, 0, 5, 4), (0, 55, 8, 12), (1, 0, 153, 11), (2, 1, 9, 313))
@@ -46,30 +48,49 @@ def many_classes_project(folder: Path) -> Project:
 
 def screening_project(folder: Path) -> Project:
     """Trained and mapped, without a reference sample."""
-    return _finish(folder, "Ground cover, Sorrel Basin", ("Pasture", "Bare soil", "Water"), (90_000, 55_000, 7_000), None)
+    return _finish(folder, "Ground cover, Sorrel Basin", ("Pasture", "Bare soil", "Water"), (90_000, 55_000, 7_000),
+                   None)
 
 
 def _finish(folder, title, names, pixels, counts) -> Project:
     folder.mkdir(parents=True, exist_ok=True)
     (folder / "project.toml").write_text(_toml(title, names, counts is not None), encoding="utf-8")
     project, outputs = load_project(folder), folder / "outputs"
-    _map(outputs / "map", project, pixels)
+    codes = _map(outputs / "map", project, pixels)
     write_json(outputs / "model" / "model.json", _card(project))
     write_json(outputs / "run.json", _record())
     if counts is not None:
-        areas = [count * 0.09 for count in pixels]
-        matrix = pd.DataFrame([[n, *row] for n, row in zip(names, counts, strict=True)], columns=["map", *names])
-        strata = pd.DataFrame({"stratum": names, "area": areas})
-        options = AssessmentOptions(
-            area_unit="ha", mapped_area=dict(zip(names, areas, strict=True)), finite_population=False, interval="normal"
-        )
-        write_assessment(assess_matrix(matrix, strata, options), outputs / "assessment")
+        _sample(folder, project, codes, pixels, counts)
+        assess_project(project, outputs)
     return project
+
+
+def _sample(folder: Path, project: Project, codes: np.ndarray, pixels, counts) -> None:
+    """Points on pixels of the map class they were drawn from, labelled so that their matrix is `counts`."""
+    random = np.random.default_rng(2)
+    names = [c.name for c in project.classes]
+    records, strata = [], {}
+    for i, row in enumerate(counts):
+        rows, cols = np.nonzero(codes == i + 1)
+        chosen = random.choice(len(rows), sum(row), replace=len(rows) < sum(row))
+        labels = np.repeat(np.arange(len(row)), row)
+        for place, label in zip(chosen, labels, strict=True):
+            x, y = TRANSFORM @ (cols[place] + 0.5, rows[place] + 0.5)
+            records.append((str(len(records) + 1), names[label], x, y))
+            strata[records[-1][0]] = {"stratum": names[i]}
+    ids, observed, x, y = zip(*records, strict=True)
+    frame = gpd.GeoDataFrame({"id": ids, "observed": observed}, geometry=gpd.points_from_xy(x, y), crs="EPSG:32633")
+    frame.to_file(folder / "reference.gpkg")
+    listed = [
+        {"stratum": n, "mapped_as": n, "area_m2": 900.0 * count, "pixels": int(count), "n": sum(row)}
+        for n, count, row in zip(names, pixels, counts, strict=True)
+    ]
+    write_json(folder / "design.json", {"schema": 1, "kind": "stratified random", "strata": listed, "points": strata})
 
 
 def _toml(title: str, names, with_reference: bool) -> str:
     classes = "\n".join(f"[[class]]\ncode = {i}\nname = {_quoted(n)}" for i, n in enumerate(names, start=1))
-    reference = '[reference]\npoints = "reference.gpkg"\nlabel = "observed"' if with_reference else ""
+    reference = '[reference]\npoints = "reference.gpkg"\nlabel = "observed"\ndesign = "design.json"' if with_reference else ""
     return f"""
 [project]
 title = {_quoted(title)}
@@ -84,6 +105,8 @@ nir = "nir.tif"
 polygons = "training.gpkg"
 label = "cover"
 {reference}
+[report]
+interval = "normal"
 """
 
 
@@ -91,7 +114,7 @@ def _quoted(text: str) -> str:
     return '"' + text.replace("\\", "\\\\").replace('"', '\\"') + '"'
 
 
-def _map(folder: Path, project: Project, pixels) -> None:
+def _map(folder: Path, project: Project, pixels) -> np.ndarray:
     """A map of patches whose class shares follow `pixels`, its confidence, and the areas of the whole."""
     height, width = 300, 420
     rows, cols = np.mgrid[:height, :width]
@@ -101,7 +124,7 @@ def _map(folder: Path, project: Project, pixels) -> None:
     codes[:30, :50] = 0
     percent = np.clip(40 + 60 * np.abs(np.sin(field * 3)), 0, 100).astype(np.uint8)
     percent[codes == 0] = 255
-    grid = Grid(CRS.from_epsg(32633), Affine(30, 0, 500_000, 0, -30, 4_200_000), height, width)
+    grid = Grid(CRS.from_epsg(32633), TRANSFORM, height, width)
     for name, values, layer in (
         ("cover.tif", codes, cover_layer(project.classes)), ("confidence.tif", percent, CONFIDENCE_LAYER)
     ):  # fmt: skip
@@ -112,6 +135,7 @@ def _map(folder: Path, project: Project, pixels) -> None:
         "area_m2": [900.0 * count for count in pixels], "area": [0.09 * count for count in pixels], "unit": "ha",
     })  # fmt: skip
     table.to_csv(folder / "areas.csv", index=False)
+    return codes
 
 
 def _card(project: Project) -> dict:

@@ -14,7 +14,8 @@ from typing import Any
 
 from classify.assessment import AssessmentOptions
 from classify.assessment.estimation import estimate_sample
-from classify.assessment.inputs import read_table, sample_from_points
+from classify.assessment.columns import read_table
+from classify.assessment.inputs import sample_from_points
 from classify.assessment.options import TableName
 from classify.errors import DataError, LandassayError
 from classify.files import read_json, sha256
