@@ -34,14 +34,9 @@ def write(
     bands = bands if bands.ndim == 3 else bands[None]
     transform = pixel if isinstance(pixel, Affine) else Affine(pixel, 0, origin[0], 0, -pixel, origin[1])
     tags = profile.pop("tags", {})
-    options = {
-        "driver": "GTiff",
-        "count": len(bands),
-        "height": bands.shape[1],
-        "width": bands.shape[2],
-        "dtype": bands.dtype,
-    }
-    with rasterio.open(path, "w", **options, crs=crs, transform=transform, **profile) as target:
+    options = {"driver": "GTiff", "crs": crs, "transform": transform, "dtype": bands.dtype, **profile}
+    count, height, width = bands.shape
+    with rasterio.open(path, "w", count=count, height=height, width=width, **options) as target:
         target.write(bands)
         if tags:
             target.scales, target.offsets = tags["scales"], tags["offsets"]

@@ -16,7 +16,10 @@ class _Preset(BaseModel):
 
 
 class SensorBand(_Preset):
-    """One band of a sensor. names: how product files call it. Values not given are those of the whole sensor."""
+    """One band of a sensor. Values not given are those of the whole sensor.
+
+    names: how product files call it. ground: False for a band that shows the air (water vapour), left out of drafts.
+    """
 
     wavelength_nm: float | None = Field(default=None, gt=0)
     width_nm: float | None = Field(default=None, gt=0)
@@ -25,6 +28,7 @@ class SensorBand(_Preset):
     offset: float | None = None
     nodata: float | None = None
     names: tuple[str, ...] = ()
+    ground: bool = True
 
 
 class BitField(_Preset):
@@ -69,10 +73,14 @@ class SensorMask(_Preset):
 
 
 class Sensor(_Preset):
-    """One preset. scale, offset, nodata hold for all bands that do not have their own."""
+    """One preset. scale, offset, nodata hold for all bands that do not have their own.
+
+    product: regular expression that file names of its products match.
+    """
 
     title: str
     source: str
+    product: str | None = None
     scale: float | None = None
     offset: float | None = None
     nodata: float | None = None

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 from contextlib import AbstractContextManager, contextmanager, nullcontext
 from dataclasses import dataclass
-from pathlib import Path
+from pathlib import Path, PurePosixPath
 from typing import Any
 
 import numpy as np
@@ -25,6 +25,12 @@ REMOTE_OPTIONS = {
     "GDAL_HTTP_RETRY_DELAY": "1",
     "GDAL_DISABLE_READDIR_ON_OPEN": "EMPTY_DIR",
 }
+
+# How a remote file is read, by its ending, GeoTIFF being the default. Left to choose for itself, the raster library
+# would follow a document that only pretends to be an image to other files, as virtual rasters lead on.
+_REMOTE_DRIVERS = {
+    ".jp2": "JP2OpenJPEG", ".img": "HFA", ".vrt": "VRT", ".dat": "ENVI", ".bsq": "ENVI", ".bil": "ENVI", ".bip": "ENVI"
+}  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True)
@@ -101,7 +107,13 @@ def _gdal_options(path: str) -> AbstractContextManager[Any]:
 def open_raster(path: str) -> rasterio.DatasetReader:
     """Open a raster for reading. Raises DataError."""
     with gdal_errors(path, "this raster cannot be opened"), _gdal_options(path):
-        return rasterio.open(path)
+        return rasterio.open(path, driver=_driver(path))
+
+
+def _driver(path: str) -> str | None:
+    if not is_remote(path):
+        return None
+    return _REMOTE_DRIVERS.get(PurePosixPath(path.partition("?")[0]).suffix.lower(), "GTiff")
 
 
 def read_window(dataset: rasterio.DatasetReader, path: str, bands: list[int], part: Window) -> NDArray[np.generic]:
@@ -131,7 +143,7 @@ def describe(path: str) -> RasterFacts:
             count=dataset.count,
             dtypes=tuple(dataset.dtypes),
             nodata=tuple(dataset.nodatavals),
-            scales=tuple(dataset.scales),
+            scales=_scales(dataset),
             offsets=tuple(dataset.offsets),
             flagged=tuple(bool(outside & set(flags)) for flags in dataset.mask_flag_enums),
             descriptions=tuple(text or "" for text in dataset.descriptions),
@@ -139,6 +151,19 @@ def describe(path: str) -> RasterFacts:
             wavelengths_nm=tuple(_wavelength_nm(dataset, index) for index in dataset.indexes),
             good=_good_bands(dataset),
         )
+
+
+def _scales(dataset: rasterio.DatasetReader) -> tuple[float, ...]:
+    """Scales by band; those of a cube's header are given as what reflectance was multiplied by."""
+    factor = dataset.tags(ns="ENVI").get("reflectance_scale_factor", "")
+    try:
+        multiplied = float(factor) if factor else 1.0
+    except ValueError:
+        multiplied = 1.0
+    own: tuple[float, ...] = tuple(dataset.scales)
+    if multiplied <= 0 or multiplied == 1 or any(scale != 1 for scale in own):
+        return own
+    return (1 / multiplied,) * dataset.count
 
 
 def _wavelength_nm(dataset: rasterio.DatasetReader, band: int) -> float | None:

@@ -1,0 +1,334 @@
+"""Find a scene: recognise a product folder, a folder of bands, a stack or a cube, and say what was assumed.
+
+Nothing is written and nothing is decided for good: the result is a draft for the project file, whose every assumption
+people can read and change.
+"""
+
+from __future__ import annotations
+
+import os
+import re
+from collections.abc import Iterable
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+import numpy as np
+
+from classify.errors import DataError
+from classify.raster.grid import Window
+from classify.raster.roles import distinct, role_in_name, role_of_word, roles_of_wavelengths
+from classify.raster.sensors import Sensor, load_sensor
+from classify.raster.sources import OpenFiles, RasterFacts, describe, is_remote, read_window
+from classify.raster.stac import item_draft, looks_like_item, read_item
+from classify.settings import preset_names
+from classify.settings.starter import BandDraft, MaskDraft, SceneDraft
+
+_RASTERS = {".tif", ".tiff", ".jp2", ".img", ".dat", ".bsq", ".bil", ".bip", ".vrt"}
+_MOST_FILES = 20_000
+_HEADERLESS = ("", ".img", ".dat", ".bsq", ".bil", ".bip", ".raw")
+# A preset is believed when at least this many of its bands are found by name.
+_FEWEST_BANDS = 3
+
+
+def discover(source: str) -> SceneDraft:
+    """A draft of the scene in a folder, a raster file or a STAC item (local or https). Paths come out absolute.
+
+    Raises DataError saying what was found when it is no scene, or more than one.
+    """
+    if looks_like_item(source):
+        return _completed(item_draft(read_item(source), source))
+    path = Path(source)
+    if not is_remote(source) and path.is_dir():
+        return _completed(_from_folder(path.absolute()))
+    if not is_remote(source) and path.suffix.lower() == ".hdr":
+        path = _beside_header(path)
+    return _completed(_from_stack(source if is_remote(source) else str(path.absolute())))
+
+
+def relative_to(draft: SceneDraft, folder: Path) -> SceneDraft:
+    """The same draft with files below `folder` written relative to it, so that the project can be moved as a whole."""
+    base = folder.absolute()
+
+    def shorter(file: str) -> str:
+        if is_remote(file) or not Path(file).is_relative_to(base):
+            return file if is_remote(file) else Path(file).as_posix()
+        return Path(file).relative_to(base).as_posix()
+
+    mask = replace(draft.mask, file=shorter(draft.mask.file)) if draft.mask else None
+    return replace(draft, bands=tuple(replace(b, file=shorter(b.file)) for b in draft.bands), mask=mask)
+
+
+# --- product folders ------------------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class _Match:
+    """Files of one product that a preset explains. files: role -> file; named: its file names carry the product's."""
+
+    name: str
+    sensor: Sensor
+    product: str
+    files: dict[str, Path]
+    mask: Path | None
+    named: bool
+
+
+def _from_folder(folder: Path) -> SceneDraft:
+    files = _raster_files(folder)
+    matches = [match for name in preset_names("sensors") for match in _matches(name, files)]
+    if matches:
+        return _from_match(_best(matches, folder), folder)
+    if not files:
+        raise DataError("no raster was found in this folder", where=str(folder), fix="name the product's own folder")
+    facts = [described for file in files if (described := _described(file))]
+    several = [f for f in facts if f.count > 1]
+    if len(several) == 1 and len(facts) <= 3:
+        return _from_stack(several[0].path)
+    roles = {f.path: role_in_name(Path(f.path).stem) for f in facts if f.count == 1}
+    known = {path: role for path, role in roles.items() if role}
+    if known and len(set(known.values())) == len(known) and not several:
+        return _from_band_files(folder, [f for f in facts if f.path in known], known)
+    listed = ", ".join(str(file.relative_to(folder)) for file in files[:8]) + (" ..." if len(files) > 8 else "")
+    raise DataError(
+        f"the bands of one scene cannot be told from the file names: {listed}", where=str(folder),
+        fix="name one stack with --scene FILE, or write the bands into [scene.bands] by hand",
+    )  # fmt: skip
+
+
+def _raster_files(folder: Path) -> list[Path]:
+    found: list[Path] = []
+    for parent, folders, names in os.walk(folder):
+        folders[:] = sorted(name for name in folders if not name.startswith(".") and name != "outputs")
+        found += [Path(parent, name) for name in sorted(names) if Path(name).suffix.lower() in _RASTERS]
+        if len(found) > _MOST_FILES:
+            what = "this folder holds too many rasters to be one scene"
+            raise DataError(what, where=str(folder), fix="name the folder of one product")
+    return [file for file in found if not file.name.startswith(".")]
+
+
+def _matches(name: str, files: Iterable[Path]) -> list[_Match]:
+    """What a preset explains of the files, by product (date and tile)."""
+    sensor = load_sensor(name)
+    wanted = {text: (role, band.pixel_m) for role, band in sensor.bands.items() for text in band.names}
+    masks = sensor.mask.names if sensor.mask else ()
+    products: dict[str, dict[str, Path]] = {}
+    for file in files:
+        for text in (*wanted, *masks):
+            if product := _product_of(file, text):
+                role = wanted[text][0] if text in wanted else "mask"
+                bands = products.setdefault(product, {})
+                bands[role] = _finer(bands.get(role), file)
+    matches = []
+    for product, bands in products.items():
+        mask = bands.pop("mask", None)
+        # A mask whose name differs more from those of the bands makes a product of its own, without bands: no match.
+        if len(bands) >= _FEWEST_BANDS:
+            text = " ".join(str(file) for file in bands.values())
+            named = bool(sensor.product and re.search(sensor.product, text))
+            matches.append(_Match(name, sensor, product, bands, mask, named))
+    return matches
+
+
+def _product_of(file: Path, text: str) -> str | None:
+    """The rest of a file name that holds `text` between separators, without a resolution such as _10m; None if not."""
+    found = re.fullmatch(rf"(|.*[^A-Za-z0-9]){re.escape(text)}(|[^A-Za-z0-9].*)", file.stem, flags=re.IGNORECASE)
+    if not found:
+        return None
+    rest = re.sub(r"[_-]\d+m$", "", found[1] + found[2]).strip("_-. ")
+    return rest or f"{file.parent}"
+
+
+def _finer(known: Path | None, file: Path) -> Path:
+    """Of two files of one band, the one whose name states the smaller pixel (R10m, _20m); else the first."""
+    if known is None:
+        return file
+    sizes = [re.findall(r"(?:_|R)(\d+)m(?=[_./\\]|$)", str(path)) for path in (known, file)]
+    if not all(sizes):
+        return known
+    return file if int(sizes[1][-1]) < int(sizes[0][-1]) else known
+
+
+def _best(matches: list[_Match], folder: Path) -> _Match:
+    """The match that the product's name confirms, then the one with most bands. Raises DataError for several."""
+    named = [match for match in matches if match.named] or matches
+    most = max(len(match.files) for match in named)
+    products = sorted({match.product for match in named if len(match.files) == most})
+    if len(products) > 1:
+        shown = ", ".join(products[:6])
+        raise DataError(
+            f"this folder holds {len(products)} products: {shown}", where=str(folder),
+            fix="name the folder of one with --scene; further dates go under [[scene.dates]]",
+        )  # fmt: skip
+
+    def fit(match: _Match) -> tuple[int, int]:
+        # Of two presets that fit alike, the narrower rule for names knows the product better; without a name that
+        # either knows, the broader one is the likelier.
+        narrow = len(match.sensor.product or "")
+        return len(match.files), narrow if match.named else -narrow
+
+    return max(named, key=fit)
+
+
+def _from_match(match: _Match, folder: Path) -> SceneDraft:
+    notes = [f"the files are of {match.sensor.title}, by their names ({len(match.files)} bands found)"]
+    if not match.named and match.sensor.product:
+        notes.append("the sensor is a guess, as no file carries the name of the product: check 'sensor'")
+    offset = None
+    scaling = _stated_scaling(folder)
+    if scaling is not None:
+        offset = scaling
+        notes.append(f"reflectance has the offset {scaling:g}, as the product's own metadata say")
+    order = [role for role, band in match.sensor.bands.items() if role in match.files and band.ground]
+    bands = tuple(BandDraft(role, str(match.files[role])) for role in order)
+    if air := [role for role in match.files if role not in order]:
+        notes.append(f"left out, as they show the air and not the ground: {', '.join(air)}")
+    mask = None
+    if match.mask and match.sensor.mask:
+        mask = MaskDraft(str(match.mask), reject=match.sensor.mask.reject)
+        notes.append("the product's own mask is used with its preset's usual list of what to reject")
+    grid = min(order, key=lambda role: match.sensor.bands[role].pixel_m or np.inf)
+    title = f"Land cover, {match.product if Path(match.product).name == match.product else folder.name}"
+    return SceneDraft(
+        title=title, sensor=match.name, grid="red" if _as_fine(match.sensor, "red", grid, order) else grid,
+        offset=offset, bands=bands, mask=mask, assumptions=tuple(notes),
+    )  # fmt: skip
+
+
+def _as_fine(sensor: Sensor, role: str, finest: str, order: list[str]) -> bool:
+    return role in order and sensor.bands[role].pixel_m == sensor.bands[finest].pixel_m
+
+
+def _stated_scaling(folder: Path) -> float | None:
+    """Reflectance offset in the metadata file of a Sentinel-2 product (added offset over quantification), if any.
+
+    Read as text and not as XML: two numbers are wanted, and files from elsewhere may hold entities.
+    """
+    for file in sorted(folder.rglob("MTD_MSIL2A.xml"))[:1]:
+        text = file.read_text(encoding="utf-8", errors="replace")
+        offsets = {float(value) for value in re.findall(r"<BOA_ADD_OFFSET[^>]*>\s*(-?\d+)\s*<", text)}
+        over = re.search(r"<BOA_QUANTIFICATION_VALUE[^>]*>\s*(\d+)\s*<", text)
+        if over and len(offsets) <= 1:
+            return next(iter(offsets), 0.0) / float(over[1])
+    return None
+
+
+def _from_band_files(folder: Path, facts: list[RasterFacts], roles: dict[str, str]) -> SceneDraft:
+    bands = tuple(BandDraft(roles[f.path], f.path, wavelength_nm=f.wavelengths_nm[0]) for f in facts)
+    notes = ("which band is which was read from the file names",)
+    return SceneDraft(title=f"Land cover, {folder.name}", bands=bands, assumptions=notes)
+
+
+# --- stacks and cubes -----------------------------------------------------------------------------------------------
+
+
+def _from_stack(path: str) -> SceneDraft:
+    facts = describe(path)
+    usable = [k for k in range(facts.count) if facts.colours[k] != "alpha" and facts.good[k]]
+    if not usable:
+        raise DataError("this raster has no usable band", where=path, fix="check its list of bad bands")
+    roles, note, sensor = _stack_roles(facts, usable)
+    notes = [note]
+    bad = facts.good.count(False)
+    if bad:
+        notes.append(f"{bad} of {facts.count} bands are left out, as the file's own list calls them bad")
+    bands = tuple(
+        BandDraft(role, path, k + 1, wavelength_nm=facts.wavelengths_nm[k], note=facts.descriptions[k])
+        for role, k in zip(roles, usable, strict=True)
+    )
+    return SceneDraft(title=f"Land cover, {Path(path).stem}", sensor=sensor, bands=bands, assumptions=tuple(notes))
+
+
+def _stack_roles(facts: RasterFacts, usable: list[int]) -> tuple[list[str], str, str | None]:
+    """Roles of the usable bands, how they were found, and a preset that suits them."""
+    wavelengths = [facts.wavelengths_nm[k] for k in usable]
+    known = [w for w in wavelengths if w is not None]
+    if len(known) == len(usable):
+        return (
+            roles_of_wavelengths(known),
+            "roles follow the wavelengths in the file's metadata",
+            "imaging-spectrometer",
+        )
+    words = [role_of_word(facts.descriptions[k]) for k in usable]
+    how = "roles follow the bands' descriptions in the file"
+    if not all(words):
+        words = [role_of_word(facts.colours[k]) for k in usable]
+        how = "roles follow the colours that the file gives its bands"
+        if len(words) == 4 and words[:3] == ["red", "green", "blue"] and words[3] is None:
+            words[3] = "nir"
+            how = "the order of bands is red, green, blue as the file says, and the fourth is taken for near infrared"
+    if not all(words):
+        words, how = _usual_order(len(usable))
+    roles = distinct([str(word) for word in words])
+    fits = {"blue", "green", "red", "nir"}
+    sensor = {4: "airborne-4-band", 5: "drone-5-band"}.get(len(roles)) if fits <= set(roles) else None
+    if sensor and not set(roles) <= set(load_sensor(sensor).bands):
+        sensor = None
+    return roles, how, sensor
+
+
+def _usual_order(count: int) -> tuple[list[str | None], str]:
+    usual: dict[int, list[str | None]] = {
+        3: ["red", "green", "blue"],
+        4: ["blue", "green", "red", "nir"],
+        5: ["blue", "green", "red", "red_edge_1", "nir"],
+    }
+    if count in usual:
+        named = ", ".join(str(role) for role in usual[count])
+        return usual[count], f"the file does not say which band is which: the order {named} is a guess, check it first"
+    numbered: list[str | None] = [f"band_{k}" for k in range(1, count + 1)]
+    return numbered, "the file does not say which band is which: give the bands their roles (red, nir ...) by hand"
+
+
+def _beside_header(header: Path) -> Path:
+    for suffix in _HEADERLESS:
+        if (data := header.with_suffix(suffix)).is_file():
+            return data
+    raise DataError("the data file of this header is missing", where=str(header), fix="put it beside the header")
+
+
+def _described(file: Path) -> RasterFacts | None:
+    """Facts of a file, or None for a picture without a place on earth (a preview) or a broken one."""
+    try:
+        return describe(str(file))
+    except DataError:
+        return None
+
+
+# --- what files leave open ------------------------------------------------------------------------------------------
+
+
+def _completed(draft: SceneDraft) -> SceneDraft:
+    """The draft with a guess of the scale, where neither files nor preset nor item state one."""
+    sensor = load_sensor(draft.sensor) if draft.sensor else None
+    stated = draft.scale is not None or any(band.scale is not None for band in draft.bands)
+    if stated or (sensor and sensor.scale is not None):
+        return draft
+    facts = describe(draft.bands[0].file)
+    if facts.scales[draft.bands[0].band - 1] != 1:
+        return draft
+    scale, why = _guessed_scale(draft.bands[0], facts)
+    if scale is None:
+        return draft
+    return replace(draft, scale=scale, assumptions=(*draft.assumptions, why))
+
+
+def _guessed_scale(band: BandDraft, facts: RasterFacts) -> tuple[float | None, str]:
+    """A scale that brings the values in the middle of the scene to the range of reflectance, and why."""
+    if facts.dtypes[band.band - 1] == "uint8":
+        return 1 / 255, "values of eight bits are brightness, scaled to 0 to 1: they are no calibrated reflectance"
+    grid, side = facts.native, 512
+    row, col = max((grid.height - side) // 2, 0), max((grid.width - side) // 2, 0)
+    part = Window(row, col, side, side).intersect(grid.window)
+    assert part is not None, grid
+    opened = OpenFiles()
+    try:
+        values = read_window(opened.get(band.file), band.file, [band.band], part)[0].astype(np.float64)
+    finally:
+        opened.close()
+    nodata = facts.nodata[band.band - 1]
+    values = values[np.isfinite(values) & (values > 0) & (values != (nodata if nodata is not None else 0))]
+    median = float(np.median(values)) if values.size else 0.0
+    for most, scale in ((2.0, None), (100.0, 0.01), (10_000.0, 1e-4), (np.inf, 1 / 65535)):
+        if median <= most:
+            return scale, f"no scale is stated: values near {median:.4g} suggest {scale:g}, check it" if scale else ""
+    raise AssertionError(median)

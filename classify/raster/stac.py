@@ -1,0 +1,180 @@
+"""A scene named by a STAC item (open standard for describing imagery), from a local file or over https."""
+
+from __future__ import annotations
+
+import json
+import re
+import urllib.parse
+from collections.abc import Mapping
+from dataclasses import replace
+from pathlib import Path
+from typing import Any
+
+from classify.errors import DataError
+from classify.raster.remote import fetch, read_local, resolve
+from classify.raster.roles import red_edge_role, role_in_name, role_of_word
+from classify.raster.sensors import Sensor, load_sensor
+from classify.settings import preset_names
+from classify.settings.starter import BandDraft, MaskDraft, SceneDraft
+
+_RASTER_TYPES = ("image/tiff", "image/jp2", "image/vnd.stac.geotiff", "application/x-geotiff")
+_RASTER_ENDINGS = (".tif", ".tiff", ".jp2")
+_NOT_BANDS = {"thumbnail", "overview", "visual", "metadata", "graphic"}
+
+Json = Mapping[str, Any]
+
+
+def looks_like_item(source: str) -> bool:
+    """Whether a source is a JSON document rather than a folder or a raster."""
+    if "://" in source:
+        path = urllib.parse.urlsplit(source).path
+        return source.startswith(("https:", "http:")) and not path.lower().endswith((*_RASTER_ENDINGS, ".vrt"))
+    return Path(source).suffix.lower() in (".json", ".geojson")
+
+
+def read_item(source: str) -> Json:
+    """The item. Raises DataError when it cannot be reached or is no STAC item."""
+    raw = fetch(source) if "://" in source else read_local(Path(source))
+    try:
+        item = json.loads(raw)
+    except (UnicodeDecodeError, json.JSONDecodeError, RecursionError) as error:
+        raise DataError(f"this is not valid JSON: {error}", where=source) from error
+    kind = item.get("type") if isinstance(item, dict) else None
+    if kind != "Feature" or not isinstance(item.get("assets"), dict):
+        found = f"a STAC {kind}" if kind in ("Catalog", "Collection") else "some other JSON"
+        raise DataError(f"a STAC item is expected, but this is {found}", where=source, fix="name one item of it")
+    return dict(item)
+
+
+def item_draft(item: Json, source: str) -> SceneDraft:
+    """A draft of the scene that an item describes. Raises DataError when it names no bands, or forbidden addresses."""
+    name = str(item.get("id", "scene"))
+    sensor_name = _sensor_of(item)
+    sensor = load_sensor(sensor_name) if sensor_name else None
+    bands: dict[str, BandDraft] = {}
+    finest: dict[str, float] = {}
+    mask: MaskDraft | None = None
+    for key, asset in item["assets"].items():
+        if not _is_raster(asset):
+            continue
+        if sensor and sensor.mask and key.casefold() in {text.casefold() for text in sensor.mask.names}:
+            mask = MaskDraft(resolve(asset["href"], source), reject=sensor.mask.reject)
+            continue
+        for found in _asset_bands(key, asset, sensor):
+            size = _pixel_size(asset)
+            if found.role not in bands or size < finest[found.role]:
+                bands[found.role] = replace(found, file=resolve(asset["href"], source))
+                finest[found.role] = size
+    if not bands:
+        raise DataError("this item names no asset that is a reflectance band", where=source, fix="name another item")
+    notes = ["bands, scale and offset are those that the STAC item states"]
+    notes.append(f"the sensor is {sensor.title}" if sensor else "no preset fits the item's platform")
+    notes.append(
+        "the item's mask is used with its preset's usual list" if mask else "the item has no mask that is known"
+    )
+    return SceneDraft(
+        title=f"Land cover, {name}",
+        sensor=sensor_name,
+        bands=tuple(bands.values()),
+        mask=mask,
+        assumptions=tuple(notes),
+    )
+
+
+# --- what an item says ----------------------------------------------------------------------------------------------
+
+
+def _sensor_of(item: Json) -> str | None:
+    """The preset whose product rule fits the item's name or its files; the longer rule where two do."""
+    hrefs = (asset.get("href", "") for asset in item["assets"].values() if isinstance(asset, dict))
+    text = " ".join(map(str, (item.get("id", ""), *hrefs)))
+    fitting = {}
+    for name in preset_names("sensors"):
+        rule = load_sensor(name).product
+        if rule and re.search(rule, text):
+            fitting[name] = rule
+    return max(fitting, key=lambda name: len(fitting[name]), default=None)
+
+
+def _is_raster(asset: object) -> bool:
+    if not isinstance(asset, dict) or not isinstance(asset.get("href"), str):
+        return False
+    if _NOT_BANDS & {str(role) for role in _list(asset.get("roles"))}:
+        return False
+    kind = str(asset.get("type", "")).partition(";")[0].strip().casefold()
+    path = urllib.parse.urlsplit(asset["href"]).path.lower()
+    if path.endswith(".vrt"):
+        return False  # it could lead on to files that the item may not name
+    return kind in _RASTER_TYPES or (not kind and path.endswith(_RASTER_ENDINGS))
+
+
+def _asset_bands(key: str, asset: Json, sensor: Sensor | None) -> list[BandDraft]:
+    """Bands of an asset: by the item's band tables, else by the preset's names or the asset's own name."""
+    tables = _band_tables(asset) or [{}]
+    found = []
+    for number, band in enumerate(tables, 1):
+        role = _role(key if len(tables) == 1 else "", band, sensor)
+        if role is None:
+            continue
+        micrometres = _number(_either(band, "eo:center_wavelength", "center_wavelength"))
+        draft = BandDraft(
+            role=role,
+            file="",
+            band=number,
+            scale=_number(_either(band, "raster:scale", "scale", otherwise=asset.get("raster:scale"))),
+            offset=_number(_either(band, "raster:offset", "offset", otherwise=asset.get("raster:offset"))),
+            nodata=_number(_either(band, "nodata", otherwise=asset.get("nodata"))),
+            wavelength_nm=round(1000 * micrometres, 3) if micrometres and micrometres > 0 else None,
+            note=str(band.get("description") or asset.get("title") or ""),
+        )
+        found.append(draft)
+    return found
+
+
+def _band_tables(asset: Json) -> list[dict[str, Any]]:
+    """Band tables of an asset, from `bands` (STAC 1.1) or from `eo:bands` and `raster:bands` side by side (before)."""
+    lists = [_list(asset.get(name)) for name in ("bands", "eo:bands", "raster:bands")]
+    length = max(len(one) for one in lists)
+    tables: list[dict[str, Any]] = [{} for _ in range(length)]
+    for one in lists:
+        for table, given in zip(tables, one, strict=False):
+            if isinstance(given, dict):
+                table.update(given)
+    return tables
+
+
+def _role(key: str, band: Json, sensor: Sensor | None) -> str | None:
+    if sensor:
+        names = {text.casefold(): role for role, known in sensor.bands.items() for text in known.names if known.ground}
+        for text in (band.get("name"), key):
+            if isinstance(text, str) and text.casefold() in names:
+                return names[text.casefold()]
+    common = _either(band, "eo:common_name", "common_name")
+    micrometres = _number(_either(band, "eo:center_wavelength", "center_wavelength"))
+    if common == "rededge" and micrometres:
+        return red_edge_role(1000 * micrometres)
+    for text in (common, band.get("name"), key):
+        if isinstance(text, str) and (role := role_of_word(text) or role_in_name(text)):
+            return role if role != "water_vapour" else None
+    return None
+
+
+def _pixel_size(asset: Json) -> float:
+    sizes = [
+        _number(table.get(name)) for table in (asset, *_band_tables(asset)) for name in ("gsd", "spatial_resolution")
+    ]
+    return min((size for size in sizes if size), default=float("inf"))
+
+
+def _list(value: object) -> list[Any]:
+    return value if isinstance(value, list) else []
+
+
+def _either(table: Json, *names: str, otherwise: object = None) -> object:
+    return next((table[name] for name in names if table.get(name) is not None), otherwise)
+
+
+def _number(value: object) -> float | None:
+    if isinstance(value, bool) or not isinstance(value, int | float):
+        return float("nan") if value == "nan" else None
+    return float(value)
