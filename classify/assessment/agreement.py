@@ -73,5 +73,5 @@ def kappa(t: Tally, proportions: Floats) -> Linearised:
     centre = float(t.share @ (slope * t.mapped)) / mapped_share
     d = (t.mapped * (slope - centre) / mapped_share)[:, None]
     variance, freedom = variances(t, d, (t.group_size > 0)[:, None])
-    factor = (n - 1) / n if t.simple else 1.0
-    return Linearised(value, float(np.sqrt(variance[0] * factor)), float(freedom[0]), float(n))
+    factor, size = (n - 1) / n if t.simple else 1.0, np.inf if t.census else float(n)
+    return Linearised(value, float(np.sqrt(variance[0] * factor)), float(freedom[0]), size)

@@ -28,6 +28,7 @@ Flags = NDArray[np.bool_]
 
 # Distinct keys up to this many are found by counting, which is quicker than sorting.
 _COUNTABLE = 4_000_000
+_ROUNDING = 1e-13
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -66,6 +67,11 @@ class Tally:
     def mapped(self) -> Floats:
         """float64 (c,): 1 for cells on the map, 0 off it. The x of every mean over the mapped area."""
         return np.asarray(self.map != NO_LABEL, dtype=np.float64)
+
+    @property
+    def census(self) -> bool:
+        """Whether every unit of the population was taken, so that nothing is left to chance."""
+        return bool((self.fraction[self.group_size > 0] >= 1).all())
 
     @property
     def simple(self) -> bool:
@@ -146,7 +152,8 @@ def linearise_differences(t: Tally, pairs: Sequence[tuple[Ratio, Ratio]]) -> lis
     firsts, seconds = [first for first, _ in pairs], [second for _, second in pairs]
     (value_1, d_1), (value_2, d_2) = _residuals(t, firsts), _residuals(t, seconds)
     variance, freedom = variances(t, d_2 - d_1, _touched(t, firsts) | _touched(t, seconds))
-    return _packed(value_2 - value_1, variance, freedom, np.full(len(pairs), np.nan))
+    size = np.full(len(pairs), np.inf if t.census else np.nan)
+    return _packed(value_2 - value_1, variance, freedom, size)
 
 
 def variances(t: Tally, d: Floats, touched: Flags) -> tuple[Floats, Floats]:
@@ -161,6 +168,8 @@ def variances(t: Tally, d: Floats, touched: Flags) -> tuple[Floats, Floats]:
     means = _divide(_sum_by(t.group, t.repeats[:, None] * per_unit, n_groups), n)
     squares = _sum_by(t.group, t.repeats[:, None] * (per_unit - means[t.group]) ** 2, n_groups)
     spread = np.where(n > 1, (1 - t.fraction) * n / np.maximum(n - 1, 1), np.where(t.fraction >= 1, 0.0, np.nan))
+    # What rounding leaves of residuals that are all alike is no variance.
+    squares = np.where(squares < (_ROUNDING * np.abs(d).max(axis=0)) ** 2, 0.0, squares)
     parts = np.where(touched, squares * spread[:, None], 0.0)
     variance = parts.sum(axis=0)
     with np.errstate(divide="ignore", invalid="ignore"):

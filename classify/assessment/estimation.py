@@ -12,7 +12,7 @@ from classify.assessment import statistics as st
 from classify.assessment.agreement import area_matrix, disagreement, kappa, kappa_values
 from classify.assessment.estimate import Floats, Linearised, Ratio, Tally, linearise, tally
 from classify.assessment.evidence import EVIDENCE
-from classify.assessment.findings import findings, region_findings
+from classify.assessment.findings import findings, kappa_findings, region_findings, unseen_findings
 from classify.assessment.intervals import Bounds, Estimate, proportion, signed
 from classify.assessment.options import AssessmentOptions
 from classify.assessment.result import (
@@ -41,7 +41,7 @@ def estimate_sample(sample: ReferenceSample, options: AssessmentOptions) -> Asse
     shown = iter(estimator.proportions(ratios))
     overall = next(shown)
     users, producers, harmonic, areas = ({name: next(shown) for name in sample.classes} for _ in makers)
-    differing = disagreement(proportions)
+    differing, agreement = disagreement(proportions), estimator.kappa(proportions)
     total = mapped_total(sample, t)
     return Assessment(
         evidence_name=sample.evidence, confidence_level=options.confidence_level, classes=sample.classes,
@@ -50,11 +50,14 @@ def estimate_sample(sample: ReferenceSample, options: AssessmentOptions) -> Asse
         matrix_counts=counts_matrix(sample), matrix_area_proportions=proportions, overall_accuracy=overall,
         users_accuracy=users, producers_accuracy=producers, f1=harmonic,
         area={c: _area(sample, i, areas[c], total) for i, c in enumerate(sample.classes)},
-        kappa=estimator.kappa(proportions), disagreement=differing,
+        kappa=agreement, disagreement=differing,
         either_label=_either_label(sample, t, estimator),
         unlabelled=_unlabelled(sample, options),
         regions=_regions(sample, t, estimator, total),
-        problems=(*sample.problems, *findings(sample, t, proportions), *region_findings(sample, t)),
+        problems=(
+            *sample.problems, *findings(sample, t, proportions), *unseen_findings(sample, t, list(areas.values())),
+            *kappa_findings(agreement), *region_findings(sample, t),
+        ),
     )  # fmt: skip
 
 

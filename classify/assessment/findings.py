@@ -8,6 +8,7 @@ import numpy as np
 
 from classify.assessment.estimate import Floats, Tally
 from classify.assessment.evidence import EVIDENCE
+from classify.assessment.intervals import Estimate
 from classify.assessment.sample import ReferenceSample
 from classify.errors import Problem
 
@@ -24,6 +25,42 @@ def findings(sample: ReferenceSample, t: Tally, proportions: Floats) -> tuple[Pr
         *_evidence(sample), *_off_map(sample), *_unlabelled(sample), *about_chance,
         *_one_sided_classes(sample, proportions), *_mapped_areas(sample),
     )  # fmt: skip
+
+
+def unseen_findings(sample: ReferenceSample, t: Tally, areas: Sequence[Estimate]) -> Iterator[Problem]:
+    """Warn where a class may hide in a stratum whose points show none of it, far beyond what its interval admits.
+
+    areas: estimated share of the mapped area per class. Where none of n points is of the class, its share of the
+    stratum is below 1 - 0.05^(1/n) with 95 % confidence (exact binomial; about 3 / n). Intervals are built on what was
+    seen and cannot know of it; the warning comes when it would triple the distance to the upper limit.
+    """
+    if not EVIDENCE[sample.evidence].has_intervals:
+        return
+    hidden_share = np.where(t.points > 0, 1 - 0.05 ** (1 / np.maximum(t.group_size, 1)), 0.0) * t.weights
+    # A census hides nothing.
+    hidden_share = np.where(t.fraction >= 1, 0.0, hidden_share)
+    for c, name in enumerate(sample.classes):
+        share = areas[c]
+        if share.estimate is None or share.upper is None or share.estimate == 0:
+            continue
+        seen = np.bincount(t.stratum, t.reference == c, minlength=len(sample.strata)) > 0
+        worst = int(np.where(seen, 0.0, hidden_share).argmax())
+        if not seen[worst] and hidden_share[worst] > 2 * (share.upper - share.estimate):
+            area = hidden_share[worst] * sum(s.area for s, n in zip(sample.strata, t.points, strict=True) if n)
+            yield _warning(
+                f"class {name!r} was not found in stratum {sample.strata[worst].name!r}, but up to {area:,.4g}"
+                f"{_unit(sample)} of it could lie there unseen by {int(t.points[worst])} points; the intervals of its "
+                "area and producer's accuracy do not cover that",
+                "draw more points in that stratum if the class matters",
+            )
+
+
+def kappa_findings(kappa: Estimate) -> Iterator[Problem]:
+    """Say why kappa, or its interval, is missing."""
+    if kappa.estimate is None:
+        yield _warning("kappa cannot be estimated, as a single class fills both map and reference")
+    elif kappa.standard_error == 0 and kappa.lower is None:
+        yield _warning("kappa has no interval, as no labelled point disagrees with the map")
 
 
 def region_findings(sample: ReferenceSample, t: Tally) -> Iterator[Problem]:

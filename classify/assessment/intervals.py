@@ -11,6 +11,9 @@ from scipy import special
 from classify.assessment.estimate import Linearised
 from classify.settings.model import IntervalName
 
+# Below so many degrees of freedom the normal quantile is more than 2 % short of Student's at 95 %.
+_FEW = 60
+
 
 @dataclass(frozen=True, slots=True)
 class Estimate:
@@ -61,46 +64,41 @@ class Bounds:
 
 
 def proportion(found: Linearised, level: float, method: IntervalName, bounds: Bounds | None = None) -> Estimate:
-    """An estimate of a quantity in 0..1 with its interval at confidence `level`. bounds: from the bootstrap."""
+    """An estimate of a quantity in 0..1 with its interval at confidence `level`. bounds: from the bootstrap.
+
+    Wilson unless another is asked for: in the coverage study beside the tests it alone holds the truth as often as it
+    says at 50 to 100 points per stratum. It also stands in wherever nothing varies in the sample (all right, or none),
+    where every other kind would claim certainty.
+    """
     if math.isnan(found.value):
         return Estimate(None)
     value = min(max(found.value, 0.0), 1.0)
     if math.isnan(found.standard_error):
         return Estimate(value)
+    if method in ("automatic", "wilson") or found.standard_error == 0:
+        return Estimate(value, found.standard_error, *_wilson(value, found, level), "wilson")
     if bounds is not None:
         return _bootstrapped(value, found.standard_error, bounds)
-    chosen = chosen_interval(found) if method == "automatic" else method
-    if chosen == "wilson":
-        lower, upper = _wilson(value, found, level)
-        return Estimate(value, found.standard_error, lower, upper, "wilson")
-    return _symmetric(value, found, level, chosen, (0, 1))
+    return _symmetric(value, found, level, method, (0, 1))
 
 
 def signed(found: Linearised, level: float, method: IntervalName, bounds: Bounds | None = None) -> Estimate:
-    """An estimate of a quantity in -1..1 (kappa, a difference of accuracies) with its interval. Wilson does not apply
-    to it: Student's t stands in where degrees of freedom are few. bounds: from the bootstrap."""
+    """An estimate of a quantity in -1..1 (kappa, a difference of accuracies) with its interval. bounds: from the
+    bootstrap.
+
+    Wilson does not apply to it: normal, or Student's t where degrees of freedom are few. Where nothing varies in the
+    sample no interval is given, unless the sample is a census.
+    """
     if math.isnan(found.value):
         return Estimate(None)
     if math.isnan(found.standard_error):
         return Estimate(found.value)
+    if found.standard_error == 0 and not math.isinf(found.effective_size):
+        return Estimate(found.value, 0.0)
     if bounds is not None:
         return _bootstrapped(found.value, found.standard_error, bounds)
-    student = method == "student" or (method in ("automatic", "wilson") and found.freedom < _FEW)
+    student = method == "student" or (method != "normal" and found.freedom < _FEW)
     return _symmetric(found.value, found, level, "student" if student else "normal", (-1, 1))
-
-
-# Below so many degrees of freedom the normal quantile is more than 2 % short of Student's at 95 %.
-_FEW = 60
-
-
-def chosen_interval(found: Linearised) -> IntervalName:
-    """The rule behind "automatic": see the coverage study in tests/.
-
-    Normal where the effective sample holds at least ten of each kind (rule of thumb, common practice) and degrees of
-    freedom are not few, Wilson elsewhere.
-    """
-    rarer = min(found.value, 1 - found.value) * found.effective_size
-    return "normal" if rarer >= 10 and found.freedom >= _FEW else "wilson"
 
 
 def _symmetric(

@@ -33,7 +33,7 @@ class TableName:
 class AssessmentOptions:
     """How to assess.
 
-    confidence_level: in (0.5, 1). interval: "automatic" picks by the rule stated in `intervals.chosen_interval`.
+    confidence_level: in (0.5, 1). interval: "automatic" is Wilson for proportions, else normal or Student.
     replicates, seed: of the bootstrap. finite_population: correct for the part of the population that was sampled,
     where the strata give counts of its units. kind: how points were drawn; None for stratified, or simple random with
     one stratum. evidence: what the sample may claim. classes: names in order; None for those that occur. merge: class
