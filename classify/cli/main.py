@@ -15,6 +15,7 @@ COMMANDS = {
     "check": ("classify.cli.check", "Read everything, touch nothing, list every problem."),
     "train": ("classify.cli.train", "Fit the model and screen it on held-out polygons."),
     "classify": ("classify.cli.classify", "Map the scene with the trained model."),
+    "plan": ("classify.cli.plan", "Plan a reference sample: its size and allocation."),
     "assess": ("classify.cli.assess", "Estimate accuracy and areas from a labelled reference sample."),
     "compare": ("classify.cli.compare", "Compare two maps on one reference sample."),
     "report": ("classify.cli.report", "Write the report."),
