@@ -99,8 +99,6 @@ class Code:
 class Explorer:
     """Where the interactive viewer stands in the HTML; other forms leave it out."""
 
-    intro: Rich
-
 
 Block = Paragraph | Subheading | Table | Figure | Legend | Pairs | Listing | Code | Explorer
 

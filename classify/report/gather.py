@@ -15,6 +15,7 @@ from classify.report.facts import (
     AccuracyFacts,
     ClassFact,
     Heading,
+    MapFact,
     ModelFacts,
     Provenance,
     ReportFacts,
@@ -23,6 +24,7 @@ from classify.report.facts import (
 )
 from classify.report.picture import map_fact, read_logo
 from classify.report.sample import sample_facts
+from classify.report.scene_picture import scene_layers
 from classify.settings import Project
 from classify.settings.model import M2_PER_UNIT
 
@@ -50,7 +52,7 @@ def gather_facts(project: Project, outputs: Path) -> ReportFacts:
         unit=project.report.area_unit,
         level=project.report.confidence_level,
         classes=classes,
-        map=None if "classify" in missing else map_fact(outputs / "map", classes, ()),
+        map=None if "classify" in missing else _map(project, outputs / "map", classes),
         accuracy=None if assessment is None else accuracy_facts(assessment, outputs / _MADE_BY["assess"]),
         model=None if card is None else _model(card),
         review=_json(outputs / "training" / "review.json"),
@@ -92,6 +94,10 @@ def _estimate(content: Mapping[str, Any]) -> Estimate:
 
 def _by_class(content: Mapping[str, Any], classes: Sequence[str]) -> dict[str, Estimate]:
     return {name: _estimate(content[name]) for name in classes}
+
+
+def _map(project: Project, folder: Path, classes: Sequence[ClassFact]) -> MapFact:
+    return map_fact(folder, classes, scene_layers(project, folder / "cover.tif"))
 
 
 def _classes(project: Project, outputs: Path) -> tuple[ClassFact, ...]:

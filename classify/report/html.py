@@ -9,6 +9,7 @@ from markupsafe import Markup
 
 from classify.report import cells
 from classify.report.document import Document
+from classify.report.explore import explore
 from classify.report.facts import ReportFacts
 from classify.report.identity import css_tokens
 from classify.report.messages import load_messages
@@ -21,6 +22,7 @@ def render_html(document: Document, facts: ReportFacts) -> str:
     words = load_messages(document.language)
     return _environment().get_template("report.html").render(
         document=document, facts=facts, words=words, tokens=Markup(css_tokens()), cells=cells, colour=facts.colour,
+        explore=explore(facts, words),
         direction="rtl" if document.language in _RIGHT_TO_LEFT else "ltr", known={c.name for c in facts.classes},
     )  # fmt: skip
 

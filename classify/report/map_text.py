@@ -30,7 +30,7 @@ def _blocks(facts: ReportFacts, fact: MapFact, words: Messages) -> Iterator[Bloc
         words.text("map.alt", count=len(facts.classes), names=names),
     )  # fmt: skip
     yield Legend(words.text("map.legend"), tuple((c.colour, c.name) for c in facts.classes), words.text("map.no_data"))
-    yield Explorer(words.rich("explore.text"))
+    yield Explorer()
     confidence = fact.layer("confidence")
     if confidence is not None:
         yield _inset(fact, "confidence", words)

@@ -48,9 +48,13 @@ class Messages:
 
     def rich(self, key: str, **values: object) -> Rich:
         """The sentence `key` with its values and its strong stretches."""
+        return _filled(self.template(key), values)
+
+    def template(self, key: str) -> str:
+        """The sentence `key` with its places unfilled, for the script of a page to fill."""
         found = self._find(key)
         assert isinstance(found, str), key
-        return _filled(found, values)
+        return found
 
     def listing(self, key: str) -> tuple[Rich, ...]:
         """A list of sentences."""

@@ -70,6 +70,12 @@ def read_small(path: Path) -> tuple[Grid, NDArray[np.uint8]]:
                         fix="run 'landassay classify' again") from error  # fmt: skip
 
 
+def read_grid(path: Path) -> Grid:
+    """The grid of a raster. Raises RasterioError."""
+    with rasterio.open(path) as source:
+        return Grid(source.crs, source.transform, source.height, source.width)
+
+
 def ground_frame(grid: Grid) -> tuple[tuple[float, float], float]:
     """Ground size of the pixel at the centre (down, across) in metres, and true north clockwise from up, degrees.
 
