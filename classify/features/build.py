@@ -9,7 +9,7 @@ from functools import partial
 
 from classify.errors import Problem, SettingsError
 from classify.features.dip_bands import absorption_step, one_each, rising
-from classify.features.facts import SceneFacts
+from classify.features.facts import NEAR_NM, NO_FACTS, SceneFacts, describe_band
 from classify.features.formula import CONSTANTS, Formula, FormulaError, parse_formula, point_at
 from classify.features.indices import find_index, index_catalogue, nearest_index
 from classify.features.neighbourhood import terrain_step, texture_steps
@@ -17,8 +17,6 @@ from classify.features.recipe import Recipe
 from classify.features.spectra import smoothing_weights
 from classify.features.steps import ComponentStep, FormulaStep, SmoothedBand, Step
 from classify.settings.model import FeatureSettings
-
-NO_FACTS = SceneFacts()
 
 
 def build_recipe(settings: FeatureSettings, roles: Collection[str], facts: SceneFacts = NO_FACTS) -> Recipe:
@@ -225,9 +223,12 @@ class _Builder:
 
     def _provide(self, name: str) -> bool:
         """Make sure that a layer is there for a name: one of the scene, a feature, or an index not listed as one."""
-        if name in self.roles:
+        if name in self.roles or name in self.steps:
             return True
         if name not in self.plans:
+            if near := self.facts.band_near(name):
+                self.steps[name] = FormulaStep(name, near)
+                return True
             if name in self.settings.formulas:
                 return True  # could not be read, which has been reported
             if find_index(name.partition("@")[0]) is None:
@@ -238,11 +239,14 @@ class _Builder:
 
     def _report_missing(self, name: str, plan: _Plan, missing: list[str]) -> None:
         if find_index(name.partition("@")[0]) is not None:
-            bands = ("band " if len(missing) == 1 else "bands ") + " and ".join(map(repr, missing))
+            bands = " and ".join(map(describe_band, missing))
             self._problem(
                 f"index {name!r} needs {bands}, which the scene does not have", plan.where,
                 "leave the index out, or name the band in [scene.bands]",
             )  # fmt: skip
+            return
+        if unseen := [part for part in missing if NEAR_NM.fullmatch(part)]:
+            self._problem(f"the scene does not have {describe_band(unseen[0])}{plan.needs[unseen[0]]}", plan.where)
             return
         known = [*self.roles, *self.names, *index_catalogue()]
         for part in missing:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
@@ -18,6 +19,11 @@ from classify.raster.scene import Scene
 _STEP_PX = 8
 
 
+# Names that formulas give to bands by their wavelength.
+NEAR_NM = re.compile(r"nm_(?P<nm>[0-9]{3,5})(@(?P<date>[A-Za-z0-9_]+))?")
+NEAR_ENOUGH_NM = 10
+
+
 @dataclass(frozen=True)
 class SceneFacts:
     """wavelengths_nm: centre wavelength of layers that have one. ancillary: layers that are no reflectance bands.
@@ -30,6 +36,25 @@ class SceneFacts:
     ancillary: frozenset[str] = frozenset()
     pixel_m: PixelVectors | None = None
     shape_yx: tuple[int, int] | None = None
+
+    def band_near(self, name: str) -> str | None:
+        """The band that a name such as nm_531, or nm_531@wet, stands for: the nearest within 10 nm; None if none is."""
+        match = NEAR_NM.fullmatch(name)
+        if match is None:
+            return None
+        wanted, date = float(match["nm"]), match["date"] or ""
+        apart = {role: abs(nm - wanted) for role, nm in self.wavelengths_nm.items() if role.partition("@")[2] == date}
+        role = min(apart, key=lambda role: apart[role], default=None)
+        return role if role is not None and apart[role] <= NEAR_ENOUGH_NM else None
+
+
+NO_FACTS = SceneFacts()
+
+
+def describe_band(name: str) -> str:
+    """How to call a band that is missing."""
+    match = NEAR_NM.fullmatch(name)
+    return f"a band within {NEAR_ENOUGH_NM} nm of {match['nm']} nm" if match else f"band {name!r}"
 
 
 def scene_facts(scene: Scene) -> SceneFacts:

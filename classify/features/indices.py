@@ -11,6 +11,7 @@ from types import MappingProxyType
 from typing import Any
 
 from classify.errors import Problem, SettingsError
+from classify.features.facts import NO_FACTS, SceneFacts, describe_band
 from classify.features.formula import Formula, FormulaError, parse_formula
 from classify.settings.presets import configs_folder, read_toml
 
@@ -50,7 +51,7 @@ class Availability:
     @property
     def reason(self) -> str:
         """Why the index cannot be computed, in one phrase, or ""."""
-        return f"the scene has no band {' and no band '.join(self.missing)}" if self.missing else ""
+        return f"the scene lacks {' and '.join(map(describe_band, self.missing))}" if self.missing else ""
 
 
 @cache
@@ -124,13 +125,14 @@ def bands_of(index: Index) -> tuple[str, ...]:
     return tuple(found)
 
 
-def index_availability(roles: Collection[str]) -> tuple[Availability, ...]:
+def index_availability(roles: Collection[str], facts: SceneFacts = NO_FACTS) -> tuple[Availability, ...]:
     """For every index of the catalogue, in its order, which bands a scene with these `roles` lacks.
 
-    A band counts as present if the scene has it on its own or for at least one date (`nir@2024_06`).
+    A band counts as present if the scene has it on its own or for at least one date (`nir@2024_06`); one that is called
+    by its wavelength, if `facts` know it.
     """
     have = set(roles) | {role.partition("@")[0] for role in roles}
     return tuple(
-        Availability(index, tuple(role for role in bands_of(index) if role not in have))
+        Availability(index, tuple(r for r in bands_of(index) if r not in have and not facts.band_near(r)))
         for index in index_catalogue().values()
     )
