@@ -21,17 +21,17 @@ from typing import Any, Literal
 from classify import __version__
 from classify.assessment import assess_project
 from classify.errors import DataError, Problem
-from classify.features import build_recipe, fit_recipe, scene_facts
+from classify.features import Recipe, build_recipe, fit_recipe, scene_facts
 from classify.files import read_json, remove_leftovers, sha256, write_json
 from classify.mapping.classify_scene import MapOptions, classify_scene
-from classify.models import fit_model, load_model, save_model
+from classify.models import fit_model, inspect_training, load_model, save_model
 from classify.progress import SILENT, Progress
 from classify.raster.scene import open_scene
 from classify.report import gather_facts, write_report
 from classify.settings import Project
-from classify.training import PixelCaps, extract_pixels, read_polygons, write_pixels
+from classify.training import PixelCaps, TrainingSet, extract_pixels, read_polygons, write_pixels
 
-StageName = Literal["train", "classify", "assess", "report"]
+StageName = Literal["review", "train", "classify", "assess", "report"]
 State = Literal["done", "stale", "missing", "not asked for"]
 
 _LIBRARIES = ("numpy", "scipy", "pandas", "scikit-learn", "rasterio", "geopandas", "pyproj", "shapely", "skops")
@@ -139,16 +139,16 @@ def _require_earlier(stage: Stage, project: Project) -> None:
 # --- the stages -----------------------------------------------------------------------------------------------------
 
 
+def _review(job: Job) -> StageResult:
+    training, _, warnings = _training_pixels(job)
+    content = inspect_training(training, job.project, job.jobs, job.progress).to_json()
+    write_json(job.outputs / "training" / "review.json", content)
+    return StageResult({"suspects": content["suspects"], "separability": content["separability"]}, warnings)
+
+
 def _train(job: Job) -> StageResult:
     project = job.project
-    scene = open_scene(project.scene, project)
-    recipe = build_recipe(project.features, scene.roles, scene_facts(scene))
-    recipe = fit_recipe(recipe, scene, project.project.seed, job.progress)
-    polygons = read_polygons(project, scene.grid)
-    caps = PixelCaps(
-        project.training.pixels_per_polygon, project.training.pixels_per_class, seed=project.project.seed
-    )
-    training = extract_pixels(polygons, scene, recipe, job.jobs, job.progress, caps=caps)
+    training, recipe, warnings = _training_pixels(job)
     model = fit_model(training, project, recipe, project.project.seed, job.jobs, job.progress)
     write_pixels(training, job.outputs / "training" / "pixels.parquet", recipe=recipe.to_json())
     save_model(model, job.outputs / "model")
@@ -157,7 +157,19 @@ def _train(job: Job) -> StageResult:
         "screening": model.card["screening"],
     }  # fmt: skip
     said = (Problem(text, severity="warning") for text in model.card["warnings"])
-    return StageResult(summary, (*scene.warnings, *training.problems, *said))
+    return StageResult(summary, (*warnings, *said))
+
+
+def _training_pixels(job: Job) -> tuple[TrainingSet, Recipe, tuple[Problem, ...]]:
+    project, seed = job.project, job.project.project.seed
+    scene = open_scene(project.scene, project)
+    recipe = build_recipe(project.features, scene.roles, scene_facts(scene))
+    recipe = fit_recipe(recipe, scene, seed, job.progress)
+    polygons = read_polygons(project, scene.grid)
+    settings = project.training
+    caps = PixelCaps(settings.pixels_per_polygon, settings.pixels_per_class, seed=seed)
+    training = extract_pixels(polygons, scene, recipe, job.jobs, job.progress, caps=caps)
+    return training, recipe, (*scene.warnings, *training.problems)
 
 
 def _classify(job: Job) -> StageResult:
@@ -212,6 +224,10 @@ def _with_companions(project: Project, written: str) -> list[str]:
 
 STAGES: tuple[Stage, ...] = (
     Stage(
+        "review", (), ("project.title", "project.seed", "scene", "classes", "training", "features"), _training_inputs,
+        ("training/review.json",), _review,
+    ),
+    Stage(
         "train", (), ("project.seed", "scene", "classes", "training", "features", "model"),
         _training_inputs,
         ("training/pixels.parquet", "model/model.skops", "model/model.json"), _train,
@@ -224,7 +240,7 @@ STAGES: tuple[Stage, ...] = (
         "assess", ("classify",), ("classes", "reference", "report"), _reference_inputs,
         ("assessment/assessment.json",), _assess, lambda project: project.reference is not None,
     ),
-    Stage("report", ("train", "classify", "assess"), ("project", "classes", "report"), lambda project: [],
+    Stage("report", ("review", "train", "classify", "assess"), ("project", "classes", "report"), lambda project: [],
           ("report/report.html",), _report),
 )  # fmt: skip
 

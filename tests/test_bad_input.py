@@ -21,7 +21,11 @@ def run(folder: Path, command: str = "run"):
     result = CliRunner().invoke(cli, [command, "--project", str(folder), "--quiet"])
     if result.exception is not None and not isinstance(result.exception, SystemExit | LandassayError):
         raise result.exception
-    return (1, str(result.exception)) if isinstance(result.exception, LandassayError) else (result.exit_code, result.stderr)
+    return (
+        (1, str(result.exception))
+        if isinstance(result.exception, LandassayError)
+        else (result.exit_code, result.stderr)
+    )
 
 
 def edit(folder: Path, old: str, new: str) -> None:

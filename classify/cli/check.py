@@ -10,14 +10,19 @@ import click
 
 from classify.cli.common import Call, common_options
 from classify.cli.render import percent, table
+from classify.cli.run import run_stages
 
 
 @click.command("check", help="Read everything, touch nothing, list every problem.")
+@click.option("--review", is_flag=True, help="Also review the training polygons, into outputs/training.")
 @common_options
-def command(call: Call) -> None:
+def command(call: Call, review: bool) -> None:
     """Check the project; exit with 1 when something must be mended before it can run."""
     from classify.checking import check_project
 
+    if review:
+        run_stages(call, ["review"], force=False)
+        return
     result = check_project(call.project(), call.jobs, call.progress())
     facts = result.to_json()
     call.show(facts, _text(facts))

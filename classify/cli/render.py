@@ -31,6 +31,23 @@ def percent(value: float | None) -> str:
     return "-" if value is None else f"{100 * value:.1f} %"
 
 
+def _review(summary: Mapping[str, Any]) -> str:
+    lines = []
+    if summary["suspects"]:
+        lines.append("training polygons to look at, most suspect first:")
+        lines += [_suspect(suspect) for suspect in summary["suspects"]]
+    else:
+        lines.append("no suspect training polygon")
+    weak = [pair for pair in summary["separability"]["pairs"] if pair["verdict"] == "weak"]
+    if weak:
+        lines.append(f"{len(weak)} pairs of classes are hard to tell apart; see outputs/training/review.json")
+    return "\n".join(lines)
+
+
+def _suspect(suspect: Mapping[str, Any]) -> str:
+    return "{rank}. polygon {polygon} ({class_name}): {sentence}".format_map(suspect)
+
+
 def _train(summary: Mapping[str, Any]) -> str:
     lines = [f"{summary['polygons']} polygons, {summary['pixels']:,} pixels, {len(summary['features'])} features"]
     accuracy = summary["screening"]["screening_accuracy"]
@@ -78,4 +95,4 @@ def _report(summary: Mapping[str, Any]) -> str:
     return "\n".join(summary["files"])
 
 
-_LINES = {"train": _train, "classify": _classify, "assess": assessment_text, "report": _report}
+_LINES = {"review": _review, "train": _train, "classify": _classify, "assess": assessment_text, "report": _report}
