@@ -16,8 +16,9 @@ from rasterio.crs import CRS
 
 from classify.assessment import assess_project
 from classify.files import write_json
-from classify.mapping.classify_scene import CONFIDENCE_LAYER, cover_layer
-from classify.mapping.writer import cog_writer
+from classify.mapping.byte_raster import ByteRaster
+from classify.mapping.classify_scene import layer_of
+from classify.mapping.writer import write_cog
 from classify.raster.grid import Grid
 from classify.settings import Project, load_project
 
@@ -125,11 +126,12 @@ def _map(folder: Path, project: Project, pixels) -> np.ndarray:
     percent = np.clip(40 + 60 * np.abs(np.sin(field * 3)), 0, 100).astype(np.uint8)
     percent[codes == 0] = 255
     grid = Grid(CRS.from_epsg(32633), TRANSFORM, height, width)
-    for name, values, layer in (
-        ("cover.tif", codes, cover_layer(project.classes)), ("confidence.tif", percent, CONFIDENCE_LAYER)
-    ):  # fmt: skip
-        with cog_writer(folder / name, grid, layer) as writer:
-            writer.write(grid.window, values)
+    for name, values in (("cover", codes), ("confidence", percent)):
+        stored = ByteRaster(folder / f"{name}.bytes", grid)
+        stored.create()
+        stored.write(grid.window, values)
+        write_cog(stored, folder / f"{name}.tif", layer_of(name, project.classes))
+        stored.path.unlink()
     table = pd.DataFrame({
         "code": [c.code for c in project.classes], "name": [c.name for c in project.classes], "pixels": pixels,
         "area_m2": [900.0 * count for count in pixels], "area": [0.09 * count for count in pixels], "unit": "ha",

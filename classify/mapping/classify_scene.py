@@ -1,74 +1,83 @@
-"""Classify a scene block by block and write the map, its confidence and its areas.
+"""Classify a scene block by block and write the map, its confidence, its reach and its areas.
 
-Memory is bounded by the block size and the number of workers, never by the scene. Blocks are computed by several
-threads (each with its own file handles) and written in order by the calling one, so that the same inputs give the
-same bytes whatever the number of workers.
+Memory is bounded by the block size and the number of workers, never by the scene. Every block is stored as soon as it
+is computed, so that a run that was killed goes on where it was; the finished files are made from the stored blocks, so
+that the same inputs give the same bytes whatever the number of workers, the block size, the engine or interruptions.
 """
 
 from __future__ import annotations
 
-import math
-from collections.abc import Callable, Generator, Iterable, Iterator
-from concurrent.futures import Future, ThreadPoolExecutor
-from contextlib import ExitStack, closing
+import hashlib
+import json
+from collections.abc import Iterable, Mapping, Sequence
+from contextlib import closing
 from dataclasses import dataclass
-from itertools import islice
 from pathlib import Path
-from queue import SimpleQueue
-from typing import TypeVar
+from typing import Any
 
-import numpy as np
+import joblib
 import pandas as pd
-from numpy.typing import NDArray
 
+from classify import __version__
+from classify.errors import DataError, Problem
 from classify.files import replacing
-from classify.mapping.writer import NO_CLASS, NO_PERCENT, BlockWriter, Layer, cog_writer
+from classify.mapping.blocks import NO_CLASS, NO_VALUE, BlockWork, LayerName, Tally
+from classify.mapping.engines import Engine, Threads
+from classify.mapping.unfinished import Unfinished, open_unfinished
+from classify.mapping.writer import Layer, write_cog
 from classify.models import TrainedModel
 from classify.progress import SILENT, Progress
-from classify.raster.area import ground_areas_m2
 from classify.raster.grid import Grid, Window
-from classify.raster.scene import Scene, SceneReader
+from classify.raster.scene import Scene
+from classify.raster.sources import is_remote
 from classify.settings import ClassSettings
 from classify.settings.model import M2_PER_UNIT
 
-_In = TypeVar("_In")
-_Out = TypeVar("_Out")
+# A grid with more pixels than this is a mistake in the settings (the whole land surface at 10 m has fewer).
+_MOST_PIXELS = 2**41
 
 
 @dataclass(frozen=True, slots=True)
 class MapOptions:
-    """jobs: threads that read and compute. block_px: side of a block. confidence: write confidence.tif too."""
+    """jobs: threads, unless an engine is given. block_px: side of a block. confidence, reach: write these layers too.
+
+    skip_unreadable: map a block that cannot be read as no data and count it, instead of stopping.
+    """
 
     jobs: int = 1
     block_px: int = 512
     confidence: bool = True
     area_unit: str = "ha"
+    reach: bool = False
+    skip_unreadable: bool = False
+    engine: Engine | None = None
 
 
 @dataclass(frozen=True, slots=True)
 class MapResult:
     """What was written.
 
-    cover: path of the class map. confidence: path of the confidence map, or None. areas: one row per class with code,
-    name, pixels, area_m2, area and unit. unmapped_pixels: pixels without a class (masked, no data, outside).
+    files: path by layer. areas: one row per class with code, name, pixels, area_m2, area, unit and, with reach,
+    beyond_reach_pixels. unmapped_pixels, unmapped_m2: without a class (masked, no data, outside). resumed_blocks: taken
+    over from a run that was interrupted. warnings: what the user should know, unreadable blocks among them.
     """
 
-    cover: Path
-    confidence: Path | None
+    files: Mapping[LayerName, Path]
     areas: pd.DataFrame
     unmapped_pixels: int
     unmapped_m2: float
+    resumed_blocks: int = 0
+    warnings: tuple[Problem, ...] = ()
 
+    @property
+    def cover(self) -> Path:
+        """The class map."""
+        return self.files["cover"]
 
-@dataclass(frozen=True, slots=True)
-class _Block:
-    """One computed block: codes uint8 (h, w), percent uint8 (h, w) or None, pixels and area by code (256,)."""
-
-    window: Window
-    codes: NDArray[np.uint8]
-    percent: NDArray[np.uint8] | None
-    pixels: NDArray[np.int64]
-    area_m2: NDArray[np.float64]
+    @property
+    def confidence(self) -> Path | None:
+        """The confidence map, if it was asked for."""
+        return self.files.get("confidence")
 
 
 def classify_scene(
@@ -80,47 +89,49 @@ def classify_scene(
     options: MapOptions | None = None,
     progress: Progress = SILENT,
 ) -> MapResult:
-    """Classify every valid pixel of `scene` and write cover.tif, confidence.tif and areas.csv into `folder`.
+    """Classify every valid pixel of `scene`; write cover.tif, areas.csv and the layers asked for into `folder`.
 
     Raises DataError when a band cannot be read, OutputError when a result cannot be written; then none of the files
-    of an earlier map is changed.
+    of an earlier map is changed, and the next call with the same model and scene goes on where this one was.
     """
     options, classes = options or MapOptions(), list(classes)
+    _check_grid(scene.grid)
+    work = BlockWork(model, scene, _layers(model, options), options.skip_unreadable)
     windows = list(scene.grid.blocks(options.block_px))
-    quantum_m2 = _area_quantum_m2(scene.grid)
-    tallies: list[tuple[NDArray[np.int64], NDArray[np.float64]]] = []
-    with ExitStack() as stack:
-        cover = stack.enter_context(cog_writer(folder / "cover.tif", scene.grid, cover_layer(classes)))
-        confidence = None
-        if options.confidence:
-            confidence = stack.enter_context(cog_writer(folder / "confidence.tif", scene.grid, CONFIDENCE_LAYER))
-        task = stack.enter_context(progress.task("Classifying", len(windows)))
-        for block in stack.enter_context(closing(_computed(model, scene, windows, options, quantum_m2))):
-            _store(block, cover, confidence)
-            tallies.append((block.pixels, block.area_m2))
-            task.advance()
-    areas = _area_table(tallies, classes, options.area_unit)
-    with replacing(folder / "areas.csv") as temporary:
-        areas.to_csv(temporary, index=False, lineterminator="\n")
+    engine = options.engine or Threads(options.jobs)
+    with open_unfinished(folder, scene.grid, work.layers, windows, _origin(work)) as store:
+        resumed = len(store.tallies)
+        if resumed:
+            progress.note(f"Going on where an earlier run was: {resumed} of {len(windows)} blocks are done")
+        _compute(work, engine, store, windows, progress)
+        tallies = [store.tallies[number] for number in range(len(windows))]
+        files = {name: folder / f"{name}.tif" for name in work.layers}
+        with progress.task("Writing the map", len(files)) as task:
+            for name, path in files.items():
+                write_cog(store.raster(name), path, layer_of(name, classes))
+                task.advance()
+        areas = _area_table(tallies, classes, options.area_unit, reach="reach" in work.layers)
+        with replacing(folder / "areas.csv") as temporary:
+            areas.to_csv(temporary, index=False, lineterminator="\n")
+        store.remove()
     return MapResult(
-        cover=folder / "cover.tif",
-        confidence=folder / "confidence.tif" if options.confidence else None,
+        files=files,
         areas=areas,
-        unmapped_pixels=sum(int(pixels[NO_CLASS]) for pixels, _ in tallies),
-        unmapped_m2=sum(float(area[NO_CLASS]) for _, area in tallies),
+        unmapped_pixels=sum(int(tally.pixels[NO_CLASS]) for tally in tallies),
+        unmapped_m2=sum(float(tally.area_m2[NO_CLASS]) for tally in tallies),
+        resumed_blocks=resumed,
+        warnings=(*engine.warnings, *_unreadable(tallies, windows)),
     )
 
 
-CONFIDENCE_LAYER = Layer(
-    nodata=NO_PERCENT,
-    overviews="average",
-    description="share of the model's votes for the mapped class, percent",
-)
-
-
-def cover_layer(classes: Iterable[ClassSettings]) -> Layer:
-    """How the class map is stored: colours and names by code."""
-    classes = list(classes)
+def layer_of(name: LayerName, classes: Sequence[ClassSettings]) -> Layer:
+    """How a layer is stored; the class map carries colours and names."""
+    if name == "confidence":
+        description = "probability that the model gives to the mapped class, percent"
+        return Layer(NO_VALUE[name], "average", description)
+    if name == "reach":
+        description = "distance from the training data in percent of the threshold: above 100 is beyond their reach"
+        return Layer(NO_VALUE[name], "average", description)
     return Layer(
         nodata=NO_CLASS,
         overviews="mode",
@@ -131,83 +142,79 @@ def cover_layer(classes: Iterable[ClassSettings]) -> Layer:
     )
 
 
-def _store(block: _Block, cover: BlockWriter, confidence: BlockWriter | None) -> None:
-    cover.write(block.window, block.codes)
-    if confidence is not None and block.percent is not None:
-        confidence.write(block.window, block.percent)
+def _layers(model: TrainedModel, options: MapOptions) -> tuple[LayerName, ...]:
+    wanted: list[LayerName] = ["cover"]
+    if options.confidence:
+        wanted.append("confidence")
+    if options.reach and model.reach is not None:
+        wanted.append("reach")
+    return tuple(wanted)
 
 
-def _computed(
-    model: TrainedModel, scene: Scene, windows: list[Window], options: MapOptions, quantum_m2: float
-) -> Generator[_Block, None, None]:
-    # A reader belongs to one thread at a time; the queue hands an idle one to whichever thread starts a block.
-    with ExitStack() as stack:
-        readers: SimpleQueue[SceneReader] = SimpleQueue()
-        for _ in range(options.jobs):
-            readers.put(stack.enter_context(scene.open()))
-
-        def compute(window: Window) -> _Block:
-            reader = readers.get()
-            try:
-                layers = reader.read(window, model.recipe.needs, halo_px=model.recipe.halo_px)
-            finally:
-                readers.put(reader)
-            codes, percent = _labels(model, model.recipe.compute(layers), options)
-            areas = np.rint(ground_areas_m2(scene.grid, window) / quantum_m2) * quantum_m2
-            flat = codes.ravel()
-            area_m2 = np.bincount(flat, areas.ravel(), minlength=256).astype(np.float64)
-            return _Block(window, codes, percent, np.bincount(flat, minlength=256), area_m2)
-
-        yield from _in_order(compute, windows, options.jobs)
+def _compute(work: BlockWork, engine: Engine, store: Unfinished, windows: Sequence[Window], progress: Progress) -> None:
+    missing = [(number, window) for number, window in enumerate(windows) if number not in store.tallies]
+    with progress.task("Classifying", len(windows)) as task:
+        task.advance(len(windows) - len(missing))
+        with closing(engine.run(work, missing)) as blocks:
+            for block in blocks:
+                store.store(block)
+                task.advance()
 
 
-def _in_order(work: Callable[[_In], _Out], items: Iterable[_In], jobs: int) -> Iterator[_Out]:
-    """Results of `work` in the order of `items`, with at most 2 * jobs of them under way or waiting."""
-    remaining = iter(items)
-    with ThreadPoolExecutor(jobs) as pool:
-        waiting: list[Future[_Out]] = [pool.submit(work, item) for item in islice(remaining, 2 * jobs)]
-        try:
-            while waiting:
-                yield waiting.pop(0).result()
-                waiting.extend(pool.submit(work, item) for item in islice(remaining, 1))
-        finally:
-            for future in waiting:
-                future.cancel()
+def _check_grid(grid: Grid) -> None:
+    if grid.height < 1 or grid.width < 1 or grid.height * grid.width > _MOST_PIXELS:
+        raise DataError(
+            f"the grid of the map would have {grid.height} rows and {grid.width} columns", where="scene.grid",
+            fix="check the pixel size asked for and the extent of the first band",
+        )  # fmt: skip
 
 
-def _labels(
-    model: TrainedModel, features: NDArray[np.float32], options: MapOptions
-) -> tuple[NDArray[np.uint8], NDArray[np.uint8] | None]:
-    """Features (n_features, h, w) to codes and percent (h, w). A pixel with any missing feature is no data."""
-    valid = np.isfinite(features).all(axis=0)
-    rows = np.ascontiguousarray(features[:, valid].T)
-    codes = np.full(valid.shape, NO_CLASS, dtype=np.uint8)
-    percent = np.full(valid.shape, NO_PERCENT, dtype=np.uint8) if options.confidence else None
-    if len(rows) and percent is None:
-        codes[valid] = model.predict(rows)
-    elif len(rows) and percent is not None:
-        codes[valid], probabilities = model.predict_both(rows)
-        percent[valid] = np.rint(100 * probabilities.max(axis=1)).astype(np.uint8)
-    return codes, percent
+def _origin(work: BlockWork) -> dict[str, Any]:
+    """What a stored block is made from, as plain data: if any of it changes, blocks are made anew."""
+    scene, card = work.scene, work.model.card
+    files = {
+        path: _stamp(path) for path in sorted({b.path for b in scene.bands} | {m.path for m in scene.masks.values()})
+    }
+    described = repr((scene.grid, scene.bands, sorted(scene.masks.items()), scene.resampling, scene.composite))
+    return {
+        "landassay": __version__,
+        "model": card.get("model_sha256") or joblib.hash(work.model.estimator),
+        "calibration": card["calibration"]["temperature"],
+        "recipe": hashlib.sha256(json.dumps(work.model.recipe.to_json(), sort_keys=True).encode()).hexdigest(),
+        "reach": joblib.hash(work.model.reach) if "reach" in work.layers else None,
+        "scene": hashlib.sha256(described.encode()).hexdigest(),
+        "files": files,
+        "skip_unreadable": work.skip_unreadable,
+    }
 
 
-def _area_quantum_m2(grid: Grid) -> float:
-    """A power of two about a millionth of a pixel's area, to which pixel areas are rounded.
-
-    Sums of its multiples are exact in float64 up to 2^32 pixels, so that totals do not depend on how the scene was cut
-    into blocks; the rounding of each pixel is far below what a pixel's area is known to.
-    """
-    centre = Window(grid.height // 2, grid.width // 2, 1, 1)
-    area_m2 = float(ground_areas_m2(grid, centre)[0, 0])
-    return 2.0 ** (math.floor(math.log2(area_m2)) - 20) if area_m2 > 0 else 2.0**-20
+def _stamp(path: str) -> list[int] | None:
+    if is_remote(path) or not Path(path).is_file():
+        return None
+    facts = Path(path).stat()
+    return [facts.st_size, facts.st_mtime_ns]
 
 
-def _area_table(
-    tallies: list[tuple[NDArray[np.int64], NDArray[np.float64]]], classes: list[ClassSettings], unit: str
-) -> pd.DataFrame:
+def _unreadable(tallies: Sequence[Tally], windows: Sequence[Window]) -> list[Problem]:
+    failed = [(tally, window) for tally, window in zip(tallies, windows, strict=True) if tally.unreadable]
+    if not failed:
+        return []
+    pixels = sum(window.height * window.width for _, window in failed)
+    return [
+        Problem(
+            f"{len(failed)} of {len(windows)} blocks ({pixels} pixels) could not be read and are no data in the map; "
+            f"the first: {failed[0][0].unreadable}",
+            severity="warning",
+        )
+    ]
+
+
+def _area_table(tallies: Sequence[Tally], classes: Sequence[ClassSettings], unit: str, *, reach: bool) -> pd.DataFrame:
     rows = []
     for c in classes:
-        area_m2 = sum(float(area[c.code]) for _, area in tallies)
-        pixels = sum(int(count[c.code]) for count, _ in tallies)
-        rows.append((c.code, c.name, pixels, area_m2, area_m2 / M2_PER_UNIT[unit], unit))
-    return pd.DataFrame(rows, columns=["code", "name", "pixels", "area_m2", "area", "unit"])
+        area_m2 = sum(float(tally.area_m2[c.code]) for tally in tallies)
+        pixels = sum(int(tally.pixels[c.code]) for tally in tallies)
+        beyond = sum(int(tally.beyond[c.code]) for tally in tallies)
+        rows.append((c.code, c.name, pixels, area_m2, area_m2 / M2_PER_UNIT[unit], unit, beyond))
+    table = pd.DataFrame(rows, columns=["code", "name", "pixels", "area_m2", "area", "unit", "beyond_reach_pixels"])
+    return table if reach else table.drop(columns="beyond_reach_pixels")

@@ -1,32 +1,27 @@
-"""Write class rasters as Cloud-Optimised GeoTIFFs, block by block, crash-safe.
+"""Write rasters of bytes as Cloud-Optimised GeoTIFFs, crash-safe.
 
-A COG cannot be written in place: its overviews come first. Blocks go to a plain tiled GeoTIFF under a temporary name;
-when the last one is in, GDAL's COG driver copies it to a second temporary name, which is renamed over the target.
+A COG cannot be written in place: its overviews come first. Blocks are gathered in a plain file of bytes; when the last
+one is in, GDAL's COG driver copies it, described by a small XML file, to a temporary name, which is renamed over the
+target.
 """
 
 from __future__ import annotations
 
 import xml.etree.ElementTree as ET
-from collections.abc import Iterator, Mapping, Sequence
-from contextlib import contextmanager
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
+from threading import Thread
 from typing import Literal
 
-import numpy as np
-import rasterio
 import rasterio.shutil
-from numpy.typing import NDArray
 from rasterio.errors import RasterioError
-from rasterio.io import DatasetWriter
 
 from classify.errors import OutputError
 from classify.files import replacing, write_bytes
-from classify.raster.grid import Grid, Window
+from classify.mapping.byte_raster import ByteRaster
 
 TILE_PX = 512
-NO_CLASS = 0
-NO_PERCENT = 255
 
 
 @dataclass(frozen=True, slots=True)
@@ -45,72 +40,71 @@ class Layer:
     tags: Mapping[str, str] = field(default_factory=dict)
 
 
-class BlockWriter:
-    """Takes windows of one raster in any order. Used from one thread."""
-
-    def __init__(self, dataset: DatasetWriter, target: Path) -> None:
-        self._dataset, self._target = dataset, target
-
-    def write(self, window: Window, values: NDArray[np.uint8]) -> None:
-        """Store `values` (uint8, (h, w)) at `window`. Raises OutputError, for instance when the disk is full."""
+def write_cog(source: ByteRaster, target: Path, layer: Layer) -> None:
+    """Write `target` as a valid COG of all bytes of `source`, and class names beside it. Raises OutputError."""
+    described = source.path.with_suffix(".vrt")
+    with replacing(target) as finished:
         try:
-            self._dataset.write(values, 1, window=window.to_rasterio())
-        except RasterioError as error:
-            raise OutputError(f"cannot be written: {error}", where=str(self._target), fix="free some space") from error
-
-
-@contextmanager
-def cog_writer(target: Path, grid: Grid, layer: Layer) -> Iterator[BlockWriter]:
-    """Open `target` for block-wise writing; it appears as a valid COG when the context ends well, else not at all.
-
-    Raises OutputError when something cannot be written.
-    """
-    with replacing(target) as finished, _scratch(target) as scratch:
-        try:
-            with rasterio.open(scratch, "w", **_scratch_profile(grid, layer)) as dataset:
-                _describe(dataset, layer)
-                yield BlockWriter(dataset, target)
-            _copy_to_cog(scratch, finished, layer)
+            described.write_bytes(_virtual_raster(source, layer))
+            _heeding_interrupts(lambda: _copy(described, finished, layer))
         except RasterioError as error:
             raise OutputError(f"cannot be written: {error}", where=str(target), fix="free some space") from error
+        finally:
+            described.unlink(missing_ok=True)
     if layer.categories:
         write_bytes(target.with_name(target.name + ".aux.xml"), category_sidecar(layer))
 
 
-@contextmanager
-def _scratch(target: Path) -> Iterator[Path]:
-    # A copy that never takes the target's place: removed whatever happens.
-    scratch = target.with_name(f".{target.stem}.blocks.landassay-part.tif")
-    try:
-        yield scratch
-    finally:
-        scratch.unlink(missing_ok=True)
-
-
-def _scratch_profile(grid: Grid, layer: Layer) -> dict[str, object]:
-    return {
-        "driver": "GTiff", "dtype": "uint8", "count": 1, "crs": grid.crs, "transform": grid.transform,
-        "height": grid.height, "width": grid.width, "nodata": layer.nodata, "tiled": True,
-        "blockxsize": TILE_PX, "blockysize": TILE_PX, "compress": "zstd", "zstd_level": 1, "bigtiff": "if_safer",
-        "sparse_ok": True,
-    }  # fmt: skip
-
-
-def _describe(dataset: DatasetWriter, layer: Layer) -> None:
-    dataset.set_band_description(1, layer.description)
-    if layer.colours:
-        table = {value: (*_rgb(colour), 255) for value, colour in layer.colours.items()}
-        dataset.write_colormap(1, {layer.nodata: (0, 0, 0, 0), **table})
-    if layer.tags:
-        dataset.update_tags(**layer.tags)
-
-
-def _copy_to_cog(source: Path, target: Path, layer: Layer) -> None:
+def _copy(source: Path, target: Path, layer: Layer) -> None:
     # Deflate rather than zstd in the delivered file: every reader of GeoTIFF has it.
     rasterio.shutil.copy(
         source, target, driver="COG", compress="deflate", blocksize=TILE_PX, overview_resampling=layer.overviews,
         overview_compress="deflate", bigtiff="if_safer", num_threads=1,
     )  # fmt: skip
+
+
+def _heeding_interrupts(work: Callable[[], None]) -> None:
+    """Do `work` in a thread of its own: GDAL would not return for Ctrl-C before its copy is complete."""
+    failed: list[BaseException] = []
+
+    def guarded() -> None:
+        try:
+            work()
+        except BaseException as error:  # handed to the waiting thread below
+            failed.append(error)
+
+    thread = Thread(target=guarded, daemon=True)
+    thread.start()
+    while thread.is_alive():
+        thread.join(0.5)
+    if failed:
+        raise failed[0]
+
+
+def _virtual_raster(source: ByteRaster, layer: Layer) -> bytes:
+    """The XML by which GDAL reads a plain file of bytes as a georeferenced raster."""
+    grid = source.grid
+    root = ET.Element("VRTDataset", rasterXSize=str(grid.width), rasterYSize=str(grid.height))
+    ET.SubElement(root, "SRS", dataAxisToSRSAxisMapping="1,2").text = grid.crs.to_wkt()
+    ET.SubElement(root, "GeoTransform").text = ", ".join(repr(float(value)) for value in grid.transform.to_gdal())
+    if layer.tags:
+        metadata = ET.SubElement(root, "Metadata")
+        for key, text in layer.tags.items():
+            ET.SubElement(metadata, "MDI", key=key).text = text
+    band = ET.SubElement(root, "VRTRasterBand", dataType="Byte", band="1", subClass="VRTRawRasterBand")
+    ET.SubElement(band, "Description").text = layer.description
+    ET.SubElement(band, "NoDataValue").text = str(layer.nodata)
+    if layer.colours:
+        ET.SubElement(band, "ColorInterp").text = "Palette"
+        table = ET.SubElement(band, "ColorTable")
+        for value in range(max(layer.colours) + 1):
+            rgb = _rgb(layer.colours[value]) if value in layer.colours else (0, 0, 0)
+            entry = dict(zip(("c1", "c2", "c3"), map(str, rgb), strict=True))
+            ET.SubElement(table, "Entry", entry, c4="0" if value == layer.nodata else "255")
+    ET.SubElement(band, "SourceFilename", relativeToVRT="1").text = source.path.name
+    for tag, step in (("ImageOffset", 0), ("PixelOffset", 1), ("LineOffset", grid.width)):
+        ET.SubElement(band, tag).text = str(step)
+    return bytes(ET.tostring(root, encoding="utf-8"))
 
 
 def _rgb(colour: str) -> tuple[int, int, int]:

@@ -1,0 +1,186 @@
+"""What is computed of one block, on whatever machine: layers of the map and a tally of its pixels and ground areas.
+
+A pixel's result does not depend on the block it is computed in, nor on the thread or machine.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import contextmanager
+from dataclasses import dataclass, field
+from queue import Empty, SimpleQueue
+from typing import Any, Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from classify.errors import DataError
+from classify.models import TrainedModel
+from classify.raster.area import ground_areas_m2
+from classify.raster.grid import Grid, Window
+from classify.raster.scene import Scene, SceneReader
+
+LayerName = Literal["cover", "confidence", "reach"]
+Layers = Mapping[LayerName, NDArray[np.uint8]]
+
+NO_CLASS = 0
+NO_PERCENT = 255
+NO_VALUE: Mapping[LayerName, int] = {"cover": NO_CLASS, "confidence": NO_PERCENT, "reach": NO_PERCENT}
+# Reach in percent up to this is within what the training data cover.
+WITHIN_REACH = 100
+# Pixels labelled at a time; between such parts a block can be stopped. A fraction of a second with the slowest models.
+_ROWS = 16_384
+
+
+class Stopped(Exception):  # noqa: N818 - not an error: someone asked for it
+    """The work was asked to stop."""
+
+
+@dataclass(frozen=True, slots=True)
+class Tally:
+    """Of one block, by class code 0..255 (0: no class): pixels int64, ground area float64, pixels beyond reach int64.
+
+    unreadable: what could not be read, or "".
+    """
+
+    pixels: NDArray[np.int64]
+    area_m2: NDArray[np.float64]
+    beyond: NDArray[np.int64]
+    unreadable: str = ""
+
+    def to_json(self) -> dict[str, Any]:
+        """Plain data: [code, pixels, area, beyond] of the codes that occur."""
+        present = np.flatnonzero(self.pixels)
+        rows = [[int(c), int(self.pixels[c]), float(self.area_m2[c]), int(self.beyond[c])] for c in present]
+        return {"codes": rows, "unreadable": self.unreadable}
+
+    @classmethod
+    def from_json(cls, content: Mapping[str, Any]) -> Tally:
+        """What `to_json` gave."""
+        found = cls(np.zeros(256, np.int64), np.zeros(256), np.zeros(256, np.int64), str(content["unreadable"]))
+        for code, pixels, area_m2, beyond in content["codes"]:
+            found.pixels[code], found.area_m2[code], found.beyond[code] = pixels, area_m2, beyond
+        return found
+
+
+@dataclass(frozen=True, slots=True)
+class Block:
+    """One computed block: its number and window, layers uint8 (h, w) by name, and its tally."""
+
+    number: int
+    window: Window
+    layers: Layers
+    tally: Tally
+
+
+@dataclass(frozen=True)
+class BlockWork:
+    """How blocks of one scene become blocks of its map. Can be sent to other machines.
+
+    layers: which to make; always "cover". skip_unreadable: a block that cannot be read becomes no data and is counted.
+    """
+
+    model: TrainedModel
+    scene: Scene
+    layers: tuple[LayerName, ...] = ("cover",)
+    skip_unreadable: bool = False
+    _readers: SimpleQueue[SceneReader] = field(default_factory=SimpleQueue, compare=False, repr=False)
+
+    def read(self, window: Window) -> dict[str, NDArray[np.float32]] | str:
+        """Reflectance by role with the halo that the features need, or, if it may be skipped, why there is none.
+
+        Raises DataError naming file and rows.
+        """
+        recipe = self.model.recipe
+        try:
+            with self._reader() as reader:
+                return reader.read(window, recipe.needs, halo_px=recipe.halo_px)
+        except DataError as error:
+            if self.skip_unreadable:
+                return str(error)
+            raise
+
+    def compute(
+        self,
+        number: int,
+        window: Window,
+        bands: dict[str, NDArray[np.float32]] | str,
+        stopped: Callable[[], bool] = lambda: False,
+    ) -> Block:
+        """The block from what `read` gave. Raises Stopped soon after `stopped` says so."""
+        layers = {name: np.full(window.shape_yx, NO_VALUE[name], dtype=np.uint8) for name in self.layers}
+        if isinstance(bands, str):
+            return Block(number, window, layers, self._tally(window, layers, bands))
+        features = self.model.recipe.compute(bands)
+        rows, cols = np.nonzero(np.isfinite(features).all(axis=0))
+        for start in range(0, len(rows), _ROWS):
+            if stopped():
+                raise Stopped
+            at = rows[start : start + _ROWS], cols[start : start + _ROWS]
+            self._label(np.ascontiguousarray(features[:, at[0], at[1]].T), at, layers)
+        return Block(number, window, layers, self._tally(window, layers))
+
+    def close(self) -> None:
+        """Close all files."""
+        while not self._readers.empty():
+            self._readers.get().close()
+
+    def _label(
+        self,
+        pixels: NDArray[np.float32],
+        at: tuple[NDArray[np.intp], NDArray[np.intp]],
+        layers: Layers,
+    ) -> None:
+        if "confidence" in layers:
+            codes, probabilities = self.model.predict_both(pixels)
+            layers["confidence"][at] = np.rint(100 * probabilities.max(axis=1)).astype(np.uint8)
+        else:
+            codes = self.model.predict(pixels)
+        layers["cover"][at] = codes
+        if "reach" in layers and self.model.reach is not None:
+            layers["reach"][at] = self.model.reach.percent(pixels)
+
+    def _tally(self, window: Window, layers: Layers, unreadable: str = "") -> Tally:
+        codes = layers["cover"].ravel()
+        quantum_m2 = area_quantum_m2(self.scene.grid)
+        areas = np.rint(ground_areas_m2(self.scene.grid, window) / quantum_m2) * quantum_m2
+        beyond = np.zeros(0, dtype=np.uint8)
+        if "reach" in layers:
+            reach = layers["reach"].ravel()
+            beyond = codes[(reach > WITHIN_REACH) & (reach != NO_PERCENT)]
+        return Tally(
+            np.bincount(codes, minlength=256),
+            np.bincount(codes, areas.ravel(), minlength=256).astype(np.float64),
+            np.bincount(beyond, minlength=256),
+            unreadable,
+        )
+
+    @contextmanager
+    def _reader(self) -> Iterator[SceneReader]:
+        # A reader belongs to one thread at a time: an idle one is handed on, and opened only when there is none.
+        try:
+            reader = self._readers.get_nowait()
+        except Empty:
+            reader = self.scene.open()
+        try:
+            yield reader
+        finally:
+            self._readers.put(reader)
+
+    def __getstate__(self) -> dict[str, object]:
+        return {name: value for name, value in self.__dict__.items() if name != "_readers"}
+
+    def __setstate__(self, state: dict[str, object]) -> None:
+        self.__dict__.update(state, _readers=SimpleQueue())
+
+
+def area_quantum_m2(grid: Grid) -> float:
+    """A power of two about a millionth of a pixel's area, to which pixel areas are rounded.
+
+    Sums of its multiples are exact in float64 up to 2^32 pixels, so that totals do not depend on how the scene was cut
+    into blocks; the rounding of each pixel is far below what a pixel's area is known to.
+    """
+    centre = Window(grid.height // 2, grid.width // 2, 1, 1)
+    area_m2 = float(ground_areas_m2(grid, centre)[0, 0])
+    return 2.0 ** (math.floor(math.log2(area_m2)) - 20) if area_m2 > 0 else 2.0**-20

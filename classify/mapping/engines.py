@@ -1,0 +1,77 @@
+"""Where blocks are computed: in threads of this process, or on a Dask cluster (`cluster`).
+
+An engine gives blocks in whatever order they are done, with a bounded number under way.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Generator, Sequence
+from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
+from dataclasses import dataclass
+from threading import Event
+from typing import Protocol
+
+from threadpoolctl import threadpool_limits
+
+from classify.errors import Problem
+from classify.mapping.blocks import Block, BlockWork
+from classify.raster.grid import Window
+
+# Blocks under way per worker: one computed, one read or waiting to be written.
+_UNDER_WAY = 2
+# How often the waiting thread looks up, so that Ctrl-C is heard on every system, in seconds.
+_LOOK_UP_S = 0.5
+
+Numbered = tuple[int, Window]
+
+
+class Engine(Protocol):
+    """Computes blocks."""
+
+    def run(self, work: BlockWork, windows: Sequence[Numbered]) -> Generator[Block]:
+        """Compute every numbered window. Stops all work when closed. Raises what a block raises."""
+
+    @property
+    def warnings(self) -> tuple[Problem, ...]:
+        """What the user should know of the engine."""
+
+
+@dataclass(frozen=True, slots=True)
+class Threads:
+    """`jobs` threads that compute and as many that read ahead for them."""
+
+    jobs: int = 1
+    warnings: tuple[Problem, ...] = ()
+
+    def run(self, work: BlockWork, windows: Sequence[Numbered]) -> Generator[Block]:
+        """See Engine. Libraries underneath are kept to one thread each meanwhile, or cores would be asked for twice."""
+        stop = Event()
+        remaining = iter(windows)
+        with (
+            threadpool_limits(1),
+            ThreadPoolExecutor(self.jobs, "read") as readers,
+            ThreadPoolExecutor(self.jobs, "compute") as computers,
+        ):
+            under_way: set[Future[Block]] = set()
+
+            def start(number: int, window: Window) -> Future[Block]:
+                bands = readers.submit(work.read, window)
+                return computers.submit(lambda: work.compute(number, window, bands.result(), stop.is_set))
+
+            try:
+                while True:
+                    for number, window in remaining:
+                        under_way.add(start(number, window))
+                        if len(under_way) >= _UNDER_WAY * self.jobs:
+                            break
+                    if not under_way:
+                        return
+                    done, under_way = wait(under_way, timeout=_LOOK_UP_S, return_when=FIRST_COMPLETED)
+                    for future in done:
+                        yield future.result()
+            finally:
+                stop.set()
+                for pool in (readers, computers):
+                    pool.shutdown(wait=False, cancel_futures=True)
+                wait(under_way)
+                work.close()
