@@ -87,7 +87,7 @@ class SceneReader:
     def __init__(self, scene: Scene) -> None:
         self._scene = scene
         self._files = OpenFiles()
-        self._placements: dict[Grid, Placement] = {}
+        self._placements: dict[str, Placement] = {}
 
     def __enter__(self) -> SceneReader:
         return self
@@ -134,7 +134,7 @@ class SceneReader:
                 rejected = self.rejected(window, date)
                 for role, layer in layers.items():
                     if dates[role] == date:
-                        layer[rejected] = np.nan
+                        np.copyto(layer, np.float32(np.nan), where=rejected)
         if scene.composite and made:
             layers.update(scene.composite.compute(layers))
         return layers
@@ -155,7 +155,7 @@ class SceneReader:
 
     def _mask(self, mask: MaskSource, window: Window) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
         """bool (h, w): what the mask rejects, and where it reaches; the window may lie outside the grid."""
-        placement = self._placement(mask.native)
+        placement = self._placement(mask.path, mask.native)
         rejects, reaches = np.zeros(window.shape_yx, dtype=bool), np.ones(window.shape_yx, dtype=bool)
         for strip in _strips(window, placement):
             rows = slice(strip.row - window.row, strip.row - window.row + strip.height)
@@ -182,7 +182,7 @@ class SceneReader:
 
     def _group(self, bands: list[BandSource], window: Window) -> Array:
         """float32 (n, h, w) of bands of one file on the scene's grid; a window inside the grid."""
-        placement = self._placement(bands[0].native)
+        placement = self._placement(bands[0].path, bands[0].native)
         fineness = self._fineness(placement)
         shift = placement.shift_yx
         if shift is not None:
@@ -243,10 +243,10 @@ class SceneReader:
                 layer[own_mask(dataset, path, band.band, part)] = np.nan
         return values
 
-    def _placement(self, native: Grid) -> Placement:
-        if native not in self._placements:
-            self._placements[native] = Placement(native, self._scene.grid)
-        return self._placements[native]
+    def _placement(self, path: str, native: Grid) -> Placement:
+        if path not in self._placements:
+            self._placements[path] = Placement(native, self._scene.grid)
+        return self._placements[path]
 
     @staticmethod
     def _fineness(placement: Placement) -> tuple[int, int]:

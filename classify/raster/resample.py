@@ -179,19 +179,24 @@ def gather_nearest(
     """
     row, inside_row = _index(places[0], source.height)
     col, inside_col = _index(places[1], source.width)
-    picked = values[..., np.clip(row - part.row, 0, part.height - 1), np.clip(col - part.col, 0, part.width - 1)]
-    return picked, inside_row & inside_col
+    row, col = np.clip(row - part.row, 0, part.height - 1), np.clip(col - part.col, 0, part.width - 1)
+    inside = inside_row & inside_col
+    if _independent(row, col):
+        return values.take(row[:, 0], axis=-2).take(col[0], axis=-1), inside
+    return values[..., row, col], inside
 
 
 def gather_bilinear(values: Array, part: Window, source: Grid, places: Places) -> Array:
     """Bilinear values (n, h, w) at the places, NaN outside the source and where the nearest pixel is NaN."""
-    nearest, inside = gather_nearest(values, part, source, places)
     rows = _between(places[0], source.height, part.row, part.height)
     cols = _between(places[1], source.width, part.col, part.width)
     result = _blend(values, rows, cols)
-    result[:, ~inside] = np.nan
-    # Almost always nothing: pixels beside an invalid one, which must be told from those that are invalid themselves.
-    hurt = np.isnan(result) & ~np.isnan(nearest) & inside
+    inside = _index(places[0], source.height)[1] & _index(places[1], source.width)[1]
+    if not inside.all():
+        result[:, ~inside] = np.nan
+    # Usually few: pixels beside an invalid one, which must be told from those that are invalid themselves.
+    hurt = np.isnan(result)
+    hurt &= inside
     for layer in np.flatnonzero(hurt.any(axis=(1, 2))):
         chosen = hurt[layer]
         result[layer, chosen] = _blend_valid(values[layer], rows.at(chosen), cols.at(chosen))
@@ -218,6 +223,11 @@ def _index(place: NDArray[np.float64], size: int) -> tuple[NDArray[np.intp], NDA
     return np.where(inside, np.floor(np.where(inside, place, 0)), 0).astype(np.intp), inside
 
 
+def _independent(rows: NDArray[np.intp], cols: NDArray[np.intp]) -> bool:
+    """Whether the place of a row does not depend on the column, nor the other way round: shapes (h, 1) and (1, w)."""
+    return bool(rows.shape[-1] == 1 and cols.shape[0] == 1)
+
+
 def _between(place: NDArray[np.float64], size: int, first: int, length: int) -> _Between:
     centre = np.clip(np.where(np.isfinite(place), place, 0) - 0.5, 0, size - 1)
     low = np.floor(centre)
@@ -231,27 +241,37 @@ def _between(place: NDArray[np.float64], size: int, first: int, length: int) -> 
 
 
 def _blend(values: Array, rows: _Between, cols: _Between) -> Array:
-    if rows.low.shape[-1] == 1 and cols.low.shape[0] == 1:
-        # Rows and columns are independent: blend along columns first, on the few source rows, then along rows.
-        left, right = values[..., cols.low[0]], values[..., cols.high[0]]
-        across = left + (right - left) * cols.weight
-        top, bottom = across[..., rows.low[:, 0], :], across[..., rows.high[:, 0], :]
+    if _independent(rows.low, cols.low):
+        # Along columns first, on the few source rows, then along rows.
+        across = _mix(values.take(cols.low[0], axis=-1), values.take(cols.high[0], axis=-1), cols.weight)
+        top, bottom = across.take(rows.low[:, 0], axis=-2), across.take(rows.high[:, 0], axis=-2)
     else:
         top, bottom = (
-            values[..., row, cols.low] + (values[..., row, cols.high] - values[..., row, cols.low]) * cols.weight
-            for row in (rows.low, rows.high)
+            _mix(values[..., row, cols.low], values[..., row, cols.high], cols.weight) for row in (rows.low, rows.high)
         )
-    return np.asarray(top + (bottom - top) * rows.weight)
+    return _mix(top, bottom, rows.weight)
+
+
+def _mix(first: Array, second: Array, weight: Array) -> Array:
+    """first + (second - first) * weight, in the memory of both."""
+    second -= first
+    second *= weight
+    first += second
+    return first
 
 
 def _blend_valid(layer: Array, rows: _Between, cols: _Between) -> Array:
-    """Bilinear over the valid neighbours only; all index and weight arrays (n,)."""
+    """Bilinear over the valid neighbours only, NaN where the nearest is invalid; all arrays (n,)."""
     total, weights = np.zeros_like(rows.weight), np.zeros_like(rows.weight)
-    one = np.float32(1)
+    one, half = np.float32(1), np.float32(0.5)
     for row, row_weight in ((rows.low, one - rows.weight), (rows.high, rows.weight)):
         for col, col_weight in ((cols.low, one - cols.weight), (cols.high, cols.weight)):
             value, weight = layer[row, col], row_weight * col_weight
             valid = ~np.isnan(value)
             total += np.where(valid, value * weight, 0)
             weights += np.where(valid, weight, 0)
-    return np.asarray(total / weights)
+    nearest = layer[
+        np.where(rows.weight < half, rows.low, rows.high), np.where(cols.weight < half, cols.low, cols.high)
+    ]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        return np.asarray(np.where(np.isnan(nearest), nearest, total / weights))

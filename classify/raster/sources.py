@@ -160,10 +160,10 @@ def _scales(dataset: rasterio.DatasetReader) -> tuple[float, ...]:
         multiplied = float(factor) if factor else 1.0
     except ValueError:
         multiplied = 1.0
-    own: tuple[float, ...] = tuple(dataset.scales)
+    own = [float(scale) for scale in dataset.scales]
     if multiplied <= 0 or multiplied == 1 or any(scale != 1 for scale in own):
-        return own
-    return (1 / multiplied,) * dataset.count
+        return tuple(own)
+    return (1 / multiplied,) * len(own)
 
 
 def _wavelength_nm(dataset: rasterio.DatasetReader, band: int) -> float | None:
