@@ -11,8 +11,8 @@ from statsmodels.stats.proportion import proportion_confint
 
 from classify.assessment import AssessmentOptions, assess, assess_matrix
 
-# Olofsson, Foody, Herold, Stehman, Woodcock & Wulder 2014, "Good practices for estimating area and assessing accuracy of
-# land change", Remote Sensing of Environment 148, 42-57, section 5. Counts and results from memory; the halves of the
+# Olofsson, Foody, Herold, Stehman, Woodcock & Wulder 2014, "Good practices for estimating area and assessing accuracy
+# of land change", Remote Sensing of Environment 148, 42-57, section 5. Counts and results from memory; the halves of the
 # producer's accuracies are computed with the paper's equation 7, not recalled. No finite population correction.
 LAND_CHANGE = ("deforestation", "forest gain", "stable forest", "stable non-forest")
 LAND_CHANGE_COUNTS = [[66, 0, 5, 4], [0, 55, 8, 12], [1, 0, 153, 11], [2, 1, 9, 313]]
@@ -117,7 +117,7 @@ def test_wilson_interval_of_a_simple_random_sample(right, n):
     """With a t quantile close to the normal one, the interval is Wilson's on n - 1, the unbiased variance's size."""
     points = pd.DataFrame({"map": ["a"] * n, "reference": ["a"] * right + ["b"] * (n - right)})
     found = assess(points, options=AssessmentOptions(interval="wilson")).overall_accuracy
-    from scipy import stats  # noqa: PLC0415
+    from scipy import stats
 
     size = n if right in (0, n) else n - 1
     size *= (stats.norm.ppf(0.975) / stats.t.ppf(0.975, n - 1)) ** 2

@@ -57,13 +57,14 @@ def recognise_classes(
     merge: Mapping[str, str],
 ) -> tuple[Stratum, ...]:
     """Strata that carry the names of classes, and whose points are all mapped so, are those classes of the map."""
-    own_names = [merge.get(s.name, s.name) for s in strata]
-    if any(s.mapped_as is not None for s in strata) or not set(own_names) <= set(classes):
+    place = {name: i for i, name in enumerate(classes)}
+    own = np.array([place.get(merge.get(s.name, s.name), NO_LABEL) for s in strata])
+    on_map = mapped != NO_LABEL
+    if any(s.mapped_as is not None for s in strata) or not np.array_equal(own[stratum[on_map]], mapped[on_map]):
         return strata
-    own = np.array([classes.index(name) for name in own_names])
-    if not np.array_equal(own[stratum[mapped != NO_LABEL]], mapped[mapped != NO_LABEL]):
-        return strata
-    return tuple(replace(s, mapped_as=name) for s, name in zip(strata, own_names, strict=True))
+    return tuple(
+        s if c == NO_LABEL else replace(s, mapped_as=classes[c]) for s, c in zip(strata, own.tolist(), strict=True)
+    )
 
 
 def mapped_areas(
