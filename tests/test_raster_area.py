@@ -42,6 +42,7 @@ GRIDS = {
         CRS.from_epsg(32734), Affine.translation(641200, 6471800) @ Affine.rotation(33) @ Affine.scale(0.1, -0.1),
         300, 300,
     ),
+    "over the antimeridian": Grid(CRS.from_epsg(32760), Affine(30, 0, 817_000, 0, -30, 8_122_000), 300, 200),
     "equal area": Grid(CRS.from_epsg(3035), Affine(100, 0, 4_000_000, 0, -100, 3_000_000), 500, 500),
     "grads from Paris": Grid(CRS.from_epsg(4807), Affine(0.001, 0, 1.0, 0, -0.001, 52.0), 200, 200),
 }  # fmt: skip

@@ -129,10 +129,30 @@ def test_landsat_products_by_their_names(tmp_path, product, sensor, count):
     assert read_all(scene)["red"][0, 0] == pytest.approx(0.35, abs=1e-6)
 
 
-def test_two_products_in_a_folder_are_told_apart(tmp_path):
-    landsat(tmp_path)
+def test_products_of_several_dates_become_dates_of_one_scene(tmp_path):
+    landsat(tmp_path / "scenes", "LC08_L2SP_174083_20240603_20240612_02_T1")
+    landsat(tmp_path / "scenes", "LC09_L2SP_174083_20240119_20240201_02_T1")
+    landsat(tmp_path / "scenes", "LE07_L2SP_174083_20010611_20200612_02_T1")
+    start_project(tmp_path, relative_to(discover(str(tmp_path / "scenes")), tmp_path))
+    project = load_project(tmp_path)
+    # A TM or ETM+ product has a band less than an OLI one, so that it is no date of the same kind.
+    assert project.scene.date == "2024_01_19"
+    assert [date.name for date in project.scene.dates] == ["2024_06_03"]
+    assert "20240119" in project.scene.bands["red"].file
+    scene = opened(tmp_path)
+    assert "red@2024_06_03" in scene.roles
+    assert set(scene.masks) == {"2024_01_19", "2024_06_03"}
+    text = (tmp_path / "project.toml").read_text(encoding="utf-8")
+    for line in ("[scene.composite]", 'method = "median"'):
+        text = text.replace(f"# {line}", line)
+    (tmp_path / "project.toml").write_text(text, encoding="utf-8")
+    assert "clear_count" in opened(tmp_path).roles
+
+
+def test_tiles_of_one_date_are_no_dates(tmp_path):
     landsat(tmp_path, "LC08_L2SP_174083_20240603_20240612_02_T1")
-    with pytest.raises(DataError, match="2 products"):
+    landsat(tmp_path, "LC08_L2SP_174084_20240603_20240612_02_T1")
+    with pytest.raises(DataError, match=r"2 products that are not dates.*174083"):
         discover(str(tmp_path))
 
 

@@ -7,27 +7,23 @@ people can read and change.
 from __future__ import annotations
 
 import os
-import re
-from collections.abc import Iterable
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 
 from classify.errors import DataError
 from classify.raster.grid import Window
+from classify.raster.products import products_draft
 from classify.raster.roles import distinct, role_in_name, role_of_word, roles_of_wavelengths
-from classify.raster.sensors import Sensor, load_sensor
+from classify.raster.sensors import load_sensor
 from classify.raster.sources import OpenFiles, RasterFacts, describe, is_remote, read_window
 from classify.raster.stac import item_draft, looks_like_item, read_item
-from classify.settings import preset_names
-from classify.settings.starter import BandDraft, MaskDraft, SceneDraft
+from classify.settings.starter import BandDraft, SceneDraft
 
 _RASTERS = {".tif", ".tiff", ".jp2", ".img", ".dat", ".bsq", ".bil", ".bip", ".vrt"}
 _MOST_FILES = 20_000
 _HEADERLESS = ("", ".img", ".dat", ".bsq", ".bil", ".bip", ".raw")
-# A preset is believed when at least this many of its bands are found by name.
-_FEWEST_BANDS = 3
 
 
 def discover(source: str) -> SceneDraft:
@@ -54,30 +50,22 @@ def relative_to(draft: SceneDraft, folder: Path) -> SceneDraft:
             return file if is_remote(file) else Path(file).as_posix()
         return Path(file).relative_to(base).as_posix()
 
-    mask = replace(draft.mask, file=shorter(draft.mask.file)) if draft.mask else None
-    return replace(draft, bands=tuple(replace(b, file=shorter(b.file)) for b in draft.bands), mask=mask)
+    return replace(
+        draft,
+        bands=tuple(replace(band, file=shorter(band.file)) for band in draft.bands),
+        mask=replace(draft.mask, file=shorter(draft.mask.file)) if draft.mask else None,
+        dates=tuple(relative_to(date, folder) for date in draft.dates),
+    )
 
 
-# --- product folders ------------------------------------------------------------------------------------------------
-
-
-@dataclass(frozen=True, slots=True)
-class _Match:
-    """Files of one product that a preset explains. files: role -> file; named: its file names carry the product's."""
-
-    name: str
-    sensor: Sensor
-    product: str
-    files: dict[str, Path]
-    mask: Path | None
-    named: bool
+# --- folders --------------------------------------------------------------------------------------------------------
 
 
 def _from_folder(folder: Path) -> SceneDraft:
     files = _raster_files(folder)
-    matches = [match for name in preset_names("sensors") for match in _matches(name, files)]
-    if matches:
-        return _from_match(_best(matches, folder), folder)
+    draft = products_draft(files, folder)
+    if draft is not None:
+        return draft
     if not files:
         raise DataError("no raster was found in this folder", where=str(folder), fix="name the product's own folder")
     facts = [described for file in files if (described := _described(file))]
@@ -104,112 +92,6 @@ def _raster_files(folder: Path) -> list[Path]:
             what = "this folder holds too many rasters to be one scene"
             raise DataError(what, where=str(folder), fix="name the folder of one product")
     return [file for file in found if not file.name.startswith(".")]
-
-
-def _matches(name: str, files: Iterable[Path]) -> list[_Match]:
-    """What a preset explains of the files, by product (date and tile)."""
-    sensor = load_sensor(name)
-    wanted = {text: (role, band.pixel_m) for role, band in sensor.bands.items() for text in band.names}
-    masks = sensor.mask.names if sensor.mask else ()
-    products: dict[str, dict[str, Path]] = {}
-    for file in files:
-        for text in (*wanted, *masks):
-            if product := _product_of(file, text):
-                role = wanted[text][0] if text in wanted else "mask"
-                bands = products.setdefault(product, {})
-                bands[role] = _finer(bands.get(role), file)
-    matches = []
-    for product, bands in products.items():
-        mask = bands.pop("mask", None)
-        # A mask whose name differs more from those of the bands makes a product of its own, without bands: no match.
-        if len(bands) >= _FEWEST_BANDS:
-            text = " ".join(str(file) for file in bands.values())
-            named = bool(sensor.product and re.search(sensor.product, text))
-            matches.append(_Match(name, sensor, product, bands, mask, named))
-    return matches
-
-
-def _product_of(file: Path, text: str) -> str | None:
-    """The rest of a file name that holds `text` between separators, without a resolution such as _10m; None if not."""
-    found = re.fullmatch(rf"(|.*[^A-Za-z0-9]){re.escape(text)}(|[^A-Za-z0-9].*)", file.stem, flags=re.IGNORECASE)
-    if not found:
-        return None
-    rest = re.sub(r"[_-]\d+m$", "", found[1] + found[2]).strip("_-. ")
-    return rest or f"{file.parent}"
-
-
-def _finer(known: Path | None, file: Path) -> Path:
-    """Of two files of one band, the one whose name states the smaller pixel (R10m, _20m); else the first."""
-    if known is None:
-        return file
-    sizes = [re.findall(r"(?:_|R)(\d+)m(?=[_./\\]|$)", str(path)) for path in (known, file)]
-    if not all(sizes):
-        return known
-    return file if int(sizes[1][-1]) < int(sizes[0][-1]) else known
-
-
-def _best(matches: list[_Match], folder: Path) -> _Match:
-    """The match that the product's name confirms, then the one with most bands. Raises DataError for several."""
-    named = [match for match in matches if match.named] or matches
-    most = max(len(match.files) for match in named)
-    products = sorted({match.product for match in named if len(match.files) == most})
-    if len(products) > 1:
-        shown = ", ".join(products[:6])
-        raise DataError(
-            f"this folder holds {len(products)} products: {shown}", where=str(folder),
-            fix="name the folder of one with --scene; further dates go under [[scene.dates]]",
-        )  # fmt: skip
-
-    def fit(match: _Match) -> tuple[int, int]:
-        # Of two presets that fit alike, the narrower rule for names knows the product better; without a name that
-        # either knows, the broader one is the likelier.
-        narrow = len(match.sensor.product or "")
-        return len(match.files), narrow if match.named else -narrow
-
-    return max(named, key=fit)
-
-
-def _from_match(match: _Match, folder: Path) -> SceneDraft:
-    notes = [f"the files are of {match.sensor.title}, by their names ({len(match.files)} bands found)"]
-    if not match.named and match.sensor.product:
-        notes.append("the sensor is a guess, as no file carries the name of the product: check 'sensor'")
-    offset = None
-    scaling = _stated_scaling(folder)
-    if scaling is not None:
-        offset = scaling
-        notes.append(f"reflectance has the offset {scaling:g}, as the product's own metadata say")
-    order = [role for role, band in match.sensor.bands.items() if role in match.files and band.ground]
-    bands = tuple(BandDraft(role, str(match.files[role])) for role in order)
-    if air := [role for role in match.files if role not in order]:
-        notes.append(f"left out, as they show the air and not the ground: {', '.join(air)}")
-    mask = None
-    if match.mask and match.sensor.mask:
-        mask = MaskDraft(str(match.mask), reject=match.sensor.mask.reject)
-        notes.append("the product's own mask is used with its preset's usual list of what to reject")
-    grid = min(order, key=lambda role: match.sensor.bands[role].pixel_m or np.inf)
-    title = f"Land cover, {match.product if Path(match.product).name == match.product else folder.name}"
-    return SceneDraft(
-        title=title, sensor=match.name, grid="red" if _as_fine(match.sensor, "red", grid, order) else grid,
-        offset=offset, bands=bands, mask=mask, assumptions=tuple(notes),
-    )  # fmt: skip
-
-
-def _as_fine(sensor: Sensor, role: str, finest: str, order: list[str]) -> bool:
-    return role in order and sensor.bands[role].pixel_m == sensor.bands[finest].pixel_m
-
-
-def _stated_scaling(folder: Path) -> float | None:
-    """Reflectance offset in the metadata file of a Sentinel-2 product (added offset over quantification), if any.
-
-    Read as text and not as XML: two numbers are wanted, and files from elsewhere may hold entities.
-    """
-    for file in sorted(folder.rglob("MTD_MSIL2A.xml"))[:1]:
-        text = file.read_text(encoding="utf-8", errors="replace")
-        offsets = {float(value) for value in re.findall(r"<BOA_ADD_OFFSET[^>]*>\s*(-?\d+)\s*<", text)}
-        over = re.search(r"<BOA_QUANTIFICATION_VALUE[^>]*>\s*(\d+)\s*<", text)
-        if over and len(offsets) <= 1:
-            return next(iter(offsets), 0.0) / float(over[1])
-    return None
 
 
 def _from_band_files(folder: Path, facts: list[RasterFacts], roles: dict[str, str]) -> SceneDraft:

@@ -215,7 +215,8 @@ def _mask_source(mask: MaskSettings, facts: RasterFacts, rules: _Rules) -> MaskS
 def _choose_grid(settings: SceneSettings, bands: Sequence[BandSource]) -> Grid:
     """The grid of the named band; or of pixels of the given size over the first band; or of the finest band."""
     if isinstance(settings.grid, str):
-        return next(band.native for band in bands if band.role == settings.grid)
+        names = (settings.grid, f"{settings.grid}@{settings.date}")
+        return next(band.native for band in bands if band.role in names)
     if settings.grid is None:
         # Pixels of one size differ a little on the ground from place to place; among equals the first band counts.
         finest_m2 = min(_pixel_m2(band.native) for band in bands)

@@ -42,7 +42,10 @@ class MaskDraft:
 
 @dataclass(frozen=True, slots=True)
 class SceneDraft:
-    """What was found of a scene. assumptions: one sentence each, for people to check."""
+    """What was found of a scene. assumptions: one sentence each, for people to check.
+
+    date: its name where there are several. dates: further dates of the same place.
+    """
 
     title: str
     bands: tuple[BandDraft, ...]
@@ -53,6 +56,8 @@ class SceneDraft:
     nodata: float | None = None
     mask: MaskDraft | None = None
     assumptions: tuple[str, ...] = ()
+    date: str | None = None
+    dates: tuple[SceneDraft, ...] = ()
 
 
 # Stands for a scene that is still to be named.
@@ -100,24 +105,45 @@ def _scene_text(draft: SceneDraft) -> str:
         lines.append(f"sensor = {_toml(draft.sensor)}  # preset: wavelengths, scale, no data and what the mask means")
     if draft.grid:
         lines.append(f"grid = {_toml(draft.grid)}  # the band, or the pixel size, whose grid the map uses")
-    for key in ("scale", "offset", "nodata"):
-        if (value := getattr(draft, key)) is not None:
-            lines.append(f"{key} = {_toml(value)}")
+    if draft.date:
+        lines.append(f"date = {_toml(draft.date)}")
+    lines += _scaling(draft)
     if draft.scale is None and not draft.sensor:
         lines.append("# scale = 0.0001  # reflectance = stored * scale + offset, where files do not say it themselves")
-    lines += ["", "[scene.bands]"]
-    width = max(len(band.role) for band in draft.bands)
-    lines += [f"{band.role:<{width}} = {_band_value(band)}{_note(band.note)}" for band in draft.bands]
-    lines.append("")
-    if draft.mask:
-        lines += ["[scene.mask]", f"file = {_toml(draft.mask.file)}{_note(draft.mask.note)}"]
-        if draft.mask.band != 1:
-            lines.append(f"band = {draft.mask.band}")
-        if draft.mask.reject:
-            lines.append(f"reject = [{', '.join(map(_toml, draft.mask.reject))}]  # meanings of the preset, or codes")
-    else:
+    lines += ["", "[scene.bands]", *_bands(draft), "", *_mask(draft, "scene.mask")]
+    if not draft.mask:
         lines += ["# [scene.mask]", '# file = "scene/mask.tif"', "# reject = [1, 2]  # codes, or bits = { cloud = 3 }"]
+    for date in draft.dates:
+        sensor = [f"sensor = {_toml(date.sensor)}"] if date.sensor else []
+        lines += ["", "[[scene.dates]]  # its layers are called role@name", f"name = {_toml(str(date.date))}", *sensor]
+        lines += [*_scaling(date), "", "[scene.dates.bands]", *_bands(date), "", *_mask(date, "scene.dates.mask")]
+    if draft.dates:
+        lines += [
+            "",
+            "# One value per band out of the dates that are clear; single dates stay within reach as role@name.",
+        ]
+        lines += ["# [scene.composite]", '# method = "median"']
     return "\n".join([*lines, ""])
+
+
+def _scaling(draft: SceneDraft) -> list[str]:
+    given = ((key, getattr(draft, key)) for key in ("scale", "offset", "nodata"))
+    return [f"{key} = {_toml(value)}" for key, value in given if value is not None]
+
+
+def _bands(draft: SceneDraft) -> list[str]:
+    width = max(len(band.role) for band in draft.bands)
+    return [f"{band.role:<{width}} = {_band_value(band)}{_note(band.note)}" for band in draft.bands]
+
+
+def _mask(draft: SceneDraft, table: str) -> list[str]:
+    mask = draft.mask
+    if mask is None:
+        return []
+    number = [f"band = {mask.band}"] if mask.band != 1 else []
+    listed = ", ".join(map(_toml, mask.reject))
+    reject = [f"reject = [{listed}]  # meanings of the preset, or codes"] if mask.reject else []
+    return [f"[{table}]", f"file = {_toml(mask.file)}{_note(mask.note)}", *number, *reject]
 
 
 def _band_value(band: BandDraft) -> str:
