@@ -256,25 +256,28 @@ class _Builder:
             )  # fmt: skip
 
     def _smoothing(self) -> tuple[SmoothedBand, ...]:
-        """Every date's bands with a wavelength, each from its neighbours along the spectrum."""
+        """Each band with a wavelength from its neighbours along the spectrum; dates with few bands stay as they are."""
         wanted, where = self.settings.smoothing, "features.smoothing"
         if wanted is None:
             return ()
         smoothed: list[SmoothedBand] = []
+        most = 0
         for date in dict.fromkeys(role.partition("@")[2] for role in self.roles):
             bands = rising(self._wavelengths(date))
             roles = one_each(bands)
+            most = max(most, len(roles))
             if len(roles) < wanted.window:
-                self._problem(
-                    f"smoothing over {wanted.window} bands needs as many of different wavelength, and there are "
-                    f"{len(roles)}", where, "leave smoothing out; it is for imaging spectrometers",
-                )  # fmt: skip
                 continue
             spectrum = list(roles)
             weights = dict(zip(spectrum, smoothing_weights(spectrum, wanted.window, wanted.order), strict=True))
             for role, nm in bands.items():
                 needs = tuple(roles[spectrum[place]] for place in weights[nm])
                 smoothed.append(SmoothedBand(role, needs, tuple(weights[nm].values())))
+        if not smoothed:
+            self._problem(
+                f"smoothing over {wanted.window} bands needs as many of different wavelength, and there are {most}",
+                where, "leave smoothing out; it is for imaging spectrometers",
+            )  # fmt: skip
         return tuple(smoothed)
 
 

@@ -23,7 +23,7 @@ _SHOULDER_SHARE = 0.2
 _INNER_BANDS = 3
 _EDGE_BANDS = 4
 # Broad-band stand-in for the red edge: Guyot & Baret 1988 in the form for a few narrow bands.
-_INSTEAD_OF_EDGE = "red_edge_position"
+_INSTEAD_OF_EDGE = "red_edge_linear"
 
 
 def absorption_step(
