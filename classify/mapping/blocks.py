@@ -176,11 +176,11 @@ class BlockWork:
 
 
 def area_quantum_m2(grid: Grid) -> float:
-    """A power of two about a millionth of a pixel's area, to which pixel areas are rounded.
+    """A power of two some billionth of a pixel's area, to which pixel areas are rounded.
 
-    Sums of its multiples are exact in float64 up to 2^32 pixels, so that totals do not depend on how the scene was cut
-    into blocks; the rounding of each pixel is far below what a pixel's area is known to.
+    Sums of its multiples are exact in float64 up to 2^22 pixels, more than a block has, and sums of those with
+    math.fsum: totals do not depend on how the scene was cut into blocks.
     """
     centre = Window(grid.height // 2, grid.width // 2, 1, 1)
     area_m2 = float(ground_areas_m2(grid, centre)[0, 0])
-    return 2.0 ** (math.floor(math.log2(area_m2)) - 20) if area_m2 > 0 else 2.0**-20
+    return 2.0 ** (math.floor(math.log2(area_m2)) - 30) if area_m2 > 0 else 2.0**-30

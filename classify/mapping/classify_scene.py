@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import hashlib
 import json
+import math
 from collections.abc import Iterable, Mapping, Sequence
 from contextlib import closing
 from dataclasses import dataclass
@@ -118,7 +119,7 @@ def classify_scene(
         files=files,
         areas=areas,
         unmapped_pixels=sum(int(tally.pixels[NO_CLASS]) for tally in tallies),
-        unmapped_m2=sum(float(tally.area_m2[NO_CLASS]) for tally in tallies),
+        unmapped_m2=math.fsum(tally.area_m2[NO_CLASS] for tally in tallies),
         resumed_blocks=resumed,
         warnings=(*engine.warnings, *_unreadable(tallies, windows)),
     )
@@ -212,7 +213,7 @@ def _unreadable(tallies: Sequence[Tally], windows: Sequence[Window]) -> list[Pro
 def _area_table(tallies: Sequence[Tally], classes: Sequence[ClassSettings], unit: str, *, reach: bool) -> pd.DataFrame:
     rows = []
     for c in classes:
-        area_m2 = sum(float(tally.area_m2[c.code]) for tally in tallies)
+        area_m2 = math.fsum(tally.area_m2[c.code] for tally in tallies)
         pixels = sum(int(tally.pixels[c.code]) for tally in tallies)
         beyond = sum(int(tally.beyond[c.code]) for tally in tallies)
         rows.append((c.code, c.name, pixels, area_m2, area_m2 / M2_PER_UNIT[unit], unit, beyond))
