@@ -156,7 +156,8 @@ def _train(job: Job) -> StageResult:
         "polygons": len(training.table), "pixels": len(training.codes), "features": list(recipe.names),
         "screening": model.card["screening"],
     }  # fmt: skip
-    said = (Problem(text, severity="warning") for text in model.card["warnings"])
+    known = {warning.what for warning in warnings}
+    said = (Problem(text, severity="warning") for text in model.card["warnings"] if text not in known)
     return StageResult(summary, (*warnings, *said))
 
 

@@ -29,11 +29,16 @@ def run_stages(call: Call, stages: Sequence[StageName] | None, *, force: bool) -
     from classify.cli.render import stage_text
     from classify.workflow import Job, run
 
+    said: set[str] = set()
+
     def show(name: StageName, result: StageResult | None) -> None:
         if not call.as_json:
             call.show({}, stage_text(name, result))
-        for warning in result.warnings if result else ():
-            call.warn(f"warning: {warning}")
+        # Stages that read the same polygons warn of the same things; once is enough on the screen.
+        for warning in dict.fromkeys(map(str, result.warnings if result else ())):
+            if warning not in said:
+                call.warn(f"warning: {warning}")
+            said.add(warning)
 
     results = run(Job(call.project(), call.jobs, call.progress()), stages, force=force, done=show)
     if call.as_json:
