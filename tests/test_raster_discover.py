@@ -22,7 +22,7 @@ from click.testing import CliRunner
 from hypothesis import given
 from hypothesis import strategies as st
 from rasterio.io import MemoryFile
-from test_raster_scene import read_all, write
+from test_raster_scene import read_all, scene_of, write
 
 from classify.cli.new import command
 from classify.errors import DataError, LandassayError
@@ -366,6 +366,22 @@ def test_an_item_of_version_1_1_with_several_bands_in_an_asset(tmp_path):
     assert read_all(opened(tmp_path))["swir_1"][0, 0] == pytest.approx(0.3)
 
 
+def test_band_names_of_a_preset_win_over_common_names(tmp_path):
+    # Items of Landsat products call their one near-infrared band by the common name of a narrow one.
+    product = "LC09_L2SP_174083_20240611_20240612_02_T1"
+    assets = {
+        key: asset(f"./{product}_SR_B{k}.TIF", common, scale=0.0000275, offset=-0.2)
+        for key, k, common in (("red", 4, "red"), ("nir08", 5, "nir08"), ("swir16", 6, "swir16"))
+    }
+    assets["qa_pixel"] = {"href": f"./{product}_QA_PIXEL.TIF", "type": "image/tiff"}
+    draft = stac.item_draft(item(assets, product), str(tmp_path / "item.json"))
+    assert draft.sensor == "landsat-8-9-c2-l2"
+    assert [b.role for b in draft.bands] == ["red", "nir", "swir_1"]
+    assert draft.mask.file.endswith("QA_PIXEL.TIF")
+    unknown = stac.item_draft(item({"a": asset("a.tif", "nir08")}, "survey"), str(tmp_path / "item.json"))
+    assert [b.role for b in unknown.bands] == ["nir"]
+
+
 FORBIDDEN = [
     "file:///etc/passwd", "/etc/passwd.tif", "../secret.tif", "a/../../secret.tif", "/vsicurl/https://example.org/a.tif",
     "/vsizip/a.zip/b.tif", "http://example.org/a.tif", "ftp://example.org/a.tif", "https://127.0.0.1/a.tif",
@@ -504,6 +520,58 @@ def test_an_address_that_does_not_answer_is_given_up(https, monkeypatch):
     with pytest.raises(DataError, match=r"no answer within|did not answer"):
         stac.read_item(https)
     assert time.monotonic() - start < 2.5
+
+
+class _Files(BaseHTTPRequestHandler):
+    """A web server of a folder that answers ranges, as those that hold imagery do."""
+
+    folder = Path()
+
+    def do_HEAD(self):
+        self._answer(b"")
+
+    def do_GET(self):
+        self._answer(None)
+
+    def _answer(self, content: bytes | None) -> None:
+        file = self.folder / self.path.lstrip("/").partition("?")[0]
+        if not file.is_file():
+            self.send_error(404)
+            return
+        whole = file.read_bytes()
+        wanted = re.fullmatch(r"bytes=(\d+)-(\d*)", self.headers.get("Range", ""))
+        first, last = (int(wanted[1]), int(wanted[2] or len(whole) - 1)) if wanted else (0, len(whole) - 1)
+        part = whole[first : last + 1]
+        self.send_response(206 if wanted else 200)
+        self.send_header("Accept-Ranges", "bytes")
+        self.send_header("Content-Length", str(len(part)))
+        if wanted:
+            self.send_header("Content-Range", f"bytes {first}-{first + len(part) - 1}/{len(whole)}")
+        self.end_headers()
+        if content is None:
+            self.wfile.write(part)
+
+    def log_message(self, *args):
+        """Keep the test's output clean."""
+
+
+def test_a_scene_is_read_over_http_as_from_disk(tmp_path, monkeypatch):
+    stored = np.random.default_rng(3).integers(1, 9000, (2, 300, 300), dtype=np.uint16)
+    write(tmp_path / "stack.tif", stored, tiled=True, blockxsize=64, blockysize=64, compress="deflate")
+    monkeypatch.setattr(_Files, "folder", tmp_path)
+    server = HTTPServer(("localhost", 0), _Files)
+    threading.Thread(target=server.serve_forever, daemon=True).start()
+    address = f"http://localhost:{server.server_port}"
+    try:
+        bands = {role: {"file": f"{address}/stack.tif?token=1", "band": k} for k, role in enumerate(("red", "nir"), 1)}
+        scene = scene_of(tmp_path, bands, scale=1e-4)
+        got = read_all(scene)
+        with pytest.raises(DataError, match="cannot be opened"):
+            describe(f"{address}/lost.tif")
+    finally:
+        server.shutdown()
+        server.server_close()
+    assert np.allclose(got["nir"], stored[1] * 1e-4, rtol=1e-5)
 
 
 def test_addresses_that_cannot_be_reached_say_so(monkeypatch):

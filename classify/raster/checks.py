@@ -10,7 +10,7 @@ from classify.errors import Problem
 from classify.raster.grid import Grid, Window
 from classify.raster.reader import Scene
 from classify.raster.resample import Placement
-from classify.raster.sources import BandSource
+from classify.raster.sources import BandSource, is_remote
 
 # Windows on a lattice of this many per side, this large, stand for the whole scene in checks of its values.
 _SAMPLES_PER_SIDE = 4
@@ -67,7 +67,9 @@ def placement_problems(native: Grid, grid: Grid, name: str, path: str) -> list[P
 
 def value_warnings(scene: Scene) -> list[Problem]:
     """Warnings from the values themselves, looked at in windows spread over the scene. Raises DataError."""
-    windows = _sample_windows(scene.grid)
+    # Each window costs a remote file a request or more.
+    per_side = 2 if any(is_remote(band.path) for band in scene.bands) else _SAMPLES_PER_SIDE
+    windows = _sample_windows(scene.grid, per_side)
     bands = [band for band in scene.bands if band.date is not None]
     # As stored and unmasked: what is looked for does not depend on clouds, and the nearest pixel is quick.
     with replace(scene, masks={}, composite=None, resampling="nearest").open() as reader:
@@ -89,10 +91,8 @@ def value_warnings(scene: Scene) -> list[Problem]:
     return problems
 
 
-def _sample_windows(grid: Grid) -> list[Window]:
-    rows, cols = (
-        np.unique(np.linspace(0, max(size - _SAMPLE_PX, 0), _SAMPLES_PER_SIDE).astype(int)) for size in grid.shape_yx
-    )
+def _sample_windows(grid: Grid, per_side: int) -> list[Window]:
+    rows, cols = (np.unique(np.linspace(0, max(size - _SAMPLE_PX, 0), per_side).astype(int)) for size in grid.shape_yx)
     cut = (Window(int(row), int(col), _SAMPLE_PX, _SAMPLE_PX).intersect(grid.window) for row in rows for col in cols)
     return [window for window in cut if window is not None]
 

@@ -28,9 +28,8 @@ class MaskField:
         """bool array of the same shape."""
         if self.width is None:
             return np.isin(stored, self.values)
-        # Through the unsigned type of the same size, so that a set top bit is a bit and not a sign.
-        bits = stored.astype(stored.dtype.str.replace("i", "u"), copy=False) if stored.dtype.kind == "i" else stored
-        run = (bits.astype(np.uint64) >> np.uint64(self.first)) & np.uint64((1 << self.width) - 1)
+        # A negative number becomes the same bits with ones above them, where no run of its type lies.
+        run = (stored.astype(np.uint64) >> np.uint64(self.first)) & np.uint64((1 << self.width) - 1)
         return np.isin(run, np.array(self.values, dtype=np.uint64))
 
 

@@ -52,15 +52,18 @@ class Scene:
     def band(self, role: str) -> BandSource:
         """The stored band of a role; of a composite, that of its first date. Raises DataError listing the layers."""
         for name in (role, f"{role}@{self.composite.dates[0]}" if self.composite else role):
-            for band in self.bands:
-                if band.role == name:
-                    return band
+            if name in self._by_role:
+                return self._by_role[name]
         fix = f"it has: {', '.join(self.roles)}"
         raise DataError(f"the scene has no band {role!r}", where="scene.bands", fix=fix)
 
     def open(self) -> SceneReader:
         """A reader for the calling thread; closes with its context."""
         return SceneReader(self)
+
+    @cached_property
+    def _by_role(self) -> dict[str, BandSource]:
+        return {band.role: band for band in self.bands}
 
     @cached_property
     def _groups(self) -> dict[str, tuple[BandSource, ...]]:
@@ -110,8 +113,8 @@ class SceneReader:
         """
         scene = self._scene
         wanted = scene.roles if roles is None else tuple(roles)
-        if unknown := [role for role in wanted if role not in scene.roles]:
-            scene.band(unknown[0])  # raises
+        if unknown := set(wanted).difference(scene.roles):
+            scene.band(min(unknown))  # raises
         padded = window.pad(halo_px)
         inside = padded.intersect(scene.grid.window)
         if inside is None:
@@ -174,9 +177,10 @@ class SceneReader:
 
     def _bands(self, bands: Sequence[BandSource], window: Window) -> dict[str, Array]:
         layers: dict[str, Array] = {}
+        asked = {band.role for band in bands}
         for band in bands:
             if band.role not in layers:
-                together = [b for b in self._scene._groups[band.role] if any(b.role == w.role for w in bands)]
+                together = [b for b in self._scene._groups[band.role] if b.role in asked]
                 layers.update(zip((b.role for b in together), self._group(together, window), strict=True))
         return layers
 

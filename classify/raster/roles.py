@@ -40,6 +40,11 @@ def role_in_name(text: str) -> str | None:
     return None
 
 
+def holds(text: str, name: str) -> bool:
+    """Whether a file name holds a band's name as a part between separators, whatever the case."""
+    return re.search(rf"(?<![A-Za-z0-9]){re.escape(name)}(?![A-Za-z0-9])", text, flags=re.IGNORECASE) is not None
+
+
 def red_edge_role(wavelength_nm: float) -> str:
     """Which of the red-edge roles lies nearest to a wavelength."""
     edges = ("red_edge_1", "red_edge_2", "red_edge_3")

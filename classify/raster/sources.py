@@ -17,10 +17,11 @@ from rasterio.errors import RasterioError
 from classify.errors import DataError
 from classify.raster.grid import Grid, Window
 
-# An address that does not answer is given up after these times instead of hanging for minutes.
+# An address that does not answer, or sends less than 100 bytes a second for 20 s, is given up instead of hanging.
 REMOTE_OPTIONS = {
     "GDAL_HTTP_CONNECTTIMEOUT": "15",
-    "GDAL_HTTP_TIMEOUT": "60",
+    "GDAL_HTTP_LOW_SPEED_TIME": "20",
+    "GDAL_HTTP_LOW_SPEED_LIMIT": "100",
     "GDAL_HTTP_MAX_RETRY": "2",
     "GDAL_HTTP_RETRY_DELAY": "1",
     "GDAL_DISABLE_READDIR_ON_OPEN": "EMPTY_DIR",

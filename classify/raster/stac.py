@@ -5,14 +5,14 @@ from __future__ import annotations
 import json
 import re
 import urllib.parse
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
-from pathlib import Path
+from pathlib import Path, PurePosixPath
 from typing import Any
 
 from classify.errors import DataError
 from classify.raster.remote import fetch, read_local, resolve
-from classify.raster.roles import red_edge_role, role_in_name, role_of_word
+from classify.raster.roles import holds, red_edge_role, role_in_name, role_of_word
 from classify.raster.sensors import Sensor, load_sensor
 from classify.settings import preset_names
 from classify.settings.starter import BandDraft, MaskDraft, SceneDraft
@@ -67,6 +67,8 @@ def item_draft(item: Json, source: str) -> SceneDraft:
                 finest[found.role] = size
     if not bands:
         raise DataError("this item names no asset that is a reflectance band", where=source, fix="name another item")
+    if "nir" not in bands and "nir_narrow" in bands:
+        bands["nir"] = replace(bands.pop("nir_narrow"), role="nir")  # the only near-infrared band, whatever its width
     notes = ["bands, scale and offset are those that the STAC item states"]
     notes.append(f"the sensor is {sensor.title}" if sensor else "no preset fits the item's platform")
     notes.append(
@@ -113,7 +115,7 @@ def _asset_bands(key: str, asset: Json, sensor: Sensor | None) -> list[BandDraft
     tables = _band_tables(asset) or [{}]
     found = []
     for number, band in enumerate(tables, 1):
-        role = _role(key if len(tables) == 1 else "", band, sensor)
+        role = _role(band, [key, PurePosixPath(asset["href"]).stem] if len(tables) == 1 else [], sensor)
         if role is None:
             continue
         micrometres = _number(_either(band, "eo:center_wavelength", "center_wavelength"))
@@ -143,19 +145,19 @@ def _band_tables(asset: Json) -> list[dict[str, Any]]:
     return tables
 
 
-def _role(key: str, band: Json, sensor: Sensor | None) -> str | None:
-    if sensor:
-        names = {text.casefold(): role for role, known in sensor.bands.items() for text in known.names if known.ground}
-        for text in (band.get("name"), key):
-            if isinstance(text, str) and text.casefold() in names:
-                return names[text.casefold()]
+def _role(band: Json, names: Sequence[str], sensor: Sensor | None) -> str | None:
+    """Role by the preset's band names, else by the common name, else by words in the band's or the asset's names."""
+    own = [text for text in (band.get("name"), *names) if isinstance(text, str)]
+    for role, known in sensor.bands.items() if sensor else ():
+        if any(holds(text, name) for name in known.names for text in own):
+            return role if known.ground else None
     common = _either(band, "eo:common_name", "common_name")
     micrometres = _number(_either(band, "eo:center_wavelength", "center_wavelength"))
     if common == "rededge" and micrometres:
         return red_edge_role(1000 * micrometres)
-    for text in (common, band.get("name"), key):
-        if isinstance(text, str) and (role := role_of_word(text) or role_in_name(text)):
-            return role if role != "water_vapour" else None
+    for text in [str(common)] if common else own:
+        if word := role_of_word(text) or role_in_name(text):
+            return word if word != "water_vapour" else None
     return None
 
 
