@@ -12,7 +12,7 @@ from typing import Any, TypeVar
 
 from classify.assessment.reference import read_labels
 from classify.errors import LandassayError, Problem
-from classify.features import Recipe, build_recipe, fit_recipe, scene_facts
+from classify.features import Recipe, build_recipe, fit_recipe, index_availability, scene_facts
 from classify.models import check_classes
 from classify.progress import SILENT, Progress
 from classify.raster.scene import Scene, open_scene
@@ -65,6 +65,18 @@ def check_project(project: Project, jobs: int = 1, progress: Progress = SILENT) 
     if project.reference is not None:
         result.reference = _attempt(result, lambda: read_labels(project))
     return result
+
+
+def check_indices(project: Project) -> list[dict[str, str]]:
+    """Every index of the catalogue with name, title, what it shows and, where this scene cannot compute it, the reason.
+
+    Raises DataError or SettingsError when the scene cannot be opened.
+    """
+    scene = open_scene(project.scene, project)
+    return [
+        {"name": a.index.name, "title": a.index.title, "shows": a.index.shows, "reason": a.reason}
+        for a in index_availability(scene.roles, scene_facts(scene))
+    ]
 
 
 def _recipe(project: Project, scene: Scene | None, roles: tuple[str, ...], progress: Progress) -> Recipe:

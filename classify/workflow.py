@@ -24,7 +24,7 @@ from classify.errors import DataError, Problem
 from classify.features import Recipe, build_recipe, fit_recipe, scene_facts
 from classify.files import read_json, remove_leftovers, sha256, write_json
 from classify.mapping.classify_scene import MapOptions, classify_scene
-from classify.models import fit_model, inspect_training, load_model, save_model
+from classify.models import check_scene, fit_model, inspect_training, load_model, save_model
 from classify.progress import SILENT, Progress
 from classify.raster.scene import open_scene
 from classify.report import gather_facts, write_report
@@ -177,6 +177,7 @@ def _classify(job: Job) -> StageResult:
     project = job.project
     model = load_model(job.outputs / "model")
     scene = open_scene(project.scene, project)
+    findings = check_scene(model, scene)
     options = MapOptions(jobs=job.jobs, confidence=project.map.confidence, area_unit=project.report.area_unit)
     result = classify_scene(
         model, scene, job.outputs / "map", classes=project.classes, options=options, progress=job.progress
@@ -186,7 +187,7 @@ def _classify(job: Job) -> StageResult:
         "unmapped_pixels": result.unmapped_pixels,
         "unmapped_m2": result.unmapped_m2,
     }
-    return StageResult(summary, scene.warnings)
+    return StageResult(summary, (*scene.warnings, *findings))
 
 
 def _assess(job: Job) -> StageResult:
