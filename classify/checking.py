@@ -54,14 +54,22 @@ class CheckResult:
 
 
 def check_project(project: Project, jobs: int = 1, progress: Progress = SILENT) -> CheckResult:
-    """Check scene, features, training polygons and reference sample of a project. Writes nothing, raises nothing of ours."""
+    """Check scene, features, training polygons and reference sample of a project.
+
+    Writes nothing; what is wrong with the input is in the result, not raised.
+    """
     result = CheckResult()
     scene = result.scene = _attempt(result, lambda: open_scene(project.scene, project))
     roles = tuple(project.scene.bands) if scene is None else scene.roles
     recipe = result.recipe = _attempt(result, lambda: _recipe(project, scene, roles, progress))
     if scene is not None:
         _add(result, scene.warnings)
-        _check_training(result, project, scene, recipe, jobs, progress)
+        polygons = _attempt(result, lambda: read_polygons(project, scene.grid))
+        if polygons is not None and recipe is not None:
+            result.training = _attempt(result, lambda: extract_pixels(polygons, scene, recipe, jobs, progress))
+        if result.training is not None:
+            _add(result, result.training.problems)
+            _add(result, check_classes(result.training, project))
     if project.reference is not None:
         result.reference = _attempt(result, lambda: read_labels(project))
     return result
@@ -102,19 +110,6 @@ def balance(training: TrainingSet) -> list[dict[str, Any]]:
             }
         )
     return rows
-
-
-def _check_training(
-    result: CheckResult, project: Project, scene: Scene, recipe: Recipe | None, jobs: int, progress: Progress
-) -> None:
-    polygons = _attempt(result, lambda: read_polygons(project, scene.grid))
-    if polygons is None or recipe is None:
-        return
-    training = _attempt(result, lambda: extract_pixels(polygons, scene, recipe, jobs, progress))
-    if training is not None:
-        result.training = training
-        _add(result, training.problems)
-        _add(result, check_classes(training, project))
 
 
 def _attempt(result: CheckResult, read: Callable[[], _T]) -> _T | None:

@@ -46,7 +46,7 @@ def _indices(call: Call) -> None:
     parts = []
     for group, members in groupby(rows, key=lambda row: row["shows"]):
         lines = [
-            f"  {row['name']:<10} {row['title']}" + (f"  ({row['reason']})" if row["reason"] else "") for row in members
+            f"  {row['name']:<17}{row['title']}" + (f"  ({row['reason']})" if row["reason"] else "") for row in members
         ]
         parts.append("\n".join([f"{group}", *lines]))
     able = sum(not row["reason"] for row in rows)
