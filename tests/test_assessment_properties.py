@@ -24,7 +24,7 @@ PLAIN = AssessmentOptions(interval="normal")
 
 @st.composite
 def stratified_samples(draw, *, strata_are_classes=False, clusters=False, min_per_stratum=2):
-    """Points and strata; each stratum has at least `min_per_stratum` units, which are clusters if they are asked for."""
+    """Points and strata; each stratum has at least `min_per_stratum` units: points, or clusters if asked for."""
     k = draw(st.integers(2, 4))
     names = CLASSES[:k]
     strata = names if strata_are_classes else tuple(f"s{i}" for i in range(draw(st.integers(1, 4))))

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 import pytest
+from scipy import stats
 from sklearn.metrics import accuracy_score, cohen_kappa_score, f1_score, precision_score, recall_score
 from statsmodels.stats.inter_rater import cohens_kappa
 from statsmodels.stats.proportion import proportion_confint
@@ -12,8 +13,8 @@ from statsmodels.stats.proportion import proportion_confint
 from classify.assessment import AssessmentOptions, assess, assess_matrix
 
 # Olofsson, Foody, Herold, Stehman, Woodcock & Wulder 2014, "Good practices for estimating area and assessing accuracy
-# of land change", Remote Sensing of Environment 148, 42-57, section 5. Counts and results from memory; the halves of the
-# producer's accuracies are computed with the paper's equation 7, not recalled. No finite population correction.
+# of land change", Remote Sensing of Environment 148, 42-57, section 5. Counts and results from memory; the halves of
+# the producer's accuracies are computed with the paper's equation 7, not recalled. No finite population correction.
 LAND_CHANGE = ("deforestation", "forest gain", "stable forest", "stable non-forest")
 LAND_CHANGE_COUNTS = [[66, 0, 5, 4], [0, 55, 8, 12], [1, 0, 153, 11], [2, 1, 9, 313]]
 LAND_CHANGE_PIXELS = [200_000, 150_000, 3_200_000, 6_450_000]
@@ -117,7 +118,6 @@ def test_wilson_interval_of_a_simple_random_sample(right, n):
     """With a t quantile close to the normal one, the interval is Wilson's on n - 1, the unbiased variance's size."""
     points = pd.DataFrame({"map": ["a"] * n, "reference": ["a"] * right + ["b"] * (n - right)})
     found = assess(points, options=AssessmentOptions(interval="wilson")).overall_accuracy
-    from scipy import stats
 
     size = n if right in (0, n) else n - 1
     size *= (stats.norm.ppf(0.975) / stats.t.ppf(0.975, n - 1)) ** 2
