@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import LinAlgError, eigh
+from scipy.linalg import eigh
 from threadpoolctl import threadpool_limits
 
 from classify.errors import DataError
@@ -15,6 +15,8 @@ from classify.settings.model import ComponentSettings
 
 # Weights of bands are kept to so many significant digits: far finer than reflectance is known.
 _DIGITS = 12
+# Least eigenvalue of the noise's correlations below which some layer repeats others.
+_DEPENDENT = 1e-9
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,13 +69,13 @@ def fit_projection(
             shares = values / values.sum()
         else:
             noise = np.atleast_2d(np.cov(steps / scale, rowvar=False)) / 2
-            try:
-                values, vectors = eigh(covariance, noise)
-            except LinAlgError as error:
+            level = np.sqrt(np.diag(noise))
+            if level.min() <= 0 or eigh(noise / np.outer(level, level), eigvals_only=True)[0] < _DEPENDENT:
                 raise DataError(
                     "the noise of the layers depends on each other strictly, so there are no minimum noise fractions",
                     where="features.components", fix="leave out layers made from others, or use principal components",
-                ) from error  # fmt: skip
+                )  # fmt: skip
+            values, vectors = eigh(covariance, noise)
             shares = np.maximum(values - 1, 0)  # variance of signal and noise over that of noise, less one
     chosen = np.argsort(-values, kind="stable")[: settings.count]
     weights = vectors[:, chosen].T / scale
