@@ -178,10 +178,10 @@ def _classify(job: Job) -> StageResult:
     model = load_model(job.outputs / "model")
     scene = open_scene(project.scene, project)
     findings = check_scene(model, scene)
-    options = MapOptions(jobs=job.jobs, confidence=project.map.confidence, area_unit=project.report.area_unit)
     result = classify_scene(
-        model, scene, job.outputs / "map", classes=project.classes, options=options, progress=job.progress
-    )
+        model, scene, job.outputs / "map", classes=project.classes, options=MapOptions.of(project, job.jobs),
+        progress=job.progress,
+    )  # fmt: skip
     summary = {
         "areas": result.areas.to_dict("records"),
         "unmapped_pixels": result.unmapped_pixels,

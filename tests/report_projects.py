@@ -17,7 +17,7 @@ from rasterio.crs import CRS
 from classify.assessment import assess_project
 from classify.files import write_json
 from classify.mapping.byte_raster import ByteRaster
-from classify.mapping.classify_scene import layer_of
+from classify.mapping.finish import layer_of
 from classify.mapping.writer import write_cog
 from classify.raster.grid import Grid
 from classify.settings import Project, load_project

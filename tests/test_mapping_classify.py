@@ -2,15 +2,16 @@
 
 from __future__ import annotations
 
+import multiprocessing
 import random
 import resource
 import signal
-import subprocess
 import sys
 import time
 from contextlib import contextmanager
 from dataclasses import replace
 
+import geopandas as gpd
 import numpy as np
 import pytest
 import rasterio
@@ -19,6 +20,7 @@ from small_project import make_small_project
 
 from classify.errors import DataError, OutputError
 from classify.mapping.classify_scene import MapOptions, classify_scene
+from classify.mapping.tidy import TidyOptions
 from classify.mapping.unfinished import FOLDER
 from classify.models import load_model
 from classify.progress import Silent
@@ -218,47 +220,57 @@ def test_a_grid_beyond_all_reason_is_refused_before_work_starts(made, tmp_path):
     assert not list(tmp_path.iterdir())
 
 
-RUN = """
-import sys
-from pathlib import Path
-from dataclasses import replace
-from classify.mapping.classify_scene import MapOptions, classify_scene
-from classify.models import load_model
-from classify.raster.scene import open_scene
-from classify.settings import load_project
-from classify.workflow import Job, run
-folder, out = Path(sys.argv[1]), Path(sys.argv[2])
-project = load_project(folder)
-model = load_model(folder / "outputs" / "model")
-options = MapOptions(block_px=8, reach=True, jobs=2)
-classify_scene(model, open_scene(project.scene, project), out, classes=project.classes, options=options)
-"""
+def test_a_tidied_map_keeps_the_raw_one_and_is_what_areas_and_polygons_tell_of(made, tmp_path):
+    map_into = made[-1]
+    options = replace(OPTIONS, tidy=TidyOptions(minimum_unit_m2=600.0, majority_px=3), polygons=True)
+    map_into(tmp_path / "plain")
+    result = map_into(tmp_path / "tidied", options)
+    with rasterio.open(result.files["raw"]) as raw, rasterio.open(tmp_path / "plain" / "cover.tif") as plain:
+        before = plain.read(1)
+        np.testing.assert_array_equal(raw.read(1), before)
+    with rasterio.open(result.cover) as cover:
+        after = cover.read(1)
+        assert cover.tags()["TIDIED"].startswith("majority of 3 x 3 pixels, then minimum mapping unit 0.06 ha")
+    assert (before != after).sum() > 10
+    assert list(result.areas["pixels"]) == [(after == code).sum() for code in result.areas["code"]]
+    polygons = gpd.read_file(result.files["polygons"])
+    assert polygons.groupby("code")["pixels"].sum().to_dict() == {
+        row.code: row.pixels for row in result.areas.itertuples() if row.pixels
+    }
+    # A later plain map leaves nothing of the tidied one behind.
+    map_into(tmp_path / "tidied")
+    assert contents(tmp_path / "tidied") == contents(tmp_path / "plain")
+    assert {path.name for path in (tmp_path / "tidied").iterdir()} == set(FILES)
 
 
-def run_killed(project_folder, out, after_lines, rng):
-    """Start the run in a process and kill it once its journal has so many lines. Returns whether it was killed."""
-    process = subprocess.Popen([sys.executable, "-c", RUN, str(project_folder), str(out)])
+def run_killed(map_into, out, after_lines, pause_s):
+    """Map in a forked process and kill it once its journal has so many lines. Returns whether it was killed."""
+    process = multiprocessing.get_context("fork").Process(
+        target=map_into, args=(out, replace(OPTIONS, block_px=8, jobs=2)), daemon=True
+    )
+    process.start()
     journal = out / FOLDER / "journal.jsonl"
-    try:
-        while process.poll() is None:
-            lines = journal.read_bytes().count(b"\n") if journal.exists() else 0
-            if lines >= after_lines:
-                time.sleep(rng.uniform(0, 0.01))
-                break
-            time.sleep(0.001)
-    finally:
-        process.kill()
-    return process.wait() != 0
-
-
-@pytest.mark.parametrize("kills", [2, pytest.param(14, marks=pytest.mark.study)])
-def test_killed_at_random_moments_the_map_is_the_same(made, tmp_path, trained_project, kills):
-    made[-1](tmp_path / "straight")
-    rng = random.Random(5)
-    blocks = 12 * 15
-    for after in sorted(rng.randrange(1, blocks + 1) for _ in range(kills)):
-        if not run_killed(trained_project, tmp_path / "killed", after, rng):
+    while process.is_alive():
+        if journal.exists() and journal.read_bytes().count(b"\n") >= after_lines:
+            time.sleep(pause_s)
             break
-    subprocess.run([sys.executable, "-c", RUN, str(trained_project), str(tmp_path / "killed")], check=True)
+        time.sleep(0.001)
+    process.kill()
+    process.join()
+    return process.exitcode != 0
+
+
+@pytest.mark.skipif(sys.platform == "win32", reason="forks")
+@pytest.mark.filterwarnings("ignore:This process:DeprecationWarning")
+@pytest.mark.parametrize("kills", [12, pytest.param(100, marks=pytest.mark.study)])
+def test_killed_at_random_moments_the_map_is_the_same(made, tmp_path, kills):
+    map_into = made[-1]
+    map_into(tmp_path / "straight")
+    choose = random.Random(5)
+    blocks, killed = 12 * 15, 0
+    for after in sorted(choose.randrange(1, blocks + 2) for _ in range(kills)):
+        killed += run_killed(map_into, tmp_path / "killed", after, choose.uniform(0, 0.02))
+    assert killed >= 10
+    map_into(tmp_path / "killed", replace(OPTIONS, block_px=8))
     assert contents(tmp_path / "straight") == contents(tmp_path / "killed")
     assert {path.name for path in (tmp_path / "killed").iterdir() if ".landassay-part" not in path.name} == set(FILES)

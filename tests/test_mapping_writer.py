@@ -15,7 +15,7 @@ from rio_cogeo.cogeo import cog_validate
 
 from classify.errors import OutputError
 from classify.mapping.byte_raster import ByteRaster
-from classify.mapping.classify_scene import layer_of
+from classify.mapping.finish import layer_of
 from classify.mapping.writer import write_cog
 from classify.raster.grid import Grid
 from classify.settings import ClassSettings
@@ -109,7 +109,7 @@ def test_confidence_overview_averages_what_is_known(tmp_path, stored):
 @pytest.mark.parametrize(
     ("failure", "raised"), [(KeyboardInterrupt(), KeyboardInterrupt), (RasterioIOError("No space left"), OutputError)]
 )
-def test_a_failure_midway_keeps_the_earlier_map(tmp_path, stored, codes, monkeypatch, failure, raised):
+def test_a_failure_midway_keeps_the_earlier_map(tmp_path, stored, codes, monkeypatch, failure, raised):  # noqa: PLR0917
     target = tmp_path / "map" / "cover.tif"
     raster = stored(codes)
     write_cog(raster, target, COVER)

@@ -142,19 +142,7 @@ class BlockWork:
             layers["reach"][at] = self.model.reach.percent(pixels)
 
     def _tally(self, window: Window, layers: Layers, unreadable: str = "") -> Tally:
-        codes = layers["cover"].ravel()
-        quantum_m2 = area_quantum_m2(self.scene.grid)
-        areas = np.rint(ground_areas_m2(self.scene.grid, window) / quantum_m2) * quantum_m2
-        beyond = np.zeros(0, dtype=np.uint8)
-        if "reach" in layers:
-            reach = layers["reach"].ravel()
-            beyond = codes[(reach > WITHIN_REACH) & (reach != NO_PERCENT)]
-        return Tally(
-            np.bincount(codes, minlength=256),
-            np.bincount(codes, areas.ravel(), minlength=256).astype(np.float64),
-            np.bincount(beyond, minlength=256),
-            unreadable,
-        )
+        return tally(self.scene.grid, window, layers["cover"], layers.get("reach"), unreadable)
 
     @contextmanager
     def _reader(self) -> Iterator[SceneReader]:
@@ -175,12 +163,29 @@ class BlockWork:
         self.__dict__.update(state, _readers=SimpleQueue())
 
 
-def area_quantum_m2(grid: Grid) -> float:
-    """A power of two some billionth of a pixel's area, to which pixel areas are rounded.
+def tally(
+    grid: Grid, window: Window, cover: NDArray[np.uint8], reach: NDArray[np.uint8] | None = None, unreadable: str = ""
+) -> Tally:
+    """Count codes and reach, uint8 (h, w), of a window."""
+    codes = cover.ravel()
+    beyond = np.zeros(0, dtype=np.uint8)
+    if reach is not None:
+        beyond = codes[(reach.ravel() > WITHIN_REACH) & (reach.ravel() != NO_PERCENT)]
+    return Tally(
+        np.bincount(codes, minlength=256),
+        np.bincount(codes, rounded_areas_m2(grid, window).ravel(), minlength=256).astype(np.float64),
+        np.bincount(beyond, minlength=256),
+        unreadable,
+    )
 
-    Sums of its multiples are exact in float64 up to 2^22 pixels, more than a block has, and sums of those with
+
+def rounded_areas_m2(grid: Grid, window: Window) -> NDArray[np.float64]:
+    """Ground areas float64 (h, w), rounded to a power of two some billionth of a pixel's area.
+
+    Sums of such numbers are exact in float64 up to 2^22 pixels, more than a block has, and so are sums of those with
     math.fsum: totals do not depend on how the scene was cut into blocks.
     """
     centre = Window(grid.height // 2, grid.width // 2, 1, 1)
-    area_m2 = float(ground_areas_m2(grid, centre)[0, 0])
-    return 2.0 ** (math.floor(math.log2(area_m2)) - 30) if area_m2 > 0 else 2.0**-30
+    about_m2 = float(ground_areas_m2(grid, centre)[0, 0])
+    quantum_m2 = 2.0 ** (math.floor(math.log2(about_m2)) - 30) if about_m2 > 0 else 2.0**-30
+    return np.asarray(np.rint(ground_areas_m2(grid, window) / quantum_m2) * quantum_m2)

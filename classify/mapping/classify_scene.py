@@ -21,17 +21,17 @@ import pandas as pd
 
 from classify import __version__
 from classify.errors import DataError, Problem
-from classify.files import replacing
-from classify.mapping.blocks import NO_CLASS, NO_VALUE, BlockWork, LayerName, Tally
+from classify.mapping.blocks import NO_CLASS, BlockWork, LayerName, Tally
 from classify.mapping.engines import Engine, Threads
+from classify.mapping.finish import Delivery, deliver
+from classify.mapping.tidy import AS_IT_IS, TidyOptions
 from classify.mapping.unfinished import Unfinished, open_unfinished
-from classify.mapping.writer import Layer, write_cog
 from classify.models import TrainedModel
 from classify.progress import SILENT, Progress
 from classify.raster.grid import Grid, Window
 from classify.raster.scene import Scene
 from classify.raster.sources import is_remote
-from classify.settings import ClassSettings
+from classify.settings import ClassSettings, Project
 from classify.settings.model import M2_PER_UNIT
 
 # A grid with more pixels than this is a mistake in the settings (the whole land surface at 10 m has fewer).
@@ -42,7 +42,8 @@ _MOST_PIXELS = 2**41
 class MapOptions:
     """jobs: threads, unless an engine is given. block_px: side of a block. confidence, reach: write these layers too.
 
-    skip_unreadable: map a block that cannot be read as no data and count it, instead of stopping.
+    tidy: what is done to the class map. polygons: write its patches as polygons too. skip_unreadable: map a block that
+    cannot be read as no data and count it, instead of stopping. engine: where blocks are computed.
     """
 
     jobs: int = 1
@@ -50,20 +51,33 @@ class MapOptions:
     confidence: bool = True
     area_unit: str = "ha"
     reach: bool = False
+    tidy: TidyOptions = AS_IT_IS
+    polygons: bool = False
     skip_unreadable: bool = False
     engine: Engine | None = None
+
+    @classmethod
+    def of(cls, project: Project, jobs: int = 1) -> MapOptions:
+        """As the project file says."""
+        given = project.map
+        tidy = TidyOptions(given.minimum_unit_ha * M2_PER_UNIT["ha"], given.neighbours, given.majority)
+        return cls(
+            jobs=jobs, confidence=given.confidence, area_unit=project.report.area_unit, reach=given.reach, tidy=tidy,
+            polygons=given.polygons,
+        )  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True)
 class MapResult:
     """What was written.
 
-    files: path by layer. areas: one row per class with code, name, pixels, area_m2, area, unit and, with reach,
-    beyond_reach_pixels. unmapped_pixels, unmapped_m2: without a class (masked, no data, outside). resumed_blocks: taken
-    over from a run that was interrupted. warnings: what the user should know, unreadable blocks among them.
+    files: path by layer; among them "raw", the class map as the model gave it, if it was tidied. areas: of the tidied
+    map, one row per class with code, name, pixels, area_m2, area, unit and, with reach, beyond_reach_pixels.
+    unmapped_pixels, unmapped_m2: without a class (masked, no data, outside). resumed_blocks: taken over from a run that
+    was interrupted. warnings: what the user should know, unreadable blocks among them.
     """
 
-    files: Mapping[LayerName, Path]
+    files: Mapping[str, Path]
     areas: pd.DataFrame
     unmapped_pixels: int
     unmapped_m2: float
@@ -105,41 +119,16 @@ def classify_scene(
         if resumed:
             progress.note(f"Going on where an earlier run was: {resumed} of {len(windows)} blocks are done")
         _compute(work, engine, store, windows, progress)
-        tallies = [store.tallies[number] for number in range(len(windows))]
-        files = {name: folder / f"{name}.tif" for name in work.layers}
-        with progress.task("Writing the map", len(files)) as task:
-            for name, path in files.items():
-                write_cog(store.raster(name), path, layer_of(name, classes))
-                task.advance()
-        areas = _area_table(tallies, classes, options.area_unit, reach="reach" in work.layers)
-        with replacing(folder / "areas.csv") as temporary:
-            areas.to_csv(temporary, index=False, lineterminator="\n")
+        wanted = Delivery(classes, options.tidy, options.polygons, options.area_unit, options.jobs)
+        delivered = deliver(store, folder, windows, wanted, progress)
         store.remove()
     return MapResult(
-        files=files,
-        areas=areas,
-        unmapped_pixels=sum(int(tally.pixels[NO_CLASS]) for tally in tallies),
-        unmapped_m2=math.fsum(tally.area_m2[NO_CLASS] for tally in tallies),
+        files=delivered.files,
+        areas=delivered.areas,
+        unmapped_pixels=sum(int(tally.pixels[NO_CLASS]) for tally in delivered.tallies),
+        unmapped_m2=math.fsum(tally.area_m2[NO_CLASS] for tally in delivered.tallies),
         resumed_blocks=resumed,
-        warnings=(*engine.warnings, *_unreadable(tallies, windows)),
-    )
-
-
-def layer_of(name: LayerName, classes: Sequence[ClassSettings]) -> Layer:
-    """How a layer is stored; the class map carries colours and names."""
-    if name == "confidence":
-        description = "probability that the model gives to the mapped class, percent"
-        return Layer(NO_VALUE[name], "average", description)
-    if name == "reach":
-        description = "distance from the training data in percent of the threshold: above 100 is beyond their reach"
-        return Layer(NO_VALUE[name], "average", description)
-    return Layer(
-        nodata=NO_CLASS,
-        overviews="mode",
-        description="cover class",
-        colours={c.code: c.colour or "#808080" for c in classes},
-        categories={NO_CLASS: "no data", **{c.code: c.name for c in classes}},
-        tags={f"CLASS_{c.code}": c.name for c in classes},
+        warnings=(*engine.warnings, *_unreadable(delivered.tallies, windows)),
     )
 
 
@@ -208,14 +197,3 @@ def _unreadable(tallies: Sequence[Tally], windows: Sequence[Window]) -> list[Pro
             severity="warning",
         )
     ]
-
-
-def _area_table(tallies: Sequence[Tally], classes: Sequence[ClassSettings], unit: str, *, reach: bool) -> pd.DataFrame:
-    rows = []
-    for c in classes:
-        area_m2 = math.fsum(tally.area_m2[c.code] for tally in tallies)
-        pixels = sum(int(tally.pixels[c.code]) for tally in tallies)
-        beyond = sum(int(tally.beyond[c.code]) for tally in tallies)
-        rows.append((c.code, c.name, pixels, area_m2, area_m2 / M2_PER_UNIT[unit], unit, beyond))
-    table = pd.DataFrame(rows, columns=["code", "name", "pixels", "area_m2", "area", "unit", "beyond_reach_pixels"])
-    return table if reach else table.drop(columns="beyond_reach_pixels")

@@ -41,7 +41,7 @@ class Trees(NamedTuple):
     feature_bits: int
 
 
-def _jit(function: Any) -> Any:  # noqa: ANN401 - a numba dispatcher
+def jit(function: Any) -> Any:  # noqa: ANN401 - a numba dispatcher
     """Compile on first use; keep the machine code on disk where a cache folder can be written."""
     try:
         return numba.njit(nogil=True, error_model="numpy", cache=True)(function)
@@ -64,7 +64,7 @@ def _stack_lanes(_context):
     return types.CPointer(types.uint32)(), generate
 
 
-@_jit
+@jit
 def _transpose(bits, pixels, count, lanes):
     """Features of `count` pixels in groups of lanes: (groups, f, lanes), as integers in the order of the floats."""
     features = bits.shape[1]
@@ -77,7 +77,7 @@ def _transpose(bits, pixels, count, lanes):
             lanes[base + j * LANES] = value ^ np.int32(0x7FFFFFFF) if value < 0 else value
 
 
-@_jit
+@jit
 def _add_tree(lanes, count, trees, t, sums):
     """Add the leaf shares of tree `t` to sums (slots, k) for `count` pixels laid out by `_transpose`."""
     at = numba.carray(_stack_lanes(), (LANES,))
@@ -118,7 +118,7 @@ def _add_tree(lanes, count, trees, t, sums):
                     sums[start + lane, c] += trees.shares[-1 - code, c]
 
 
-@_jit
+@jit
 def sum_shares(bits, trees, sums):
     """Add every tree's shares, in the order of the trees, to sums float64 (n, k) for features' bits int32 (n, f)."""
     lanes = np.zeros(BLOCK * bits.shape[1], dtype=np.int32)
@@ -129,7 +129,7 @@ def sum_shares(bits, trees, sums):
             _add_tree(lanes, count, trees, t, sums[begin : begin + count])
 
 
-@_jit
+@jit
 def find_labels(bits, trees, labels):
     """Write the index of the class to labels intp (n,) for features' bits int32 (n, f)."""
     total = len(trees.rounds)
@@ -151,7 +151,7 @@ def find_labels(bits, trees, labels):
             count = left
 
 
-@_jit
+@jit
 def _drop_decided(sums, pixels, count, total, done, labels):  # noqa: PLR0917
     """Label the pixels whose leader cannot be caught in the trees left; move the others to the front and count them."""
     kept = 0

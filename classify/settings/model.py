@@ -369,9 +369,21 @@ class ModelSettings(_Section):
 
 
 class MapSettings(_Section):
-    """[map]: which layers to write."""
+    """[map]: which layers to write, and how the class map is tidied."""
 
     confidence: bool = True
+    reach: bool = Field(default=True, description="write how far each pixel is from what the training data cover")
+    minimum_unit_ha: float = Field(default=0.0, ge=0, description="smaller patches go to a neighbour; 0 keeps all")
+    neighbours: Literal[4, 8] = Field(default=8, description="a patch hangs together over edges, or over corners too")
+    majority: int = Field(default=1, ge=1, le=15, description="side in pixels of the square that smooths; 1 does not")
+    polygons: bool = Field(default=False, description="write the patches as polygons too")
+
+    @field_validator("majority")
+    @classmethod
+    def _odd(cls, value: int) -> int:
+        if value % 2 == 0:
+            raise ValueError("the side of the square must be odd, so that a pixel is in its middle")
+        return value
 
 
 class ReferenceSettings(_Section):
