@@ -155,6 +155,65 @@ def test_design_drawn_here_is_found_by_the_ids(project_folder):
         assess_project(load_project(project_folder), project_folder / "outputs")
 
 
+def simple_design(folder: Path, *, segments: bool) -> dict:
+    """A recorded simple random sample of the whole scene, of pixels or of segments of five points."""
+    ids = [str(i) for i in points_of(folder)["id"]]
+    points = {i: {"stratum": "whole map"} | ({"segment": int(i) // 5} if segments else {}) for i in ids}
+    whole = {
+        "stratum": "whole map",
+        "mapped_as": None,
+        "area_m2": 100.0 * HEIGHT * WIDTH,
+        "pixels": HEIGHT * WIDTH,
+        "n": 150,
+    }
+    if segments:
+        whole["clusters"] = 460
+    return {"schema": 1, "kind": "simple random", "seed": 1, "strata": [whole], "points": points}
+
+
+def test_recorded_simple_random_sample_is_sharpened_by_map_classes(project_folder):
+    (project_folder / "design.json").write_text(json.dumps(simple_design(project_folder, segments=False)), "utf-8")
+    undesigned = assess_project(load_project(project_folder), project_folder / "outputs")
+    rewrite(project_folder, points_of(project_folder), 'design = "design.json"\n')
+    found = assess_project(load_project(project_folder), project_folder / "outputs")
+    assert found.design_kind == "post-stratified" and not any("no design" in w.casefold() for w in found.warnings)
+    pd.testing.assert_frame_equal(found.accuracy_frame, undesigned.accuracy_frame)
+
+
+def test_class_with_too_few_points_leaves_a_simple_random_sample_as_it_is(project_folder):
+    table = with_classes(project_folder)
+    frame = points_of(project_folder)[(table["map"] != "Water").to_numpy()]
+    (project_folder / "design.json").write_text(json.dumps(simple_design(project_folder, segments=False)), "utf-8")
+    rewrite(project_folder, frame, 'design = "design.json"\n')
+    found = assess_project(load_project(project_folder), project_folder / "outputs")
+    assert found.design_kind == "simple random" and found.overall_accuracy.standard_error is not None
+    missing = 150 - len(frame)
+    assert any(f"{missing} of 150 drawn points are not in reference.gpkg" in w for w in found.warnings)
+
+
+def test_segments_of_the_design_are_clusters_without_being_asked(project_folder):
+    (project_folder / "design.json").write_text(json.dumps(simple_design(project_folder, segments=True)), "utf-8")
+    frame = points_of(project_folder).assign(segment=lambda f: f["id"] // 5)
+    rewrite(project_folder, frame, 'design = "design.json"\n')
+    by_design = assess_project(load_project(project_folder), project_folder / "outputs")
+    rewrite(project_folder, frame, 'design = "design.json"\ncluster = "segment"\n')
+    by_column = assess_project(load_project(project_folder), project_folder / "outputs")
+    assert by_design.clustered
+    pd.testing.assert_frame_equal(by_design.accuracy_frame, by_column.accuracy_frame)
+
+
+def test_replaced_points_are_left_out(project_folder):
+    design = design_of(project_folder, mapped_codes(77, 0.3))
+    table = with_classes(project_folder)
+    gone = str(table.loc[table["map"] != "", "id"].iloc[0])
+    design["points"][gone]["replaced_by"] = 151
+    (project_folder / "design.json").write_text(json.dumps(design), "utf-8")
+    rewrite(project_folder, points_of(project_folder), 'design = "design.json"\n')
+    found = assess_project(load_project(project_folder), project_folder / "outputs")
+    assert found.matrix_counts.sum() == (table["map"] != "").sum() - 1
+    assert not any("drawn points" in w for w in found.warnings)
+
+
 def test_labels_by_code_alternates_clusters_regions_and_unlabelled(project_folder):
     frame = points_of(project_folder)
     codes = {name: str(code) for name, code in zip(NAMES, CODES, strict=True)}

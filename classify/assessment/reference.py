@@ -33,8 +33,9 @@ from classify.settings import ClassSettings, Project, ReferenceSettings
 from classify.settings.model import M2_PER_UNIT
 
 _BLOCK_PX = 512
+_WHOLE_MAP = "whole map"
 _ASSUMED = Problem(
-    "no design was recorded for the sample, so it is taken as a simple random one, post-stratified by map class",
+    "no design was recorded for the sample, so it is taken as a simple random one",
     fix="if it was drawn otherwise, name its design with 'design'; if places were chosen, set evidence to "
     "'purposive sample', as no interval holds then",
     severity="warning",
@@ -70,27 +71,30 @@ def read_reference(project: Project, cover: Path, outputs: Path, *, other: Path 
     frame = _read_points(project, settings)
     areas = read_areas(outputs / "map" / "areas.csv")
     design = _design(project, settings, frame, outputs)
+    warnings: list[Problem] = [_ASSUMED] if design is None else []
+    if design is not None:
+        frame, found = _as_drawn(frame, settings, design)
+        warnings += found
     points = _points_table(frame, settings, project.classes)
     points["map"] = _classes_at(cover, frame, project.classes)
     if other is not None:
         points["other_map"] = _classes_at(other, frame, project.classes)
-    on_map = points["map"] != ""
-    if not on_map.any():
+    if not (points["map"] != "").any():
         raise SampleError("no point of the reference sample lies on the map", where=settings.points,
                           fix="check the CRS of the points, and that this is the map they were drawn for")  # fmt: skip
-    if design is None:
-        points["stratum"] = points["map"]
-        # Strata made of map classes hold no point off the map: such points lie outside of what is estimated.
-        points = points[on_map].reset_index(drop=True)
-        strata = areas[areas["area_m2"] > 0].rename(columns={"name": "stratum"})
-    else:
-        points["stratum"] = _stratum_of(frame, settings, design)
-        strata = design.strata
-    unit = M2_PER_UNIT[project.report.area_unit]
-    options = project_options(project, kind="post-stratified" if design is None else design.kind, areas=areas)
-    strata = strata[["stratum", "pixels"]].assign(area=strata["area_m2"] / unit)
+    kind: DesignKind = "simple random"
+    strata = areas.assign(stratum=_WHOLE_MAP).groupby("stratum", as_index=False)[["area_m2", "pixels"]].sum()
+    if design is not None:
+        points["stratum"], kind, strata = _stratum_of(frame, settings, design), design.kind, design.strata
+        if settings.cluster is None and design.cluster_of:
+            points["cluster"] = frame["id"].map(plain_text).map(design.cluster_of)
+    if len(strata) == 1:
+        points, strata, kind, found = _post_stratified(points, strata, areas, kind)
+        warnings += found
+    options = project_options(project, kind=kind, areas=areas)
+    strata = strata.assign(area=strata["area_m2"] / M2_PER_UNIT[project.report.area_unit])
     sample = sample_from_points(points, strata, options, may_lie_off_map=True)
-    return sample.with_problems(() if design is not None else (_ASSUMED, *_left_out(on_map.to_numpy())))
+    return sample.with_problems(tuple(warnings))
 
 
 def read_labels(project: Project) -> dict[str, int]:
@@ -234,7 +238,8 @@ def _design(
         design = read_design(drawn_here)
         if settings.stratum is not None:
             return design
-        if "id" in frame.columns and frame["id"].map(plain_text).isin(list(design.stratum_of)).all():
+        drawn = [*design.stratum_of, *design.replaced]
+        if "id" in frame.columns and frame["id"].map(plain_text).isin(drawn).all():
             return design
     if settings.stratum is not None:
         raise SampleError(
@@ -261,7 +266,34 @@ def _stratum_of(frame: geopandas.GeoDataFrame, settings: ReferenceSettings, desi
     return pd.Series(known, index=frame.index)
 
 
-def _left_out(on_map: NDArray[np.bool_]) -> tuple[Problem, ...]:
-    n = int((~on_map).sum())
-    what = f"{n} points lie outside the map or where it has no data, and are left out"
-    return (Problem(what, severity="warning"),) if n else ()
+def _as_drawn(
+    frame: geopandas.GeoDataFrame, settings: ReferenceSettings, design: RecordedDesign
+) -> tuple[geopandas.GeoDataFrame, list[Problem]]:
+    """Points without those that others stand in for; and a warning of drawn points that the file lacks."""
+    if "id" not in frame.columns:
+        return frame, []
+    ids = frame["id"].map(plain_text)
+    lacking = sorted(set(design.stratum_of) - set(ids), key=lambda point: (len(point), point))
+    kept = frame[~ids.isin(design.replaced)].reset_index(drop=True)
+    if not lacking:
+        return kept, []
+    what = f"{len(lacking)} of {len(design.stratum_of)} drawn points are not in {settings.points}, first {lacking[0]!r}"
+    fix = "keep every drawn point, blank where it cannot be labelled: points left out by choice bias the estimates"
+    return kept, [Problem(what, fix=fix, severity="warning")]
+
+
+def _post_stratified(
+    points: pd.DataFrame, strata: pd.DataFrame, areas: pd.DataFrame, kind: DesignKind
+) -> tuple[pd.DataFrame, pd.DataFrame, DesignKind, list[Problem]]:
+    """A sample of one stratum sharpened by the known areas of the map's classes, where each has points enough."""
+    on_map = (points["map"] != "").to_numpy()
+    off = int((~on_map).sum())
+    labelled = points.loc[on_map & (points["reference"] != "").to_numpy(), "map"].value_counts()
+    classes = areas.loc[areas["area_m2"] > 0, ["name", "area_m2", "pixels"]].rename(columns={"name": "stratum"})
+    if (classes["stratum"].map(labelled).fillna(0) < 2).any():
+        return points.assign(stratum=str(strata["stratum"].iat[0])), strata, kind, []
+    what = f"{off} points lie outside the map or where it has no data, and are left out"
+    found = [Problem(what, severity="warning")] if off else []
+    # Strata made of map classes hold no point off the map.
+    points = points[on_map].reset_index(drop=True)
+    return points.assign(stratum=points["map"]), classes, "post-stratified", found
