@@ -16,6 +16,7 @@ COMMANDS = {
     "train": ("classify.cli.train", "Fit the model and screen it on held-out polygons."),
     "classify": ("classify.cli.classify", "Map the scene with the trained model."),
     "plan": ("classify.cli.plan", "Plan a reference sample: its size and allocation."),
+    "draw": ("classify.cli.draw", "Draw the reference sample, without giving the map away."),
     "assess": ("classify.cli.assess", "Estimate accuracy and areas from a labelled reference sample."),
     "compare": ("classify.cli.compare", "Compare two maps on one reference sample."),
     "report": ("classify.cli.report", "Write the report."),

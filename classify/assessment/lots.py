@@ -1,0 +1,99 @@
+"""Random lots by number: the lot of a pixel depends on the seed and the pixel alone, not on when or where it is drawn.
+
+A pixel of ground area a gets the key -log(1 - u) / a, u uniform, and the pixels with the lowest keys are drawn. The
+lowest n keys are a successive sample without replacement with probabilities proportional to area (Efraimidis & Spirakis
+2006, Information Processing Letters 97, 181-185), a simple random sample where areas are equal, and the next keys go on
+with it. u comes from the mixing function of Steele, Lea & Flood 2014 ("Fast splittable pseudorandom number generators",
+OOPSLA), applied to a counter.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numba
+import numpy as np
+from numpy.typing import NDArray
+
+_STEP = np.uint64(0x9E3779B97F4A7C15)
+_MIX_1 = np.uint64(0xBF58476D1CE4E5B9)
+_MIX_2 = np.uint64(0x94D049BB133111EB)
+_S30, _S27, _S31, _S11 = np.uint64(30), np.uint64(27), np.uint64(31), np.uint64(11)
+_UNIT = 2.0**-53
+
+
+def _compiled(function: Any) -> Any:  # noqa: ANN401 - a numba dispatcher
+    try:
+        return numba.njit(nogil=True, error_model="numpy", cache=True)(function)
+    except RuntimeError:  # no folder for the cache, neither beside the source nor in the user's own
+        return numba.njit(nogil=True, error_model="numpy")(function)
+
+
+def stream(seed: int, purpose: int) -> np.uint64:
+    """Where the lots of one purpose start."""
+    with np.errstate(over="ignore"):
+        return np.uint64(_mixed(np.array([seed], np.uint64) * _STEP + np.uint64(purpose))[0])
+
+
+def lots(start: np.uint64, numbers: NDArray[np.int64]) -> NDArray[np.float64]:
+    """Uniform lots in [0, 1) of the given numbers (float64, same shape)."""
+    with np.errstate(over="ignore"):
+        mixed = _mixed(start + (numbers.astype(np.uint64) + np.uint64(1)) * _STEP)
+    return np.asarray((mixed >> _S11).astype(np.float64) * _UNIT)
+
+
+def _mixed(z: NDArray[np.uint64]) -> NDArray[np.uint64]:
+    with np.errstate(over="ignore"):
+        z = (z ^ (z >> _S30)) * _MIX_1
+        z = (z ^ (z >> _S27)) * _MIX_2
+        return np.asarray(z ^ (z >> _S31))
+
+
+@_compiled
+def offer(  # noqa: PLR0917 - a kernel takes plain arrays
+    codes: NDArray[np.uint8], row: int, col: int, width: int, stratum_of: NDArray[np.int16],
+    cell_area: NDArray[np.float64], step: int, start: np.uint64, limit: NDArray[np.float64], pixels: NDArray[np.int64],
+    areas: NDArray[np.float64], found_unit: NDArray[np.int64], found_key: NDArray[np.float64],
+    found_stratum: NDArray[np.int16],
+) -> int:  # fmt: skip
+    """Count pixels and areas by stratum, and find the pixels whose key is at most the stratum's limit.
+
+    codes: uint8 (h, w) at (row, col) of a raster `width` wide. stratum_of: int16 (256,), -1 outside the population.
+    cell_area: float64, area of a pixel in cells of `step` x `step` pixels of the raster, from the cell that holds (row,
+    col). limit: float64 (k,). pixels int64 (k,) and areas float64 (k,) are added to. The number found is returned;
+    their units (int64), keys (float64) and strata (int16) are written to the last three, as long as `codes` is large.
+    """
+    top, left = row // step, col // step
+    highest = cell_area.max()
+    bound = np.empty(limit.shape[0], np.uint64)
+    for s in range(limit.shape[0]):
+        # A lot above this bound has a key above the limit whatever the pixel's area: most pixels need no logarithm.
+        share = -np.expm1(-max(limit[s], 0.0) * highest)
+        bound[s] = np.uint64(min(share * 1.000001 + 1e-15, 1.0) * 9007199254740992.0)
+    found = 0
+    counted = np.zeros(limit.shape[0], np.int64)
+    for i in range(codes.shape[0]):
+        base = np.int64(row + i) * width + col
+        for cell in range(left, (col + codes.shape[1] - 1) // step + 1):
+            area = cell_area[(row + i) // step - top, cell - left]
+            counted[:] = 0
+            for j in range(max(cell * step - col, 0), min((cell + 1) * step - col, codes.shape[1])):
+                s = stratum_of[codes[i, j]]
+                if s < 0:
+                    continue
+                counted[s] += 1
+                z = start + np.uint64(base + j + 1) * _STEP
+                z = (z ^ (z >> _S30)) * _MIX_1
+                z = (z ^ (z >> _S27)) * _MIX_2
+                lot = (z ^ (z >> _S31)) >> _S11
+                if lot <= bound[s]:
+                    key = -np.log1p(-np.float64(lot) * _UNIT) / area
+                    if key <= limit[s]:
+                        found_unit[found] = base + j
+                        found_key[found] = key
+                        found_stratum[found] = s
+                        found += 1
+            for s in range(limit.shape[0]):
+                pixels[s] += counted[s]
+                areas[s] += counted[s] * area
+    return found
