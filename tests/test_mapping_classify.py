@@ -222,7 +222,7 @@ def test_a_grid_beyond_all_reason_is_refused_before_work_starts(made, tmp_path):
 
 def test_a_tidied_map_keeps_the_raw_one_and_is_what_areas_and_polygons_tell_of(made, tmp_path):
     map_into = made[-1]
-    options = replace(OPTIONS, tidy=TidyOptions(minimum_unit_m2=600.0, majority_px=3), polygons=True)
+    options = replace(OPTIONS, tidy=TidyOptions(minimum_unit_m2=600.0, majority_px=15), polygons=True)
     map_into(tmp_path / "plain")
     result = map_into(tmp_path / "tidied", options)
     with rasterio.open(result.files["raw"]) as raw, rasterio.open(tmp_path / "plain" / "cover.tif") as plain:
@@ -230,7 +230,7 @@ def test_a_tidied_map_keeps_the_raw_one_and_is_what_areas_and_polygons_tell_of(m
         np.testing.assert_array_equal(raw.read(1), before)
     with rasterio.open(result.cover) as cover:
         after = cover.read(1)
-        assert cover.tags()["TIDIED"].startswith("majority of 3 x 3 pixels, then minimum mapping unit 0.06 ha")
+        assert cover.tags()["TIDIED"].startswith("majority of 15 x 15 pixels, then minimum mapping unit 0.06 ha")
     assert (before != after).sum() > 10
     assert list(result.areas["pixels"]) == [(after == code).sum() for code in result.areas["code"]]
     polygons = gpd.read_file(result.files["polygons"])
