@@ -295,7 +295,7 @@ def test_two_maps_of_a_project(project_folder):
     write_map(project_folder / "newer.tif", better)
     found = compare_project(load_project(project_folder), project_folder / "outputs", project_folder / "newer.tif")
     assert found.overall_accuracy.difference.lower > 0
-    assert "Newer.tif is right on" in found.in_words and "newer.tif is better" in found.in_words
+    assert "The map newer.tif is right on" in found.in_words and "the map newer.tif is better" in found.in_words
     done = CliRunner().invoke(
         cli, ["compare", str(project_folder / "newer.tif"), "--project", str(project_folder), "--json"],
         catch_exceptions=False,

@@ -61,7 +61,7 @@ def test_empty_stratum_is_left_out_and_said_so():
     assert found.to_json()["design"]["strata"][2] == {"stratum": "marsh", "area": 10.0, "n": 0}
     assert [found.area[c].mapped for c in found.classes] == [30, 60]
     text = only_warning(found, "no labelled point lies in")
-    assert "'marsh'" in text and "the 10 there, 10.0% of the total area" in text
+    assert "'marsh'" in text and "the 10 there, 10.0 % of the total area" in text
 
 
 def test_class_only_on_the_map_and_class_only_among_references():

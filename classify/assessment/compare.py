@@ -96,8 +96,8 @@ class Comparison:
             self.overall_accuracy.first, self.overall_accuracy.second, self.overall_accuracy.difference))  # fmt: skip
         assert first is not None and second is not None and difference is not None, "both maps have labelled points"
         where = "of the mapped area" if EVIDENCE[self.evidence_name].has_intervals else "of the sampled places"
-        text = f"{self.second[:1].upper()}{self.second[1:]} is right on {second:.1%} {where} "
-        text += f"and {self.first} on {first:.1%}: "
+        text = f"{self.second[:1].upper()}{self.second[1:]} is right on {100 * second:.1f} % {where} "
+        text += f"and {self.first} on {100 * first:.1f} %: "
         if difference == 0:
             text += "no difference"
         else:
@@ -106,7 +106,8 @@ class Comparison:
         if low is None or high is None:
             return f"{text}. What chance in the sample contributes to that is not known."
         text += (
-            f" ({self.confidence_level:.0%} interval of the difference {100 * low:+.1f} to {100 * high:+.1f} points). "
+            f" ({100 * self.confidence_level:g} % interval of the difference {100 * low:+.1f} to {100 * high:+.1f} "
+            "percentage points). "
         )
         if low <= 0 <= high:
             return text + "The interval includes 0, so this sample does not show that one map is better."

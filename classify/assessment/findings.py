@@ -125,7 +125,7 @@ def _empty_strata(sample: ReferenceSample, t: Tally) -> Iterator[Problem]:
         area, total = sum(s.area for s in empty), sum(s.area for s in sample.strata)
         yield _warning(
             f"no labelled point lies in {_listed([s.name for s in empty], 'stratum', 'strata')}; the estimates leave "
-            f"out the {area:,.6g}{_unit(sample)} there, {area / total:.1%} of the total area",
+            f"out the {area:,.6g}{_unit(sample)} there, {100 * area / total:.1f} % of the total area",
             "draw points there, or merge the stratum with one like it before sampling",
         )
 

@@ -56,7 +56,7 @@ def compare_project(project: Project, outputs: Path, other: Path) -> Comparison:
     Raises LandassayError.
     """
     sample = read_reference(project, outputs / "map" / "cover.tif", outputs, other=other)
-    comparison = compare_sample(sample, project_options(project), names=("the project's map", other.name))
+    comparison = compare_sample(sample, project_options(project), names=("the project's map", f"the map {other.name}"))
     write_comparison(comparison, outputs / "comparison")
     return comparison
 

@@ -67,5 +67,5 @@ def _text(comparison: Comparison) -> str:
             rows.append(
                 [f"{name}, {measure}", percent(pair.first.estimate), percent(pair.second.estimate), change, interval]
             )
-    head = ["accuracy", "first", "second", "points", f"{comparison.confidence_level:.0%} interval"]
+    head = ["accuracy", "first", "second", "points", f"{100 * comparison.confidence_level:g} % interval"]
     return f"{comparison.in_words}\n{table(head, rows)}"

@@ -66,14 +66,14 @@ def _classify(summary: Mapping[str, Any]) -> str:
 def assessment_text(summary: Mapping[str, Any]) -> str:
     """An assessment (as in assessment.json) in one table."""
     overall = summary["overall_accuracy"]
-    level = f"{summary['confidence_level']:.0%}"
+    level, unit = f"{100 * summary['confidence_level']:g} %", summary["area_unit"]
     rows = []
     for name in summary["classes"]:
         area = summary["area"][name]
         users, producers = (summary[key][name]["estimate"] for key in ("users_accuracy", "producers_accuracy"))
         rows.append([name, percent(users), percent(producers), _with_margin(area)])
     lines = [f"overall accuracy {percent(overall['estimate'])} ({level} interval {_interval(overall)})"]
-    lines.append(table(["class", "user's", "producer's", f"area, {summary['area_unit']}"], rows))
+    lines.append(table(["class", "user's", "producer's", f"area, {unit}" if unit else "area"], rows))
     return "\n".join(lines)
 
 
