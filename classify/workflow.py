@@ -87,6 +87,19 @@ def status(project: Project) -> list[StageStatus]:
     return [_status(stage, project, now.fingerprints[stage.name], record) for stage in STAGES]
 
 
+def model_facts(project: Project) -> dict[str, Any] | None:
+    """What the project's model is and needs, from model.json alone (the model itself is not opened); None without one."""
+    path = project.folder / "outputs" / "model" / "model.json"
+    if not path.is_file():
+        return None
+    card = read_json(path)
+    return {
+        "kind": card.get("kind"), "needs": card.get("needs", []), "features": card.get("features", []),
+        "classes": [c.get("name") for c in card.get("classes", [])], "versions": card.get("versions", {}),
+        "screening_accuracy": card.get("screening", {}).get("screening_accuracy"),
+    }  # fmt: skip
+
+
 def run(
     job: Job,
     stages: Sequence[StageName] | None = None,
