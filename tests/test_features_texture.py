@@ -9,7 +9,8 @@ from hypothesis import strategies as st
 from scipy import ndimage
 from skimage.feature import graycomatrix, graycoprops
 
-from classify.features.texture import CO_OCCURRENCE, MOMENTS, TextureStep, grey_levels
+from classify.features.co_occurrence import grey_levels
+from classify.features.texture import CO_OCCURRENCE, MOMENTS, TextureStep
 
 ANGLES = [0, np.pi / 4, np.pi / 2, 3 * np.pi / 4]
 
