@@ -11,10 +11,11 @@ from classify.report.facts import ReportFacts
 from classify.report.gather import gather_facts
 from classify.report.html import render_html
 from classify.report.pdf import render_pdf
+from classify.report.review_text import write_review
 from classify.report.tables import render_xlsx
 from classify.report.verify import Verification, verify
 
-__all__ = ["ReportFacts", "Verification", "gather_facts", "verify", "write_report"]
+__all__ = ["ReportFacts", "Verification", "gather_facts", "verify", "write_report", "write_review"]
 
 
 def write_report(facts: ReportFacts, folder: Path) -> list[Path]:

@@ -22,12 +22,15 @@ def heading(column: Column, words: Messages) -> str:
 
 
 def tint(table: Table, row: int, column: int) -> float:
-    """How strongly a matrix cell is tinted: its share of its row's total, 0..1; 0 for totals and names."""
+    """How strongly a matrix cell is tinted, 0..1, by its share of its row's total; 0 for totals and names.
+
+    The square root lets small shares show: confusions of a few per cent are what a reader looks for.
+    """
     whole, value = table.rows[row][-1], table.rows[row][column]
     last = row == len(table.rows) - 1 or column == len(table.columns) - 1
     if last or isinstance(whole, str) or isinstance(value, str) or not whole or not value:
         return 0.0
-    return value / whole
+    return float((value / whole) ** 0.5)
 
 
 def is_diagonal(table: Table, row: int, column: int) -> bool:

@@ -7,6 +7,7 @@ from collections.abc import Callable, Iterator
 from classify.errors import SettingsError
 from classify.report.accuracy_text import accuracy_section, agreement_section, areas_section, matrix_section
 from classify.report.answer_text import answer_section, report_kind
+from classify.report.confusion_text import confusion_section
 from classify.report.document import Document, Section
 from classify.report.facts import ReportFacts
 from classify.report.map_text import map_section
@@ -23,6 +24,7 @@ SECTIONS: dict[str, _Writer] = {
     "areas": areas_section,
     "accuracy": accuracy_section,
     "matrix": matrix_section,
+    "confusion": confusion_section,
     "agreement": agreement_section,
     "training": training_section,
     "model": model_section,

@@ -55,7 +55,7 @@ def gather_facts(project: Project, outputs: Path) -> ReportFacts:
         map=None if "classify" in missing else _map(project, outputs / "map", classes),
         accuracy=None if assessment is None else accuracy_facts(assessment, outputs / _MADE_BY["assess"]),
         model=None if card is None else _model(card),
-        review=_json(outputs / "training" / "review.json"),
+        review=_review(_json(outputs / "training" / "review.json")),
         points=points,
         provenance=_provenance(project, record),
         missing=missing,
@@ -125,6 +125,11 @@ def _model(card: Mapping[str, Any]) -> ModelFacts:
     )  # fmt: skip
 
 
+def _review(review: Mapping[str, Any] | None) -> dict[str, Any] | None:
+    """What the report takes from the training review: spectra by class and how well pairs of classes part."""
+    return None if review is None else {key: review[key] for key in ("bands", "classes", "separability")}
+
+
 def _provenance(project: Project, record: Mapping[str, Any]) -> Provenance:
     stages = record.get("stages", {})
     return Provenance(
@@ -140,7 +145,7 @@ def _provenance(project: Project, record: Mapping[str, Any]) -> Provenance:
 def _warnings(record: Mapping[str, Any]) -> tuple[tuple[str, str], ...]:
     """Warnings of stages as recorded, each once; those of the assessment come with the assessment itself."""
     listed = [
-        (name, text) for name, stage in record.get("stages", {}).items() if name in ("train", "classify")
+        (name, text) for name, stage in record.get("stages", {}).items() if name in ("review", "train", "classify")
         for text in stage.get("warnings", ())
     ]  # fmt: skip
     return tuple({text: (name, text) for name, text in reversed(listed)}.values())[::-1]

@@ -57,9 +57,10 @@ class Drawing:
         self.add("rect", x=_px(x - r), y=_px(y - r), width=2 * r, height=2 * r, fill=COLOURS["paper"],
                  stroke=_ink(colour), stroke_width=1.4)  # fmt: skip
 
-    def raw(self, markup: str) -> None:
-        """Markup from this module, already escaped."""
-        self._parts.append(markup)
+    @staticmethod
+    def ink(colour: str) -> str:
+        """A colour of the identity by name, or #rrggbb as it is."""
+        return _ink(colour)
 
     def markup(self) -> str:
         """The whole drawing. It scales with its container and never grows beyond its own size."""

@@ -6,9 +6,13 @@ from collections.abc import Iterator, Mapping
 from typing import Any
 
 from classify.report.accuracy_text import matrix_table
-from classify.report.document import Block, Column, Listing, Pairs, Paragraph, Section, Table
-from classify.report.facts import ReportFacts
+from classify.report.charts import bars_drawing, reliability_drawing
+from classify.report.document import Block, Column, Figure, Listing, Pairs, Paragraph, Section, Subheading, Table
+from classify.report.facts import ModelFacts, ReportFacts
 from classify.report.messages import Messages, plain
+
+# Features drawn; a model of hundreds has many that matter to nothing.
+_LISTED = 20
 
 
 def training_section(facts: ReportFacts, words: Messages) -> Section:
@@ -74,7 +78,31 @@ def model_section(facts: ReportFacts, words: Messages) -> Section | None:
         if count is not None:
             pairs.append((words.text(f"model.{key}"), style.number(count)))
     blocks: list[Block] = [Pairs(tuple(pairs))]
-    error = (model.calibration or {}).get("error")
-    if error is not None:
-        blocks.append(Paragraph(words.rich("model.calibration", error=style.percent(error))))
+    blocks += _importance(model, words)
+    blocks += _reliability(model, words)
     return Section("model", words.text("model.title"), tuple(blocks), "training")
+
+
+def _importance(model: ModelFacts, words: Messages) -> Iterator[Block]:
+    """Losses when a group of features, or a single one, is shuffled; the larger ones only."""
+    if not model.importance:
+        return
+    yield Subheading(words.text("model.importance"))
+    for key in ("groups", "features"):
+        items = [(f["name"], f["loss"], f["spread"]) for f in model.importance.get(key) or ()][:_LISTED]
+        if items:
+            title = words.text(f"model.importance_{key}")
+            drawing = bars_drawing(items, title, words.numbers)
+            alt = "; ".join(f"{name}: {words.numbers.number(100 * loss, 1)}" for name, loss, _ in items)
+            yield Figure(f"importance-{key}", drawing.markup(), f"{title}. {words.text('model.importance_caption')}", alt)
+
+
+def _reliability(model: ModelFacts, words: Messages) -> Iterator[Block]:
+    calibration = model.calibration or {}
+    if calibration.get("error") is not None:
+        yield Paragraph(words.rich("model.calibration", error=words.numbers.percent(calibration["error"])))
+    if calibration.get("reliability"):
+        title = words.text("model.reliability_figure")
+        axes = words.text("model.said"), words.text("model.right")
+        drawing = reliability_drawing(calibration["reliability"], title, axes, words.numbers)
+        yield Figure("reliability", drawing.markup(), words.text("model.reliability_caption"), title, small=True)

@@ -72,7 +72,7 @@
   function moveBy(dx, dy) { x += dx; y += dy; clamp(); redraw(); }
 
   let last = null;
-  stage.addEventListener("pointerdown", e => { last = [e.clientX, e.clientY]; stage.setPointerCapture(e.pointerId); });
+  stage.addEventListener("pointerdown", e => { if (e.target.closest(".zoom")) return; last = [e.clientX, e.clientY]; stage.setPointerCapture(e.pointerId); });
   stage.addEventListener("pointermove", e => {
     if (last === null) return;
     moveBy(e.clientX - last[0], e.clientY - last[1]);
