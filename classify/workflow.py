@@ -88,7 +88,7 @@ def status(project: Project) -> list[StageStatus]:
 
 
 def model_facts(project: Project) -> dict[str, Any] | None:
-    """What the project's model is and needs, from model.json alone (the model itself is not opened); None without one."""
+    """What the project's model is and needs, from model.json alone; None without one. The model is not opened."""
     path = project.folder / "outputs" / "model" / "model.json"
     if not path.is_file():
         return None
