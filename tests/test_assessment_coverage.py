@@ -47,7 +47,7 @@ def test_the_kept_table_is_of_these_populations(kept):
 
 
 def check_coverage(table: pd.DataFrame) -> None:
-    """Default intervals of well sampled statistics cover within 93.5 to 96.5 %, give or take noise of 5000 replicates."""
+    """Default intervals of well sampled statistics cover within 93.5 to 96.5 %, give or take simulation noise."""
     shown = well_sampled(table[table["interval"] == "automatic"])
     assert len(shown) > 80
     wide = [pair in KNOWN_TO_BE_WIDE for pair in zip(shown["population"], shown["statistic"], strict=True)]
