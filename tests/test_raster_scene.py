@@ -179,6 +179,29 @@ def test_every_grid_registers_to_a_small_part_of_a_pixel(stack, name):
     assert off_km[inner].max() < 0.05 * 0.01 * 3
 
 
+@pytest.mark.parametrize(
+    ("crs", "transform", "shape"),
+    [("EPSG:3031", Affine(9000, 0, -247_000, 0, -9000, 252_000), (55, 55)),
+     ("EPSG:32760", Affine(700, 0, 790_000, 0, -700, 8_140_000), (80, 130))],
+    ids=["round the pole", "over the antimeridian"],
+)  # fmt: skip
+def test_where_longitude_jumps_every_pixel_is_still_in_its_place(tmp_path, crs, transform, shape):
+    # A source in degrees round the whole earth; each of its pixels holds a number of its own.
+    source = np.arange(720 * 360, dtype=np.float64).reshape(360, 720)
+    write(tmp_path / "earth.tif", source, Affine(0.5, 0, -180, 0, -0.5, 90), "EPSG:4326")
+    write(tmp_path / "base.tif", np.ones(shape, np.float32), transform, crs)
+    scene = scene_of(tmp_path, {"base": "base.tif"}, ancillary={"earth": {"file": "earth.tif", "categorical": True}})
+    rows, cols = np.indices(shape).reshape(2, -1)
+    lon, lat = pyproj.Transformer.from_crs(crs, 4326, always_xy=True).transform(*scene.grid.xy(rows, cols))
+    expected = np.floor((90 - np.asarray(lat)) * 2) * 720 + np.floor((np.asarray(lon) + 180) * 2)
+    got = read_all(scene)["earth"].ravel()
+    # A pixel centre within a hundredth of a source pixel of an edge may fall to either side.
+    assert (got == expected.astype(np.float32)).mean() > 0.99
+    with scene.open() as reader:
+        part = reader.read(Window(20, 31, 9, 13), ["earth"])["earth"]
+    assert same_bytes(part, got.reshape(shape)[20:29, 31:44])
+
+
 def test_bilinear_agrees_with_gdal_and_nearest_too(stack):
     for name in ("coarse", "shifted", "degrees", "other_zone"):
         with rasterio.open(stack / f"{name}.tif") as source:

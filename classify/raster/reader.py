@@ -18,13 +18,22 @@ from classify.raster.area import pixel_size_m
 from classify.raster.composite import CLEAR_COUNT, Composite
 from classify.raster.grid import Grid, Window
 from classify.raster.masks import Disc, MaskSource
-from classify.raster.resample import Array, Placement, Rule, gather_bilinear, gather_nearest, source_window
+from classify.raster.resample import (
+    Array,
+    Placement,
+    Rule,
+    any_of_points,
+    gather_bilinear,
+    gather_nearest,
+    mean_of_points,
+    source_window,
+)
 from classify.raster.sources import BandSource, OpenFiles, own_mask, read_window, to_reflectance
 
 # A source so much finer than the grid is averaged; below this ratio it is interpolated.
 _MEAN_FROM_RATIO = 1.5
-# Source pixels read at once when a finer source is averaged.
-_MEAN_BUFFER_PX = 4_000_000
+# Points of a finer source that are looked at at once.
+_MEAN_BUFFER_PX = 2_000_000
 
 
 @dataclass(frozen=True)
@@ -159,21 +168,20 @@ class SceneReader:
     def _mask(self, mask: MaskSource, window: Window) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
         """bool (h, w): what the mask rejects, and where it reaches; the window may lie outside the grid."""
         placement = self._placement(mask.path, mask.native)
-        rejects, reaches = np.zeros(window.shape_yx, dtype=bool), np.ones(window.shape_yx, dtype=bool)
-        for strip in _strips(window, placement):
+        points = _points(placement)
+        rejects, misses = np.zeros(window.shape_yx, dtype=bool), np.zeros(window.shape_yx, dtype=bool)
+        for strip in _strips(window, points):
             rows = slice(strip.row - window.row, strip.row - window.row + strip.height)
-            parts = _sub_pixel_places(placement, strip, self._fineness(placement))
-            whole = _enclosing(mask.native, parts)
-            if whole is None:
-                reaches[rows] = False
+            places = placement.places(strip, points)
+            part = source_window(mask.native, places, 0)
+            if part is None:
+                misses[rows] = True
                 continue
-            stored = read_window(self._files.get(mask.path), mask.path, [mask.band], whole)[0]
-            bad = mask.rejects(stored)
-            for places in parts:
-                picked, held = gather_nearest(bad, whole, mask.native, places)
-                rejects[rows] |= picked.astype(bool) & held
-                reaches[rows] &= held
-        return rejects, reaches
+            stored = read_window(self._files.get(mask.path), mask.path, [mask.band], part)[0]
+            picked, held = gather_nearest(mask.rejects(stored), part, mask.native, places)
+            rejects[rows] = any_of_points(picked.astype(bool) & held, points)
+            misses[rows] = any_of_points(~held, points)
+        return rejects, ~misses
 
     def _bands(self, bands: Sequence[BandSource], window: Window) -> dict[str, Array]:
         layers: dict[str, Array] = {}
@@ -187,13 +195,13 @@ class SceneReader:
     def _group(self, bands: list[BandSource], window: Window) -> Array:
         """float32 (n, h, w) of bands of one file on the scene's grid; a window inside the grid."""
         placement = self._placement(bands[0].path, bands[0].native)
-        fineness = self._fineness(placement)
         shift = placement.shift_yx
         if shift is not None:
             return self._direct(bands, window, shift)
+        points = _points(placement)
+        if points != (1, 1) and not bands[0].categorical:
+            return self._mean(bands, window, placement, points)
         bilinear = self._scene.resampling == "bilinear" and not bands[0].categorical
-        if fineness != (1, 1) and not bands[0].categorical:
-            return self._mean(bands, window, placement, fineness)
         places = placement.places(window)
         part = source_window(placement.source, places, 1 if bilinear else 0)
         if part is None:
@@ -215,24 +223,17 @@ class SceneReader:
             result[:, rows, cols] = self._values(bands, part)
         return result
 
-    def _mean(self, bands: list[BandSource], window: Window, placement: Placement, fineness: tuple[int, int]) -> Array:
-        total = np.zeros((len(bands), *window.shape_yx), np.float32)
-        count = np.zeros(total.shape, np.int32)
-        for strip in _strips(window, placement):
-            parts = _sub_pixel_places(placement, strip, fineness)
-            whole = _enclosing(placement.source, parts)
-            if whole is None:
+    def _mean(self, bands: list[BandSource], window: Window, placement: Placement, points: tuple[int, int]) -> Array:
+        result = np.full((len(bands), *window.shape_yx), np.nan, np.float32)
+        for strip in _strips(window, points):
+            places = placement.places(strip, points)
+            part = source_window(placement.source, places, 0)
+            if part is None:
                 continue
-            values = self._values(bands, whole)
+            picked, held = gather_nearest(self._values(bands, part), part, placement.source, places)
             rows = slice(strip.row - window.row, strip.row - window.row + strip.height)
-            for places in parts:
-                picked, held = gather_nearest(values, whole, placement.source, places)
-                valid = held & ~np.isnan(picked)
-                # One addition per sub-pixel in a fixed order: a library mean could regroup by the window's shape.
-                total[:, rows] += np.where(valid, picked, 0)
-                count[:, rows] += valid
-        with np.errstate(invalid="ignore", divide="ignore"):
-            return np.asarray(np.where(count > 0, total / count, np.nan), dtype=np.float32)
+            result[:, rows] = mean_of_points(picked.astype(np.float32, copy=False), held, points)
+        return result
 
     def _values(self, bands: list[BandSource], part: Window) -> Array:
         """Reflectance (n, rows, cols) of a window inside the bands' own grid."""
@@ -252,11 +253,11 @@ class SceneReader:
             self._placements[path] = Placement(native, self._scene.grid)
         return self._placements[path]
 
-    @staticmethod
-    def _fineness(placement: Placement) -> tuple[int, int]:
-        """Source pixels to look at per target pixel along rows and columns: (1, 1) unless the source is finer."""
-        rows, cols = (round(ratio) if ratio >= _MEAN_FROM_RATIO else 1 for ratio in placement.ratio_yx)
-        return rows, cols
+
+def _points(placement: Placement) -> tuple[int, int]:
+    """Points to look at per target pixel along rows and columns: (1, 1) unless the source is finer."""
+    rows, cols = (round(ratio) if ratio >= _MEAN_FROM_RATIO else 1 for ratio in placement.ratio_yx)
+    return rows, cols
 
 
 def _place(layer: Array, inside: Window, padded: Window) -> Array:
@@ -265,28 +266,10 @@ def _place(layer: Array, inside: Window, padded: Window) -> Array:
     return result
 
 
-def _strips(window: Window, placement: Placement) -> list[Window]:
-    """The window in strips of rows, few enough that the finer source pixels under one fit the buffer."""
-    rows, cols = (max(1.0, ratio) for ratio in placement.ratio_yx)
-    height = max(1, int(_MEAN_BUFFER_PX / (rows * cols * window.width)))
+def _strips(window: Window, points: tuple[int, int]) -> list[Window]:
+    """The window in strips of rows, few enough that the points of one fit the buffer."""
+    height = max(1, _MEAN_BUFFER_PX // (points[0] * points[1] * window.width))
     return [
         Window(row, window.col, min(height, window.row + window.height - row), window.width)
         for row in range(window.row, window.row + window.height, height)
     ]
-
-
-def _sub_pixel_places(
-    placement: Placement, window: Window, fineness: tuple[int, int]
-) -> list[tuple[NDArray[np.float64], NDArray[np.float64]]]:
-    return [
-        placement.places(window, ((i + 0.5) / fineness[0], (j + 0.5) / fineness[1]))
-        for i in range(fineness[0])
-        for j in range(fineness[1])
-    ]
-
-
-def _enclosing(source: Grid, parts: list[tuple[NDArray[np.float64], NDArray[np.float64]]]) -> Window | None:
-    """One source window that holds the places of all sub-pixels."""
-    rows = np.concatenate([part[0].ravel() for part in parts])
-    cols = np.concatenate([part[1].ravel() for part in parts])
-    return source_window(source, (rows, cols), 1)

@@ -9,13 +9,15 @@ place are then gathered. Three rules, chosen once for a whole raster by the rati
 * mean: for a source at least one and a half times finer. The mean of the valid source pixels at evenly spread points
   of the target pixel, which is the exact mean when the ratio is whole and the grids are aligned.
 
-Between two CRSs the place is interpolated in a lattice anchored to the target grid's origin, whose step is chosen so
-that the error stays below `_LATTICE_ERROR_PX`; lattice nodes are transformed exactly (pyproj).
+Between two CRSs the place is interpolated in a lattice anchored to the target grid's origin, whose nodes are
+transformed exactly (pyproj). The middle of every cell is too: where the lattice misses it by more than
+`_LATTICE_ERROR_PX` source pixels, every pixel of the cell is transformed on its own.
 """
 
 from __future__ import annotations
 
 import warnings
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property, lru_cache
 from typing import Literal
@@ -36,7 +38,7 @@ Array = NDArray[np.float32]
 Places = tuple[NDArray[np.float64], NDArray[np.float64]]
 
 _LATTICE_ERROR_PX = 0.01
-_LATTICE_STEPS_PX = (64, 32, 16, 8, 4, 2, 1)
+_LATTICE_STEPS_PX = (64, 32, 16, 8)
 # A grid whose pixels lie this close to another's (in pixels) over its whole extent counts as the same grid.
 ALIGNED_PX = 0.01
 
@@ -72,21 +74,29 @@ class Placement:
 
     @cached_property
     def ratio_yx(self) -> tuple[float, float]:
-        """Source pixels per target pixel along target rows and columns, at the middle of their common part."""
-        row, col = self.target.height / 2, self.target.width / 2
-        rows, cols = self._exact(np.array([row, row + 1, row]), np.array([col, col, col + 1]))
-        return float(np.hypot(rows[1] - rows[0], cols[1] - cols[0])), float(
-            np.hypot(rows[2] - rows[0], cols[2] - cols[0])
-        )
+        """Source pixels per target pixel along rows and columns: the median over places spread over the target."""
+        height, width = self.target.shape_yx
+        row, col = np.meshgrid(np.linspace(0, height - 1, 9), np.linspace(0, width - 1, 9), indexing="ij")
+        rows, cols = self._exact(row, col)
+        ratios = []
+        for down, right in ((1, 0), (0, 1)):
+            next_rows, next_cols = self._exact(row + down, col + right)
+            with np.errstate(invalid="ignore"):
+                step = np.hypot(next_rows - rows, next_cols - cols)
+            known = step[np.isfinite(step)]
+            ratios.append(float(np.median(known)) if known.size else 1.0)
+        return ratios[0], ratios[1]
 
-    def places(self, window: Window, at_yx: tuple[float, float] = (0.5, 0.5)) -> Places:
-        """Source (rows, cols) in pixels (float64) of a point of each target pixel; `at_yx` 0.5, 0.5 is its centre.
+    def places(self, window: Window, points_yx: tuple[int, int] = (1, 1)) -> Places:
+        """Source (rows, cols) in pixels (float64) of evenly spread points of each target pixel; of one, its centre.
 
-        Shapes broadcast to (h, w): (h, 1) and (1, w) when rows and columns are independent. Not finite where the
-        target's CRS has no counterpart in the source's.
+        Shapes broadcast to (h * points, w * points): (h, 1) and (1, w) when rows and columns are independent. Not
+        finite where the target's CRS has no counterpart in the source's.
         """
-        row = np.arange(window.row, window.row + window.height, dtype=np.float64)[:, None] + at_yx[0]
-        col = np.arange(window.col, window.col + window.width, dtype=np.float64)[None, :] + at_yx[1]
+        down, across = points_yx
+        # Counted from the grid's origin, so that a point has one place whatever the window.
+        row = (np.arange(window.row * down, (window.row + window.height) * down)[:, None] + 0.5) / down
+        col = (np.arange(window.col * across, (window.col + window.width) * across)[None, :] + 0.5) / across
         if not self.same_crs:
             return self._interpolated(row, col)
         a = self.affine
@@ -105,40 +115,51 @@ class Placement:
 
     @cached_property
     def _step_px(self) -> int:
-        """The largest lattice step whose error at the middle of cells over the whole grid is small enough."""
-        height, width = self.target.shape_yx
+        """The largest lattice step that holds in nearly all of the cells looked at, spread over the grid."""
         for step in _LATTICE_STEPS_PX:
-            row, col = (
-                (np.unique(np.linspace(0, size // step, 9, dtype=np.int64)).astype(np.float64) + 0.5) * step
-                for size in (height, width)
-            )
-            row, col = row[:, None], col[None, :]
-            guess = self._between_nodes(row, col, step)
-            exact = self._exact(*np.broadcast_arrays(row, col))
-            with np.errstate(invalid="ignore"):
-                off = np.hypot(guess[0] - exact[0], guess[1] - exact[1])
-            if not np.any(off > _LATTICE_ERROR_PX):
+            first = [np.unique(np.linspace(0, size // step, 9).astype(np.int64)) for size in self.target.shape_yx]
+            row, col = np.meshgrid(*(cells.astype(np.float64) * step for cells in first), indexing="ij")
+            corners = [self._exact(row + down, col + right) for down in (0, step) for right in (0, step)]
+            if _off_px(corners, self._exact(row + step / 2, col + step / 2)).mean() < 0.1:
                 return step
-        return 1
+        return _LATTICE_STEPS_PX[-1]
 
     def _interpolated(self, row: NDArray[np.float64], col: NDArray[np.float64]) -> Places:
-        return self._between_nodes(row, col, self._step_px)
-
-    def _between_nodes(self, row: NDArray[np.float64], col: NDArray[np.float64], step: int) -> Places:
+        """Places by the lattice; exact in cells whose middle the lattice misses, as where longitude jumps by a turn."""
+        step = self._step_px
         r0, c0 = np.floor(row / step), np.floor(col / step)
-        first_row, first_col = r0.min(), c0.min()
-        node_rows = np.arange(first_row, r0.max() + 2) * step
-        node_cols = np.arange(first_col, c0.max() + 2) * step
-        nodes = self._exact(*np.meshgrid(node_rows, node_cols, indexing="ij"))
+        node_row, node_col = np.meshgrid(
+            np.arange(r0.min(), r0.max() + 2) * step, np.arange(c0.min(), c0.max() + 2) * step, indexing="ij"
+        )
+        nodes = self._exact(node_row, node_col)
+        i, j = (r0 - r0.min()).astype(np.intp), (c0 - c0.min()).astype(np.intp)
         fr, fc = row / step - r0, col / step - c0
-        i, j = (r0 - first_row).astype(np.intp), (c0 - first_col).astype(np.intp)
+        missed = self._missed(nodes, node_row, node_col, step)[i, j]
         with np.errstate(invalid="ignore"):
-            found = []
-            for node in nodes:
-                top = node[i, j] * (1 - fc) + node[i, j + 1] * fc
-                bottom = node[i + 1, j] * (1 - fc) + node[i + 1, j + 1] * fc
-                found.append(top * (1 - fr) + bottom * fr)
-        return found[0], found[1]
+            rows, cols = (
+                (n[i, j] * (1 - fc) + n[i, j + 1] * fc) * (1 - fr)
+                + (n[i + 1, j] * (1 - fc) + n[i + 1, j + 1] * fc) * fr
+                for n in nodes
+            )
+        if missed.any():
+            rows[missed], cols[missed] = self._exact(*(np.broadcast_to(x, missed.shape)[missed] for x in (row, col)))
+        return rows, cols
+
+    def _missed(
+        self, nodes: Places, node_row: NDArray[np.float64], node_col: NDArray[np.float64], step: int
+    ) -> NDArray[np.bool_]:
+        """Which cells between the nodes the lattice does not hold in."""
+        above, below, left, right = slice(None, -1), slice(1, None), slice(None, -1), slice(1, None)
+        corners = [(nodes[0][r, c], nodes[1][r, c]) for r in (above, below) for c in (left, right)]
+        middle = self._exact(node_row[above, left] + step / 2, node_col[above, left] + step / 2)
+        return _off_px(corners, middle)
+
+
+def _off_px(corners: Sequence[Places], middle: Places) -> NDArray[np.bool_]:
+    """Whether the mean of a cell's corners is further from its middle than allowed, or either is not known."""
+    with np.errstate(invalid="ignore"):
+        mean = [sum(corner[axis] for corner in corners) / 4 for axis in (0, 1)]
+        return np.asarray(~(np.hypot(mean[0] - middle[0], mean[1] - middle[1]) <= _LATTICE_ERROR_PX))
 
 
 @lru_cache(maxsize=256)
@@ -184,6 +205,34 @@ def gather_nearest(
     if _independent(row, col):
         return values.take(row[:, 0], axis=-2).take(col[0], axis=-1), inside
     return values[..., row, col], inside
+
+
+def mean_of_points(values: Array, inside: NDArray[np.bool_], points_yx: tuple[int, int]) -> Array:
+    """Mean (n, h, w) of the valid ones among each pixel's points; NaN where none is.
+
+    values (n, h * down, w * across) at the points, inside (h * down, w * across): which of them lie in the source.
+    """
+    down, across = points_yx
+    valid = ~np.isnan(values)
+    valid &= inside
+    n, height, width = len(values), values.shape[1] // down, values.shape[2] // across
+    by_pixel = (n, height, down, width, across)
+    known, held = np.where(valid, values, 0).reshape(by_pixel), valid.reshape(by_pixel)
+    # Added one by one in a fixed order: a library's sum may regroup by the shape of the window.
+    total, count = np.zeros((n, height, width)), np.zeros((n, height, width), dtype=np.int64)
+    for i in range(down):
+        for j in range(across):
+            total += known[:, :, i, :, j]
+            count += held[:, :, i, :, j]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        return np.asarray(np.where(count > 0, total / count, np.nan), dtype=np.float32)
+
+
+def any_of_points(flags: NDArray[np.bool_], points_yx: tuple[int, int]) -> NDArray[np.bool_]:
+    """Whether any of each pixel's points is flagged: (h * down, w * across) to (h, w)."""
+    down, across = points_yx
+    height, width = flags.shape[0] // down, flags.shape[1] // across
+    return np.asarray(flags.reshape(height, down, width, across).any(axis=(1, 3)))
 
 
 def gather_bilinear(values: Array, part: Window, source: Grid, places: Places) -> Array:
