@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 import json
+import re
 import tomllib
+from dataclasses import replace
+from pathlib import Path
 
 import pytest
 from click.testing import CliRunner
@@ -40,6 +43,21 @@ def test_the_schema_is_printed_and_nothing_written(tmp_path, monkeypatch):
     result = CliRunner().invoke(command, ["--schema"])
     assert json.loads(result.output) == project_schema()
     assert not list(tmp_path.iterdir())
+
+
+def test_every_setting_at_rest_is_valid_when_it_is_woken():
+    main = SceneDraft("Sorrel Basin", (BandDraft("red", "a.tif"), BandDraft("nir", "b.tif")), grid="red", date="dry")
+    draft = replace(main, dates=(replace(main, date="wet", grid=None),))
+    resting = re.compile(r"^# (\[[a-z_.]+\]|\w+ = .*)$")
+    lines = [resting.sub(r"\1", line) for line in project_text(draft).splitlines()]
+    woken = tomllib.loads("\n".join(lines))
+    assert "reject" in woken["scene"]["mask"]
+    project = parse_project(woken, Path("project.toml"))
+    assert project.reference is not None
+    assert project.scene.composite is not None
+    assert project.scene.ancillary["geology"].categorical
+    assert project.features.texture
+    assert project.training.exclude
 
 
 text = st.text(min_size=1, max_size=20).filter(lambda s: s.strip() == s and s)

@@ -113,6 +113,8 @@ def _scene_text(draft: SceneDraft) -> str:
     lines += ["", "[scene.bands]", *_bands(draft), "", *_mask(draft, "scene.mask")]
     if not draft.mask:
         lines += ["# [scene.mask]", '# file = "scene/mask.tif"', "# reject = [1, 2]  # codes, or bits = { cloud = 3 }"]
+    lines += ["", "# Other rasters, such as elevation: features by name, never masked.", "# [scene.ancillary]"]
+    lines += ['# elevation = "elevation.tif"', '# geology = { file = "geology.tif", categorical = true }']
     for date in draft.dates:
         sensor = [f"sensor = {_toml(date.sensor)}"] if date.sensor else []
         lines += ["", "[[scene.dates]]  # its layers are called role@name", f"name = {_toml(str(date.date))}", *sensor]
