@@ -11,15 +11,11 @@ from pathlib import Path
 import geopandas as gpd
 import numpy as np
 import pandas as pd
+import rasterio
 from affine import Affine
-from rasterio.crs import CRS
 
 from classify.assessment import assess_project
 from classify.files import write_json
-from classify.mapping.byte_raster import ByteRaster
-from classify.mapping.finish import layer_of
-from classify.mapping.writer import write_cog
-from classify.raster.grid import Grid
 from classify.settings import Project, load_project
 
 TRANSFORM = Affine(30, 0, 500_000, 0, -30, 4_200_000)
@@ -91,7 +87,8 @@ def _sample(folder: Path, project: Project, codes: np.ndarray, pixels, counts) -
 
 def _toml(title: str, names, with_reference: bool) -> str:
     classes = "\n".join(f"[[class]]\ncode = {i}\nname = {_quoted(n)}" for i, n in enumerate(names, start=1))
-    reference = '[reference]\npoints = "reference.gpkg"\nlabel = "observed"\ndesign = "design.json"' if with_reference else ""
+    section = "[reference]\npoints = \"reference.gpkg\"\nlabel = \"observed\"\ndesign = \"design.json\""
+    reference = section if with_reference else ""
     return f"""
 [project]
 title = {_quoted(title)}
@@ -125,13 +122,11 @@ def _map(folder: Path, project: Project, pixels) -> np.ndarray:
     codes[:30, :50] = 0
     percent = np.clip(40 + 60 * np.abs(np.sin(field * 3)), 0, 100).astype(np.uint8)
     percent[codes == 0] = 255
-    grid = Grid(CRS.from_epsg(32633), TRANSFORM, height, width)
-    for name, values in (("cover", codes), ("confidence", percent)):
-        stored = ByteRaster(folder / f"{name}.bytes", grid)
-        stored.create()
-        stored.write(grid.window, values)
-        write_cog(stored, folder / f"{name}.tif", layer_of(name, project.classes))
-        stored.path.unlink()
+    folder.mkdir(parents=True, exist_ok=True)
+    for name, values, nodata in (("cover", codes, 0), ("confidence", percent, 255)):
+        with rasterio.open(folder / f"{name}.tif", "w", driver="GTiff", dtype="uint8", count=1, height=height,
+                           width=width, crs="EPSG:32633", transform=TRANSFORM, nodata=nodata) as target:
+            target.write(values, 1)
     table = pd.DataFrame({
         "code": [c.code for c in project.classes], "name": [c.name for c in project.classes], "pixels": pixels,
         "area_m2": [900.0 * count for count in pixels], "area": [0.09 * count for count in pixels], "unit": "ha",

@@ -28,7 +28,7 @@ def write_report(facts: ReportFacts, folder: Path) -> list[Path]:
     # All is set before anything is written, so that a fault leaves the old report in one piece.
     contents = render_html(document, facts), render_pdf(document, facts), render_xlsx(document, facts)
     write_text(page, contents[0])
-    write_bytes(pdf, contents[1].data)
+    write_bytes(pdf, contents[1])
     write_bytes(book, contents[2])
     written = [page, pdf, book, *write_data(facts, folder)]
     return [*written, write_manifest(folder, written)]

@@ -142,7 +142,7 @@ def matrix_table(
     name: str, title: str, classes: Sequence[str], codes: dict[str, int], rows: Sequence[tuple[Value, ...]],
     words: Messages, *, kind: Literal["integer", "percent"] = "integer", corner: str = "map_as",
 ) -> Table:  # fmt: skip
-    """A square table of classes with totals, its columns headed by names or, where there are many, by codes."""
+    """A square table of classes with totals (last row and column), columns headed by names or, of many, by codes."""
     named = len(classes) <= NAMED_COLUMNS
     heads = [n if named else str(codes.get(n, i + 1)) for i, n in enumerate(classes)]
     columns = (
@@ -152,7 +152,9 @@ def matrix_table(
     notes = [] if named else [words.text("matrix.numbers_note")]
     if kind == "percent":
         notes.append(words.text("matrix.percent_note"))
-    return Table(name, title, columns, tuple(rows), " ".join(notes), layout="matrix")
+    if not named:
+        rows = [*((f"{heads[i]} · {n}", *row[1:]) for i, (n, row) in enumerate(zip(classes, rows, strict=False))), rows[-1]]
+    return Table(name, title, columns, tuple(rows), " ".join(notes), "matrix", () if named else tuple(classes))
 
 
 def agreement_section(facts: ReportFacts, words: Messages) -> Section | None:

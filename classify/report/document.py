@@ -34,7 +34,8 @@ class Column:
 @dataclass(frozen=True, slots=True)
 class Table:
     """A table. name: its key in every form (worksheet, anchor). The first column names the row; "class" cells carry the
-    colour of their class. layout "matrix": the last row and column are totals, the diagonal is agreement."""
+    colour of their class. layout "matrix": the last row and column are totals, the diagonal is agreement.
+    row_classes: class of each row, where its first cell is not just the class's name."""
 
     name: str
     title: str
@@ -42,6 +43,13 @@ class Table:
     rows: tuple[tuple[Value, ...], ...]
     note: str = ""
     layout: Literal["plain", "matrix"] = "plain"
+    row_classes: tuple[str, ...] = ()
+
+    def row_class(self, row: int) -> str:
+        """Name of the class whose colour marks a row; of no class where the row is of none."""
+        if self.row_classes:
+            return self.row_classes[row] if row < len(self.row_classes) else ""
+        return str(self.rows[row][0]) if self.columns[0].kind == "class" else ""
 
 
 @dataclass(frozen=True, slots=True)

@@ -1,7 +1,7 @@
 """The report as PDF: the same document, set by Typst from its wheel. Tagged, with outline and metadata.
 
 PDF/UA-1 is asked for. When a name has a glyph that no font of this machine holds, that standard cannot be met: the file
-is then written as plain tagged PDF and the caller is told.
+is then written as plain tagged PDF that says so on page one.
 """
 
 from __future__ import annotations
@@ -9,7 +9,6 @@ from __future__ import annotations
 import json
 import re
 import tempfile
-from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib.resources import files
 from pathlib import Path
@@ -38,16 +37,13 @@ from classify.report.identity import COLOURS
 from classify.report.messages import Messages, Rich, load_messages
 
 
-@dataclass(frozen=True, slots=True)
-class Pdf:
-    """The file's bytes, and text that no font of this machine can show ("" when all is well)."""
-
-    data: bytes
-    without_glyphs: str = ""
+# No drawing may be taller than a page: the height that is left for it, in mm, and the width of the text.
+_TALLEST_MM, _WIDTH_MM = 215, 170
+_TALLEST_MAP_MM = 122
 
 
-def render_pdf(document: Document, facts: ReportFacts) -> Pdf:
-    """Set the document. Raises OutputError when the typesetter fails."""
+def render_pdf(document: Document, facts: ReportFacts) -> bytes:
+    """Set the document; returns the file's bytes. Raises OutputError when the typesetter fails."""
     words = load_messages(document.language)
     with tempfile.TemporaryDirectory(prefix="landassay-") as scratch:
         folder = Path(scratch)
@@ -56,12 +52,13 @@ def render_pdf(document: Document, facts: ReportFacts) -> Pdf:
         main = folder / "main.typ"
         main.write_text(files("classify.report").joinpath("templates/report.typ").read_text("utf-8"), encoding="utf-8")
         try:
-            return Pdf(_compile(main, facts, ["ua-1"]))
+            return _compile(main, facts, ["ua-1"])
         except typst.TypstError as error:
-            missing = re.search(r"the text (.+) could not be displayed", str(error.message))
-            if missing is None:
+            if "could not be displayed" not in str(error.message):
                 raise OutputError(f"the PDF cannot be set: {error.message}", fix="report this as a defect") from error
-            return Pdf(_compile(main, facts, []), missing.group(1).strip('"'))
+            content["notice"] = words.text("head.glyphs")
+            (folder / "document.json").write_text(json.dumps(content, allow_nan=False), encoding="utf-8")
+            return _compile(main, facts, [])
 
 
 def _compile(main: Path, facts: ReportFacts, standards: list[Any]) -> bytes:
@@ -82,7 +79,7 @@ def _document(document: Document, facts: ReportFacts, words: Messages, folder: P
         (folder / logo).write_bytes(facts.heading.logo)
     return {
         "kind": document.kind, "title": document.title, "author": facts.heading.author, "language": document.language,
-        "logo": logo, "facts": [list(pair) for pair in document.facts], "footer": document.footer, "colours": COLOURS,
+        "notice": "", "logo": logo, "facts": [list(pair) for pair in document.facts], "footer": document.footer, "colours": COLOURS,
         "evidence": words.text("head.evidence"),
         "sections": [_section(section, facts, words, folder) for section in document.sections],
     }  # fmt: skip
@@ -111,7 +108,7 @@ def _block(block: Block, facts: ReportFacts, words: Messages, folder: Path) -> d
             return {**kind, **_table(block, facts, words)}
         case Figure():
             (folder / f"{block.name}.svg").write_text(block.svg, encoding="utf-8")
-            return {**kind, "file": f"{block.name}.svg", "caption": block.caption, "alt": block.alt, "small": block.small}
+            return {**kind, "file": f"{block.name}.svg", "caption": block.caption, "alt": block.alt, **_size(block)}
         case Legend():
             return {**kind, "entries": [list(e) for e in block.entries], "no_data": block.no_data}
         case Pairs():
@@ -121,6 +118,14 @@ def _block(block: Block, facts: ReportFacts, words: Messages, folder: Path) -> d
         case Code():
             return {**kind, "text": block.text}
     raise AssertionError(block)
+
+
+def _size(figure: Figure) -> dict[str, Any]:
+    """Width of a drawing as a share of the text, and the height that it is kept within, in mm."""
+    width, height = (float(v) for v in re.search(r'viewBox="0 0 ([\d.]+) ([\d.]+)"', figure.svg).groups())  # type: ignore[union-attr]
+    share = min(1.0, width / 720)
+    tallest = _TALLEST_MAP_MM if figure.name == "map" else _TALLEST_MM
+    return {"share": share, "height": min(tallest, _WIDTH_MM * share * height / width)}
 
 
 def _table(table: Table, facts: ReportFacts, words: Messages) -> dict[str, Any]:
@@ -135,11 +140,12 @@ def _table(table: Table, facts: ReportFacts, words: Messages) -> dict[str, Any]:
                 "tint": cells.tint(table, r, c) if matrix else 0.0,
                 "same": matrix and cells.is_diagonal(table, r, c),
             })  # fmt: skip
-        rows.append({"colour": known.get(str(row[0])) if table.columns[0].kind == "class" else None, "cells": listed})
+        rows.append({"colour": known.get(table.row_class(r)), "cells": listed})
     heads = [c.heading if matrix else cells.heading(c, words) for c in table.columns]
+    longest = [max((len(str(row[c])) for row in table.rows), default=0) for c in range(len(table.columns))]
     starts = [c.kind in ("text", "class", "code") for c in table.columns]
     return {
-        "title": table.title, "heads": heads, "starts": starts, "code": [c.kind == "code" for c in table.columns],
+        "title": table.title, "heads": heads, "starts": starts, "longest": longest, "code": [c.kind == "code" for c in table.columns],
         "rows": rows, "note": table.note, "matrix": matrix,
     }  # fmt: skip
 
