@@ -67,7 +67,8 @@ def first_design(
     left_out = [s["stratum"] for s in strata if s["stratum"] not in by_name]
     notes = [*drawn.notes, *(f"No points were drawn in {name!r}: no estimate covers it." for name in left_out)]
     return {
-        "schema": 1, "kind": options.kind, "seed": options.seed, "map": dict(map_facts),
+        "schema": 1, "kind": options.kind, "seed": options.seed,
+        "map": {**map_facts, "grid": grid_facts(population.grid)},
         "unit": {"kind": "pixel" if options.segment_px == 1 else "segment", "side_px": options.segment_px},
         "apart_m": options.apart_m, **more,
         "population": {"pixels": sum(found.pixels), "area_m2": round(sum(found.area_m2), 1),
@@ -151,6 +152,11 @@ def points_frame(design: Mapping[str, Any], grid: Grid) -> geopandas.GeoDataFram
     for column in LABEL_COLUMNS:
         frame[column] = pd.array([""] * len(frame), dtype="object")
     return frame[[*(c for c in frame.columns if c != "geometry"), "geometry"]]
+
+
+def grid_facts(grid: Grid) -> list[float]:
+    """Transform and shape of a grid as plain numbers, by which a design knows its map's grid again."""
+    return [*tuple(grid.transform)[:6], grid.height, grid.width]
 
 
 def write_first(folder: Path, design: Mapping[str, Any], grid: Grid) -> DrawnSample:

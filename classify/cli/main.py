@@ -17,6 +17,7 @@ COMMANDS = {
     "classify": ("classify.cli.classify", "Map the scene with the trained model."),
     "plan": ("classify.cli.plan", "Plan a reference sample: its size and allocation."),
     "draw": ("classify.cli.draw", "Draw the reference sample, without giving the map away."),
+    "interpret": ("classify.cli.interpret", "Label the reference sample in the browser, blind to the map."),
     "assess": ("classify.cli.assess", "Estimate accuracy and areas from a labelled reference sample."),
     "compare": ("classify.cli.compare", "Compare two maps on one reference sample."),
     "report": ("classify.cli.report", "Write the report."),
