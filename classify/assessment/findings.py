@@ -20,7 +20,7 @@ _FEW_CLUSTERS = 30
 def findings(sample: ReferenceSample, t: Tally, proportions: Floats) -> tuple[Problem, ...]:
     """Warnings about a sample and its tally. proportions: the area matrix, float64 (k, k)."""
     inferential = EVIDENCE[sample.evidence].has_intervals
-    about_chance = (*_design(sample, t), *_empty_strata(sample, t), *_lone_units(sample, t)) if inferential else ()
+    about_chance = (*_few_clusters(t), *_empty_strata(sample, t), *_lone_units(sample, t)) if inferential else ()
     return (
         *_evidence(sample), *_off_map(sample), *_unlabelled(sample), *about_chance,
         *_one_sided_classes(sample, proportions), *_mapped_areas(sample),
@@ -88,12 +88,7 @@ def _evidence(sample: ReferenceSample) -> Iterator[Problem]:
                        f"{evidence.caution}")  # fmt: skip
 
 
-def _design(sample: ReferenceSample, t: Tally) -> Iterator[Problem]:
-    if sample.kind == "systematic":
-        yield _warning(
-            "standard errors of a systematic sample are those of a random one of the same size, which are as a rule "
-            "somewhat too large",
-        )
+def _few_clusters(t: Tally) -> Iterator[Problem]:
     if t.clustered and int(t.group_size.sum()) < _FEW_CLUSTERS:
         yield _warning(
             f"the sample has {int(t.group_size.sum())} clusters; it is their number, not that of the points, that "

@@ -18,6 +18,11 @@ from classify.assessment.sample import NO_LABEL, DesignKind, ReferenceSample, St
 from classify.assessment.strata import mapped_areas, read_strata, recognise_classes
 from classify.errors import Problem, SampleError, raise_if_errors
 
+SYSTEMATIC = Problem(
+    "standard errors of a systematic sample are those of a random one of the same size, which are as a rule somewhat "
+    "too large",
+    severity="warning",
+)
 # Columns that points may have; others are left alone.
 _COLUMNS = ("id", "stratum", "map", "reference", "alternate", "other_map", "cluster", "region")
 _LABEL_COLUMNS = ("map", "other_map", "reference", "alternate")
@@ -101,6 +106,7 @@ def sample_from_matrix(
 def _sample(table: tuple[Stratum, ...], classes: tuple[str, ...], options: AssessmentOptions) -> ReferenceSample:
     """The sample but for its points."""
     kind: DesignKind = options.kind or ("stratified" if len(table) > 1 else "simple random")
+    problems = (SYSTEMATIC,) if kind == "systematic" else ()
     if kind in ("simple random", "systematic") and len(table) > 1:
         # Strata that a design of one draw brings along can only have come after it.
         kind = "post-stratified"
@@ -108,6 +114,7 @@ def _sample(table: tuple[Stratum, ...], classes: tuple[str, ...], options: Asses
     return ReferenceSample(
         classes=classes, strata=table, kind=kind, stratum=none, map=none, reference=none, count=none,
         mapped_area=mapped_areas(table, classes, options), area_unit=options.area_unit, evidence=options.evidence,
+        problems=problems,
     )  # fmt: skip
 
 

@@ -89,7 +89,7 @@ def read_reference(project: Project, cover: Path, outputs: Path, *, other: Path 
         if settings.cluster is None and design.cluster_of:
             points["cluster"] = frame["id"].map(plain_text).map(design.cluster_of)
     if len(strata) == 1:
-        points, strata, kind, found = _post_stratified(points, strata, areas, kind)
+        points, strata, found = _post_stratified(points, strata, areas)
         warnings += found
     options = project_options(project, kind=kind, areas=areas)
     strata = strata.assign(area=strata["area_m2"] / M2_PER_UNIT[project.report.area_unit])
@@ -283,17 +283,17 @@ def _as_drawn(
 
 
 def _post_stratified(
-    points: pd.DataFrame, strata: pd.DataFrame, areas: pd.DataFrame, kind: DesignKind
-) -> tuple[pd.DataFrame, pd.DataFrame, DesignKind, list[Problem]]:
+    points: pd.DataFrame, strata: pd.DataFrame, areas: pd.DataFrame
+) -> tuple[pd.DataFrame, pd.DataFrame, list[Problem]]:
     """A sample of one stratum sharpened by the known areas of the map's classes, where each has points enough."""
     on_map = (points["map"] != "").to_numpy()
     off = int((~on_map).sum())
     labelled = points.loc[on_map & (points["reference"] != "").to_numpy(), "map"].value_counts()
     classes = areas.loc[areas["area_m2"] > 0, ["name", "area_m2", "pixels"]].rename(columns={"name": "stratum"})
     if (classes["stratum"].map(labelled).fillna(0) < 2).any():
-        return points.assign(stratum=str(strata["stratum"].iat[0])), strata, kind, []
+        return points.assign(stratum=str(strata["stratum"].iat[0])), strata, []
     what = f"{off} points lie outside the map or where it has no data, and are left out"
     found = [Problem(what, severity="warning")] if off else []
     # Strata made of map classes hold no point off the map.
     points = points[on_map].reset_index(drop=True)
-    return points.assign(stratum=points["map"]), classes, "post-stratified", found
+    return points.assign(stratum=points["map"]), classes, found
