@@ -196,7 +196,9 @@ def test_strata_under_other_names_and_options_of_the_command(run):
     content = json.loads((out / "assessment.json").read_text("utf-8"))
     assert content["area"]["a"]["mapped"] == 30 and content["unlabelled"]["points"] == 1
     assert content["confidence_level"] == 0.9 and content["overall_accuracy"]["interval"].startswith("student")
-    _, error, _ = run("assess", "--purposive", points=points, strata=strata)
+    assert "overall accuracy" in result.stdout
+    result, error, _ = run("assess", "--purposive", points=points, strata=strata)
+    assert "agreement on the sampled places" in result.stdout and "accuracy" not in result.stdout
     assert json.loads((out / "assessment.json").read_text("utf-8"))["evidence"] == "purposive sample"
 
 

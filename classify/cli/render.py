@@ -64,7 +64,9 @@ def _classify(summary: Mapping[str, Any]) -> str:
 
 
 def assessment_text(summary: Mapping[str, Any]) -> str:
-    """An assessment (as in assessment.json) in one table."""
+    """An assessment (as in assessment.json) in one table, in words that its evidence allows."""
+    from classify.assessment.evidence import EVIDENCE
+
     overall = summary["overall_accuracy"]
     level, unit = f"{100 * summary['confidence_level']:g} %", summary["area_unit"]
     rows = []
@@ -72,7 +74,11 @@ def assessment_text(summary: Mapping[str, Any]) -> str:
         area = summary["area"][name]
         users, producers = (summary[key][name]["estimate"] for key in ("users_accuracy", "producers_accuracy"))
         rows.append([name, percent(users), percent(producers), _with_margin(area)])
-    lines = [f"overall accuracy {percent(overall['estimate'])} ({level} interval {_interval(overall)})"]
+    evidence = EVIDENCE[summary["evidence"]]
+    if evidence.has_intervals:
+        lines = [f"overall accuracy {percent(overall['estimate'])} ({level} interval {_interval(overall)})"]
+    else:
+        lines = [f"{evidence.accuracy_term}: {percent(overall['estimate'])} overall. {evidence.claim}"]
     lines.append(table(["class", "user's", "producer's", f"area, {unit}" if unit else "area"], rows))
     return "\n".join(lines)
 
