@@ -26,7 +26,7 @@ from test_raster_scene import read_all, scene_of, write
 
 from classify.cli.new import command
 from classify.errors import DataError, LandassayError
-from classify.raster import remote, stac
+from classify.raster import remote, sources, stac
 from classify.raster.discover import discover, relative_to
 from classify.raster.roles import ROLE_CENTRES_NM, role_in_name, role_of_word, roles_of_wavelengths
 from classify.raster.scene import open_scene
@@ -572,6 +572,21 @@ def test_a_scene_is_read_over_http_as_from_disk(tmp_path, monkeypatch):
         server.shutdown()
         server.server_close()
     assert np.allclose(got["nir"], stored[1] * 1e-4, rtol=1e-5)
+
+
+def test_a_raster_address_that_does_not_answer_is_given_up(tmp_path, monkeypatch):
+    monkeypatch.setattr(_Server, "wait_s", 4.0)
+    monkeypatch.setattr(
+        sources, "REMOTE_OPTIONS", {"GDAL_HTTP_LOW_SPEED_TIME": "1", "GDAL_HTTP_LOW_SPEED_LIMIT": "100"}
+    )
+    server = HTTPServer(("localhost", 0), _Server)
+    threading.Thread(target=server.serve_forever, daemon=True).start()
+    start = time.monotonic()
+    with pytest.raises(DataError, match=r"(?s)scene\.bands\.red.*cannot be opened.*network"):
+        scene_of(tmp_path, {"red": f"http://localhost:{server.server_port}/slow.tif"})
+    assert time.monotonic() - start < 3.5
+    server.shutdown()
+    server.server_close()
 
 
 def test_addresses_that_cannot_be_reached_say_so(monkeypatch):

@@ -88,6 +88,10 @@ def test_scale_offset_and_no_data_by_band_scene_file_and_preset(tmp_path):
     assert np.allclose(
         read_all(preset)["red"], np.where(stored == 0, np.nan, stored * 1e-4 - 0.1), equal_nan=True, rtol=1e-5
     )
+    disputed = scene_of(tmp_path, {"red": "tagged.tif", "nir": "tagged.tif"}, sensor="sentinel-2-l2a")
+    said = [w for w in disputed.warnings if "state scale 0.5 and offset 2, the preset 0.0001 and -0.1" in w.what]
+    assert len(said) == 1, "once, not for each band"
+    assert np.nanmax(read_all(disputed)["red"]) == 2002, "the file is believed"
     whole = scene_of(tmp_path, {"red": "tagged.tif"}, sensor="sentinel-2-l2a", scale=0.01, offset=0.0, nodata=2000)
     assert np.allclose(
         read_all(whole)["red"], np.where(stored == 2000, np.nan, stored * 0.01), equal_nan=True, rtol=1e-6

@@ -39,7 +39,7 @@ def open_scene(settings: SceneSettings, project: Project) -> Scene:
     raise_if_errors(opening.problems, DataError)
     grid = _choose_grid(settings, opening.bands)
     ground_areas_m2(grid, Window(0, 0, 1, 1))  # refuses a CRS that is not tied to the earth
-    problems = list(opening.problems)
+    problems = list(dict.fromkeys(opening.problems))  # what holds for all bands is said once
     for source in opening.bands:
         problems += placement_problems(source.native, grid, repr(source.role), source.path)
     for mask in opening.masks.values():
@@ -76,8 +76,10 @@ class _Opening:
         suffix = "" if one is self.settings and self.settings.composite is None else f"@{date}"
         for role, band in one.bands.items():
             with self._collecting(f"{key}.bands.{role}"):
-                source = _band_source(role, band, self._facts(band), rules)
+                facts = self._facts(band)
+                source = _band_source(role, band, facts, rules)
                 self.bands.append(replace(source, role=role + suffix, date=date or ""))
+                self.problems += rules.other_scaling(band, facts, f"{self.project.file.name}: {key}")
             self.problems += rules.unknown_role(role, f"{self.project.file.name}: {key}.bands.{role}")
         if one.mask:
             with self._collecting(f"{key}.mask"):
@@ -127,6 +129,16 @@ class _Rules:
             given = {key: getattr(main, key) if value is None else value for key, value in given.items()}
         name = one.sensor or main.sensor
         return cls(load_sensor(name) if name else NO_SENSOR, name, **given)
+
+    def other_scaling(self, band: BandSettings, facts: RasterFacts, where: str) -> list[Problem]:
+        """A warning when the file states another scale or offset than the preset and the project does not decide."""
+        said = (facts.scales[band.band - 1], facts.offsets[band.band - 1])
+        preset = (self.sensor.scale, self.sensor.offset)
+        decided = {band.scale, band.offset, self.scale, self.offset} != {None}
+        if decided or None in preset or said == (1.0, 0.0) or np.allclose(said, np.array(preset, float), rtol=1e-6):
+            return []
+        what = f"files state scale {said[0]:g} and offset {said[1]:g}, the preset {preset[0]:g} and {preset[1]:g}"
+        return [Problem(what, where, "the files are believed; if they are wrong, set both under [scene]", "warning")]
 
     def unknown_role(self, role: str, where: str) -> list[Problem]:
         """A warning when the preset has bands, but none of this role."""
