@@ -5,9 +5,16 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 from typing import Literal
 
-from classify.report.answer_text import mapped_table, report_kind, unit_word
+from classify.report.answer_text import (
+    DRAWN_ON_PAGE_ONE,
+    area_figure,
+    assessed_classes,
+    mapped_table,
+    report_kind,
+    unit_word,
+)
 from classify.report.document import Block, Column, Figure, Paragraph, Section, Table, Value
-from classify.report.facts import AccuracyFacts, ClassFact, ReportFacts
+from classify.report.facts import AccuracyFacts, ReportFacts
 from classify.report.figures import accuracy_drawing, area_decimals, area_drawing
 from classify.report.messages import Messages
 
@@ -30,21 +37,13 @@ def areas_section(facts: ReportFacts, words: Messages) -> Section | None:
 
 
 def _areas(facts: ReportFacts, accuracy: AccuracyFacts, words: Messages) -> Iterator[Block]:
-    style, unit, level = words.numbers, unit_word(accuracy.unit, words), words.numbers.percent(accuracy.level, 0)
     if report_kind(facts) == "sample":
         yield Paragraph(words.rich("areas.text"))
         outside = [n for n in accuracy.classes if _is_outside(accuracy, n)]
         key = "areas.outside" if outside else "areas.outside_none"
         yield Paragraph(words.rich(key, names=", ".join(outside)))
-    classes = _classes(facts, accuracy)
-    areas = [accuracy.area[n] for n in accuracy.classes]
-    alt = "; ".join(
-        words.text("areas.alt_row", name=c.name, area=style.with_margin(a.estimate, a.lower, a.upper, unit),
-                   mapped=style.rounded(c.mapped))
-        for c, a in zip(classes, areas, strict=True)
-    )  # fmt: skip
-    drawing = area_drawing(classes, areas, unit, words.text("areas.figure", level=level), style)
-    yield Figure("areas", drawing.markup(), words.text("areas.caption", level=level), alt)
+    if len(accuracy.classes) > DRAWN_ON_PAGE_ONE:
+        yield area_figure(facts, accuracy, words)
     yield _area_table(accuracy, words)
     if facts.map is not None:
         yield mapped_table(facts, words)
@@ -88,11 +87,11 @@ def _accuracies(facts: ReportFacts, accuracy: AccuracyFacts, words: Messages) ->
     yield Paragraph(words.rich("accuracy.text"))
     for key, estimates in (("users", accuracy.users), ("producers", accuracy.producers)):
         known = {n: e.estimate for n, e in estimates.items() if e.estimate is not None}
-        worst = min(known, key=lambda n: known[n], default=None)  # noqa: B023 - used within the same round
+        worst = min(known, key=lambda n: known[n], default=None)
         if worst is not None and known[worst] < 1:
             share = style.percent(1 - known[worst], 0)
             yield Paragraph(words.rich(f"accuracy.worst_{key}", name=worst, share=share))
-    classes = _classes(facts, accuracy)
+    classes = assessed_classes(facts, accuracy)
     users, producers = ([e[n] for n in accuracy.classes] for e in (accuracy.users, accuracy.producers))
     alt = "; ".join(
         words.text("accuracy.alt_row", name=n, users=style.percent(u.estimate), producers=style.percent(p.estimate))
@@ -138,7 +137,7 @@ def matrix_section(facts: ReportFacts, words: Messages) -> Section | None:
     return Section("matrix", words.text("matrix.title"), tuple(blocks), "sample")
 
 
-def matrix_table(
+def matrix_table(  # noqa: PLR0917 - what is shown, and in which words
     name: str, title: str, classes: Sequence[str], codes: dict[str, int], rows: Sequence[tuple[Value, ...]],
     words: Messages, *, kind: Literal["integer", "percent"] = "integer", corner: str = "map_as",
 ) -> Table:  # fmt: skip
@@ -153,7 +152,8 @@ def matrix_table(
     if kind == "percent":
         notes.append(words.text("matrix.percent_note"))
     if not named:
-        rows = [*((f"{heads[i]} · {n}", *row[1:]) for i, (n, row) in enumerate(zip(classes, rows, strict=False))), rows[-1]]
+        marked = [(f"{head} · {row[0]}", *row[1:]) for head, row in zip(heads, rows[:-1], strict=True)]
+        rows = [*marked, rows[-1]]
     return Table(name, title, columns, tuple(rows), " ".join(notes), "matrix", () if named else tuple(classes))
 
 
@@ -177,12 +177,3 @@ def agreement_section(facts: ReportFacts, words: Messages) -> Section | None:
         Table("agreement", words.text("agreement.table"), columns, tuple(rows), words.text("agreement.remark")),
     )
     return Section("agreement", words.text("agreement.title"), blocks, "sample")
-
-
-def _classes(facts: ReportFacts, accuracy: AccuracyFacts) -> list[ClassFact]:
-    """Classes in the order of the assessment, with the mapped areas that it used."""
-    known = {c.name: c for c in facts.classes}
-    return [
-        ClassFact(known[n].code if n in known else i + 1, n, facts.colour(n), mapped=accuracy.mapped[n])
-        for i, n in enumerate(accuracy.classes)
-    ]

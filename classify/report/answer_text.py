@@ -5,11 +5,14 @@ from __future__ import annotations
 from collections.abc import Iterator
 from typing import Literal
 
-from classify.report.document import Block, Column, EvidenceKind, Paragraph, Section, Table
-from classify.report.facts import AccuracyFacts, ReportFacts
-from classify.report.figures import area_decimals
+from classify.report.document import Block, Column, EvidenceKind, Figure, Paragraph, Section, Table
+from classify.report.facts import AccuracyFacts, ClassFact, ReportFacts
+from classify.report.figures import area_decimals, area_drawing
 from classify.report.messages import Messages, Rich
 from classify.report.numbers import is_symmetric, share_decimals
+
+# With more classes than this the drawing of areas would crowd the answer off page one.
+DRAWN_ON_PAGE_ONE = 10
 
 
 def report_kind(facts: ReportFacts) -> Literal["sample", "purposive", "screening"]:
@@ -45,7 +48,33 @@ def _from_sample(facts: ReportFacts, words: Messages) -> Iterator[Block]:
     yield Paragraph(
         words.rich("answer.level", level=style.percent(accuracy.level, 0), points=style.number(accuracy.points)), "note"
     )
-    yield _glance(facts, accuracy, words)
+    if len(accuracy.classes) <= DRAWN_ON_PAGE_ONE:
+        yield area_figure(facts, accuracy, words)
+    yield _glance(accuracy, words)
+
+
+def area_figure(facts: ReportFacts, accuracy: AccuracyFacts, words: Messages) -> Figure:
+    """Areas as estimated and as mapped, drawn."""
+    style, unit, level = words.numbers, unit_word(accuracy.unit, words), words.numbers.percent(accuracy.level, 0)
+    classes = assessed_classes(facts, accuracy)
+    areas = [accuracy.area[n] for n in accuracy.classes]
+    alt = "; ".join(
+        words.text("areas.alt_row", name=c.name, area=style.with_margin(a.estimate, a.lower, a.upper, unit),
+                   mapped=style.rounded(c.mapped))
+        for c, a in zip(classes, areas, strict=True)
+    )  # fmt: skip
+    title = words.text("areas.figure", level=level)
+    drawing = area_drawing(classes, areas, unit, title, style)
+    return Figure("areas", drawing.markup(), words.text("areas.caption", level=level), alt)
+
+
+def assessed_classes(facts: ReportFacts, accuracy: AccuracyFacts) -> list[ClassFact]:
+    """Classes in the order of the assessment, with the mapped areas that it used."""
+    known = {c.name: c for c in facts.classes}
+    return [
+        ClassFact(known[n].code if n in known else i + 1, n, facts.colour(n), mapped=accuracy.mapped[n])
+        for i, n in enumerate(accuracy.classes)
+    ]
 
 
 def _area_sentence(accuracy: AccuracyFacts, words: Messages) -> Rich:
@@ -72,9 +101,10 @@ def _area_sentence(accuracy: AccuracyFacts, words: Messages) -> Rich:
 def _from_chosen_places(facts: ReportFacts, words: Messages) -> Iterator[Block]:
     accuracy = facts.accuracy
     assert accuracy is not None
-    yield Paragraph(words.rich("answer.overall_bare", estimate=words.numbers.percent(accuracy.overall.estimate)), "lead")
+    estimate = words.numbers.percent(accuracy.overall.estimate)
+    yield Paragraph(words.rich("answer.overall_bare", estimate=estimate), "lead")
     yield Paragraph(words.rich("answer.purposive"), "caution")
-    yield _glance(facts, accuracy, words)
+    yield _glance(accuracy, words)
 
 
 def _from_screening(facts: ReportFacts, words: Messages) -> Iterator[Block]:
@@ -91,7 +121,7 @@ def _from_screening(facts: ReportFacts, words: Messages) -> Iterator[Block]:
     yield mapped_table(facts, words)
 
 
-def _glance(facts: ReportFacts, accuracy: AccuracyFacts, words: Messages) -> Table:
+def _glance(accuracy: AccuracyFacts, words: Messages) -> Table:
     """Areas with margins and both accuracies, one row a class. Intervals are written out unless all are even."""
     unit = unit_word(accuracy.unit, words)
     areas = list(accuracy.area.values())

@@ -1,4 +1,4 @@
-"""Line charts of the report and of the training review: spectra, learning curves, reliability, plans."""
+"""Line charts of the report and of the training review: spectra, learning curves, reliability."""
 
 from __future__ import annotations
 
@@ -64,11 +64,10 @@ def draw_line(drawing: Drawing, frame: Frame, line: Line) -> None:
         upper = [frame.at(x, high) for x, _, high in line.ribbon]
         lower = [frame.at(x, low) for x, low, _ in reversed(line.ribbon)]
         drawing.add("path", d=_path([*upper, *lower]) + "z", fill=drawing.ink(line.colour), fill_opacity=0.16)
-    more: dict[str, object] = {"stroke_dasharray": line.dash} if line.dash else {}
-    if line.thin:
-        more["stroke_opacity"] = 0.45
-    drawing.add("path", d=_path([frame.at(x, y) for x, y in line.points]), fill="none",
-                stroke=drawing.ink(line.colour), stroke_width=0.7 if line.thin else 2, stroke_linejoin="round", **more)  # fmt: skip
+    drawing.path(
+        _path([frame.at(x, y) for x, y in line.points]), line.colour, 0.7 if line.thin else 2, line.dash,
+        0.45 if line.thin else 1,
+    )  # fmt: skip
 
 
 def draw_names(drawing: Drawing, frame: Frame, lines: Sequence[Line], width: float) -> None:
@@ -81,11 +80,9 @@ def draw_names(drawing: Drawing, frame: Frame, lines: Sequence[Line], width: flo
         places.append(max(y, places[-1] + step) if places else max(y, frame.top + 4))
     over = max(0.0, (places[-1] if places else 0) - (frame.top + frame.height))
     for (y, line), place in zip(ends, places, strict=True):
-        place -= over
         x = frame.left + frame.width
-        drawing.add("path", d=f"M{x:.1f} {y:.1f}L{x + 12:.1f} {place:.1f}h6", fill="none", stroke=drawing.ink(line.colour),
-                    stroke_width=1.4, **({"stroke_dasharray": line.dash} if line.dash else {}))  # fmt: skip
-        drawing.text(x + 22, place + 4, fitted(line.name, width - 24, 12, lines=1)[0], font_size=12)
+        drawing.path(f"M{x:.1f} {y:.1f}L{x + 12:.1f} {place - over:.1f}h6", line.colour, 1.4, line.dash)
+        drawing.text(x + 22, place - over + 4, fitted(line.name, width - 24, 12, lines=1)[0], font_size=12)
 
 
 def spectra_drawing(bands: Sequence[Mapping[str, Any]], classes: Sequence[Mapping[str, Any]], title: str,
@@ -144,7 +141,8 @@ def signature_panels(review: Mapping[str, Any], title: str, style: NumberStyle) 
         ]  # fmt: skip
         s = c["signature"]
         ribbon = tuple(zip(x, s["low"], s["high"], strict=True))
-        panels.append((c["name"], c["colour"], [Line(tuple(zip(x, s["mean"], strict=True)), "", c["colour"], ribbon), *thin]))
+        mean = Line(tuple(zip(x, s["mean"], strict=True)), "", c["colour"], ribbon)
+        panels.append((c["name"], c["colour"], [mean, *thin]))
     frame = Frame(0, 0, 280, 130, (min(x), max(x)), (0, top))
     return class_panels(panels, frame, title, (_ticks((0, top), style), _band_labels(bands, x)))
 
@@ -167,8 +165,10 @@ def learning_panels(curve: Mapping[str, Any], colours: Mapping[str, str], title:
     return class_panels(panels, Frame(0, 0, 280, 110, (0, most), (0, 1)), title, (y_labels, x_labels))
 
 
-def reliability_drawing(bins: Sequence[Mapping[str, Any]], title: str, words: tuple[str, str], style: NumberStyle) -> Drawing:
-    """Share right against stated confidence; discs grow with the pixels behind them."""
+def reliability_drawing(
+    bins: Sequence[Mapping[str, Any]], title: str, axes: tuple[str, str], style: NumberStyle
+) -> Drawing:
+    """Share right against stated confidence; discs grow with the pixels behind them. axes: what x and y are."""
     drawing = Drawing(360, 330, title)
     frame = Frame(52, 12, 288, 260, (0, 1), (0, 1))
     labels = {share / 4: style.percent(share / 4, 0) for share in range(5)}
@@ -178,8 +178,8 @@ def reliability_drawing(bins: Sequence[Mapping[str, Any]], title: str, words: tu
     draw_line(drawing, frame, Line(tuple((b["said"], b["right"]) for b in known)))
     for b in known:
         drawing.dot(*frame.at(b["said"], b["right"]), r=round(3 + 9 * b["share"] ** 0.5, 1))
-    drawing.text(frame.left + frame.width, 308, words[0], anchor="end", colour="soft", font_size=11)
-    drawing.text(frame.left + 6, frame.top + 14, words[1], colour="soft", font_size=11)
+    drawing.text(frame.left + frame.width, 308, axes[0], anchor="end", colour="soft", font_size=11)
+    drawing.text(frame.left + 6, frame.top + 14, axes[1], colour="soft", font_size=11)
     return drawing
 
 
@@ -200,37 +200,6 @@ def bars_drawing(items: Sequence[tuple[str, float, float | None]], title: str, s
     return drawing
 
 
-def plan_drawing(
-    totals: Sequence[int], series: Mapping[str, Sequence[float | None]], title: str, style: NumberStyle, *,
-    chosen: int | None = None, unit: str = "%",
-) -> Drawing:  # fmt: skip
-    """Expected half-width of an interval against the size of the sample, one line for each allocation or quantity.
-
-    totals: ascending sample sizes; series: by name, half-widths in `unit` (per cent as numbers 0..100), None where a
-    size cannot be allocated; chosen: the size to be marked.
-    """
-    colours = ("accent", "second", "ink", "soft")
-    lines = [
-        Line(tuple((float(n), float(v)) for n, v in zip(totals, values, strict=True) if v is not None), name,
-             colours[i % 4], dash=_DASHES[i // 4 % 4])
-        for i, (name, values) in enumerate(series.items())
-    ]  # fmt: skip
-    top = max((y for line in lines for _, y in line.points), default=1.0) * 1.05
-    drawing = Drawing(720, 300, title)
-    frame = Frame(56, 20, 470, 226, (0.0, float(max(totals))), (0, top))
-    step = nice_step(max(totals) / 5)
-    x_labels = {k * step: style.number(k * step) for k in range(int(max(totals) / step) + 1)}
-    draw_frame(drawing, frame, _ticks(frame.y, style, f"\u00a0{unit}"), x_labels)
-    if chosen is not None:
-        x, _ = frame.at(chosen, 0)
-        drawing.line(x, frame.top, x, frame.top + frame.height, "ink", 1.2)
-        drawing.text(x + 5, frame.top - 6, style.number(chosen), font_size=12, font_weight="600")
-    for line in lines:
-        draw_line(drawing, frame, line)
-    draw_names(drawing, frame, lines, 190)
-    return drawing
-
-
 def band_positions(bands: Sequence[Mapping[str, Any]]) -> list[float]:
     """Wavelengths, or 1, 2, 3, ... where one of them is not known."""
     if _has_wavelengths(bands):
@@ -247,10 +216,10 @@ def _band_labels(bands: Sequence[Mapping[str, Any]], x: Sequence[float]) -> dict
     return dict(zip(x, names, strict=True))
 
 
-def _ticks(y: tuple[float, float], style: NumberStyle, tail: str = "") -> dict[float, str]:
+def _ticks(y: tuple[float, float], style: NumberStyle) -> dict[float, str]:
     step = nice_step((y[1] - y[0]) / 4)
     places = max(0, len(f"{step:.6f}".rstrip("0").partition(".")[2]))
-    return {k * step: style.number(k * step, places) + tail for k in range(int(y[1] / step) + 1)}
+    return {k * step: style.number(k * step, places) for k in range(int(y[1] / step) + 1)}
 
 
 def _path(points: Sequence[tuple[float, float]]) -> str:

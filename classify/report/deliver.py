@@ -35,7 +35,7 @@ _NOT_STORED = ("map", "points", "sample")
 def write_data(facts: ReportFacts, folder: Path) -> list[Path]:
     """Write the tables that the report's numbers come from. Returns the paths. Raises OutputError."""
     content = {f.name: getattr(facts, f.name) for f in fields(facts) if f.name not in _NOT_STORED}
-    plain = {name: asdict(value) if hasattr(value, "__dataclass_fields__") else value for name, value in content.items()}
+    plain = {name: asdict(v) if hasattr(v, "__dataclass_fields__") else v for name, v in content.items()}
     plain["heading"].pop("logo")
     plain["classes"] = [asdict(c) for c in facts.classes]
     written = [folder / FACTS]

@@ -51,9 +51,9 @@ class Layer:
 class MapFact:
     """The map as pictures of one size, and what a reader needs to place them.
 
-    size_yx: pixels of the map; picture_yx: pixels of each layer; step_m: ground size of a picture pixel (down, across) at
-    the centre; pixel_m: ground size of a map pixel (down, across); north_deg: true north at the centre, clockwise from up.
-    x_ticks, y_ticks: position along the frame 0..1 and label. low_share: share of mapped pixels whose confidence is below
+    size_yx: pixels of the map; picture_yx: pixels of each layer; step_m, pixel_m: ground size of a pixel of the picture
+    and of the map (down, across) at the centre; north_deg: true north at the centre, clockwise from up. x_ticks,
+    y_ticks: position along the frame 0..1 and label. low_share: share of mapped pixels whose confidence is below
     `low_percent`, None without a confidence map.
     """
 
@@ -85,7 +85,7 @@ class StratumFact:
 
 @dataclass(frozen=True, slots=True)
 class AccuracyFacts:
-    """What assessment.json says, with estimates as values keyed by class name. Matrices: rows map, columns reference."""
+    """What assessment.json says, with estimates by class name. Matrices: rows map, columns reference."""
 
     evidence: EvidenceName
     level: float

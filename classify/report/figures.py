@@ -93,8 +93,9 @@ class Axis:
 
 
 def accuracy_drawing(
-    classes: Sequence[ClassFact], users: Sequence[Estimate], producers: Sequence[Estimate], title: str, style: NumberStyle
-) -> Drawing:
+    classes: Sequence[ClassFact], users: Sequence[Estimate], producers: Sequence[Estimate], title: str,
+    style: NumberStyle,
+) -> Drawing:  # fmt: skip
     """User's (disc) and producer's (diamond) accuracy of each class with their intervals on a common axis."""
     row = _ROW + 6
     drawing = Drawing(_WIDTH, 30 + row * len(classes) + 8, title)
@@ -125,7 +126,8 @@ def area_drawing(
         most = max(_reach(classes[i], estimates[i]) for i in panel) or 1.0
         step = nice_step(most / 4)
         axis = Axis(0, max(step, -(-most // step) * step), _NAME, _WIDTH - _VALUES)
-        ticks = [(k * step, style.number(k * step, max(0, -_exponent(step)))) for k in range(round(axis.end / step) + 1)]
+        places = max(0, -_exponent(step))
+        ticks = [(k * step, style.number(k * step, places)) for k in range(round(axis.end / step) + 1)]
         bottom = top + 34 + _ROW * len(panel)
         _grid(drawing, axis, ticks, top + 24, bottom, unit)
         for place, i in enumerate(panel):
@@ -136,7 +138,9 @@ def area_drawing(
     return drawing
 
 
-def _area_row(drawing: Drawing, axis: Axis, c: ClassFact, estimate: Estimate, y: float, style: NumberStyle) -> None:
+def _area_row(  # noqa: PLR0917 - where, what and how
+    drawing: Drawing, axis: Axis, c: ClassFact, estimate: Estimate, y: float, style: NumberStyle
+) -> None:
     if estimate.estimate is None and c.mapped is not None:
         drawing.rect(axis.x0, y - 6, axis.at(c.mapped) - axis.x0, 12, c.colour, "ink")
         drawing.text(_WIDTH - _VALUES + 12, y + 4, style.rounded(c.mapped), font_size=12)
@@ -167,7 +171,7 @@ def _exponent(step: float) -> int:
     return len(str(int(step))) - 1 if step >= 1 else -len(f"{step:.10f}".rstrip("0").partition(".")[2])
 
 
-def _grid(
+def _grid(  # noqa: PLR0917 - where and what
     drawing: Drawing, axis: Axis, ticks: Sequence[tuple[float, str]], top: float, bottom: float, unit: str = ""
 ) -> None:
     for i, (value, label) in enumerate(ticks):

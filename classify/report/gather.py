@@ -45,7 +45,11 @@ def gather_facts(project: Project, outputs: Path) -> ReportFacts:
     sample, points = (None, ()) if assessment is None else sample_facts(project, outputs, assessment)
     return ReportFacts(
         heading=Heading(
-            project.project.title, project.project.client, project.project.author, _date(record), __version__,
+            project.project.title,
+            project.project.client,
+            project.project.author,
+            _date(record),
+            __version__,
             None if project.report.logo is None else read_logo(Path(project.path(project.report.logo))),
         ),
         language=project.report.language,
@@ -84,7 +88,8 @@ def accuracy_facts(content: Mapping[str, Any], path: Path) -> AccuracyFacts:
             warnings=tuple(content["warnings"]),
         )  # fmt: skip
     except (KeyError, TypeError, ValueError) as error:
-        raise DataError(f"this assessment lacks {error}", where=str(path), fix="run 'landassay assess' again") from error
+        raise DataError(f"this assessment lacks {error}", where=str(path),
+                        fix="run 'landassay assess' again") from error  # fmt: skip
 
 
 def _estimate(content: Mapping[str, Any]) -> Estimate:
@@ -133,7 +138,7 @@ def _review(review: Mapping[str, Any] | None) -> dict[str, Any] | None:
 def _provenance(project: Project, record: Mapping[str, Any]) -> Provenance:
     stages = record.get("stages", {})
     return Provenance(
-        inputs=tuple((path, entry.get("bytes"), entry.get("sha256")) for path, entry in record.get("inputs", {}).items()),
+        inputs=tuple((path, e.get("bytes"), e.get("sha256")) for path, e in record.get("inputs", {}).items()),
         versions={"landassay": str(record.get("landassay", __version__)), **record.get("versions", {})},
         system=str(record.get("system", "")), seed=project.project.seed,
         # The report's own time is not part of what it reports: the same results give the same document.

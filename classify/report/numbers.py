@@ -1,6 +1,7 @@
 """Numbers as a reader meets them: as many digits as the evidence carries, and no more.
 
-A margin keeps two significant digits and its estimate the same decimal place: 21157.76 with 6157.5 reads 21 200 ± 6 200.
+A margin keeps two significant digits and its estimate the same decimal place: 21157.76 with 6157.5 reads
+21 200 ± 6 200.
 """
 
 from __future__ import annotations

@@ -36,7 +36,6 @@ from classify.report.facts import ReportFacts
 from classify.report.identity import COLOURS
 from classify.report.messages import Messages, Rich, load_messages
 
-
 # No drawing may be taller than a page: the height that is left for it, in mm, and the width of the text.
 _TALLEST_MM, _WIDTH_MM = 215, 170
 _TALLEST_MAP_MM = 122
@@ -79,8 +78,8 @@ def _document(document: Document, facts: ReportFacts, words: Messages, folder: P
         (folder / logo).write_bytes(facts.heading.logo)
     return {
         "kind": document.kind, "title": document.title, "author": facts.heading.author, "language": document.language,
-        "notice": "", "logo": logo, "facts": [list(pair) for pair in document.facts], "footer": document.footer, "colours": COLOURS,
-        "evidence": words.text("head.evidence"),
+        "notice": "", "logo": logo, "facts": [list(pair) for pair in document.facts], "footer": document.footer,
+        "colours": COLOURS, "evidence": words.text("head.evidence"),
         "sections": [_section(section, facts, words, folder) for section in document.sections],
     }  # fmt: skip
 
@@ -97,7 +96,9 @@ def _section(section: Section, facts: ReportFacts, words: Messages, folder: Path
     }  # fmt: skip
 
 
-def _block(block: Block, facts: ReportFacts, words: Messages, folder: Path) -> dict[str, Any]:
+def _block(  # noqa: PLR0911 - one a kind of block
+    block: Block, facts: ReportFacts, words: Messages, folder: Path
+) -> dict[str, Any]:
     kind = {"block": type(block).__name__}
     match block:
         case Paragraph():
@@ -145,8 +146,8 @@ def _table(table: Table, facts: ReportFacts, words: Messages) -> dict[str, Any]:
     longest = [max((len(str(row[c])) for row in table.rows), default=0) for c in range(len(table.columns))]
     starts = [c.kind in ("text", "class", "code") for c in table.columns]
     return {
-        "title": table.title, "heads": heads, "starts": starts, "longest": longest, "code": [c.kind == "code" for c in table.columns],
-        "rows": rows, "note": table.note, "matrix": matrix,
+        "title": table.title, "heads": heads, "starts": starts, "longest": longest,
+        "code": [c.kind == "code" for c in table.columns], "rows": rows, "note": table.note, "matrix": matrix,
     }  # fmt: skip
 
 

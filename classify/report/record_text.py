@@ -8,7 +8,7 @@ from typing import Any
 from classify.report.answer_text import report_kind, unit_word
 from classify.report.document import Block, Code, Column, Listing, Pairs, Paragraph, Section, Subheading, Table
 from classify.report.facts import AccuracyFacts, ReportFacts
-from classify.report.messages import Messages, plain
+from classify.report.messages import Messages, Rich, plain
 
 
 def method_section(facts: ReportFacts, words: Messages) -> Section:
@@ -59,24 +59,37 @@ def cautions_section(facts: ReportFacts, words: Messages) -> Section:
     if facts.map is not None and facts.map.layer("confidence") is not None:
         items.append(words.rich("cautions.confidence"))
     blocks: list[Block] = [Listing(tuple(items), "caution")]
-    warnings = [plain(text) for text in (facts.accuracy.warnings if facts.accuracy else ())]
-    warnings += [words.rich("cautions.warning_of", stage=words.text(f"stage.{s}"), text=t) for s, t in facts.warnings]
-    warnings += [plain(text) for text in (facts.model.warnings if facts.model else ())]
+    warnings = list(_warnings(facts, words))
     if warnings:
         blocks += [Subheading(words.text("cautions.warnings")), Listing(tuple(warnings), "warning", foreign=True)]
     return Section("cautions", words.text("cautions.title"), tuple(blocks))
 
 
+def _warnings(facts: ReportFacts, words: Messages) -> Iterator[Rich]:
+    """Every warning once: stages hand on what earlier ones have said."""
+    listed = [("", text) for text in (facts.accuracy.warnings if facts.accuracy else ())]
+    listed += facts.warnings
+    listed += [("train", text) for text in (facts.model.warnings if facts.model else ())]
+    said: list[str] = []
+    for stage, text in listed:
+        if any(text in earlier for earlier in said):
+            continue
+        said.append(text)
+        yield words.rich("cautions.warning_of", stage=words.text(f"stage.{stage}"), text=text) if stage else plain(text)
+
+
 def glossary_section(facts: ReportFacts, words: Messages) -> Section:
     """Terms in plain words."""
-    return Section("glossary", words.text("glossary.title"), (Pairs(tuple(words.terms("glossary.terms").items()), "glossary"),))
+    terms = Pairs(tuple(words.terms("glossary.terms").items()), "glossary")
+    return Section("glossary", words.text("glossary.title"), (terms,))
 
 
 def record_section(facts: ReportFacts, words: Messages) -> Section:
     """Inputs by fingerprint, versions, stage times, settings, command."""
     record = facts.provenance
     if not record.inputs and not record.stages:
-        return Section("record", words.text("record.title"), (Paragraph(words.rich("record.none"), "caution"),), "record")
+        unknown = Paragraph(words.rich("record.none"), "caution")
+        return Section("record", words.text("record.title"), (unknown,), "record")
     inputs = tuple((path, size, digest or words.text("record.remote")) for path, size, digest in record.inputs)
     versions = ", ".join(f"{name} {number}" for name, number in record.versions.items())
     blocks: list[Block] = [

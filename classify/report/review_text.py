@@ -10,7 +10,18 @@ from classify import __version__
 from classify.errors import DataError
 from classify.files import write_text
 from classify.report.charts import learning_panels, signature_panels, spectra_drawing
-from classify.report.document import Block, Code, Column, Document, Figure, Listing, Paragraph, Section, Subheading, Table
+from classify.report.document import (
+    Block,
+    Code,
+    Column,
+    Document,
+    Figure,
+    Listing,
+    Paragraph,
+    Section,
+    Subheading,
+    Table,
+)
 from classify.report.facts import ClassFact, Heading, ModelFacts, Provenance, ReportFacts
 from classify.report.html import render_html
 from classify.report.messages import Messages, load_messages, plain
@@ -47,8 +58,8 @@ def _facts(review: Mapping[str, Any], language: str) -> ReportFacts:
     classes = tuple(ClassFact(c["code"], c["name"], c["colour"], c["material"]) for c in review["classes"])
     model = ModelFacts("", (), tuple(c.name for c in classes), None, None, {}, review["screening"], None, None)
     return ReportFacts(
-        Heading(str(review["title"]), "", "", "", __version__), language, "m2", 0.95, classes, None, None, model, review,
-        (), Provenance(),
+        Heading(str(review["title"]), "", "", "", __version__), language, "m2", 0.95, classes, None, None, model,
+        review, (), Provenance(),
     )  # fmt: skip
 
 

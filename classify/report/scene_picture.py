@@ -1,10 +1,11 @@
-"""Natural and false colour pictures of the scene on the map's frame, for looking at the map against what it was made of."""
+"""Natural and false colour pictures of the scene on the map's frame, to look at the map beside what it was made of."""
 
 from __future__ import annotations
 
 import io
 from collections.abc import Sequence
 from pathlib import Path
+from typing import Literal
 
 import numpy as np
 import rasterio
@@ -23,8 +24,10 @@ from classify.report.picture import picture_shape, read_grid
 from classify.settings import Project
 
 # Roles shown as red, green and blue; the first set whose bands are all there is taken.
-_NATURAL = (("red", "green", "blue"),)
-_FALSE = (("swir_1", "nir", "red"), ("nir", "red", "green"))
+_SHOWN: dict[Literal["natural", "false"], tuple[tuple[str, str, str], ...]] = {
+    "natural": (("red", "green", "blue"),),
+    "false": (("swir_1", "nir", "red"), ("nir", "red", "green")),
+}
 _QUALITY = 84
 
 
@@ -35,7 +38,7 @@ def scene_layers(project: Project, cover: Path) -> tuple[Layer, ...]:
         grid = read_grid(cover)
         layers = [
             Layer(kind, _composite([bands[role] for role in roles], grid), "image/jpeg")
-            for kind, sets in (("natural", _NATURAL), ("false", _FALSE))
+            for kind, sets in _SHOWN.items()
             for roles in [next((s for s in sets if all(role in bands for role in s)), None)] if roles
         ]  # fmt: skip
     except (LandassayError, RasterioError):

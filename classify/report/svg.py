@@ -57,6 +57,17 @@ class Drawing:
         self.add("rect", x=_px(x - r), y=_px(y - r), width=2 * r, height=2 * r, fill=COLOURS["paper"],
                  stroke=_ink(colour), stroke_width=1.4)  # fmt: skip
 
+    def path(
+        self, d: str, colour: str, width: float, dash: str = "", opacity: float = 1
+    ) -> None:
+        """An open path drawn with a pen in a colour of the identity."""
+        pen = {"fill": "none", "stroke": _ink(colour), "stroke_width": width, "stroke_linejoin": "round"}
+        if dash:
+            pen["stroke_dasharray"] = dash
+        if opacity < 1:
+            pen["stroke_opacity"] = opacity
+        self.add("path", None, d=d, **pen)
+
     @staticmethod
     def ink(colour: str) -> str:
         """A colour of the identity by name, or #rrggbb as it is."""

@@ -1,4 +1,4 @@
-"""The tables of the report as a workbook: one sheet a table, numbers as numbers, nothing that a spreadsheet would run."""
+"""The tables of the report as a workbook: one sheet a table, numbers as numbers, nothing for a spreadsheet to run."""
 
 from __future__ import annotations
 

@@ -55,7 +55,8 @@ def _screening(facts: ReportFacts, screening: Mapping[str, Any], words: Messages
     codes = {c.name: c.code for c in facts.classes}
     totals = [sum(column) for column in zip(*counts, strict=True)]
     rows.append((words.text("column.total"), *totals, sum(totals)))
-    yield matrix_table("screening_matrix", words.text("training.table"), classes, codes, rows, words, corner="polygon_label")
+    title = words.text("training.table")
+    yield matrix_table("screening_matrix", title, classes, codes, rows, words, corner="polygon_label")
     if screening.get("unscreened_codes"):
         missing = ", ".join(names.get(code, str(code)) for code in screening["unscreened_codes"])
         yield Paragraph(words.rich("training.unscreened", names=missing), "caution")
@@ -94,7 +95,8 @@ def _importance(model: ModelFacts, words: Messages) -> Iterator[Block]:
             title = words.text(f"model.importance_{key}")
             drawing = bars_drawing(items, title, words.numbers)
             alt = "; ".join(f"{name}: {words.numbers.number(100 * loss, 1)}" for name, loss, _ in items)
-            yield Figure(f"importance-{key}", drawing.markup(), f"{title}. {words.text('model.importance_caption')}", alt)
+            caption = f"{title}. {words.text('model.importance_caption')}"
+            yield Figure(f"importance-{key}", drawing.markup(), caption, alt)
 
 
 def _reliability(model: ModelFacts, words: Messages) -> Iterator[Block]:

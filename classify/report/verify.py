@@ -13,8 +13,8 @@ from pathlib import Path
 from typing import Any
 
 from classify.assessment import AssessmentOptions
-from classify.assessment.estimation import estimate_sample
 from classify.assessment.columns import read_table
+from classify.assessment.estimation import estimate_sample
 from classify.assessment.inputs import sample_from_points
 from classify.assessment.options import TableName
 from classify.errors import DataError, LandassayError
@@ -90,7 +90,8 @@ def _fingerprints(folder: Path, listed: Mapping[str, str]) -> Iterator[Finding]:
 
 
 def _derive(folder: Path, facts: ReportFacts) -> tuple[int, list[Finding], tuple[str, ...]]:
-    count, findings, notes = 0, [], []
+    count, findings = 0, []
+    notes: list[str] = []
     for name, stored, again in _pairs(folder, facts, notes):
         for place, a, b in _leaves(stored, again):
             count += 1
@@ -120,8 +121,9 @@ def _assessed_again(folder: Path) -> dict[str, Any]:
     method = read_json(folder / deliver.METHOD)
     points, strata = folder / deliver.POINTS, folder / deliver.STRATA
     options = AssessmentOptions(
-        **{**method, "classes": tuple(method["classes"])}, points=TableName(str(points), 2), strata=TableName(str(strata), 2)
-    )
+        **{**method, "classes": tuple(method["classes"])}, points=TableName(str(points), 2),
+        strata=TableName(str(strata), 2),
+    )  # fmt: skip
     sample = sample_from_points(read_table(points), read_table(strata), options, may_lie_off_map=True)
     return estimate_sample(sample, options).to_json()
 
