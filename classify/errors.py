@@ -43,6 +43,10 @@ class LandassayError(Exception):
         self.problems = problems
         super().__init__("\n".join(str(problem) for problem in problems))
 
+    def __reduce__(self) -> tuple[type[LandassayError], tuple[tuple[Problem, ...]]]:
+        # Errors come back from workers whole, with their places and what to do.
+        return type(self), (self.problems,)
+
 
 class SettingsError(LandassayError):
     """The project file or a preset is wrong."""

@@ -10,8 +10,9 @@ import hashlib
 import json
 import platform
 import time
-from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass, field, replace
 from datetime import UTC, datetime
 from functools import cache
 from importlib.metadata import version
@@ -24,10 +25,13 @@ from classify.errors import DataError, Problem
 from classify.features import Recipe, build_recipe, fit_recipe, scene_facts
 from classify.files import read_json, remove_leftovers, sha256, write_json
 from classify.mapping.classify_scene import MapOptions, classify_scene
+from classify.mapping.engines import cluster
+from classify.mapping.many import ManyResult, classify_many, find_scenes, time_of
+from classify.mapping.stac import ItemFacts, identifier, write_item
 from classify.models import check_scene, fit_model, inspect_training, load_model, save_model
 from classify.progress import SILENT, Progress
 from classify.raster.scene import open_scene
-from classify.report import gather_facts, write_report
+from classify.report import gather_facts, write_report, write_review
 from classify.settings import Project
 from classify.training import PixelCaps, TrainingSet, extract_pixels, read_polygons, write_pixels
 
@@ -39,11 +43,17 @@ _LIBRARIES = ("numpy", "scipy", "pandas", "scikit-learn", "rasterio", "geopandas
 
 @dataclass(frozen=True, slots=True)
 class Job:
-    """One project at work: its settings, how many workers, where progress goes."""
+    """One project at work: its settings, how many workers, where progress goes.
+
+    cluster: address of a Dask scheduler that maps instead of this machine. skip_unreadable: map what cannot be read as
+    no data.
+    """
 
     project: Project
     jobs: int = 1
     progress: Progress = SILENT
+    cluster: str | None = None
+    skip_unreadable: bool = False
 
     @property
     def outputs(self) -> Path:
@@ -156,6 +166,7 @@ def _review(job: Job) -> StageResult:
     training, _, warnings = _training_pixels(job)
     content = inspect_training(training, job.project, job.jobs, job.progress).to_json()
     write_json(job.outputs / "training" / "review.json", content)
+    write_review(content, job.outputs / "training", job.project.report.language)
     return StageResult({"suspects": content["suspects"], "separability": content["separability"]}, warnings)
 
 
@@ -191,16 +202,42 @@ def _classify(job: Job) -> StageResult:
     model = load_model(job.outputs / "model")
     scene = open_scene(project.scene, project)
     findings = check_scene(model, scene)
-    result = classify_scene(
-        model, scene, job.outputs / "map", classes=project.classes, options=MapOptions.of(project, job.jobs),
-        progress=job.progress,
-    )  # fmt: skip
+    folder = job.outputs / "map"
+    with _map_options(job) as options:
+        result = classify_scene(
+            model, scene, folder, classes=project.classes, options=options, progress=job.progress
+        )
+    when, source = time_of([band.path for band in scene.bands])
+    item = ItemFacts(identifier(project.project.title), project.project.title, when, source, {})
+    files = {**result.files, "areas": folder / "areas.csv"}
+    write_item(folder / "item.json", item, scene.grid, files, project.classes)
     summary = {
         "areas": result.areas.to_dict("records"),
         "unmapped_pixels": result.unmapped_pixels,
         "unmapped_m2": result.unmapped_m2,
     }
     return StageResult(summary, (*scene.warnings, *findings))
+
+
+def map_scenes(job: Job, sources: Sequence[str], folder: Path, *, overwrite: bool = False) -> ManyResult:
+    """Map many scenes with the project's model into `folder`. Raises LandassayError if none of it can be begun."""
+    _require_earlier(next(stage for stage in STAGES if stage.name == "classify"), job.project)
+    scenes = find_scenes(sources, job.project)
+    model = load_model(job.outputs / "model")
+    with _map_options(job) as options:
+        return classify_many(
+            model, job.project, scenes, folder, options=options, overwrite=overwrite, progress=job.progress
+        )
+
+
+@contextmanager
+def _map_options(job: Job) -> Iterator[MapOptions]:
+    options = replace(MapOptions.of(job.project, job.jobs), skip_unreadable=job.skip_unreadable)
+    if job.cluster is None:
+        yield options
+        return
+    with cluster(job.cluster) as engine:
+        yield replace(options, engine=engine)
 
 
 def _assess(job: Job) -> StageResult:
@@ -226,7 +263,10 @@ def _reference_inputs(project: Project) -> list[str]:
     reference = project.reference
     if reference is None:
         return []
-    return _with_companions(project, reference.points) + ([reference.design] if reference.design else [])
+    # A sample that was drawn here brings its own design.
+    design = reference.design or "outputs/sample/design.json"
+    there = reference.design is not None or Path(project.path(design)).is_file()
+    return _with_companions(project, reference.points) + ([design] if there else [])
 
 
 def _with_companions(project: Project, written: str) -> list[str]:
@@ -239,8 +279,8 @@ def _with_companions(project: Project, written: str) -> list[str]:
 
 STAGES: tuple[Stage, ...] = (
     Stage(
-        "review", (), ("project.title", "project.seed", "scene", "classes", "training", "features"), _training_inputs,
-        ("training/review.json",), _review,
+        "review", (), ("project.title", "project.seed", "scene", "classes", "training", "features", "report.language"),
+        _training_inputs, ("training/review.json", "training/review.html"), _review,
     ),
     Stage(
         "train", (), ("project.seed", "scene", "classes", "training", "features", "model"),
@@ -252,11 +292,11 @@ STAGES: tuple[Stage, ...] = (
         ("map/cover.tif", "map/areas.csv"), _classify,
     ),
     Stage(
-        "assess", ("classify",), ("classes", "reference", "report"), _reference_inputs,
+        "assess", ("classify",), ("project", "classes", "reference", "report"), _reference_inputs,
         ("assessment/assessment.json",), _assess, lambda project: project.reference is not None,
     ),
     Stage("report", ("review", "train", "classify", "assess"), ("project", "classes", "report"), lambda project: [],
-          ("report/report.html",), _report),
+          ("report/report.html", "report/report.pdf", "report/tables.xlsx"), _report),
 )  # fmt: skip
 
 

@@ -24,7 +24,14 @@ def command(call: Call, force: bool) -> None:
         click.echo(f"\nThe report: {report}")
 
 
-def run_stages(call: Call, stages: Sequence[StageName] | None, *, force: bool) -> None:
+def run_stages(
+    call: Call,
+    stages: Sequence[StageName] | None,
+    *,
+    force: bool,
+    cluster: str | None = None,
+    skip_unreadable: bool = False,
+) -> None:
     """Run stages of the project, showing each as it ends: a few lines as text, everything at the end as JSON."""
     from classify.cli.render import stage_text
     from classify.workflow import Job, run
@@ -40,7 +47,8 @@ def run_stages(call: Call, stages: Sequence[StageName] | None, *, force: bool) -
                 call.warn(f"warning: {warning}")
             said.add(warning)
 
-    results = run(Job(call.project(), call.jobs, call.progress()), stages, force=force, done=show)
+    job = Job(call.project(), call.jobs, call.progress(), cluster, skip_unreadable)
+    results = run(job, stages, force=force, done=show)
     if call.as_json:
         call.show({name: _content(result) for name, result in results.items()}, "")
 

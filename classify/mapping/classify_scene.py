@@ -159,6 +159,13 @@ def _check_grid(grid: Grid) -> None:
         )  # fmt: skip
 
 
+def origin_digest(model: TrainedModel, scene: Scene, options: MapOptions, classes: Iterable[ClassSettings]) -> str:
+    """A fingerprint of all that a map follows from: the same for two calls only if they give the same files."""
+    work = BlockWork(model, scene, _layers(model, options), options.skip_unreadable)
+    delivery = [str(options.tidy), options.polygons, options.area_unit, work.layers, [c.model_dump() for c in classes]]
+    return hashlib.sha256(json.dumps([_origin(work), delivery], sort_keys=True).encode()).hexdigest()
+
+
 def _origin(work: BlockWork) -> dict[str, Any]:
     """What a stored block is made from, as plain data: if any of it changes, blocks are made anew."""
     scene, card = work.scene, work.model.card

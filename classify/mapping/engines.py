@@ -9,13 +9,16 @@ from collections.abc import Generator, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
 from dataclasses import dataclass
 from threading import Event
-from typing import Protocol
+from typing import TYPE_CHECKING, Protocol
 
 from threadpoolctl import threadpool_limits
 
-from classify.errors import Problem
+from classify.errors import LandassayError, Problem
 from classify.mapping.blocks import Block, BlockWork
 from classify.raster.grid import Window
+
+if TYPE_CHECKING:
+    from classify.mapping.cluster import Cluster
 
 # Blocks under way per worker: one computed, one read or waiting to be written.
 _UNDER_WAY = 2
@@ -34,6 +37,16 @@ class Engine(Protocol):
     @property
     def warnings(self) -> tuple[Problem, ...]:
         """What the user should know of the engine."""
+
+
+def cluster(address: str) -> Cluster:
+    """An engine on a Dask cluster. Raises LandassayError if Dask is not installed or the cluster cannot be used."""
+    try:
+        from classify.mapping.cluster import connect
+    except ModuleNotFoundError as error:
+        fix = "pip install 'landassay[cluster]'"
+        raise LandassayError("work on a cluster needs the package distributed, which is missing", fix=fix) from error
+    return connect(address)
 
 
 @dataclass(frozen=True, slots=True)
