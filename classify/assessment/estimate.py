@@ -101,7 +101,11 @@ class Linearised:
 
 
 def tally(sample: ReferenceSample, *, finite_population: bool) -> Tally:
-    """Reduce the usable part of a sample. At least one point must be usable."""
+    """Reduce the usable part of a sample. At least one point must be usable.
+
+    A post-stratified sample of points is judged given how many fell in each post-stratum, which are then strata like
+    others (Holt & Smith 1979, J. Royal Statistical Society A 142, 33-46).
+    """
     keep = sample.usable
     assert keep.any(), "a sample without labels has no estimates"
     off = sample.off_map[keep]
