@@ -54,7 +54,7 @@ class MapFact:
     size_yx: pixels of the map; picture_yx: pixels of each layer; step_m, pixel_m: ground size of a pixel of the picture
     and of the map (down, across) at the centre; north_deg: true north at the centre, clockwise from up. x_ticks,
     y_ticks: position along the frame 0..1 and label. low_share: share of mapped pixels whose confidence is below
-    `low_percent`, None without a confidence map.
+    `low_percent`, beyond_share: of those beyond reach of the training data; None without such a map.
     """
 
     size_yx: tuple[int, int]
@@ -68,6 +68,7 @@ class MapFact:
     y_ticks: tuple[tuple[float, str], ...]
     low_percent: int = 50
     low_share: float | None = None
+    beyond_share: float | None = None
 
     def layer(self, kind: str) -> Layer | None:
         """The layer of a kind, if there is one."""

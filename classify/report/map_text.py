@@ -42,6 +42,9 @@ def _inset(fact: MapFact, kind: str, words: Messages) -> Figure:
     layer = fact.layer(kind)
     assert layer is not None, kind
     drawing = map_drawing(fact, layer, words.text(f"map.{kind}_figure"), words.numbers, width=340)
-    share = words.numbers.percent(fact.low_share)
-    caption = words.text(f"map.{kind}_caption", share=share, percent=words.numbers.percent(fact.low_percent / 100, 0))
+    style = words.numbers
+    caption = words.text(
+        f"map.{kind}_caption", share=style.percent(fact.low_share), beyond=style.percent(fact.beyond_share),
+        percent=style.percent(fact.low_percent / 100, 0),
+    )  # fmt: skip
     return Figure(kind, drawing.markup(), caption, words.text(f"map.{kind}_alt"), small=True)

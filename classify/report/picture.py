@@ -24,6 +24,8 @@ LONG_SIDE_PX = 1600
 _TICKS = 4
 _PIECE_ROWS = 2048
 _LOGO_PX = 600
+# Highest value of reach.tif that is still within reach of the training data.
+_WITHIN = 100
 
 
 def map_fact(folder: Path, classes: Sequence[ClassFact], more: Sequence[Layer], low_percent: int = 50) -> MapFact:
@@ -34,21 +36,22 @@ def map_fact(folder: Path, classes: Sequence[ClassFact], more: Sequence[Layer], 
     cover = folder / "cover.tif"
     grid, codes = read_small(cover)
     layers = [Layer("cover", _cover_png(codes, classes), "image/png"), *more]
-    low_share = None
+    low_share = beyond_share = None
     if (folder / "confidence.tif").is_file():
         _, percent = read_small(folder / "confidence.tif")
         layers.append(Layer("confidence", _percent_png(percent), "image/png"))
-        low_share = _share_below(folder / "confidence.tif", low_percent)
+        low_share = _share(folder / "confidence.tif", slice(0, low_percent))
     if (folder / "reach.tif").is_file():
         _, reach = read_small(folder / "reach.tif")
-        layers.append(Layer("reach", _percent_png(reach), "image/png"))
+        layers.append(Layer("reach", _reach_png(reach), "image/png"))
+        beyond_share = _share(folder / "reach.tif", slice(_WITHIN + 1, None))
     pixel_m, north_deg = ground_frame(grid)
     height, width = codes.shape
     return MapFact(
         size_yx=grid.shape_yx, picture_yx=(height, width), layers=tuple(layers),
         step_m=(pixel_m[0] * grid.height / height, pixel_m[1] * grid.width / width), pixel_m=pixel_m,
         north_deg=north_deg, crs=crs_name(grid), x_ticks=_ticks(grid, across=True), y_ticks=_ticks(grid, across=False),
-        low_percent=low_percent, low_share=low_share,
+        low_percent=low_percent, low_share=low_share, beyond_share=beyond_share,
     )  # fmt: skip
 
 
@@ -137,11 +140,20 @@ def _cover_png(codes: NDArray[np.uint8], classes: Sequence[ClassFact]) -> bytes:
 
 
 def _percent_png(percent: NDArray[np.uint8]) -> bytes:
-    """Per cent as lightness, dark where low; 255 is transparent. One hue, so that it reads in grey."""
-    shade = np.clip(np.arange(256) / 100, 0, 1)[:, None]
+    """Per cent as lightness, dark where low; 255 is transparent."""
+    return _png(percent, _shades(np.clip(np.arange(256) / 100, 0, 1)), clear=255)
+
+
+def _reach_png(reach: NDArray[np.uint8]) -> bytes:
+    """Light within reach of the training data (1..100), ever darker beyond (101..254); 255 is transparent."""
+    beyond = np.clip((np.arange(256) - _WITHIN) / 60, 0, 1)
+    return _png(reach, _shades(np.where(beyond > 0, 0.6 - 0.6 * beyond, 1.0)), clear=255)
+
+
+def _shades(lightness: NDArray[np.float64]) -> NDArray[np.uint8]:
+    """A palette of one hue, so that it reads in grey, for a lightness 0..1 of each value, uint8 (256, 3)."""
     low, high = np.array([58.0, 12.0, 43.0]), np.array([250.0, 246.0, 236.0])
-    palette = np.rint(low + (high - low) * shade).astype(np.uint8)
-    return _png(percent, palette, clear=255)
+    return np.rint(low + (high - low) * lightness[:, None]).astype(np.uint8)
 
 
 def _png(values: NDArray[np.uint8], palette: NDArray[np.uint8], clear: int = 0) -> bytes:
@@ -165,13 +177,13 @@ def read_logo(path: Path) -> bytes:
                         fix="give a PNG, JPEG or TIFF file under [report] logo") from error  # fmt: skip
 
 
-def _share_below(path: Path, percent: int) -> float | None:
-    """Share of mapped pixels with a confidence below `percent`, from all pixels, in strips."""
-    below = total = 0
+def _share(path: Path, part: slice) -> float | None:
+    """Share of the pixels with a value (0..254) whose value lies in `part`, from all pixels, in strips."""
+    inside = total = 0
     with rasterio.open(path) as source:
         for row in range(0, source.height, _PIECE_ROWS):
             rows = min(_PIECE_ROWS, source.height - row)
             values = source.read(1, window=rasterio.windows.Window(0, row, source.width, rows))
-            tally = np.bincount(values.ravel(), minlength=256)
-            below, total = below + int(tally[:percent].sum()), total + int(tally[:255].sum())
-    return below / total if total else None
+            tally = np.bincount(values.ravel(), minlength=256)[:255]
+            inside, total = inside + int(tally[part].sum()), total + int(tally.sum())
+    return inside / total if total else None
