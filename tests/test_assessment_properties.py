@@ -269,6 +269,16 @@ def test_bootstrap_spreads_like_the_linearised_errors(clusters):
         assert (estimate.upper - estimate.lower) / 2 == pytest.approx(1.96 * estimate.standard_error, rel=0.07)
 
 
+def test_bootstrap_is_right_for_strata_of_two_points():
+    """Where drawing n of n units again would halve the variance (Rao & Wu 1988 draw n - 1)."""
+    rng = np.random.default_rng(2)
+    names = [f"s{i:02d}" for i in range(60)]
+    points = pd.DataFrame({"stratum": names * 2, "map": "clay", "reference": rng.choice(CLASSES[:2], 120)})
+    strata = pd.DataFrame({"stratum": names, "area": 1.0})
+    found = assess(points, strata, AssessmentOptions(interval="bootstrap", replicates=4000)).overall_accuracy
+    assert (found.upper - found.lower) / 2 == pytest.approx(1.96 * found.standard_error, rel=0.1)
+
+
 def test_bootstrap_honours_the_finite_population_and_the_seed():
     points, strata = random_sample(6, clusters=False)
     pixels = pd.DataFrame({"stratum": ["s0", "s1", "s2"], "area": strata["area"], "pixels": [40, 60, 80]})
