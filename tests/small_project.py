@@ -55,6 +55,8 @@ indices = ["ndvi"]
 [model]
 kind = "random forest"
 trees = 30
+repeats = 1
+importance = false
 
 [reference]
 points = "reference.gpkg"

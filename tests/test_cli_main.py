@@ -35,7 +35,7 @@ def test_help_imports_nothing_heavy():
 def test_every_command_is_found_and_has_help_and_the_shared_options(name):
     result = CliRunner().invoke(cli, [name, "--help"])
     assert result.exit_code == 0
-    assert all(option in result.output for option in ("--jobs", "--quiet", "--json"))
+    assert all(option in result.output for option in ("--quiet", "--json"))
     assert import_module(COMMANDS[name][0]).command.name == name
 
 

@@ -50,7 +50,7 @@ def test_touching_a_file_without_changing_it_leaves_stages_done(finished):
     ("old", "new", "stale"),
     [
         ("trees = 30", "trees = 31", {"train", "classify", "assess", "report"}),
-        ('indices = ["ndvi"]', "", {"train", "classify", "assess", "report"}),
+        ('indices = ["ndvi"]', "", {"review", "train", "classify", "assess", "report"}),
         ('label = "observed"', 'label = "observed"\n[map]\nconfidence = false', {"classify", "assess", "report"}),
         ('client = "Sorrel Basin Water Board"', 'client = "Another"', {"report"}),
     ],
