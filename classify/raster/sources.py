@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Iterator
-from contextlib import AbstractContextManager, contextmanager, nullcontext
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path, PurePosixPath
 from typing import Any
@@ -26,6 +27,9 @@ REMOTE_OPTIONS = {
     "GDAL_HTTP_RETRY_DELAY": "1",
     "GDAL_DISABLE_READDIR_ON_OPEN": "EMPTY_DIR",
 }
+
+# Decoded blocks that are kept. By default it would be a share of the machine's memory, whatever the block size.
+_CACHE_BYTES = 256 << 20
 
 # How a remote file is read, by its ending, GeoTIFF being the default. Left to choose for itself, the raster library
 # would follow a document that only pretends to be an image to other files, as virtual rasters lead on.
@@ -101,8 +105,10 @@ def gdal_errors(path: str, doing: str) -> Iterator[None]:
         raise DataError(f"{doing}: {reason}", where=path, fix=fix) from error
 
 
-def _gdal_options(path: str) -> AbstractContextManager[Any]:
-    return rasterio.Env(**REMOTE_OPTIONS) if is_remote(path) else nullcontext()
+def _gdal_options(path: str) -> rasterio.Env:
+    """Options of the raster library while a file is opened or read."""
+    options = {} if "GDAL_CACHEMAX" in os.environ else {"GDAL_CACHEMAX": _CACHE_BYTES}
+    return rasterio.Env(**options, **(REMOTE_OPTIONS if is_remote(path) else {}))
 
 
 def open_raster(path: str) -> rasterio.DatasetReader:
