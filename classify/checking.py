@@ -12,7 +12,7 @@ from typing import Any, TypeVar
 
 from classify.assessment.reference import read_labels
 from classify.errors import LandassayError, Problem
-from classify.features import Recipe, build_recipe, fit_recipe, index_availability, scene_facts
+from classify.features import Recipe, SceneFacts, build_recipe, fit_recipe, index_availability, scene_facts
 from classify.models import check_classes
 from classify.progress import SILENT, Progress
 from classify.raster.scene import Scene, open_scene
@@ -60,8 +60,7 @@ def check_project(project: Project, jobs: int = 1, progress: Progress = SILENT) 
     """
     result = CheckResult()
     scene = result.scene = _attempt(result, lambda: open_scene(project.scene, project))
-    roles = tuple(project.scene.bands) if scene is None else scene.roles
-    recipe = result.recipe = _attempt(result, lambda: _recipe(project, scene, roles, progress))
+    recipe = result.recipe = _attempt(result, lambda: _recipe(project, scene, progress))
     if scene is not None:
         _add(result, scene.warnings)
         polygons = _attempt(result, lambda: read_polygons(project, scene.grid))
@@ -87,12 +86,27 @@ def check_indices(project: Project) -> list[dict[str, str]]:
     ]
 
 
-def _recipe(project: Project, scene: Scene | None, roles: tuple[str, ...], progress: Progress) -> Recipe:
-    """The recipe, fitted if there is a scene."""
-    if scene is None:
-        return build_recipe(project.features, roles)
-    recipe = build_recipe(project.features, roles, scene_facts(scene))
-    return fit_recipe(recipe, scene, project.project.seed, progress)
+def _recipe(project: Project, scene: Scene | None, progress: Progress) -> Recipe:
+    """The recipe, fitted if there is a scene; without one, of those features that the settings alone can judge."""
+    wanted = project.features
+    if scene is not None:
+        recipe = build_recipe(wanted, scene.roles, scene_facts(scene))
+        return fit_recipe(recipe, scene, project.project.seed, progress)
+    if wanted.terrain or wanted.absorption or wanted.smoothing or wanted.components:  # and what is made from them
+        rest: dict[str, Any] = {
+            "terrain": [],
+            "absorption": [],
+            "smoothing": None,
+            "components": None,
+            "formulas": {},
+            "texture": [],
+        }
+        wanted = wanted.model_copy(update=rest)
+    promised = project.scene
+    dated = [f"{role}@{date.name}" for date in promised.dates for role in date.bands]
+    own = [f"{role}@{promised.date}" for role in promised.bands] if promised.date else []
+    others = [*promised.ancillary, *(["clear_count"] if promised.composite else [])]
+    return build_recipe(wanted, (*promised.bands, *others, *own, *dated), SceneFacts(ancillary=frozenset(others)))
 
 
 def balance(training: TrainingSet) -> list[dict[str, Any]]:
