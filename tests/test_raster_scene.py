@@ -421,8 +421,11 @@ def test_a_truncated_file_is_refused_before_work_starts(tmp_path):
     noise = np.random.default_rng(0).integers(0, 60000, (300, 300), dtype=np.uint16)
     write(tmp_path / "whole.tif", noise)
     content = (tmp_path / "whole.tif").read_bytes()
-    (tmp_path / "cut.tif").write_bytes(content[: len(content) * 2 // 3])
-    assert "cut off" in refused(tmp_path, {"red": "cut.tif"})
+    for name in ("cut.tif", "cut_too.tif"):
+        (tmp_path / name).write_bytes(content[: len(content) * 2 // 3])
+    text = refused(tmp_path, {"red": "cut.tif", "nir": "cut_too.tif", "blue": "whole.tif"})
+    assert text.count("cut off") == 2
+    assert "whole.tif" not in text
 
 
 def test_a_file_without_georeferencing_is_refused(tmp_path):
