@@ -78,12 +78,12 @@ def _serve(
     from classify.interpret.session import open_session
     from classify.raster.scene import open_scene
 
+    listening = listen(host, port)
     scene = open_scene(project.scene, project)
     session = open_session(project, outputs, scene.grid, name, "settling" if settle else "interpreter")
     if not session.places:
         raise click.ClickException("There is nothing to label: " + ("no dispute is open." if settle else "no points."))
     pictures = Pictures(scene)
-    listening = listen(host, port)
     if not listening.is_local:
         call.warn("warning: others on the network can reach this page; whoever has the address first can label, and it "
                   "is not encrypted")  # fmt: skip

@@ -100,7 +100,7 @@ def _read(path: Path) -> tuple[pd.DataFrame, geopandas.GeoSeries | None]:
         return pd.DataFrame(frame), None
     if frame.crs is None:
         raise DataError("the labels have no CRS", where=str(path), fix="save them with the CRS of their coordinates")
-    return pd.DataFrame(frame.drop(columns=frame.geometry.name)), frame.geometry.centroid
+    return pd.DataFrame(frame.drop(columns=frame.geometry.name)), frame.geometry.representative_point()
 
 
 def _id_faults(ids: Sequence[str], sample: DrawnSample, path: Path) -> list[Problem]:

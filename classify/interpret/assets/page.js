@@ -145,7 +145,9 @@ async function open(index) {
   const said = current.said;
   choice = said ? { ...empty(), ...said, untold: said.label === null } : empty();
   $("point").textContent = `Point ${current.id}`;
-  $("place").textContent = `${current.latitude.toFixed(5)}°, ${current.longitude.toFixed(5)}°`;
+  const [north, east] = [current.latitude, current.longitude];
+  $("place").textContent = `${Math.abs(north).toFixed(5)}° ${north < 0 ? "S" : "N"}, `
+    + `${Math.abs(east).toFixed(5)}° ${east < 0 ? "W" : "E"}`;
   $("originals").hidden = !current.originals;
   $("originals").replaceChildren(...(current.originals ?? []).map((o) => {
     const also = o.alternate ? `, or ${o.alternate}` : "";

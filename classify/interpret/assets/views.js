@@ -126,13 +126,17 @@ function outlineOf(svg) {
   const half = Math.floor(look.side / 2);
   const [x, y] = [half - look.right, half - look.down];
   svg.setAttribute("viewBox", `0 0 ${look.side} ${look.side}`);
-  // Light inside dark, so that the outline is seen on any ground.
+  const [near, far] = [0.5 + look.side * 0.03, 0.5 + look.side * 0.075];
+  const [cx, cy] = [x + 0.5, y + 0.5];
+  const ticks = [[1, 0], [-1, 0], [0, 1], [0, -1]]
+    .map(([a, b]) => `M${cx + a * near} ${cy + b * near}L${cx + a * far} ${cy + b * far}`).join("");
+  // Light inside dark, so that the outline is seen on any ground; ticks lead to it where pixels are small.
   svg.replaceChildren(...[["#10181c", 4.5], ["#ffffff", 2]].map(([stroke, width]) => {
-    const rect = document.createElementNS("http://www.w3.org/2000/svg", "rect");
-    const sized = { x, y, width: 1, height: 1, fill: "none", stroke, "stroke-width": width,
+    const path = document.createElementNS("http://www.w3.org/2000/svg", "path");
+    const drawn = { d: `M${x} ${y}h1v1h-1z${ticks}`, fill: "none", stroke, "stroke-width": width,
       "vector-effect": "non-scaling-stroke" };
-    for (const [key, value] of Object.entries(sized)) rect.setAttribute(key, value);
-    return rect;
+    for (const [key, value] of Object.entries(drawn)) path.setAttribute(key, value);
+    return path;
   }));
 }
 
