@@ -260,5 +260,16 @@ def test_samples_off_the_map_are_a_domain_of_the_design():
     assert found.total_area == pytest.approx(50 * 0.8 + 50)
     assert found.overall_accuracy.estimate == pytest.approx((50 * 0.6 + 50 * 0.9) / 90)
     assert found.area["a"].estimated.estimate == pytest.approx(50 * 0.6 + 50 * 0.1)
+    # Its standard error is that of a mean over all points drawn: 50^2 (s^2 / 10) per stratum, off the map counted as 0.
+    variance = sum(50**2 * np.var([1] * ones + [0] * (10 - ones), ddof=1) / 10 for ones in (6, 1))
+    assert found.area["a"].estimated.standard_error == pytest.approx(np.sqrt(variance))
+    # Accuracies are ratios to the mapped part.
+    d = [
+        np.array([1 - r] * right + [-r] * wrong + [0] * off)
+        for r in (75 / 90,)
+        for right, wrong, off in ((6, 2, 2), (9, 1, 0))
+    ]
+    error = np.sqrt(sum(50**2 * np.var(part, ddof=1) / 10 for part in d)) / 90
+    assert found.overall_accuracy.standard_error == pytest.approx(error)
     assert found.matrix_area_proportions.sum() == pytest.approx(1)
     assert "2 of 20 points lie outside the map" in only_warning(found, "outside the map")

@@ -41,19 +41,20 @@ def estimate_sample(sample: ReferenceSample, options: AssessmentOptions) -> Asse
     shown = iter(estimator.proportions(ratios))
     overall = next(shown)
     users, producers, harmonic, areas = ({name: next(shown) for name in sample.classes} for _ in makers)
+    mapped = sample.mapped_area or (None,) * k
     differing, agreement = disagreement(proportions), estimator.kappa(proportions)
-    total = mapped_total(sample, t)
     return Assessment(
         evidence_name=sample.evidence, confidence_level=options.confidence_level, classes=sample.classes,
-        area_unit=sample.area_unit, total_area=total, design_kind=sample.kind, clustered=t.clustered,
+        area_unit=sample.area_unit, total_area=estimator.sampled_area * float(t.share @ t.mapped),
+        design_kind=sample.kind, clustered=t.clustered,
         strata=tuple(StratumSummary(s.name, s.area, int(n)) for s, n in zip(sample.strata, t.points, strict=True)),
         matrix_counts=counts_matrix(sample), matrix_area_proportions=proportions, overall_accuracy=overall,
         users_accuracy=users, producers_accuracy=producers, f1=harmonic,
-        area={c: _area(sample, i, areas[c], total) for i, c in enumerate(sample.classes)},
+        area={c: AreaEstimate(m, estimator.size(areas[c])) for c, m in zip(sample.classes, mapped, strict=True)},
         kappa=agreement, disagreement=differing,
         either_label=_either_label(sample, t, estimator),
         unlabelled=_unlabelled(sample, options),
-        regions=_regions(sample, t, estimator, total),
+        regions=_regions(sample, t, estimator),
         problems=(
             *sample.problems, *findings(sample, t, proportions), *unseen_findings(sample, t, list(areas.values())),
             *kappa_findings(agreement), *region_findings(sample, t),
@@ -75,12 +76,6 @@ def counts_matrix(sample: ReferenceSample) -> np.ndarray:
     return counts
 
 
-def mapped_total(sample: ReferenceSample, t: Tally) -> float:
-    """Area that the estimates stand for: the sampled strata, less the part of them that lies off the map."""
-    sampled = sum(s.area for s, n in zip(sample.strata, t.points, strict=True) if n)
-    return float(sampled * (t.share @ t.mapped))
-
-
 @dataclass(frozen=True, slots=True, eq=False)
 class Estimator:
     """The estimator with one choice of intervals: turns statistics into figures as they are shown."""
@@ -88,6 +83,15 @@ class Estimator:
     t: Tally
     sample: ReferenceSample
     options: AssessmentOptions
+
+    @property
+    def sampled_area(self) -> float:
+        """Area of the strata that have points, in the sample's unit."""
+        return float(sum(s.area for s, n in zip(self.sample.strata, self.t.points, strict=True) if n))
+
+    def size(self, share: Estimate) -> Estimate:
+        """An area from its share of the sampled area. Places that were chosen say nothing about sizes."""
+        return share.scaled(self.sampled_area) if EVIDENCE[self.sample.evidence].has_intervals else Estimate(None)
 
     def proportions(self, ratios: Sequence[Ratio]) -> list[Estimate]:
         """Estimates of quantities in 0..1, in the order of `ratios`."""
@@ -120,13 +124,6 @@ class Estimator:
         return estimate if EVIDENCE[self.sample.evidence].has_intervals else estimate.without_interval()
 
 
-def _area(sample: ReferenceSample, c: int, share: Estimate, total: float) -> AreaEstimate:
-    mapped = sample.mapped_area[c] if sample.mapped_area else None
-    # Places that were chosen say nothing about the size of a class.
-    estimated = share.scaled(total) if EVIDENCE[sample.evidence].has_intervals else Estimate(None)
-    return AreaEstimate(mapped, estimated)
-
-
 def _either_label(sample: ReferenceSample, t: Tally, estimator: Estimator) -> EitherLabel | None:
     if sample.alternate is None:
         return None
@@ -152,23 +149,18 @@ def _unlabelled(sample: ReferenceSample, options: AssessmentOptions) -> Unlabell
     return Unlabelled(int(sample.count[missing].sum()), overall, dict(zip(sample.classes, users, strict=True)))
 
 
-def _regions(sample: ReferenceSample, t: Tally, estimator: Estimator, total: float) -> tuple[RegionEstimate, ...]:
-    found = []
-    for region, name in enumerate(sample.regions):
-        here = t.mapped * (t.region == region)
-        n = round(float((t.units.T @ t.repeats) @ here))
-        if not n:
-            found.append(
-                RegionEstimate(name, 0, Estimate(None), Estimate(None), {c: Estimate(None) for c in sample.classes})
-            )
-            continue
-        ratios = [
-            st.within(st.overall_accuracy(t), t, region),
-            st.region_share(t, region),
-            *(st.area_in_region(t, c, region) for c in range(len(sample.classes))),
-        ]
-        overall, share, *areas = estimator.proportions(ratios)
-        sized = EVIDENCE[sample.evidence].has_intervals
-        of_class = {c: a.scaled(total) if sized else Estimate(None) for c, a in zip(sample.classes, areas, strict=True)}
-        found.append(RegionEstimate(name, n, overall, share.scaled(total) if sized else Estimate(None), of_class))
-    return tuple(found)
+def _regions(sample: ReferenceSample, t: Tally, estimator: Estimator) -> tuple[RegionEstimate, ...]:
+    return tuple(_region(sample, t, estimator, region) for region in range(len(sample.regions)))
+
+
+def _region(sample: ReferenceSample, t: Tally, estimator: Estimator, region: int) -> RegionEstimate:
+    here = t.mapped * (t.region == region)
+    n = round(float((t.units.T @ t.repeats) @ here))
+    if not n:
+        nothing = {name: Estimate(None) for name in sample.classes}
+        return RegionEstimate(sample.regions[region], 0, Estimate(None), Estimate(None), nothing)
+    in_classes = [st.area_in_region(t, c, region) for c in range(len(sample.classes))]
+    ratios = [st.within(st.overall_accuracy(t), t, region), st.region_share(t, region), *in_classes]
+    overall, share, *areas = estimator.proportions(ratios)
+    sizes = {name: estimator.size(area) for name, area in zip(sample.classes, areas, strict=True)}
+    return RegionEstimate(sample.regions[region], n, overall, estimator.size(share), sizes)

@@ -30,7 +30,7 @@ def findings(sample: ReferenceSample, t: Tally, proportions: Floats) -> tuple[Pr
 def unseen_findings(sample: ReferenceSample, t: Tally, areas: Sequence[Estimate]) -> Iterator[Problem]:
     """Warn where a class may hide in a stratum whose points show none of it, far beyond what its interval admits.
 
-    areas: estimated share of the mapped area per class. Where none of n points is of the class, its share of the
+    areas: estimated share of the sampled area per class. Where none of n points is of the class, its share of the
     stratum is below 1 - 0.05^(1/n) with 95 % confidence (exact binomial; about 3 / n). Intervals are built on what was
     seen and cannot know of it; the warning comes when it would triple the distance to the upper limit.
     """

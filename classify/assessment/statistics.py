@@ -31,8 +31,8 @@ def f1(t: Tally, c: int) -> Ratio:
 
 
 def area_proportion(t: Tally, c: int) -> Ratio:
-    """Proportion of the mapped area that is class c."""
-    return Ratio(_is(t.reference, c), t.mapped)
+    """Proportion of the sampled area that is mapped and is class c."""
+    return Ratio(_is(t.reference, c), np.ones_like(t.share))
 
 
 def either_overall(t: Tally) -> Ratio:
@@ -52,13 +52,13 @@ def within(ratio: Ratio, t: Tally, region: int) -> Ratio:
 
 
 def region_share(t: Tally, region: int) -> Ratio:
-    """Proportion of the mapped area that lies in a region."""
-    return Ratio(t.mapped * _is(t.region, region), t.mapped)
+    """Proportion of the sampled area that is mapped and lies in a region."""
+    return Ratio(t.mapped * _is(t.region, region), np.ones_like(t.share))
 
 
 def area_in_region(t: Tally, c: int, region: int) -> Ratio:
-    """Proportion of the mapped area that is class c and lies in a region."""
-    return Ratio(_is(t.reference, c) * _is(t.region, region), t.mapped)
+    """Proportion of the sampled area that is mapped, is class c and lies in a region."""
+    return Ratio(_is(t.reference, c) * _is(t.region, region), np.ones_like(t.share))
 
 
 def on_other_map(t: Tally) -> Tally:
