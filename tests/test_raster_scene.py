@@ -230,6 +230,14 @@ def test_bilinear_agrees_with_gdal_and_nearest_too(stack):
             assert differ[both[2:-2, 2:-2]].mean() < 0.003, (name, rule)
 
 
+def test_a_crs_with_heights_is_still_the_same_grid(tmp_path):
+    values = np.random.default_rng(6).random((2, 30, 40)).astype(np.float32)
+    write(tmp_path / "base.tif", values[0])
+    write(tmp_path / "dem.tif", values[1], crs="EPSG:32734+5773")
+    got = read_all(scene_of(tmp_path, {"red": "base.tif"}, ancillary={"elevation": "dem.tif"}))
+    assert same_bytes(got["elevation"], values[1]), "read as stored, not interpolated"
+
+
 def test_a_finer_source_is_averaged_exactly(tmp_path):
     rng = np.random.default_rng(2)
     fine = rng.random((40, 60)).astype(np.float32)

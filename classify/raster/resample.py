@@ -52,8 +52,10 @@ class Placement:
 
     @cached_property
     def same_crs(self) -> bool:
-        """Whether both grids share a CRS, so that placing is affine."""
-        return bool(self.source.crs == self.target.crs)
+        """Whether both grids share a horizontal CRS, so that placing is affine."""
+        return bool(self.source.crs == self.target.crs) or _horizontal(self.source.crs).equals(
+            _horizontal(self.target.crs), ignore_axis_order=True
+        )
 
     @cached_property
     def affine(self) -> Affine:
@@ -163,6 +165,12 @@ def _off_px(corners: Sequence[Places], middle: Places) -> NDArray[np.bool_]:
 
 
 @lru_cache(maxsize=256)
+def _horizontal(crs: CRS) -> pyproj.CRS:
+    """The CRS without heights, as elevation models often carry them."""
+    return pyproj.CRS.from_user_input(crs.to_wkt()).to_2d()
+
+
+@lru_cache(maxsize=256)
 def _transformer(from_crs: CRS, to_crs: CRS, bounds: tuple[float, float, float, float]) -> pyproj.Transformer:
     """One fixed operation for the whole scene, so that neighbouring pixels never take different datum shifts."""
     try:
@@ -170,7 +178,7 @@ def _transformer(from_crs: CRS, to_crs: CRS, bounds: tuple[float, float, float, 
         area = AreaOfInterest(west, south, east, north) if west < east else None
     except Exception:  # bounds outside the CRS's domain only cost the choice of the best datum shift
         area = None
-    source, target = (pyproj.CRS.from_user_input(crs.to_wkt()).to_2d() for crs in (from_crs, to_crs))
+    source, target = _horizontal(from_crs), _horizontal(to_crs)
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")  # the best operation may need a shift grid that is not installed
         group = TransformerGroup(source, target, always_xy=True, area_of_interest=area)  # type: ignore[arg-type]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -13,7 +14,7 @@ import numpy as np
 import rasterio
 from numpy.typing import NDArray
 from rasterio.enums import MaskFlags
-from rasterio.errors import RasterioError
+from rasterio.errors import NotGeoreferencedWarning, RasterioError
 
 from classify.errors import DataError
 from classify.raster.grid import Grid, Window
@@ -132,7 +133,11 @@ def read_window(dataset: rasterio.DatasetReader, path: str, bands: list[int], pa
 
 def describe(path: str) -> RasterFacts:
     """Read what a file says of itself. Raises DataError for a file that cannot be opened or has no place on earth."""
-    with open_raster(path) as dataset:
+    with warnings.catch_warnings():
+        # Said below, as an error of ours.
+        warnings.simplefilter("ignore", NotGeoreferencedWarning)
+        dataset = open_raster(path)
+    with dataset:
         if dataset.crs is None:
             raise DataError(
                 "this raster has no coordinate reference system", where=path,
