@@ -86,14 +86,14 @@ def test_smoothing_of_uneven_bands_keeps_what_the_polynomial_can_follow():
 
 
 def test_every_feature_sees_the_smoothed_bands(scene):
-    recipe = recipe_for(scene, bands=["b0", "b5"], formulas={"x": "b5 / b0"}, smoothing={"window": 5, "order": 2},
+    recipe = recipe_for(scene, bands=["b0", "b1", "b5"], formulas={"x": "b5 / b0"}, smoothing={"window": 5, "order": 2},
                         texture=[{"of": "b5", "statistic": "mean"}])  # fmt: skip
     values = cube().astype(np.float32)[:, :30, :30]
     smooth = savgol_filter(values.astype(np.float64), 5, 2, axis=0, mode="interp")
     out = recipe.compute({name: values[int(name[1:])] for name in recipe.needs})
     inner = smooth[:, 1:-1, 1:-1]
     mean = np.mean([smooth[5, a : a + 28, b : b + 28] for a in range(3) for b in range(3)], axis=0)
-    for found, expected in zip(out, (inner[0], inner[5], inner[5] / inner[0], mean), strict=True):
+    for found, expected in zip(out, (inner[0], inner[1], inner[5], inner[5] / inner[0], mean), strict=True):
         np.testing.assert_allclose(found, expected, rtol=2e-5)
 
 
