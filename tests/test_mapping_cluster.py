@@ -22,7 +22,7 @@ from classify.raster.scene import open_scene
 from classify.settings import load_project
 from classify.workflow import Job, run
 
-OPTIONS = MapOptions(block_px=8, reach=True)
+OPTIONS = MapOptions(block_px=16, reach=True)
 FILES = ("cover.tif", "confidence.tif", "reach.tif", "areas.csv")
 
 
@@ -68,7 +68,7 @@ def test_the_same_bytes_although_a_worker_is_killed_midway(workers, mapping, tmp
 
         engine.run = run_and_kill
         assert map_into(tmp_path / "cluster", engine) == expected
-        assert sorted(done) == list(range(12 * 15))
+        assert sorted(done) == list(range(6 * 8))
         deadline = time.monotonic() + 60
         while len(alive := [w.process.process.pid for w in workers.workers.values() if w.process]) < 2:
             assert time.monotonic() < deadline

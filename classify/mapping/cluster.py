@@ -12,6 +12,7 @@ from __future__ import annotations
 import time
 from collections.abc import Generator, Sequence
 from concurrent.futures import CancelledError
+from itertools import islice
 from typing import Any
 from uuid import uuid4
 
@@ -62,7 +63,7 @@ class Cluster:
         try:
             while True:
                 room = _UNDER_WAY * max(1, sum(self._threads().values())) - len(under_way)
-                for (number, window), _ in zip(remaining, range(room), strict=False):
+                for number, window in islice(remaining, max(room, 0)):
                     under_way.add(self._client.submit(_block, plugin.name, number, window, pure=False))
                 if not under_way:
                     return
@@ -93,12 +94,14 @@ class Cluster:
 
     def _result(self, future: _Future) -> Block:
         try:
-            block: Block = future.result()
+            result: Block | LandassayError = future.result()
         except distributed.KilledWorker as error:
             raise self._gone("several workers died over the same block, perhaps for lack of memory") from error
         except (CancelledError, OSError) as error:
             raise self._gone("the scheduler no longer answers") from error
-        return block
+        if isinstance(result, LandassayError):
+            raise result
+        return result
 
     def _gone(self, why: str) -> LandassayError:
         fix = "look at the cluster; the same command then goes on where it was"
@@ -171,8 +174,11 @@ class _Work(WorkerPlugin):
         self._limits.restore_original_limits()
 
 
-def _block(name: str, number: int, window: Window) -> Block:
+def _block(name: str, number: int, window: Window) -> Block | LandassayError:
     plugin = distributed.get_worker().plugins[name]
     assert isinstance(plugin, _Work), name
-    work = plugin.work
-    return work.compute(number, window, work.read(window))
+    try:
+        return plugin.work.compute(number, window, plugin.work.read(window))
+    except LandassayError as error:
+        # As a value: what an error was raised from cannot always travel, and it would arrive without its place.
+        return type(error)(error.problems)
