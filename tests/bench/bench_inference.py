@@ -69,7 +69,8 @@ def compare(name, estimator, pixels, threads, methods) -> list[dict[str, object]
     return [
         {
             "work": name, "asked for": methods[0], "threads": threads,
-            "scikit-learn pixels/s": len(pixels) / seconds["theirs"], "landassay pixels/s": len(pixels) / seconds["ours"],
+            "scikit-learn pixels/s": len(pixels) / seconds["theirs"],
+            "landassay pixels/s": len(pixels) / seconds["ours"],
             "ratio": round(seconds["theirs"] / seconds["ours"], 2),
         }
     ]  # fmt: skip
