@@ -230,6 +230,21 @@ def test_bilinear_agrees_with_gdal_and_nearest_too(stack):
             assert differ[both[2:-2, 2:-2]].mean() < 0.003, (name, rule)
 
 
+@pytest.mark.parametrize("crs", ["EPSG:4326", "EPSG:32618"])
+def test_a_world_from_0_to_360_degrees_lies_where_it_should(tmp_path, crs):
+    world = np.arange(360 * 180, dtype=np.float32).reshape(180, 360)
+    write(tmp_path / "world.tif", world, Affine(1, 0, 0, 0, -1, 90), "EPSG:4326")
+    transform = (
+        Affine(0.01, 0, -75.3, 0, -0.01, 4.6) if crs == "EPSG:4326" else Affine(1000, 0, 466_000, 0, -1000, 508_000)
+    )
+    write(tmp_path / "base.tif", np.ones((40, 50), np.float32), transform, crs)
+    scene = scene_of(tmp_path, {"red": "base.tif"}, ancillary={"world": {"file": "world.tif", "categorical": True}})
+    got = read_all(scene)["world"]
+    # By hand: 75.3 W is 284.7 E, in column 284; 4.6 N lies in row 85, counted from 90 N.
+    assert got[0, 0] == world[85, 284]
+    assert got[0, 49] == world[85, 285]
+
+
 def test_a_crs_with_heights_is_still_the_same_grid(tmp_path):
     values = np.random.default_rng(6).random((2, 30, 40)).astype(np.float32)
     write(tmp_path / "base.tif", values[0])

@@ -16,6 +16,7 @@ transformed exactly (pyproj). The middle of every cell is too: where the lattice
 
 from __future__ import annotations
 
+import math
 import warnings
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -60,8 +61,19 @@ class Placement:
     @cached_property
     def affine(self) -> Affine:
         """Target pixel coordinates to source pixel coordinates, when both share a CRS."""
-        found: Affine = ~self.source.transform @ self.target.transform
+        to_xy = self.target.transform
+        if self._turn:
+            (left, _, right, _), (west, _, east, _) = self.target.bounds, self.source.bounds
+            turns = round(((west + east) / 2 - (left + right) / 2) / self._turn)
+            to_xy = Affine.translation(turns * self._turn, 0) @ to_xy
+        found: Affine = ~self.source.transform @ to_xy
         return found
+
+    @cached_property
+    def _turn(self) -> float:
+        """Once round the earth in units of the source's longitude, 0 if it is projected: 190 E is also 170 W."""
+        crs = _horizontal(self.source.crs)
+        return 2 * math.pi / crs.axis_info[0].unit_conversion_factor if crs.is_geographic else 0.0
 
     @cached_property
     def shift_yx(self) -> tuple[int, int] | None:
@@ -111,6 +123,10 @@ class Placement:
         x, y = t.a * col + t.b * row + t.c, t.d * col + t.e * row + t.f
         if not self.same_crs:
             x, y = _transformer(self.target.crs, self.source.crs, self.target.bounds).transform(x, y)
+            if self._turn:
+                west, _, east, _ = self.source.bounds
+                with np.errstate(invalid="ignore"):
+                    x = x + self._turn * np.round(((west + east) / 2 - x) / self._turn)
         with np.errstate(invalid="ignore"):
             i = ~self.source.transform
             return i.d * x + i.e * y + i.f, i.a * x + i.b * y + i.c
