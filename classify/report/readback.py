@@ -87,13 +87,13 @@ def cells_of_xlsx(path: Path) -> dict[str, list[list[Cell]]]:
     """Rows below the headings of every sheet of a workbook, by sheet name. Raises DataError."""
     try:
         with zipfile.ZipFile(path) as archive:
-            shared = [_text_of(item) for item in _parse(archive, "xl/sharedStrings.xml").iter(f"{_MAIN}si")]
+            shared = list(_shared(archive))
             targets = {
                 link.attrib["Id"]: link.attrib["Target"] for link in _parse(archive, "xl/_rels/workbook.xml.rels")
             }
             sheets = _parse(archive, "xl/workbook.xml").iter(f"{_MAIN}sheet")
             return {
-                sheet.attrib["name"]: list(_rows(_parse(archive, f"xl/{targets[sheet.attrib[_LINK]]}"), shared))
+                sheet.attrib["name"]: list(_rows(_parse(archive, _part(targets[sheet.attrib[_LINK]])), shared))
                 for sheet in sheets
             }
     except (OSError, KeyError, IndexError, ValueError, zipfile.BadZipFile, ElementTree.ParseError) as error:
@@ -102,6 +102,18 @@ def cells_of_xlsx(path: Path) -> dict[str, list[list[Cell]]]:
 
 def _parse(archive: zipfile.ZipFile, name: str) -> ElementTree.Element:
     return ElementTree.fromstring(archive.read(name))
+
+
+def _shared(archive: zipfile.ZipFile) -> Iterator[str]:
+    """Texts that cells name by number; a workbook that holds its texts in the cells has none."""
+    if "xl/sharedStrings.xml" in archive.namelist():
+        for item in _parse(archive, "xl/sharedStrings.xml").iter(f"{_MAIN}si"):
+            yield _text_of(item)
+
+
+def _part(target: str) -> str:
+    """A sheet's place in the archive; other programs write it from the root."""
+    return target[1:] if target.startswith("/") else f"xl/{target}"
 
 
 def _rows(sheet: ElementTree.Element, shared: list[str]) -> Iterator[list[Cell]]:
@@ -126,6 +138,8 @@ def _column(reference: str) -> int:
 def _value(cell: ElementTree.Element, shared: list[str]) -> Cell:
     if cell.find(f"{_MAIN}f") is not None:
         raise ValueError(f"cell {cell.attrib['r']} holds a formula")
+    if cell.attrib.get("t") == "inlineStr":
+        return _text_of(cell) or None
     stored = cell.find(f"{_MAIN}v")
     if stored is None or stored.text is None:
         return None

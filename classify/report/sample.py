@@ -85,7 +85,7 @@ def _method(project: Project, sample: ReferenceSample, assessment: Mapping[str, 
 def _placed(table: pd.DataFrame, frame: geopandas.GeoDataFrame, cover: Path) -> tuple[PointFact, ...]:
     with rasterio.open(cover) as source:
         there = frame.geometry.to_crs(source.crs)
-        cols, rows = ~source.transform * (there.x.to_numpy(), there.y.to_numpy())
+        cols, rows = ~source.transform @ (there.x.to_numpy(), there.y.to_numpy())
         places = list(zip(rows / source.height, cols / source.width, strict=True))
     return tuple(
         PointFact(str(p.id), (float(place[0]), float(place[1])), str(p.map), str(p.reference), str(p.stratum))

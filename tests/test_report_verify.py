@@ -1,0 +1,111 @@
+"""`landassay verify`: a delivered report passes; whatever is changed in it is found and named."""
+
+from __future__ import annotations
+
+import json
+import shutil
+from pathlib import Path
+
+import openpyxl
+import pandas as pd
+import pytest
+from click.testing import CliRunner
+from report_projects import change_project, screening_project
+
+from classify.cli.main import cli
+from classify.errors import DataError
+from classify.files import sha256
+from classify.report import gather_facts, verify, write_report
+
+
+@pytest.fixture(scope="module")
+def delivered(tmp_path_factory) -> Path:
+    folder = tmp_path_factory.mktemp("verify")
+    write_report(gather_facts(change_project(folder), folder / "outputs"), folder / "outputs" / "report")
+    return folder / "outputs" / "report"
+
+
+@pytest.fixture
+def copy(delivered, tmp_path) -> Path:
+    return Path(shutil.copytree(delivered, tmp_path / "copy"))
+
+
+def seal(folder: Path) -> None:
+    """Make the manifest fit the files again, as a forger would."""
+    manifest = json.loads((folder / "manifest.json").read_text("utf-8"))
+    manifest["files"] = {name: sha256(folder / name) for name in manifest["files"]}
+    (folder / "manifest.json").write_text(json.dumps(manifest), encoding="utf-8")
+
+
+def test_a_report_as_delivered_is_sound_wherever_it_lies(copy):
+    result = verify(copy)
+    assert result.sound, result.findings
+    assert result.derived > 300 and result.printed > 300 and result.notes == ()
+
+
+def test_a_screening_report_is_sound(tmp_path):
+    outputs = tmp_path / "outputs"
+    write_report(gather_facts(screening_project(tmp_path), outputs), outputs / "report")
+    assert verify(outputs / "report").sound
+
+
+@pytest.mark.parametrize("name", ["report.html", "report.pdf", "tables.xlsx", "data/points.csv"])
+def test_a_changed_file_is_named(copy, name):
+    with (copy / name).open("ab") as stream:
+        stream.write(b" ")
+    assert name in {finding.where for finding in verify(copy).findings}
+
+
+def test_a_missing_file_is_named(copy):
+    (copy / "report.pdf").unlink()
+    assert ("report.pdf", "the file is missing") in {(f.where, f.what) for f in verify(copy).findings}
+
+
+def test_a_point_relabelled_and_resealed_is_found_by_deriving_again(copy):
+    points = pd.read_csv(copy / "data" / "points.csv", dtype=str, keep_default_na=False)
+    points.loc[0, "reference"] = points["reference"].iloc[-1]
+    points.to_csv(copy / "data" / "points.csv", index=False)
+    seal(copy)
+    places = [f.where for f in verify(copy).findings]
+    assert any("overall_accuracy.estimate" in place for place in places)
+    assert any("matrix_counts[0][0]" in place for place in places)
+
+
+def test_a_better_number_on_the_page_is_found(copy):
+    page = (copy / "report.html").read_text("utf-8")
+    assert page.count(">88.0</td>") >= 1
+    (copy / "report.html").write_text(page.replace(">88.0</td>", ">98.0</td>", 1), encoding="utf-8")
+    seal(copy)
+    findings = verify(copy).findings
+    assert len(findings) == 1
+    assert "accuracy, row 1" in findings[0].where and "'98.0'" in findings[0].what and "'88.0'" in findings[0].what
+
+
+def test_a_better_number_in_the_workbook_is_found(copy):
+    book = openpyxl.load_workbook(copy / "tables.xlsx")
+    book["accuracy"]["B5"] = 0.98
+    book.save(copy / "tables.xlsx")
+    seal(copy)
+    assert any(f.where.startswith("tables.xlsx: accuracy, row 1") for f in verify(copy).findings)
+
+
+def test_a_manifest_cannot_point_outside_its_folder(copy):
+    manifest = {"schema": 1, "files": {"../outside.txt": "00"}}
+    (copy.parent / "outside.txt").write_text("x")
+    (copy / "manifest.json").write_text(json.dumps(manifest), encoding="utf-8")
+    assert "outside the folder" in verify(copy).findings[0].what
+
+
+def test_a_folder_that_is_no_report_is_one_message(tmp_path):
+    with pytest.raises(DataError, match=r"manifest\.json: there is no such file"):
+        verify(tmp_path)
+
+
+def test_command_exits_with_one_and_says_where(copy):
+    runner = CliRunner()
+    good = runner.invoke(cli, ["verify", str(copy)])
+    assert good.exit_code == 0 and "nothing differs" in good.stdout
+    (copy / "tables.xlsx").unlink()
+    bad = runner.invoke(cli, ["verify", str(copy), "--json"])
+    assert bad.exit_code == 1
+    assert json.loads(bad.stdout)["sound"] is False
