@@ -54,12 +54,12 @@ class ProjectInfo(_Section):
 class BandSettings(_Section):
     """One band: where it lies and how its stored numbers become reflectance = stored * scale + offset."""
 
-    file: str = Field(min_length=1)
-    band: int = Field(default=1, ge=1)
-    scale: float | None = None
-    offset: float | None = None
-    nodata: float | None = None
-    wavelength_nm: float | None = Field(default=None, gt=0)
+    file: str = Field(min_length=1, description="path from the project file, https address or GDAL virtual path")
+    band: int = Field(default=1, ge=1, description="number of the band in the file, from 1")
+    scale: float | None = Field(default=None, description="default: [scene], the file, the preset, 1")
+    offset: float | None = Field(default=None, description="default: [scene], the file, the preset, 0")
+    nodata: float | None = Field(default=None, description="stored value of no data; default: [scene], file, preset")
+    wavelength_nm: float | None = Field(default=None, gt=0, description="centre; default: the file, the preset")
 
 
 def _file_alone(value: Any) -> Any:  # noqa: ANN401 - whatever the file holds
@@ -73,8 +73,8 @@ _FILE_ALONE = BeforeValidator(_file_alone, json_schema_input_type=BandSettings |
 class MaskSettings(_Section):
     """[scene.mask]: a raster that says which pixels not to use, by codes or by bits."""
 
-    file: str = Field(min_length=1)
-    band: int = Field(default=1, ge=1)
+    file: str = Field(min_length=1, description="path from the project file, https address or GDAL virtual path")
+    band: int = Field(default=1, ge=1, description="number of the band in the file, from 1")
     reject: list[int | str] = Field(
         default_factory=list, description='codes, or meanings that the sensor\'s preset names, such as "cloud"'
     )
@@ -96,11 +96,11 @@ class MaskSettings(_Section):
 class _Acquisition(_Section):
     """What one date consists of."""
 
-    sensor: str | None = None
+    sensor: str | None = Field(default=None, description="a preset: wavelengths, scale, no data, meaning of the mask")
     scale: float | None = Field(default=None, description="reflectance = stored * scale + offset, for all bands")
     offset: float | None = None
     nodata: float | None = None
-    bands: dict[str, Annotated[BandSettings, _FILE_ALONE]] = Field(min_length=1)
+    bands: dict[str, Annotated[BandSettings, _FILE_ALONE]] = Field(min_length=1, description="role = file or table")
     mask: MaskSettings | None = None
 
     @field_validator("bands")
@@ -128,12 +128,12 @@ class DateSettings(_Acquisition):
 class AncillarySettings(_Section):
     """[scene.ancillary]: a raster that is no reflectance band, by name: never masked, categories not interpolated."""
 
-    file: str = Field(min_length=1)
-    band: int = Field(default=1, ge=1)
+    file: str = Field(min_length=1, description="path from the project file, https address or GDAL virtual path")
+    band: int = Field(default=1, ge=1, description="number of the band in the file, from 1")
     scale: float | None = None
     offset: float | None = None
     nodata: float | None = None
-    categorical: bool = False
+    categorical: bool = Field(default=False, description="values are codes: the nearest is taken, none is blended")
 
 
 _ANCILLARY_FILE_ALONE = BeforeValidator(_file_alone, json_schema_input_type=AncillarySettings | str)
@@ -142,7 +142,9 @@ _ANCILLARY_FILE_ALONE = BeforeValidator(_file_alone, json_schema_input_type=Anci
 class CompositeSettings(_Section):
     """[scene.composite]: one value per band and pixel out of the dates that are clear there."""
 
-    method: Literal["median", "highest", "lowest"]
+    method: Literal["median", "highest", "lowest"] = Field(
+        description="the median of each band, or all bands of the date with the highest or lowest index"
+    )
     of: tuple[str, str] | None = Field(
         default=None, description="two roles a, b: take the date with the highest or lowest (a - b) / (a + b)"
     )
@@ -165,8 +167,10 @@ class SceneSettings(_Acquisition):
         default="bilinear", description="how bands that do not lie on the grid are brought onto it"
     )
     date: DateName | None = Field(default=None, description="name of the date of [scene.bands], for composites")
-    dates: list[DateSettings] = Field(default_factory=list)
-    ancillary: dict[str, Annotated[AncillarySettings, _ANCILLARY_FILE_ALONE]] = Field(default_factory=dict)
+    dates: list[DateSettings] = Field(default_factory=list, description="further dates of the same place")
+    ancillary: dict[str, Annotated[AncillarySettings, _ANCILLARY_FILE_ALONE]] = Field(
+        default_factory=dict, description="other rasters by name, such as elevation"
+    )
     composite: CompositeSettings | None = None
 
     @property
