@@ -288,11 +288,13 @@ STAGES: tuple[Stage, ...] = (
         ("training/pixels.parquet", "model/model.skops", "model/model.json"), _train,
     ),
     Stage(
-        "classify", ("train",), ("scene", "classes", "map", "report"), _scene_inputs,
+        "classify", ("train",), ("scene", "classes", "map", "report.area_unit"), _scene_inputs,
         ("map/cover.tif", "map/areas.csv"), _classify,
     ),
     Stage(
-        "assess", ("classify",), ("project", "classes", "reference", "report"), _reference_inputs,
+        "assess", ("classify",),
+        ("project.seed", "classes", "reference", "report.confidence_level", "report.interval", "report.area_unit"),
+        _reference_inputs,
         ("assessment/assessment.json",), _assess, lambda project: project.reference is not None,
     ),
     Stage("report", ("review", "train", "classify", "assess"), ("project", "classes", "report"), lambda project: [],
