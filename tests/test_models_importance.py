@@ -46,7 +46,6 @@ def test_the_group_shows_what_single_features_hide() -> None:
     content = found.to_json()
     assert [row["name"] for row in content["groups"]] == ["pair", "noise"]
     assert content["groups"][0]["without_it"] == found.dropped["pair"]
-    assert (found.weights(("blue", "green", "red", "nir")) >= 0).all()
 
 
 def test_same_as_scikit_learn_within_its_spread() -> None:

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from scipy.spatial.distance import cdist, pdist
+from scipy.spatial.distance import cdist
+from sklearn.covariance import LedoitWolf
 from training_sets import training_set
 
 from classify.models.folds import group_folds
@@ -12,32 +13,37 @@ from classify.models.reach import Reach, fit_reach
 
 
 def test_index_and_threshold_are_those_of_the_definition() -> None:
-    """Meyer & Pebesma 2021, equations 1-3, computed densely with scipy on every training pixel."""
+    """Meyer & Pebesma 2021, equations 1-3 (from memory), computed densely with scipy on every training pixel, with
+    distances in features whitened by scikit-learn's shrunk covariance within classes (Mahalanobis distances)."""
     training = training_set(polygons=(6, 6, 6), pixels=20, between=0.03)
-    weights = np.array([1.0, 2.0, 0.5, 1.5])
-    reach = fit_reach(training, weights, folds=4, seed=2)
+    reach = fit_reach(training, folds=4, seed=2)
     assert reach is not None and len(reach.points) == 360
     x = training.features.astype(np.float64)
-    scaled = (x - x.mean(axis=0)) / x.std(axis=0) * (weights / weights.mean())
-    mean_distance = pdist(scaled).mean()
+    centred = x / x.std(axis=0)
+    for code in (1, 2, 3):
+        centred[training.codes == code] -= centred[training.codes == code].mean(axis=0)
+    inverse = np.linalg.inv(LedoitWolf(assume_centered=True).fit(centred).covariance_)
+
+    def distances(a: np.ndarray, b: np.ndarray) -> np.ndarray:
+        return cdist(a / x.std(axis=0), b / x.std(axis=0), "mahalanobis", VI=inverse)
+
+    among = distances(x, x)
+    mean_distance = among[np.triu_indices(len(x), 1)].mean()
     new = np.random.default_rng(4).uniform(-0.2, 0.7, (200, 4)).astype(np.float32)
-    new_scaled = (new - x.mean(axis=0)) / x.std(axis=0) * (weights / weights.mean())
-    expected = cdist(new_scaled, scaled).min(axis=1) / mean_distance
-    np.testing.assert_allclose(reach.index(new), expected, rtol=2e-4, atol=1e-3)
+    np.testing.assert_allclose(reach.index(new), distances(new, x).min(axis=1) / mean_distance, rtol=1e-4)
     fold = group_folds(training.codes, training.polygon, 4, 2).fold
-    distance = cdist(scaled, scaled)
-    distance[fold[:, None] == fold[None, :]] = np.inf
-    own = distance.min(axis=1) / mean_distance
+    among[fold[:, None] == fold[None, :]] = np.inf
+    own = among.min(axis=1) / mean_distance
     low, high = np.quantile(own, [0.25, 0.75])
     assert reach.threshold == pytest.approx(own[own <= high + 1.5 * (high - low)].max(), rel=1e-3)
 
 
 @pytest.mark.parametrize("left_out", [1, 2, 3])
 def test_a_class_left_out_is_beyond_and_held_out_polygons_are_within(left_out: int) -> None:
-    training = training_set(polygons=(16, 16, 16), pixels=40, between=0.008, seed=6)
+    training = training_set(polygons=(32, 32, 32), pixels=30, between=0.008, seed=6)
     known = training.codes != left_out
     held = (training.polygon % 4 == 0) & known
-    reach = fit_reach(training.subset(known & ~held), np.ones(4))
+    reach = fit_reach(training.subset(known & ~held))
     assert reach is not None
     assert np.mean(reach.of(training.features[~known]) > 1) >= 0.8
     assert np.mean(reach.of(training.features[held]) > 1) <= 0.05
@@ -45,7 +51,7 @@ def test_a_class_left_out_is_beyond_and_held_out_polygons_are_within(left_out: i
 
 def test_percent_and_invalid_pixels() -> None:
     training = training_set()
-    reach = fit_reach(training, np.ones(4))
+    reach = fit_reach(training)
     assert reach is not None
     features = np.vstack([training.features[:3], [[np.nan, 0, 0, 0], [9e3, 0, 0, 0]]]).astype(np.float32)
     share, percent = reach.of(features), reach.percent(features)
@@ -57,7 +63,7 @@ def test_percent_and_invalid_pixels() -> None:
 
 
 def test_a_pixel_has_one_value_however_many_are_asked_for() -> None:
-    reach = fit_reach(training_set(), np.ones(4))
+    reach = fit_reach(training_set())
     assert reach is not None
     features = np.random.default_rng(0).uniform(0, 0.6, (1000, 4)).astype(np.float32)
     whole = reach.of(features)
@@ -67,11 +73,11 @@ def test_a_pixel_has_one_value_however_many_are_asked_for() -> None:
 
 def test_round_trip_and_sets_without_spread() -> None:
     training = training_set()
-    reach = fit_reach(training, np.zeros(4))
-    assert reach is not None, "no measured importance: every feature counts the same"
+    reach = fit_reach(training)
+    assert reach is not None
     back = Reach.from_bytes(reach.to_bytes(), 4)
     assert np.array_equal(back.of(training.features), reach.of(training.features))
     flat = training_set(between=0, within=0)
     flat.features[:] = 1.0
-    assert fit_reach(flat, np.ones(4)) is None
-    assert fit_reach(training_set(polygons=(1, 1)), np.ones(4)) is None
+    assert fit_reach(flat) is None
+    assert fit_reach(training_set(polygons=(1, 1))) is None

@@ -50,10 +50,6 @@ class Importance:
     dropped: Mapping[str, float | None]
     members: Mapping[str, tuple[str, ...]]
 
-    def weights(self, names: tuple[str, ...]) -> NDArray[np.float64]:
-        """Importances float64 (f,) in the order of `names`, never below zero."""
-        return np.array([max(self.features[name][0], 0.0) for name in names])
-
     def to_json(self) -> dict[str, Any]:
         """Plain data for model.json, the most important first."""
 
