@@ -37,24 +37,26 @@ def products_draft(files: Sequence[Path], folder: Path) -> SceneDraft | None:
     are several products that are not dates of one place.
     """
     matches = [match for name in preset_names("sensors") for match in _matches(name, files)]
-    chosen = _best_by_product(matches)
+    found = _best_by_product(matches)
+    most = max((len(match.files) for match in found), default=0)
+    chosen = [match for match in found if len(match.files) == most]
     if not chosen:
         return None
+    notes = [f"left out, as it has fewer bands: {match.product}" for match in found if match not in chosen]
     if len(chosen) == 1:
-        return _draft(chosen[0], folder)
-    dates = [_date_of(match.product) for match in chosen]
-    if None in dates or len(set(dates)) < len(dates):
+        draft = _draft(chosen[0], folder)
+        return replace(draft, assumptions=(*notes, *draft.assumptions))
+    by_date = {_date_of(match.product): match for match in chosen}
+    if None in by_date or len(by_date) < len(chosen):
         shown = ", ".join(sorted(match.product for match in chosen)[:6])
         raise DataError(
             f"this folder holds {len(chosen)} products that are not dates of one place: {shown}", where=str(folder),
             fix="name the folder of one; neighbouring tiles are first joined into one raster per band",
         )  # fmt: skip
-    drafts = [
-        replace(_draft(match, folder), date=date) for date, match in sorted(zip(map(str, dates), chosen, strict=True))
-    ]
-    note = f"{len(drafts)} dates were found; the bands of [scene] are those of the earliest, {drafts[0].date}"
+    drafts = [replace(_draft(by_date[date], folder), date=date) for date in sorted(map(str, by_date))]
+    notes.append(f"{len(drafts)} dates were found; the bands of [scene] are those of the earliest, {drafts[0].date}")
     main = replace(drafts[0], title=f"Land cover, {folder.name}", dates=tuple(drafts[1:]))
-    return replace(main, assumptions=(note, *main.assumptions))
+    return replace(main, assumptions=(*notes, *main.assumptions))
 
 
 def _matches(name: str, files: Iterable[Path]) -> list[_Match]:
@@ -100,14 +102,12 @@ def _finer(known: Path | None, file: Path) -> Path:
 
 
 def _best_by_product(matches: Iterable[_Match]) -> list[_Match]:
-    """Of every product the match that fits best; products without the full set of bands are left out."""
+    """Of every product the match that fits best; only those that carry a product's name, if any does."""
     best: dict[str, _Match] = {}
     for match in matches:
         if match.product not in best or _fit(match) > _fit(best[match.product]):
             best[match.product] = match
-    named = [match for match in best.values() if match.named] or list(best.values())
-    most = max((len(match.files) for match in named), default=0)
-    return [match for match in named if len(match.files) == most]
+    return [match for match in best.values() if match.named] or list(best.values())
 
 
 def _fit(match: _Match) -> tuple[bool, int, int]:

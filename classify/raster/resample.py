@@ -17,6 +17,7 @@ transformed exactly (pyproj). The middle of every cell is too: where the lattice
 from __future__ import annotations
 
 import math
+import threading
 import warnings
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -186,8 +187,19 @@ def _horizontal(crs: CRS) -> pyproj.CRS:
     return pyproj.CRS.from_user_input(crs.to_wkt()).to_2d()
 
 
-@lru_cache(maxsize=256)
+_of_thread = threading.local()
+
+
 def _transformer(from_crs: CRS, to_crs: CRS, bounds: tuple[float, float, float, float]) -> pyproj.Transformer:
+    """The calling thread's own transformer: those of a `TransformerGroup` must not be shared between threads."""
+    known: dict[object, pyproj.Transformer] = _of_thread.__dict__.setdefault("transformers", {})
+    key = from_crs, to_crs, bounds
+    if key not in known:
+        known[key] = _best_transformer(from_crs, to_crs, bounds)
+    return known[key]
+
+
+def _best_transformer(from_crs: CRS, to_crs: CRS, bounds: tuple[float, float, float, float]) -> pyproj.Transformer:
     """One fixed operation for the whole scene, so that neighbouring pixels never take different datum shifts."""
     try:
         west, south, east, north = transform_bounds(from_crs, "OGC:CRS84", *bounds)
