@@ -146,12 +146,16 @@ def test_exit_code_and_message_without_traceback(tmp_path):
         ["assess", "--points", "p.csv"],
         ["assess", "--points", "p.csv", "--matrix", "m.csv"],
         ["assess", "--strata", "s.csv"],
+        ["assess", "--confidence", "0.9"],
         ["compare"],
+        ["compare", "other.tif", "--purposive"],
         ["compare", "other.tif", "--points", "p.csv"],
     ],
 )
 def test_wrong_usage_is_exit_code_2(arguments):
-    assert CliRunner().invoke(cli, arguments).exit_code == 2
+    result = CliRunner().invoke(cli, arguments)
+    assert result.exit_code == 2
+    assert "Error: " in result.stderr and "Traceback" not in result.stderr
 
 
 def test_command_from_points_matrix_and_pixels_agree(run, tmp_path):

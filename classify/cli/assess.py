@@ -27,8 +27,7 @@ from classify.cli.sample_tables import SampleTables, table_options
 def command(call: Call, matrix: Path | None, force: bool, tables: SampleTables) -> None:
     """Run the project's stage, or assess from tables."""
     if tables.points is None and matrix is None:
-        if tables.strata or tables.out:
-            raise click.UsageError("--strata and --out go with --points or --matrix")
+        tables.refuse()
         run_stages(call, ["assess"], force=force)
     elif tables.points is None or matrix is None:
         _tables(call, matrix, tables)

@@ -29,6 +29,7 @@ def command(call: Call, other_map: Path | None, tables: SampleTables) -> None:
     if (other_map is None) == (tables.points is None):
         raise click.UsageError("name the other map (a raster), or give --points with a column other_map")
     if other_map is not None:
+        tables.refuse()
         comparison, out = _project(call, other_map)
     else:
         comparison, out = _tables(tables)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import functools
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -16,17 +16,26 @@ if TYPE_CHECKING:
     from classify.assessment import AssessmentOptions
 
 _FILE = click.Path(path_type=Path)
+_SETTINGS = ("pixel_area", "area_unit", "kind", "confidence_level", "interval", "seed")
 
 
 @dataclass(frozen=True, slots=True)
 class SampleTables:
-    """What was said of the tables: files, and how to read and assess them. points: a file of points or of a matrix."""
+    """What was said of the tables: files, and how to read and assess them. spoken: options that were given at all."""
 
     points: Path | None
     strata: Path | None
     out: Path | None
     merge: Path | None
     settings: dict[str, Any]
+    spoken: tuple[str, ...]
+
+    def refuse(self) -> None:
+        """Raise UsageError if any option was given: a project states all of this in its own file."""
+        if self.spoken:
+            raise click.UsageError(
+                f"{', '.join(self.spoken)}: only with tables; a project says this in its [reference] and [report]"
+            )
 
     def require_out(self) -> Path:
         """The folder for results. Raises UsageError where it was not given."""
@@ -71,11 +80,19 @@ def table_options(command: Callable[..., Any]) -> Callable[..., Any]:
     @click.option("--seed", type=click.IntRange(0), default=0, help="Seed of the bootstrap.")
     @functools.wraps(command)
     def wrapped(*args: Any, **given: Any) -> Any:  # noqa: ANN401
+        spoken = _spoken(("points", "strata", "out", "merge", "unlabelled", "purposive", *_SETTINGS))
         files = {name: given.pop(name) for name in ("points", "strata", "out", "merge")}
         evidence = "purposive sample" if given.pop("purposive") else "probability sample"
-        names = ("pixel_area", "area_unit", "kind", "confidence_level", "interval", "seed")
-        settings = {name: given.pop(name) for name in names}
+        settings = {name: given.pop(name) for name in _SETTINGS}
         settings |= {"evidence": evidence, "unlabelled": tuple(given.pop("unlabelled"))}
-        return command(*args, tables=SampleTables(**files, settings=settings), **given)
+        return command(*args, tables=SampleTables(**files, settings=settings, spoken=spoken), **given)
 
     return wrapped
+
+
+def _spoken(names: Sequence[str]) -> tuple[str, ...]:
+    """Options among `names` that stand on the command line, as they are spelt there."""
+    context = click.get_current_context()
+    options = {p.name: p.opts[0] for p in context.command.params}
+    given = click.core.ParameterSource.COMMANDLINE
+    return tuple(options[name] for name in names if context.get_parameter_source(name) is given)
