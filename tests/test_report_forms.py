@@ -7,6 +7,7 @@ import json
 import re
 import shutil
 from dataclasses import dataclass
+from functools import cached_property
 from pathlib import Path
 
 import openpyxl
@@ -32,6 +33,10 @@ class Made:
     @property
     def page(self) -> str:
         return (self.folder / "report.html").read_text(encoding="utf-8")
+
+    @cached_property
+    def pdf_text(self) -> str:
+        return " ".join(page.extract_text() for page in pypdf.PdfReader(self.folder / "report.pdf").pages)
 
 
 @pytest.fixture(scope="module")
@@ -77,10 +82,7 @@ def expected(made: Made) -> dict[str, list[list[float | None]]]:
     tables["matrix_counts"] = with_totals(a["matrix_counts"])
     tables["matrix_shares"] = [[percent(v) for v in row] for row in with_totals(a["matrix_area_proportions"])]
     tables["agreement"] = [
-        *(
-            [a[key][k] for k in ("estimate", "standard_error", "lower", "upper")]
-            for m in ("overall_accuracy", "kappa")
-        ),
+        *([a[m][k] for k in ("estimate", "standard_error", "lower", "upper")] for m in ("overall_accuracy", "kappa")),
         *([a[key], None, None, None] for key in ("quantity_disagreement", "allocation_disagreement")),
     ]
     tables["strata"] = [[s["area"], s["n"]] for s in a["design"]["strata"]]
@@ -146,8 +148,7 @@ def test_workbook_holds_the_json_to_full_precision_as_numbers(made):
 
 
 def test_pdf_text_holds_the_rows_that_the_page_prints(made):
-    text = " ".join(page.extract_text() for page in pypdf.PdfReader(made.folder / "report.pdf").pages)
-    flat = re.sub(r"\s+", "", text)
+    flat = re.sub(r"\s+", "", made.pdf_text)
     for name, wanted in expected(made).items():
         for row in html_rows(made.page, name):
             numbers = "".join(row[1 : 1 + len(wanted[0])])
@@ -204,6 +205,6 @@ def test_hostile_class_names_are_text_in_every_form(all_made):
     book = openpyxl.load_workbook(folder / "tables.xlsx")
     cells = [row[0] for row in book["areas"].iter_rows(min_row=5)][: len(HOSTILE)]
     assert [(cell.value, cell.data_type) for cell in cells] == [(name, "s") for name in HOSTILE]
-    text = " ".join(p.extract_text() for p in pypdf.PdfReader(folder / "report.pdf").pages)
+    text = all_made["many"].pdf_text
     for name in ("<script>alert(1)</script>", "=1+1", "Wald & Wiese", "*stars*", "#set $x$"):
         assert name in text

@@ -10,6 +10,7 @@ import json
 import re
 import tempfile
 from datetime import UTC, datetime
+from functools import cache
 from importlib.resources import files
 from pathlib import Path
 from typing import Any
@@ -64,10 +65,16 @@ def _compile(main: Path, facts: ReportFacts, standards: list[Any]) -> bytes:
     date = facts.heading.date or "1970-01-01"
     # The date of the results, not of the run: the same results give the same bytes.
     when = datetime.fromisoformat(date).replace(tzinfo=UTC)
-    compiler = typst.Compiler(root=main.parent)
+    compiler = typst.Compiler(root=main.parent, font_paths=_fonts())
     made = compiler.compile(main, format="pdf", pdf_standards=standards, timestamp=when)
     assert isinstance(made, bytes), type(made)
     return made
+
+
+@cache
+def _fonts() -> typst.Fonts:
+    """All fonts of this machine; finding them takes longer than setting a page."""
+    return typst.Fonts()
 
 
 def _document(document: Document, facts: ReportFacts, words: Messages, folder: Path) -> dict[str, Any]:

@@ -153,7 +153,8 @@ def _reach_png(reach: NDArray[np.uint8]) -> bytes:
 def _shades(lightness: NDArray[np.float64]) -> NDArray[np.uint8]:
     """A palette of one hue, so that it reads in grey, for a lightness 0..1 of each value, uint8 (256, 3)."""
     low, high = np.array([58.0, 12.0, 43.0]), np.array([250.0, 246.0, 236.0])
-    return np.rint(low + (high - low) * lightness[:, None]).astype(np.uint8)
+    palette: NDArray[np.uint8] = np.rint(low + (high - low) * lightness[:, None]).astype(np.uint8)
+    return palette
 
 
 def _png(values: NDArray[np.uint8], palette: NDArray[np.uint8], clear: int = 0) -> bytes:

@@ -57,9 +57,7 @@ class Drawing:
         self.add("rect", x=_px(x - r), y=_px(y - r), width=2 * r, height=2 * r, fill=COLOURS["paper"],
                  stroke=_ink(colour), stroke_width=1.4)  # fmt: skip
 
-    def path(
-        self, d: str, colour: str, width: float, dash: str = "", opacity: float = 1
-    ) -> None:
+    def path(self, d: str, colour: str, width: float, dash: str = "", opacity: float = 1) -> None:
         """An open path drawn with a pen in a colour of the identity."""
         pen = {"fill": "none", "stroke": _ink(colour), "stroke_width": width, "stroke_linejoin": "round"}
         if dash:
