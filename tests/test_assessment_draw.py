@@ -209,7 +209,9 @@ def mapped_project(tmp_path: Path) -> Path:
 
 
 def draw(folder: Path, *args: str) -> dict:
-    result = CliRunner().invoke(cli, ["draw", "--project", str(folder), "--json", "--quiet", *args], catch_exceptions=False)
+    result = CliRunner().invoke(
+        cli, ["draw", "--project", str(folder), "--json", "--quiet", *args], catch_exceptions=False
+    )
     assert result.exit_code == 0, result.output
     return json.loads(result.stdout)
 
@@ -220,7 +222,16 @@ def test_points_give_nothing_away(mapped_project: Path):
     design = json.loads((folder / "design.json").read_text())
     points = geopandas.read_file(folder / "points.gpkg")
     assert list(points["id"]) == list(range(1, 91))
-    assert set(points.columns) == {"id", "longitude", "latitude", "observed", "alternate", "confidence", "note", "geometry"}
+    assert set(points.columns) == {
+        "id",
+        "longitude",
+        "latitude",
+        "observed",
+        "alternate",
+        "confidence",
+        "note",
+        "geometry",
+    }
     assert set(points["observed"].fillna("")) == {""}
     texts = [(folder / f"points.{end}").read_bytes() for end in ("gpkg", "gpx", "geojson", "csv")]
     for secret in (b"Pasture", b"Bare soil", b"Water", b"stratum", b"reserve"):

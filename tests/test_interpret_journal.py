@@ -101,7 +101,9 @@ def test_synchronisation_is_full(tmp_path: Path):
 
 
 @settings(max_examples=25)
-@given(st.lists(st.one_of(st.just("undo"), st.tuples(st.integers(1, 4), st.sampled_from(["a", "b", "c"]))), max_size=14))
+@given(
+    st.lists(st.one_of(st.just("undo"), st.tuples(st.integers(1, 4), st.sampled_from(["a", "b", "c"]))), max_size=14)
+)
 def test_undo_walks_back_through_a_plain_stack(tmp_path_factory, steps):
     journal = Journal(tmp_path_factory.mktemp("journal") / "labels.sqlite", "Ada")
     stack: list[tuple[int, str]] = []
