@@ -178,6 +178,8 @@ def test_files_named_by_role_and_files_that_say_nothing(tmp_path):
     with pytest.raises(DataError, match=r"cannot be told.*one\.tif"):
         discover(str(tmp_path / "b"))
     (tmp_path / "c").mkdir()
+    with pytest.raises(DataError, match="no such file or folder"):
+        discover(str(tmp_path / "d"))
     with pytest.raises(DataError, match="no raster"):
         discover(str(tmp_path / "c"))
 
@@ -207,6 +209,8 @@ def test_a_drone_stack_with_described_bands_and_one_without(tmp_path):
     assert draft.scale is None, "values of reflectance need no scale"
     bare = write(tmp_path / "bare.tif", pixels, 0.1)
     assert any("guess" in text for text in discover(str(bare)).assumptions)
+    six = write(tmp_path / "six.tif", np.full((6, 20, 20), 0.2, np.float32), 30.0)
+    assert [b.role for b in discover(str(six)).bands][3:] == ["nir", "swir_1", "swir_2"]
     seven = write(tmp_path / "seven.tif", np.full((7, 20, 20), 0.2, np.float32), 0.1)
     assert [b.role for b in discover(str(seven)).bands] == [f"band_{k}" for k in range(1, 8)]
 

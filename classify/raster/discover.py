@@ -34,6 +34,8 @@ def discover(source: str) -> SceneDraft:
     if looks_like_item(source):
         return _completed(item_draft(read_item(source), source))
     path = Path(source)
+    if not is_remote(source) and not path.exists():
+        raise DataError("there is no such file or folder", where=source, fix="check the path given with --scene")
     if not is_remote(source) and path.is_dir():
         return _completed(_from_folder(path.absolute()))
     if not is_remote(source) and path.suffix.lower() == ".hdr":
@@ -153,6 +155,7 @@ def _usual_order(count: int) -> tuple[list[str | None], str]:
         3: ["red", "green", "blue"],
         4: ["blue", "green", "red", "nir"],
         5: ["blue", "green", "red", "red_edge_1", "nir"],
+        6: ["blue", "green", "red", "nir", "swir_1", "swir_2"],
     }
     if count in usual:
         named = ", ".join(str(role) for role in usual[count])
