@@ -40,13 +40,17 @@ def test_index_and_threshold_are_those_of_the_definition() -> None:
 
 @pytest.mark.parametrize("left_out", [1, 2, 3])
 def test_a_class_left_out_is_beyond_and_held_out_polygons_are_within(left_out: int) -> None:
-    training = training_set(polygons=(32, 32, 32), pixels=30, between=0.008, seed=6)
-    known = training.codes != left_out
-    held = (training.polygon % 4 == 0) & known
-    reach = fit_reach(training.subset(known & ~held))
-    assert reach is not None
-    assert np.mean(reach.of(training.features[~known]) > 1) >= 0.8
-    assert np.mean(reach.of(training.features[held]) > 1) <= 0.05
+    """Polygons of known classes that took no part: one in twenty beyond reach at most, on average over three sets."""
+    beyond = []
+    for seed in (6, 7, 8):
+        training = training_set(polygons=(16, 16, 16), pixels=30, between=0.006, seed=seed)
+        known = training.codes != left_out
+        held = (training.polygon % 4 == 0) & known
+        reach = fit_reach(training.subset(known & ~held))
+        assert reach is not None
+        assert np.mean(reach.of(training.features[~known]) > 1) >= 0.8
+        beyond.append(np.mean(reach.of(training.features[held]) > 1))
+    assert np.mean(beyond) <= 0.05
 
 
 def test_percent_and_invalid_pixels() -> None:

@@ -12,7 +12,7 @@ from classify.training.dataset import TrainingSet
 from classify.training.review import Evidence, TrainingReview, review_training
 
 # A small forest on a few pixels of each polygon is enough to see what a polygon looks like.
-_TREES, _PIXELS = 60, 4_000
+_TREES, _PIXELS = 40, 3_000
 
 
 def inspect_training(
@@ -32,7 +32,7 @@ def inspect_training(
         return make_estimator("random forest", params, features=len(training.feature_names), seed=forest_seed)
 
     screening = screen(training, forest, ScreenOptions(seed=seed, jobs=jobs, most_pixels=_PIXELS), progress=progress)
-    options = ScreenOptions(seed=seed, jobs=jobs, repeats=6, most_pixels=_PIXELS)
+    options = ScreenOptions(seed=seed, jobs=jobs, repeats=4, most_pixels=_PIXELS)
     curve = learning_curve(training, forest, options, progress=progress)
     names = {c.code: c.name for c in project.classes}
     evidence = Evidence(screening.rounds, screening.to_json(), curve.to_json(names))

@@ -186,7 +186,7 @@ def _find_nearest(pixels, lanes, nearest):  # type: ignore[no-untyped-def]  # no
 
 @jit
 def _turn(features, centre, rotation):  # type: ignore[no-untyped-def]  # noqa: ANN001, ANN202
-    """(features - centre) @ rotation as float32; the last bits of a library's product depend on how many rows it has."""
+    """(features - centre) @ rotation, float32; a library product may depend on the number of rows in its last bits."""
     turned = np.empty((len(features), rotation.shape[1]), dtype=np.float32)
     row = np.empty(rotation.shape[1], dtype=np.float64)
     for pixel in range(len(features)):
