@@ -11,7 +11,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from classify.errors import ModelError, SettingsError
-from classify.features import Recipe, SceneFacts, build_recipe, dips
+from classify.features import Recipe, SceneFacts, build_recipe, dips, recipe_findings
 from classify.features.absorption import DIP_MEASURES, EDGE_MEASURES
 from classify.settings import FeatureSettings
 from classify.settings.model import TerrainStatistic, TextureStatistic
@@ -263,3 +263,21 @@ def test_picked_pixels_in_one_row_are_as_good_as_a_block():
     block = recipe.compute({name: layers[name] for name in recipe.needs})
     row = recipe.compute({name: layers[name].reshape(1, -1) for name in recipe.needs})
     np.testing.assert_array_equal(row[:, 0], block.reshape(len(recipe.names), -1))
+
+
+def test_a_recipe_notes_a_scene_of_other_pixels_or_wavelengths():
+    recipe = build(
+        terrain=[{"statistic": "slope"}, {"statistic": "topographic position", "size": 5}],
+        absorption=[{"dip": "clay_2200", "measures": ["depth"]}],
+    )
+    assert recipe_findings(recipe, FACTS) == ()
+    assert recipe_findings(recipe, SceneFacts()) == ()
+    slightly = SceneFacts({"c2190": 2193.0}, pixel_m=(10.1, 0.0, 0.0, -9.95))
+    assert recipe_findings(recipe, slightly) == ()
+    other = SceneFacts({"c2190": 2201.0}, pixel_m=(20.0, 0.0, 0.0, -20.0))
+    pixels, band = recipe_findings(recipe, other)
+    assert "'slope' reckons" in pixels.what
+    assert "(10 x 10 m)" in pixels.what
+    assert "(20 x 20 m)" in pixels.what
+    assert "band 'c2190' is at 2201 nm, and 'clay_2200_depth' was trained with one at 2190 nm" in band.what
+    assert {pixels.severity, band.severity} == {"warning"}

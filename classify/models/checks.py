@@ -10,6 +10,7 @@ import sklearn
 from numpy.typing import NDArray
 
 from classify.errors import ModelError, Problem
+from classify.features import recipe_findings, scene_facts
 from classify.models.trained import TrainedModel
 from classify.raster.grid import Window
 from classify.raster.reader import Scene
@@ -78,7 +79,7 @@ def check_scene(model: TrainedModel, scene: Scene) -> tuple[Problem, ...]:
             where="scene.bands",
             fix=f"name these bands, or train again on what there is: {', '.join(scene.roles)}",
         )
-    found = list(_version_findings(model.card.get("versions", {})))
+    found = [*_version_findings(model.card.get("versions", {})), *recipe_findings(model.recipe, scene_facts(scene))]
     features = _scene_sample(model, scene)
     for name, shift in distribution_shift(model.card["training"]["quantiles"], features).items():
         if shift is not None and (shift["beyond"] > _BEYOND_SHARE or shift["times_off"] > _TIMES_OFF):
