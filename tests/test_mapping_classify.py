@@ -19,7 +19,7 @@ from rio_cogeo.cogeo import cog_validate
 from small_project import make_small_project
 
 from classify.errors import DataError, OutputError
-from classify.mapping.classify_scene import MapOptions, classify_scene
+from classify.mapping.classify_scene import MapOptions, block_side_px, classify_scene
 from classify.mapping.tidy import TidyOptions
 from classify.mapping.unfinished import FOLDER
 from classify.models import load_model
@@ -131,6 +131,22 @@ def test_workers_and_block_sizes_do_not_change_a_byte(made, tmp_path, options):
     map_into(tmp_path / "other", options)
     assert contents(tmp_path / "one") == contents(tmp_path / "other")
     assert {path.name for path in (tmp_path / "other").iterdir()} == set(FILES)
+
+
+@pytest.mark.parametrize(
+    ("tile_px", "block_px"), [(128, 512), (512, 512), (1024, 1024), (384, 768), (2048, 512), (0, 512)]
+)
+def test_blocks_are_whole_tiles_of_the_files(made, tmp_path, tile_px, block_px):
+    scene = made[2]
+    tiling = {"tiled": True, "blockxsize": tile_px, "blockysize": tile_px} if tile_px else {}
+    with rasterio.open(
+        tmp_path / "b.tif", "w", driver="GTiff", count=1, dtype="uint8", height=2100, width=2100, crs=scene.grid.crs,
+        transform=scene.grid.transform, sparse_ok=True, **tiling,
+    ):  # fmt: skip
+        pass
+    grid = Grid(scene.grid.crs, scene.grid.transform, 2100, 2100)
+    band = replace(scene.bands[0], path=str(tmp_path / "b.tif"), native=grid)
+    assert block_side_px(replace(scene, grid=grid, bands=(band,))) == block_px
 
 
 def test_an_interrupted_run_goes_on_where_it_was(made, tmp_path):

@@ -30,24 +30,26 @@ from classify.models import TrainedModel
 from classify.progress import SILENT, Progress
 from classify.raster.grid import Grid, Window
 from classify.raster.scene import Scene
-from classify.raster.sources import is_remote
+from classify.raster.sources import is_remote, open_raster
 from classify.settings import ClassSettings, Project
 from classify.settings.model import M2_PER_UNIT
 
+_BLOCK_PX, _LARGEST_BLOCK_PX = 512, 1024
 # A grid with more pixels than this is a mistake in the settings (the whole land surface at 10 m has fewer).
 _MOST_PIXELS = 2**41
 
 
 @dataclass(frozen=True, slots=True)
 class MapOptions:
-    """jobs: threads, unless an engine is given. block_px: side of a block. confidence, reach: write these layers too.
+    """jobs: threads, unless an engine is given. block_px: side of a block; None: as the files are tiled.
 
-    tidy: what is done to the class map. polygons: write its patches as polygons too. skip_unreadable: map a block that
-    cannot be read as no data and count it, instead of stopping. engine: where blocks are computed.
+    confidence, reach: write these layers too. tidy: what is done to the class map. polygons: write its patches as
+    polygons too. skip_unreadable: map a block that cannot be read as no data and count it, instead of stopping. engine:
+    where blocks are computed.
     """
 
     jobs: int = 1
-    block_px: int = 512
+    block_px: int | None = None
     confidence: bool = True
     area_unit: str = "ha"
     reach: bool = False
@@ -112,7 +114,7 @@ def classify_scene(
     options, classes = options or MapOptions(), list(classes)
     _check_grid(scene.grid)
     work = BlockWork(model, scene, _layers(model, options), options.skip_unreadable)
-    windows = list(scene.grid.blocks(options.block_px))
+    windows = list(scene.grid.blocks(options.block_px or block_side_px(scene)))
     engine = options.engine or Threads(options.jobs)
     with open_unfinished(folder, scene.grid, work.layers, windows, _origin(work)) as store:
         resumed = len(store.tallies)
@@ -130,6 +132,20 @@ def classify_scene(
         resumed_blocks=resumed,
         warnings=(*engine.warnings, *_unreadable(delivered.tallies, windows)),
     )
+
+
+def block_side_px(scene: Scene) -> int:
+    """Side of blocks that whole tiles of the scene's files fill, so that no tile is decoded twice: 512 to 1024 pixels.
+
+    Blocks of 512 where files are not tiled, or not on the map's grid.
+    """
+    sides = []
+    for path in dict.fromkeys(band.path for band in scene.bands if band.native == scene.grid):
+        with open_raster(path) as dataset:
+            height, width = dataset.block_shapes[0]
+        if height == width and height <= _LARGEST_BLOCK_PX:
+            sides.append(height * -(-_BLOCK_PX // height))
+    return max((side for side in sides if side <= _LARGEST_BLOCK_PX), default=_BLOCK_PX)
 
 
 def _layers(model: TrainedModel, options: MapOptions) -> tuple[LayerName, ...]:
