@@ -1,6 +1,6 @@
 """Blocks on a Dask cluster: the same work as in threads, on whichever workers the scheduler has.
 
-Workers get the model and the description of the scene once, through a worker plugin, also workers that join later; a
+Workers get the model once and the description of a scene once, through worker plugins, also workers that join later; a
 block is then a number and a window. What a lost worker had not finished, the scheduler gives to another. Blocks come
 back to this process, which writes them: workers need to reach the scene's files, not the output folder.
 """
@@ -12,6 +12,7 @@ from __future__ import annotations
 import time
 from collections.abc import Generator, Sequence
 from concurrent.futures import CancelledError
+from contextlib import suppress
 from itertools import islice
 from typing import Any
 from uuid import uuid4
@@ -22,6 +23,7 @@ from threadpoolctl import threadpool_limits
 
 from classify.errors import LandassayError, Problem
 from classify.mapping.blocks import Block, BlockWork
+from classify.models import TrainedModel
 from classify.raster.grid import Window
 
 # How long a scheduler may take to answer and, when it has, to have a first worker, in seconds.
@@ -30,6 +32,8 @@ _ANSWER_S = 10
 _NO_WORKER_S = 60
 _LOOK_UP_S = 2
 _UNDER_WAY = 2
+# What is raised by a client whose cluster is gone, and the work with it.
+_GONE = (OSError, TimeoutError, CancelledError, RuntimeError, ValueError)
 # A future of distributed, which does not say of what.
 _Future = Any
 # Libraries whose versions may change labels or the last digits of features.
@@ -41,6 +45,7 @@ class Cluster:
 
     def __init__(self, client: distributed.Client, address: str, warnings: tuple[Problem, ...]) -> None:
         self._client, self._address, self.warnings = client, address, warnings
+        self._models: list[_Model] = []
 
     def __enter__(self) -> Cluster:
         return self
@@ -49,14 +54,17 @@ class Cluster:
         self.close()
 
     def close(self) -> None:
-        """Leave the cluster; it goes on for others."""
+        """Leave the cluster, which goes on for others."""
+        for plugin in self._models:
+            self._forget(plugin)
+        self._models.clear()
         self._client.close()
 
     def run(self, work: BlockWork, windows: Sequence[tuple[int, Window]]) -> Generator[Block]:
         """See Engine. Raises LandassayError when the scheduler or all workers are gone."""
         if not windows:
             return
-        plugin = _Work(f"landassay-{uuid4().hex}", work)
+        plugin = _Work(self._send_model(work.model), work)
         self._client.register_plugin(plugin)
         under_way: set[_Future] = set()
         remaining = iter(windows)
@@ -72,6 +80,16 @@ class Cluster:
                     yield self._result(future)
         finally:
             self._leave(plugin, under_way)
+
+    def _send_model(self, model: TrainedModel) -> str:
+        """The name under which workers have the model: it goes out once, however many scenes follow."""
+        for sent in self._models:
+            if sent.model is model:
+                return sent.name
+        plugin = _Model(model)
+        self._client.register_plugin(plugin)
+        self._models.append(plugin)
+        return plugin.name
 
     def _threads(self) -> dict[str, int]:
         try:
@@ -108,11 +126,13 @@ class Cluster:
         return LandassayError(f"the cluster cannot go on: {why}", where=self._address, fix=fix)
 
     def _leave(self, plugin: _Work, under_way: set[_Future]) -> None:
-        try:
+        with suppress(*_GONE):
             self._client.cancel(list(under_way))
+        self._forget(plugin)
+
+    def _forget(self, plugin: _Model | _Work) -> None:
+        with suppress(*_GONE):
             self._client.unregister_worker_plugin(plugin.name)
-        except (OSError, TimeoutError, CancelledError, RuntimeError, ValueError):
-            return  # the cluster is gone, and the work with it
 
 
 def connect(address: str) -> Cluster:
@@ -159,26 +179,47 @@ def _differences(client: distributed.Client, address: str) -> tuple[Problem, ...
     return tuple(found)
 
 
-class _Work(WorkerPlugin):
-    """Keeps the work on a worker, with libraries underneath at one thread each."""
+class _Model(WorkerPlugin):
+    """Keeps the model on a worker, with libraries underneath at one thread each."""
 
-    def __init__(self, name: str, work: BlockWork) -> None:
-        self.name, self.work = name, work
+    def __init__(self, model: TrainedModel) -> None:
+        self.name, self.model = f"landassay-model-{uuid4().hex}", model
         self._limits: Any = None
 
     def setup(self, worker: Any) -> None:  # noqa: ANN401
         self._limits = threadpool_limits(1)
 
     def teardown(self, worker: Any) -> None:  # noqa: ANN401
-        self.work.close()
         self._limits.restore_original_limits()
 
 
+class _Work(WorkerPlugin):
+    """Keeps on a worker what is to be done with one scene; the model is put in there."""
+
+    def __init__(self, model_name: str, work: BlockWork) -> None:
+        self.name, self._model_name = f"landassay-scene-{uuid4().hex}", model_name
+        self._scene, self._layers, self._skip = work.scene, work.layers, work.skip_unreadable
+        self._work: BlockWork | None = None
+
+    def work(self, worker: Any) -> BlockWork:  # noqa: ANN401
+        """The work, complete. Two threads that ask first at the same time may each make one, which does no harm."""
+        if self._work is None:
+            model = worker.plugins[self._model_name].model
+            self._work = BlockWork(model, self._scene, self._layers, self._skip)
+        return self._work
+
+    def teardown(self, worker: Any) -> None:  # noqa: ANN401
+        if self._work is not None:
+            self._work.close()
+
+
 def _block(name: str, number: int, window: Window) -> Block | LandassayError:
-    plugin = distributed.get_worker().plugins[name]
+    worker = distributed.get_worker()
+    plugin = worker.plugins[name]
     assert isinstance(plugin, _Work), name
+    work = plugin.work(worker)
     try:
-        return plugin.work.compute(number, window, plugin.work.read(window))
+        return work.compute(number, window, work.read(window))
     except LandassayError as error:
         # As a value: what an error was raised from cannot always travel, and it would arrive without its place.
         return type(error)(error.problems)
