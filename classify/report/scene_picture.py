@@ -35,33 +35,40 @@ def scene_layers(project: Project, cover: Path) -> tuple[Layer, ...]:
     """Natural and false colour layers, as far as the scene's bands allow; none when the scene is no longer there."""
     try:
         bands = {band.role: band for band in open_scene(project.scene, project).bands}
-        grid = read_grid(cover)
-        layers = [
-            Layer(kind, _composite([bands[role] for role in roles], grid), "image/jpeg")
+        chosen = {
+            kind: roles
             for kind, sets in _SHOWN.items()
-            for roles in [next((s for s in sets if all(role in bands for role in s)), None)] if roles
-        ]  # fmt: skip
+            for roles in [next((s for s in sets if all(role in bands for role in s)), None)]
+            if roles is not None
+        }
+        grid = read_grid(cover)
+        grey = {
+            role: _stretched(_decimated(bands[role], grid)) for role in sorted({r for s in chosen.values() for r in s})
+        }
     except (LandassayError, RasterioError):
         # The pictures are for orientation only; numbers never come from them, so a report is made without.
         return ()
-    return tuple(layers)
+    return tuple(Layer(kind, _composite([grey[r] for r in roles]), "image/jpeg") for kind, roles in chosen.items())
 
 
-def _composite(bands: Sequence[BandSource], grid: Grid) -> bytes:
-    channels = [_stretched(_decimated(band, grid)) for band in bands]
+def _composite(channels: Sequence[NDArray[np.uint8]]) -> bytes:
     buffer = io.BytesIO()
     Image.fromarray(np.dstack(channels)).save(buffer, "JPEG", quality=_QUALITY, optimize=True)
     return buffer.getvalue()
 
 
 def _decimated(band: BandSource, grid: Grid) -> NDArray[np.float32]:
-    """Stored numbers of a band on the picture's pixels, float32 (h, w), NaN where there is no data."""
+    """Stored numbers of a band on the picture's pixels, float32 (h, w), NaN where there is no data.
+
+    Nearest neighbours, as the warper's smoother kernels read every pixel of a large scene to fill a small picture.
+    """
     height, width = picture_shape(grid.height, grid.width)
     transform = grid.transform @ Affine.scale(grid.width / width, grid.height / height)
+    smooth = height == grid.height and width == grid.width
     with (
         rasterio.open(band.path) as source,
-        WarpedVRT(source, crs=grid.crs, transform=transform, width=width, height=height,
-                  resampling=Resampling.bilinear, nodata=band.nodata) as view,
+        WarpedVRT(source, crs=grid.crs, transform=transform, width=width, height=height, nodata=band.nodata,
+                  resampling=Resampling.bilinear if smooth else Resampling.nearest) as view,
     ):  # fmt: skip
         values = view.read(band.band, masked=True).astype(np.float32)
     return np.ma.filled(values, np.nan)
