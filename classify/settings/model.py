@@ -27,11 +27,13 @@ SampleEvidence = Literal["probability sample", "purposive sample"]
 # The acre is the international one.
 M2_PER_UNIT: dict[str, float] = {"ha": 10_000.0, "km2": 1_000_000.0, "m2": 1.0, "acre": 4046.8564224}
 
-# Okabe & Ito (2008), "Color universal design", the published colour-blind-safe scheme, then four tints of it for
+# Okabe & Ito (2008), "Color universal design", the published colour-blind-safe scheme, then tints and shades of it for
 # projects with more classes than the scheme has colours. Used only for classes whose colour is not given.
 DEFAULT_COLOURS = (
     "#009e73", "#e69f00", "#56b4e9", "#d55e00", "#0072b2", "#cc79a7", "#f0e442", "#000000",
     "#66c5ab", "#f0c566", "#9ad2f2", "#e69e66",
+    "#00573f", "#7f5700", "#2f6380", "#753400", "#003f62", "#70435c", "#847d24",
+    "#ade0d2", "#f7e0ad", "#c9e7f8", "#f2cbad", "#add2e6", "#efd4e3", "#faf6c3",
 )  # fmt: skip
 
 # Names that formulas use for bands and features: letters, digits and underscores, not starting with a digit.
