@@ -19,9 +19,7 @@ from classify.training import extract_pixels, read_polygons
 
 @pytest.fixture
 def trained(small_project: Path) -> tuple[TrainedModel, Scene]:
-    text = (
-        (small_project / "project.toml").read_text().replace("trees = 30", "trees = 5\nrepeats = 1\nimportance = false")
-    )
+    text = (small_project / "project.toml").read_text().replace("trees = 30", "trees = 5")
     (small_project / "project.toml").write_text(text)
     project = load_project(small_project)
     scene = open_scene(project.scene, project)
