@@ -45,8 +45,33 @@ def _areas(facts: ReportFacts, accuracy: AccuracyFacts, words: Messages) -> Iter
     if len(accuracy.classes) > DRAWN_ON_PAGE_ONE:
         yield area_figure(facts, accuracy, words)
     yield _area_table(accuracy, words)
+    yield from _region_tables(accuracy, words)
     if facts.map is not None:
         yield mapped_table(facts, words)
+
+
+def _region_tables(accuracy: AccuracyFacts, words: Messages) -> Iterator[Table]:
+    """Accuracy of each region, and its class areas."""
+    if not accuracy.regions:
+        return
+    limits = ("lower", "upper")
+    columns = (
+        Column(words.text("column.region")),
+        Column(words.text("column.points"), "integer"),
+        Column(words.text("agreement.overall"), "percent", 1),
+        *(Column(words.text(f"column.{key}"), "percent", 1) for key in limits),
+    )
+    rows = tuple((r.region, r.n, r.overall.estimate, r.overall.lower, r.overall.upper) for r in accuracy.regions)
+    yield Table("regions", words.text("areas.regions"), columns, rows)
+    unit = unit_word(accuracy.unit, words)
+    places = area_decimals([a for r in accuracy.regions for a in r.area.values()])
+    columns = (
+        Column(words.text("column.region")),
+        Column(words.text("column.class")),
+        *(Column(words.text(f"column.{key}"), "number", places, unit) for key in ("estimated", *limits)),
+    )
+    areas = tuple((r.region, n, a.estimate, a.lower, a.upper) for r in accuracy.regions for n, a in r.area.items())
+    yield Table("region_areas", words.text("areas.region_areas"), columns, areas)
 
 
 def _is_outside(accuracy: AccuracyFacts, name: str) -> bool:
@@ -98,6 +123,12 @@ def _accuracies(facts: ReportFacts, accuracy: AccuracyFacts, words: Messages) ->
         for n, u, p in zip(accuracy.classes, users, producers, strict=True)
     )
     drawing = accuracy_drawing(classes, users, producers, words.text("accuracy.figure", level=level), style)
+    if accuracy.either is not None:
+        share = style.percent(accuracy.either.estimate)
+        yield Paragraph(words.rich("accuracy.either", share=share))
+    if accuracy.unlabelled:
+        low, high = (style.percent(bound) for bound in accuracy.unlabelled_bounds)
+        yield Paragraph(words.rich("accuracy.unlabelled", points=accuracy.unlabelled, low=low, high=high), "caution")
     yield Figure("accuracy", drawing.markup(), words.text("accuracy.caption", level=level), alt)
     yield _accuracy_table(accuracy, words)
 

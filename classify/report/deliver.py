@@ -21,6 +21,7 @@ from classify.report.facts import (
     Heading,
     ModelFacts,
     Provenance,
+    RegionFact,
     ReportFacts,
     StratumFact,
 )
@@ -89,6 +90,12 @@ def _accuracy(content: Mapping[str, Any]) -> AccuracyFacts:
         plain[key] = Estimate(**content[key])
     for key in ("counts", "shares"):
         plain[key] = tuple(tuple(row) for row in content[key])
+    if content["either"] is not None:
+        plain["either"] = Estimate(**content["either"])
+    plain["regions"] = tuple(
+        RegionFact(r["region"], r["n"], Estimate(**r["overall"]), {n: Estimate(**a) for n, a in r["area"].items()})
+        for r in content["regions"]
+    )
     plain["strata"] = tuple(StratumFact(**s) for s in content["strata"])
     return AccuracyFacts(**_tuples(plain))
 

@@ -85,8 +85,22 @@ class StratumFact:
 
 
 @dataclass(frozen=True, slots=True)
+class RegionFact:
+    """One region of the mapped area: labelled points, its overall accuracy and its class areas."""
+
+    region: str
+    n: int
+    overall: Estimate
+    area: Mapping[str, Estimate]
+
+
+@dataclass(frozen=True, slots=True)
 class AccuracyFacts:
-    """What assessment.json says, with estimates by class name. Matrices: rows map, columns reference."""
+    """What assessment.json says, with estimates by class name. Matrices: rows map, columns reference.
+
+    either: overall agreement with the first or the second label, where points have two. unlabelled: points that nobody
+    could label; unlabelled_bounds: overall accuracy if the map were wrong, or right, on all of them.
+    """
 
     evidence: EvidenceName
     level: float
@@ -107,6 +121,11 @@ class AccuracyFacts:
     quantity: float | None
     allocation: float | None
     warnings: tuple[str, ...] = ()
+    clusters: bool = False
+    either: Estimate | None = None
+    unlabelled: int = 0
+    unlabelled_bounds: tuple[float | None, float | None] = (None, None)
+    regions: tuple[RegionFact, ...] = ()
 
     @property
     def points(self) -> int:

@@ -18,6 +18,7 @@ from classify.report.facts import (
     MapFact,
     ModelFacts,
     Provenance,
+    RegionFact,
     ReportFacts,
     StageKey,
     StratumFact,
@@ -85,11 +86,28 @@ def accuracy_facts(content: Mapping[str, Any], path: Path) -> AccuracyFacts:
             mapped={name: content["area"][name]["mapped"] for name in classes},
             area=_by_class(content["area"], classes), kappa=_estimate(content["kappa"]),
             quantity=content["quantity_disagreement"], allocation=content["allocation_disagreement"],
-            warnings=tuple(content["warnings"]),
+            warnings=tuple(content["warnings"]), **_extras(content, classes),
         )  # fmt: skip
     except (KeyError, TypeError, ValueError) as error:
         raise DataError(f"this assessment lacks {error}", where=str(path),
                         fix="run 'landassay assess' again") from error  # fmt: skip
+
+
+def _extras(content: Mapping[str, Any], classes: Sequence[str]) -> dict[str, Any]:
+    """What only some samples have: clusters, second labels, points that could not be labelled, regions."""
+    either, unlabelled = content.get("either_label"), content.get("unlabelled")
+    found: dict[str, Any] = {"clusters": bool(content["design"].get("clusters"))}
+    if either is not None:
+        found["either"] = _estimate(either["overall_accuracy"])
+    if unlabelled is not None:
+        bounds = unlabelled["overall_accuracy"]
+        found["unlabelled"] = int(unlabelled["points"])
+        found["unlabelled_bounds"] = (bounds["if_all_wrong"], bounds["if_all_right"])
+    found["regions"] = tuple(
+        RegionFact(name, r["n"], _estimate(r["overall_accuracy"]), _by_class(r["area"], classes))
+        for name, r in content.get("regions", {}).items()
+    )
+    return found
 
 
 def _estimate(content: Mapping[str, Any]) -> Estimate:

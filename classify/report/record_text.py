@@ -30,6 +30,8 @@ def _method(facts: ReportFacts, accuracy: AccuracyFacts, words: Messages) -> Ite
     yield Paragraph(
         words.rich(f"method.design_{key}", points=style.number(accuracy.points), strata=len(accuracy.strata), area=area)
     )
+    if accuracy.clusters:
+        yield Paragraph(words.rich("method.clusters"))
     yield Table(
         "strata", words.text("method.strata"),
         (
