@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import multiprocessing
+import os
 import random
 import resource
 import signal
@@ -19,6 +20,7 @@ from rio_cogeo.cogeo import cog_validate
 from small_project import make_small_project
 
 from classify.errors import DataError, OutputError
+from classify.mapping import blocks
 from classify.mapping.classify_scene import MapOptions, block_side_px, classify_scene
 from classify.mapping.tidy import TidyOptions
 from classify.mapping.unfinished import FOLDER
@@ -278,13 +280,44 @@ def run_killed(map_into, out, after_lines, pause_s):
 
 @pytest.mark.skipif(sys.platform == "win32", reason="forks")
 @pytest.mark.filterwarnings("ignore:This process:DeprecationWarning")
+def test_ctrl_c_ends_soon_and_keeps_what_is_done(made, tmp_path):
+    _, model, _, map_into = made
+    # A model so slow that one block takes a quarter of a minute.
+    slow = model.predict_both
+
+    def predict_both(pixels):
+        time.sleep(len(pixels) / 800)
+        return slow(pixels)
+
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(blocks, "_ROWS", 200)
+        patch.setattr(type(model), "predict_both", lambda self, pixels: predict_both(pixels))
+        process = multiprocessing.get_context("fork").Process(
+            target=map_into, args=(tmp_path, replace(OPTIONS, block_px=96, jobs=2)), daemon=True
+        )
+        process.start()
+        while not (tmp_path / FOLDER / "journal.jsonl").exists():
+            time.sleep(0.01)
+        time.sleep(0.5)
+        start = time.monotonic()
+        os.kill(process.pid, signal.SIGINT)
+        process.join(30)
+        assert time.monotonic() - start < 5
+        assert process.exitcode == 1
+    assert not (tmp_path / "cover.tif").exists()
+    map_into(tmp_path, replace(OPTIONS, block_px=96))
+    assert (tmp_path / "cover.tif").exists()
+
+
+@pytest.mark.skipif(sys.platform == "win32", reason="forks")
+@pytest.mark.filterwarnings("ignore:This process:DeprecationWarning")
 @pytest.mark.parametrize("kills", [12, pytest.param(100, marks=pytest.mark.study)])
 def test_killed_at_random_moments_the_map_is_the_same(made, tmp_path, kills):
     map_into = made[-1]
     map_into(tmp_path / "straight")
     choose = random.Random(5)
-    blocks, killed = 12 * 15, 0
-    for after in sorted(choose.randrange(1, blocks + 2) for _ in range(kills)):
+    killed = 0
+    for after in sorted(choose.randrange(1, 12 * 15 + 2) for _ in range(kills)):
         killed += run_killed(map_into, tmp_path / "killed", after, choose.uniform(0, 0.02))
     assert killed >= 10
     map_into(tmp_path / "killed", replace(OPTIONS, block_px=8))
