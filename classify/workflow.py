@@ -1,29 +1,22 @@
-"""Stages of a project: what each needs and makes, which are stale, and the record that lets a result be repeated.
+"""Stages of a project: what each needs and makes, which are stale, and how they are run in order.
 
-A stage is up to date when its outputs exist and its fingerprint - input files by SHA-256, the settings it reads, the
-fingerprints of the stages before it, the version of this package - equals the one recorded in run.json.
+What makes a stage stale is in `record`. A stage rests on the results of earlier ones by content, not by name: after
+`train` has made another model, the map is stale; after it has made the same one again, it is not.
 """
 
 from __future__ import annotations
 
-import hashlib
-import json
-import platform
 import time
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
-from datetime import UTC, datetime
-from functools import cache
-from importlib.metadata import version
 from pathlib import Path
 from typing import Any, Literal
 
-from classify import __version__
 from classify.assessment import assess_project
 from classify.errors import DataError, Problem
 from classify.features import Recipe, build_recipe, fit_recipe, scene_facts
-from classify.files import read_json, remove_leftovers, sha256, write_json
+from classify.files import read_json, remove_leftovers, write_json
 from classify.mapping.classify_scene import MapOptions, classify_scene
 from classify.mapping.engines import cluster
 from classify.mapping.many import ManyResult, classify_many, find_scenes, time_of
@@ -31,14 +24,13 @@ from classify.mapping.stac import ItemFacts, identifier, write_item
 from classify.models import check_scene, fit_model, inspect_training, load_model, save_model
 from classify.progress import SILENT, Progress
 from classify.raster.scene import open_scene
+from classify.record import Record, Snapshot
 from classify.report import gather_facts, write_report, write_review
 from classify.settings import Project
 from classify.training import PixelCaps, TrainingSet, extract_pixels, read_polygons, write_pixels
 
 StageName = Literal["review", "train", "classify", "assess", "report"]
 State = Literal["done", "stale", "missing", "not asked for"]
-
-_LIBRARIES = ("numpy", "scipy", "pandas", "scikit-learn", "rasterio", "geopandas", "pyproj", "shapely", "skops")
 
 
 @dataclass(frozen=True, slots=True)
@@ -63,23 +55,39 @@ class Job:
 
 @dataclass(frozen=True, slots=True)
 class StageResult:
-    """What a stage says when it ends: a summary for people and programs, and warnings that travel to the report."""
+    """What a stage says when it ends: a summary for people and programs, and warnings that travel to the report.
+
+    whole: False if something was left out (unreadable blocks), so that the stage does not count as done.
+    """
 
     summary: dict[str, Any]
     warnings: tuple[Problem, ...] = ()
+    whole: bool = True
 
 
 @dataclass(frozen=True, slots=True)
 class Stage:
-    """One stage. `sections` are the parts of the project file it reads; `inputs` the files; `outputs` what it makes."""
+    """One stage.
+
+    sections: parts of the project file that it reads. inputs: files of the user, as written there. reads: results of
+    earlier stages, below outputs/; it cannot run without those in `needs`. outputs: what it always makes; extras: what
+    it may make besides.
+    """
 
     name: StageName
-    after: tuple[StageName, ...]
     sections: tuple[str, ...]
     inputs: Callable[[Project], list[str]]
     outputs: tuple[str, ...]
     work: Callable[[Job], StageResult]
+    needs: tuple[str, ...] = ()
+    reads: tuple[str, ...] = ()
+    extras: tuple[str, ...] = ()
     wanted: Callable[[Project], bool] = field(default=lambda project: True)
+
+    @property
+    def results_read(self) -> tuple[str, ...]:
+        """All results of earlier stages that it reads."""
+        return (*self.needs, *self.reads)
 
 
 @dataclass(frozen=True, slots=True)
@@ -93,8 +101,17 @@ class StageStatus:
 
 def status(project: Project) -> list[StageStatus]:
     """State of every stage, in order, without running anything."""
-    now, record = _snapshot(project), _read_record(project)
-    return [_status(stage, project, now.fingerprints[stage.name], record) for stage in STAGES]
+    record, waiting = Record(project), set[StageName]()
+    result = []
+    for stage in STAGES:
+        found = _own_status(stage, project, record)
+        if found.state in ("stale", "missing"):
+            waiting.add(stage.name)
+        elif found.state == "done" and (before := _earlier(stage) & waiting):
+            found = StageStatus(stage.name, "stale", f"it rests on {', '.join(sorted(before))}, to be done again")
+            waiting.add(stage.name)
+        result.append(found)
+    return result
 
 
 def model_facts(project: Project) -> dict[str, Any] | None:
@@ -126,8 +143,7 @@ def run(
     for stage in STAGES:
         if (stages is not None and stage.name not in stages) or not stage.wanted(job.project):
             continue
-        state = next(s for s in status(job.project) if s.name == stage.name)
-        if state.state == "done" and not force:
+        if not force and _own_status(stage, job.project, Record(job.project)).state == "done":
             results[stage.name] = None
         else:
             _require_earlier(stage, job.project)
@@ -140,23 +156,62 @@ def _run_stage(stage: Stage, job: Job) -> StageResult:
     for name in {Path(output).parent for output in stage.outputs}:
         if (job.outputs / name).is_dir():
             remove_leftovers(job.outputs / name)
+    outdated = [s for s in status(job.project) if s.name in _earlier(stage) and s.state == "stale"]
     # Taken before the work: if an input changes meanwhile, the stage counts as stale afterwards.
-    before = _snapshot(job.project)
+    before = _snapshot(stage, job.project, Record(job.project))
     start = time.perf_counter()
     result = stage.work(job)
-    _record(stage, job.project, before, result, time.perf_counter() - start)
+    said = (
+        Problem(
+            f"'{s.name}' is stale ({s.why}); this rests on its earlier result",
+            "",
+            "'landassay run' does both",
+            "warning",
+        )
+        for s in outdated
+    )
+    result = replace(result, warnings=(*result.warnings, *said))
+    made = [path for path in (*stage.outputs, *stage.extras) if (job.outputs / path).is_file()]
+    Record(job.project).add(
+        stage.name, before, made,
+        seconds=time.perf_counter() - start, warnings=result.warnings, whole=result.whole,
+    )  # fmt: skip
     return result
 
 
 def _require_earlier(stage: Stage, project: Project) -> None:
-    for earlier in (s for s in STAGES if s.name in stage.after):
-        lacking = [path for path in earlier.outputs if not (project.folder / "outputs" / path).is_file()]
-        if lacking and earlier.wanted(project):
+    for path in stage.needs:
+        if not (project.folder / "outputs" / path).is_file():
+            earlier = next(s.name for s in STAGES if path in s.outputs)
             raise DataError(
-                f"'{stage.name}' needs the result of '{earlier.name}', which is missing",
-                where=str(project.folder / "outputs" / lacking[0]),
-                fix=f"run 'landassay {earlier.name}' first, or 'landassay run' for everything",
+                f"'{stage.name}' needs the result of '{earlier}', which is missing",
+                where=str(project.folder / "outputs" / path),
+                fix=f"run 'landassay {earlier}' first, or 'landassay run' for everything",
             )
+
+
+def _earlier(stage: Stage) -> set[StageName]:
+    """The stages whose results a stage reads."""
+    return {s.name for s in STAGES if set(stage.results_read) & {*s.outputs, *s.extras}}
+
+
+def _own_status(stage: Stage, project: Project, record: Record) -> StageStatus:
+    """State of a stage by what lies there now, whatever earlier stages are yet to do."""
+    if not stage.wanted(project):
+        return StageStatus(stage.name, "not asked for", "the project file has no section for it")
+    lacking = [
+        path for path in (*stage.outputs, *record.outputs(stage.name))
+        if not (project.folder / "outputs" / path).is_file()
+    ]  # fmt: skip
+    if lacking:
+        return StageStatus(stage.name, "missing", f"outputs/{lacking[0]} is not there")
+    if record.fingerprint(stage.name) != _snapshot(stage, project, record).fingerprint:
+        return StageStatus(stage.name, "stale", "its inputs, its settings or an earlier result have changed")
+    return StageStatus(stage.name, "done")
+
+
+def _snapshot(stage: Stage, project: Project, record: Record) -> Snapshot:
+    return record.snapshot(stage.sections, stage.inputs(project), stage.results_read)
 
 
 # --- the stages -----------------------------------------------------------------------------------------------------
@@ -204,9 +259,7 @@ def _classify(job: Job) -> StageResult:
     findings = check_scene(model, scene)
     folder = job.outputs / "map"
     with _map_options(job) as options:
-        result = classify_scene(
-            model, scene, folder, classes=project.classes, options=options, progress=job.progress
-        )
+        result = classify_scene(model, scene, folder, classes=project.classes, options=options, progress=job.progress)
     when, source = time_of([band.path for band in scene.bands])
     item = ItemFacts(identifier(project.project.title), project.project.title, when, source, {})
     files = {**result.files, "areas": folder / "areas.csv"}
@@ -216,7 +269,7 @@ def _classify(job: Job) -> StageResult:
         "unmapped_pixels": result.unmapped_pixels,
         "unmapped_m2": result.unmapped_m2,
     }
-    return StageResult(summary, (*scene.warnings, *findings))
+    return StageResult(summary, (*scene.warnings, *findings, *result.warnings), whole=not result.unreadable_blocks)
 
 
 def map_scenes(job: Job, sources: Sequence[str], folder: Path, *, overwrite: bool = False) -> ManyResult:
@@ -279,125 +332,33 @@ def _with_companions(project: Project, written: str) -> list[str]:
 
 STAGES: tuple[Stage, ...] = (
     Stage(
-        "review", (), ("project.title", "project.seed", "scene", "classes", "training", "features", "report.language"),
+        "review", ("project.title", "project.seed", "scene", "classes", "training", "features", "report.language"),
         _training_inputs, ("training/review.json", "training/review.html"), _review,
     ),
     Stage(
-        "train", (), ("project.seed", "scene", "classes", "training", "features", "model"),
-        _training_inputs,
+        "train", ("project.seed", "scene", "classes", "training", "features", "model"), _training_inputs,
         ("training/pixels.parquet", "model/model.skops", "model/model.json"), _train,
+        extras=("model/reach.npz",),
     ),
     Stage(
-        "classify", ("train",), ("scene", "classes", "map", "report.area_unit"), _scene_inputs,
-        ("map/cover.tif", "map/areas.csv"), _classify,
+        "classify", ("scene", "classes", "map", "report.area_unit"), _scene_inputs,
+        ("map/cover.tif", "map/areas.csv", "map/item.json"), _classify,
+        needs=("model/model.json", "model/model.skops"), reads=("model/reach.npz",),
+        extras=("map/confidence.tif", "map/reach.tif", "map/raw.tif", "map/cover.gpkg"),
     ),
     Stage(
-        "assess", ("classify",),
+        "assess",
         ("project.seed", "classes", "reference", "report.confidence_level", "report.interval", "report.area_unit"),
         _reference_inputs,
-        ("assessment/assessment.json",), _assess, lambda project: project.reference is not None,
+        ("assessment/assessment.json", "assessment/accuracy.csv", "assessment/areas.csv", "assessment/matrix.csv",
+         "assessment/strata.csv"), _assess,
+        needs=("map/cover.tif", "map/areas.csv"), wanted=lambda project: project.reference is not None,
     ),
-    Stage("report", ("review", "train", "classify", "assess"), ("project", "classes", "report"), lambda project: [],
-          ("report/report.html", "report/report.pdf", "report/tables.xlsx"), _report),
+    Stage(
+        "report", ("project", "classes", "report"),
+        lambda project: [project.report.logo] if project.report.logo else [],
+        ("report/report.html", "report/report.pdf", "report/tables.xlsx", "report/manifest.json"), _report,
+        needs=("model/model.json", "map/cover.tif", "map/areas.csv"),
+        reads=("training/review.json", "map/confidence.tif", "map/reach.tif", "assessment/assessment.json"),
+    ),
 )  # fmt: skip
-
-
-# --- what is stale --------------------------------------------------------------------------------------------------
-
-
-def _status(stage: Stage, project: Project, fingerprint: str, record: Mapping[str, Any]) -> StageStatus:
-    if not stage.wanted(project):
-        return StageStatus(stage.name, "not asked for", "the project file has no section for it")
-    lacking = [path for path in stage.outputs if not (project.folder / "outputs" / path).is_file()]
-    if lacking:
-        return StageStatus(stage.name, "missing", f"outputs/{lacking[0]} is not there")
-    known = record.get("stages", {}).get(stage.name, {})
-    if known.get("fingerprint") != fingerprint:
-        return StageStatus(stage.name, "stale", "its inputs, settings or an earlier stage have changed")
-    return StageStatus(stage.name, "done")
-
-
-@dataclass(frozen=True, slots=True)
-class _Snapshot:
-    """Inputs (path as written -> size, time of change, SHA-256) and fingerprints of all stages at one moment."""
-
-    inputs: dict[str, dict[str, Any]]
-    fingerprints: dict[str, str]
-
-
-def _snapshot(project: Project) -> _Snapshot:
-    known = _read_record(project).get("inputs", {})
-    wanted = [stage for stage in STAGES if stage.wanted(project)]
-    inputs = {path: _input(project, path, known) for stage in wanted for path in stage.inputs(project)}
-    settings = project.model_dump(mode="json")
-    fingerprints: dict[str, str] = {}
-    for stage in STAGES:
-        parts = {
-            "version": __version__,
-            "settings": {name: _section(settings, name) for name in stage.sections},
-            "inputs": {path: inputs[path]["sha256"] for path in stage.inputs(project) if path in inputs},
-            "earlier": {name: fingerprints[name] for name in stage.after},
-        }
-        fingerprints[stage.name] = hashlib.sha256(json.dumps(parts, sort_keys=True).encode()).hexdigest()
-    return _Snapshot(inputs, fingerprints)
-
-
-def _section(settings: Mapping[str, Any], dotted: str) -> Any:  # noqa: ANN401 - any setting
-    for key in dotted.split("."):
-        settings = settings[key]
-    return settings
-
-
-def _input(project: Project, written: str, known: Mapping[str, Any]) -> dict[str, Any]:
-    """Size, time and hash of an input file; the recorded hash is kept while size and time of change are the same."""
-    path = project.path(written)
-    file = Path(path)
-    if path.startswith("/vsi") or "://" in path or not file.is_file():
-        # Remote files have no cheap hash: the address stands for the content.
-        return {"sha256": None}
-    facts = file.stat()
-    before: dict[str, Any] = known.get(written, {})
-    if before.get("bytes") == facts.st_size and before.get("modified_ns") == facts.st_mtime_ns:
-        return before
-    digest = _hash_once(file, facts.st_size, facts.st_mtime_ns)
-    return {"bytes": facts.st_size, "modified_ns": facts.st_mtime_ns, "sha256": digest}
-
-
-@cache
-def _hash_once(file: Path, size: int, modified_ns: int) -> str:  # size and time are part of the key
-    return sha256(file)
-
-
-def _read_record(project: Project) -> dict[str, Any]:
-    path = project.folder / "outputs" / "run.json"
-    if not path.is_file():
-        return {}
-    try:
-        return read_json(path)
-    except DataError:
-        # A damaged record only means that every stage counts as stale; it is written anew by the next run.
-        return {}
-
-
-def _record(stage: Stage, project: Project, before: _Snapshot, result: StageResult, seconds: float) -> None:
-    outputs = project.folder / "outputs"
-    stages = _read_record(project).get("stages", {})
-    stages[stage.name] = {
-        "fingerprint": before.fingerprints[stage.name],
-        "finished": datetime.now(UTC).isoformat(timespec="seconds"),
-        "seconds": round(seconds, 2),
-        "outputs": {path: sha256(outputs / path) for path in stage.outputs},
-        "warnings": [str(warning) for warning in result.warnings],
-    }
-    record = {
-        "schema": 1,
-        "landassay": __version__,
-        "project_file": project.file.name,
-        "seed": project.project.seed,
-        "settings": project.model_dump(mode="json", by_alias=True),
-        "versions": {"python": platform.python_version(), **{name: version(name) for name in _LIBRARIES}},
-        "system": platform.system(),
-        "inputs": before.inputs,
-        "stages": stages,
-    }
-    write_json(outputs / "run.json", record)

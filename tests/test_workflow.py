@@ -100,6 +100,27 @@ def test_a_later_stage_alone_says_what_it_needs(small_project):
     assert not (small_project / "outputs").exists()
 
 
+def test_a_stage_run_alone_on_a_stale_one_says_so_and_is_done_again_after_it(finished):
+    before = sha256(finished / "outputs" / "map" / "cover.tif")
+    edit(finished, "trees = 30", "trees = 7")
+    edit(finished, 'client = "Sorrel Basin Water Board"', 'client = "Another"')
+    alone = run(Job(load_project(finished)), ["classify"], force=True)["classify"]
+    assert any("'train' is stale" in warning.what for warning in alone.warnings)
+    assert sha256(finished / "outputs" / "map" / "cover.tif") == before
+    assert states(finished)["classify"] == "stale"
+    after = run(Job(load_project(finished)))
+    assert after["review"] is None
+    # Assessment rests on the map alone: whether it is done again depends on whether the map came out another.
+    assert all(after[name] is not None for name in ("train", "classify", "report"))
+    assert read_json(finished / "outputs" / "model" / "model.json")["settings"]["trees"] == 7
+    assert set(states(finished).values()) == {"done"}
+
+
+def test_what_a_stage_made_besides_is_missed_when_it_is_gone(finished):
+    (finished / "outputs" / "map" / "confidence.tif").unlink()
+    assert states(finished)["classify"] == "missing"
+
+
 def test_a_stage_that_fails_keeps_the_map_of_the_run_before(finished):
     before = sha256(finished / "outputs" / "map" / "cover.tif")
     (finished / "bands.tif").write_bytes(b"no raster at all")

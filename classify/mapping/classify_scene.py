@@ -76,7 +76,7 @@ class MapResult:
     files: path by layer; among them "raw", the class map as the model gave it, if it was tidied. areas: of the tidied
     map, one row per class with code, name, pixels, area_m2, area, unit and, with reach, beyond_reach_pixels.
     unmapped_pixels, unmapped_m2: without a class (masked, no data, outside). resumed_blocks: taken over from a run that
-    was interrupted. warnings: what the user should know, unreadable blocks among them.
+    was interrupted. unreadable_blocks: mapped as no data. warnings: what the user should know, these among them.
     """
 
     files: Mapping[str, Path]
@@ -84,6 +84,7 @@ class MapResult:
     unmapped_pixels: int
     unmapped_m2: float
     resumed_blocks: int = 0
+    unreadable_blocks: int = 0
     warnings: tuple[Problem, ...] = ()
 
     @property
@@ -130,6 +131,7 @@ def classify_scene(
         unmapped_pixels=sum(int(tally.pixels[NO_CLASS]) for tally in delivered.tallies),
         unmapped_m2=math.fsum(tally.area_m2[NO_CLASS] for tally in delivered.tallies),
         resumed_blocks=resumed,
+        unreadable_blocks=sum(bool(tally.unreadable) for tally in delivered.tallies),
         warnings=(*engine.warnings, *_unreadable(delivered.tallies, windows)),
     )
 
