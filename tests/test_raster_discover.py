@@ -372,6 +372,15 @@ def test_an_item_of_version_1_1_with_several_bands_in_an_asset(tmp_path):
     assert read_all(opened(tmp_path))["swir_1"][0, 0] == pytest.approx(0.3)
 
 
+def test_of_two_assets_of_one_band_the_finer_is_taken(tmp_path):
+    assets = {
+        "red_20": asset("red20.tif", "red") | {"gsd": 20}, "red_10": asset("red10.tif", "red", spatial_resolution=10),
+        "red_60": asset("red60.tif", "red") | {"gsd": 60},
+    }  # fmt: skip
+    draft = stac.item_draft(item(assets, "survey"), str(tmp_path / "item.json"))
+    assert [Path(b.file).name for b in draft.bands] == ["red10.tif"]
+
+
 def test_band_names_of_a_preset_win_over_common_names(tmp_path):
     # Items of Landsat products call their one near-infrared band by the common name of a narrow one.
     product = "LC09_L2SP_174083_20240611_20240612_02_T1"
