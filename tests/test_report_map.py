@@ -1,4 +1,4 @@
-"""The map as a picture: its scale and its north against pyproj, its pixels against the raster, its shares against all pixels."""
+"""The map as a picture: scale and north against pyproj, pixels and shares against the raster."""
 
 from __future__ import annotations
 
@@ -23,7 +23,10 @@ from classify.report.picture import ground_frame, map_fact, nice_step, picture_s
 COLOURS = ("#44aa99", "#ddcc77", "#332288")
 
 
-def write(path, values, crs="EPSG:32633", transform=Affine(30, 0, 500_000, 0, -30, 4_200_000), nodata=0):
+UTM = Affine(30, 0, 500_000, 0, -30, 4_200_000)
+
+
+def write(path, values, crs="EPSG:32633", transform=UTM, nodata=0):
     path.parent.mkdir(parents=True, exist_ok=True)
     with rasterio.open(path, "w", driver="GTiff", height=values.shape[0], width=values.shape[1], count=1, dtype="uint8",
                        crs=crs, transform=transform, nodata=nodata) as target:  # fmt: skip

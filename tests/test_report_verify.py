@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import json
 import shutil
 from pathlib import Path
@@ -12,10 +13,12 @@ import pytest
 from click.testing import CliRunner
 from report_projects import change_project, screening_project
 
+from classify.assessment import AssessmentOptions, assess
 from classify.cli.main import cli
 from classify.errors import DataError
 from classify.files import sha256
 from classify.report import gather_facts, verify, write_report
+from classify.report.gather import accuracy_facts
 
 
 @pytest.fixture(scope="module")
@@ -109,3 +112,21 @@ def test_command_exits_with_one_and_says_where(copy):
     bad = runner.invoke(cli, ["verify", str(copy), "--json"])
     assert bad.exit_code == 1
     assert json.loads(bad.stdout)["sound"] is False
+
+
+def test_regions_second_labels_and_unlabelled_points_are_reported_and_derived_again(tmp_path):
+    facts = gather_facts(change_project(tmp_path), tmp_path / "outputs")
+    points = facts.sample.points.copy()
+    points["region"] = ["North" if i % 3 else "South" for i in range(len(points))]
+    points["alternate"] = ["Stable forest" if i % 9 == 0 else "" for i in range(len(points))]
+    points.loc[:5, "reference"] = ""
+    method = {**facts.sample.method, "classes": tuple(facts.sample.method["classes"])}
+    content = assess(points, facts.sample.strata, AssessmentOptions(**method)).to_json()
+    sample = dataclasses.replace(facts.sample, points=points, assessment=content)
+    facts = dataclasses.replace(facts, sample=sample, accuracy=accuracy_facts(content, Path("assessment.json")))
+    folder = tmp_path / "outputs" / "report"
+    write_report(facts, folder)
+    assert verify(folder).sound
+    page = (folder / "report.html").read_text("utf-8")
+    assert 'id="table-regions"' in page and 'id="table-region_areas"' in page
+    assert "6 points could not be labelled" in page and "first or second choice" in page

@@ -133,14 +133,15 @@ def area_drawing(
         for place, i in enumerate(panel):
             y = top + 34 + _ROW * place + _ROW / 2 - 3
             _class_label(drawing, classes[i], y)
-            _area_row(drawing, axis, classes[i], estimates[i], y, style)
+            _area_row(drawing, axis, classes[i], estimates[i], y, (style, area_decimals(estimates)))
         top = bottom + 14
     return drawing
 
 
 def _area_row(  # noqa: PLR0917 - where, what and how
-    drawing: Drawing, axis: Axis, c: ClassFact, estimate: Estimate, y: float, style: NumberStyle
+    drawing: Drawing, axis: Axis, c: ClassFact, estimate: Estimate, y: float, form: tuple[NumberStyle, int]
 ) -> None:
+    style, places = form
     if estimate.estimate is None and c.mapped is not None:
         drawing.rect(axis.x0, y - 6, axis.at(c.mapped) - axis.x0, 12, c.colour, "ink")
         drawing.text(_WIDTH - _VALUES + 12, y + 4, style.rounded(c.mapped), font_size=12)
@@ -150,7 +151,8 @@ def _area_row(  # noqa: PLR0917 - where, what and how
         drawing.square(axis.at(c.mapped), y)
     if estimate.estimate is not None:
         drawing.dot(axis.at(estimate.estimate), y)
-        text = style.with_margin(estimate.estimate, estimate.lower, estimate.upper)
+        # The places of the table beside the drawing, so that the two read the same.
+        text = style.with_margin(estimate.estimate, estimate.lower, estimate.upper, decimals=places)
         drawing.text(_WIDTH - _VALUES + 12, y + 4, text, font_size=12)
 
 

@@ -37,12 +37,18 @@ class NumberStyle:
         """A proportion 0..1 in per cent."""
         return MISSING if share is None else self.number(100 * share, decimals) + self.percent_sign
 
-    def with_margin(self, estimate: float | None, lower: float | None, upper: float | None, unit: str = "") -> str:
-        """An estimate with its interval, right-sized: "21 200 ± 6 200 ha", or "3.1 (1.2 to 7.4) ha" when lopsided."""
+    def with_margin(
+        self, estimate: float | None, lower: float | None, upper: float | None, unit: str = "", *,
+        decimals: int | None = None,
+    ) -> str:  # fmt: skip
+        """An estimate with its interval: "21 200 ± 6 200 ha", or "3.1 ha (1.2 to 7.4 ha)" when it is lopsided.
+
+        decimals: places printed; None for those that give the margin two significant digits.
+        """
         tail = f"\u00a0{unit}" if unit else ""
         if estimate is None or lower is None or upper is None:
             return self.rounded(estimate) + (tail if estimate is not None else "")
-        places = margin_decimals([(lower, upper)])
+        places = margin_decimals([(lower, upper)]) if decimals is None else decimals
         middle = self.number(estimate, places)
         if is_symmetric(estimate, lower, upper):
             return f"{middle}\u00a0±\u00a0{self.number((upper - lower) / 2, places)}{tail}"
