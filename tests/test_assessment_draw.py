@@ -1,4 +1,4 @@
-"""Drawing: inclusion probabilities, ground area, the same points however the map is read, additions, reserves, files."""
+"""Drawing: inclusion probabilities, ground area, the same points however the map is read, additions, files."""
 
 from __future__ import annotations
 

@@ -192,7 +192,8 @@ def test_everything_can_be_reached_with_tab_and_read(project: Path, page: sync_a
 # Disabled controls are exempt.
 _CONTRAST = """() => {
   const parse = (c) => { const m = c.match(/[\\d.]+/g).map(Number); return m.length < 4 ? [...m, 1] : m; };
-  const lum = (c) => c.slice(0, 3).map((v) => v / 255).map((v) => v <= 0.04045 ? v / 12.92 : ((v + 0.055) / 1.055) ** 2.4)
+  const linear = (v) => v <= 0.04045 ? v / 12.92 : ((v + 0.055) / 1.055) ** 2.4;
+  const lum = (c) => c.slice(0, 3).map((v) => linear(v / 255))
     .reduce((s, v, i) => s + v * [0.2126, 0.7152, 0.0722][i], 0);
   const mix = (a, b) => a.slice(0, 3).map((v, i) => v * a[3] + b[i] * (1 - a[3]));
   const behind = (e) => { for (; e; e = e.parentElement) { const c = parse(getComputedStyle(e).backgroundColor);

@@ -50,6 +50,23 @@ def _mixed(z: NDArray[np.uint64]) -> NDArray[np.uint64]:
 
 
 @_compiled
+def _add_up(
+    counted: NDArray[np.int32], stratum_of: NDArray[np.int16], area: NDArray[np.float64], pixels: NDArray[np.int64],
+    areas: NDArray[np.float64],
+) -> None:  # fmt: skip
+    """Add counts by cell and code to the sums by stratum, and clear them."""
+    for cell in range(counted.shape[0]):
+        for code in range(256):
+            n = counted[cell, code]
+            if n > 0:
+                s = stratum_of[code]
+                if s >= 0:
+                    pixels[s] += n
+                    areas[s] += n * area[cell]
+                counted[cell, code] = 0
+
+
+@_compiled
 def offer(  # noqa: PLR0917 - a kernel takes plain arrays
     codes: NDArray[np.uint8], row: int, col: int, width: int, stratum_of: NDArray[np.int16],
     cell_area: NDArray[np.float64], step: int, start: np.uint64, limit: NDArray[np.float64], pixels: NDArray[np.int64],
@@ -64,36 +81,40 @@ def offer(  # noqa: PLR0917 - a kernel takes plain arrays
     their units (int64), keys (float64) and strata (int16) are written to the last three, as long as `codes` is large.
     """
     top, left = row // step, col // step
+    cells = cell_area.shape[1]
     highest = cell_area.max()
-    bound = np.empty(limit.shape[0], np.uint64)
-    for s in range(limit.shape[0]):
-        # A lot above this bound has a key above the limit whatever the pixel's area: most pixels need no logarithm.
-        share = -np.expm1(-max(limit[s], 0.0) * highest)
-        bound[s] = np.uint64(min(share * 1.000001 + 1e-15, 1.0) * 9007199254740992.0)
+    # By code: a lot above the bound has a key above the limit whatever the pixel's area, so that most pixels need no
+    # logarithm; and those outside the population have bound 0.
+    bound = np.zeros(256, np.uint64)
+    for code in range(256):
+        s = stratum_of[code]
+        if s >= 0:
+            share = -np.expm1(-max(limit[s], 0.0) * highest)
+            bound[code] = np.uint64(min(share * 1.000001 + 1e-15, 1.0) * 9007199254740992.0)
+    counted = np.zeros((cells, 256), np.int32)
     found = 0
-    counted = np.zeros(limit.shape[0], np.int64)
     for i in range(codes.shape[0]):
-        base = np.int64(row + i) * width + col
-        for cell in range(left, (col + codes.shape[1] - 1) // step + 1):
-            area = cell_area[(row + i) // step - top, cell - left]
-            counted[:] = 0
-            for j in range(max(cell * step - col, 0), min((cell + 1) * step - col, codes.shape[1])):
-                s = stratum_of[codes[i, j]]
-                if s < 0:
-                    continue
-                counted[s] += 1
-                z = start + np.uint64(base + j + 1) * _STEP
+        line = codes[i]
+        down = (row + i) // step - top
+        z0 = start + np.uint64(np.int64(row + i) * width + col) * _STEP
+        for cell in range(cells):
+            count = counted[cell]
+            first = max((left + cell) * step - col, 0)
+            for j in range(np.uint64(first), np.uint64(min((left + cell + 1) * step - col, line.shape[0]))):
+                code = line[j]
+                count[code] += 1
+                z = z0 + (j + np.uint64(1)) * _STEP
                 z = (z ^ (z >> _S30)) * _MIX_1
                 z = (z ^ (z >> _S27)) * _MIX_2
                 lot = (z ^ (z >> _S31)) >> _S11
-                if lot <= bound[s]:
-                    key = -np.log1p(-np.float64(lot) * _UNIT) / area
-                    if key <= limit[s]:
-                        found_unit[found] = base + j
+                if lot <= bound[code]:
+                    s = stratum_of[code]
+                    key = -np.log1p(-np.float64(lot) * _UNIT) / cell_area[down, cell]
+                    if s >= 0 and key <= limit[s]:
+                        found_unit[found] = np.int64(row + i) * width + col + np.int64(j)
                         found_key[found] = key
                         found_stratum[found] = s
                         found += 1
-            for s in range(limit.shape[0]):
-                pixels[s] += counted[s]
-                areas[s] += counted[s] * area
+        if i + 1 == codes.shape[0] or (row + i + 1) // step != (row + i) // step:
+            _add_up(counted, stratum_of, cell_area[down], pixels, areas)
     return found

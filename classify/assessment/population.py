@@ -29,7 +29,7 @@ from classify.raster.area import ground_areas_m2, pixel_size_m
 from classify.raster.grid import Grid, Window
 
 # Rows at a time, and columns: strips of a wide map are quickest to read, and a few MB each.
-_ROWS_PX, _COLS_PX = 512, 16_384
+_ROWS_PX, _COLS_PX = 512, 8_192
 # Rows offered to the kernel between two looks at the lowest keys.
 _SLICE_PX = 64
 # Within so many metres, and so many pixels, the ground area of a pixel is taken as one.
