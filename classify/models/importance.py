@@ -77,7 +77,7 @@ def feature_groups(recipe: Recipe, training: TrainingSet) -> dict[str, tuple[str
     wavelengths = dict(zip(training.roles, training.wavelengths_nm, strict=True))
     groups: dict[str, list[str]] = {}
     for name in recipe.names:
-        kind = computed[name] if name in computed else _band_kind(wavelengths.get(name))
+        kind = computed[name] if name in computed else _band_kind(wavelengths.get(name.partition("@")[0]))
         groups.setdefault(kind, []).append(name)
     dates = {name.partition("@")[2] or "main date" for name in recipe.names}
     if len(dates) > 1:

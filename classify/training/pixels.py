@@ -13,6 +13,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from classify.errors import Problem, TrainingError
+from classify.features.facts import scene_facts
 from classify.features.recipe import Recipe
 from classify.progress import SILENT, Progress
 from classify.raster.grid import Window
@@ -83,13 +84,22 @@ def extract_pixels(
         grid=polygons.grid,
         reflectance=reflectance[valid],
         roles=scene.roles,
-        wavelengths_nm=tuple(np.nan if b.wavelength_nm is None else b.wavelength_nm for b in scene.bands),
+        wavelengths_nm=_wavelengths_nm(scene),
         conflicts=claims.conflicts,
     )
     training = training.subset(_capped(training, caps))
     used = training.table["polygon"].map(pd.Series(training.polygon).value_counts()).fillna(0).astype(int)
     training.table["used"] = used
     return replace(training, problems=(*polygons.problems, *_findings(training)))
+
+
+def _wavelengths_nm(scene: Scene) -> tuple[float, ...]:
+    """Centre of each role's band, NaN where it has none.
+
+    Bands of further dates have none either: a signature, and what a material must show, is of one date.
+    """
+    known = scene_facts(scene).wavelengths_nm
+    return tuple(np.nan if "@" in role else known.get(role, np.nan) for role in scene.roles)
 
 
 def _claim(polygons: PolygonSet) -> _Claims:
