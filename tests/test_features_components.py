@@ -203,3 +203,11 @@ def test_a_scene_without_clear_pixels_cannot_be_fitted(scene, tmp_path):
     empty = open_scene(project.scene, project)
     with pytest.raises(DataError, match="too few clear pixels"):
         fit_recipe(recipe_for(empty, components={"count": 2}), empty, seed=0)
+
+
+def test_the_sample_of_a_large_scene_is_drawn_by_the_seed(scene, monkeypatch):
+    monkeypatch.setattr("classify.features.fit.SAMPLE_PX", 4000)
+    recipe = recipe_for(scene, components={"count": 2})
+    first, again, other = (fit_recipe(recipe, scene, seed) for seed in (1, 1, 2))
+    assert first == again
+    assert first != other
