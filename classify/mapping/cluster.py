@@ -9,6 +9,7 @@ back to this process, which writes them: workers need to reach the scene's files
 
 from __future__ import annotations
 
+import asyncio
 import time
 from collections.abc import Generator, Sequence
 from concurrent.futures import CancelledError
@@ -137,13 +138,7 @@ class Cluster:
 
 def connect(address: str) -> Cluster:
     """A cluster by the address of its scheduler. Raises LandassayError within about 10 s if it cannot be used."""
-    try:
-        client = distributed.Client(address, timeout=_ANSWER_S, set_as_default=False)
-    except (OSError, TimeoutError, ValueError) as error:
-        raise LandassayError(
-            f"no scheduler answered within {_ANSWER_S} s", where=address,
-            fix="check the address (like tcp://host:8786) and that the scheduler runs and can be reached from here",
-        ) from error  # fmt: skip
+    client = _client(address)
     try:
         client.wait_for_workers(1, timeout=_ANSWER_S)
         return Cluster(client, address, _differences(client, address))
@@ -153,6 +148,23 @@ def connect(address: str) -> Cluster:
     except LandassayError:
         client.close()
         raise
+
+
+def _client(address: str) -> distributed.Client:
+    async def ask() -> None:
+        async with distributed.rpc(address) as scheduler:
+            await scheduler.identity()
+
+    try:
+        # Asked first in a loop of our own: against something that accepts the connection and is silent, the time limit
+        # of the client itself does not hold.
+        asyncio.run(asyncio.wait_for(ask(), _ANSWER_S))
+        return distributed.Client(address, timeout=_ANSWER_S, set_as_default=False)
+    except (OSError, TimeoutError, ValueError, CancelledError) as error:
+        raise LandassayError(
+            f"no scheduler answered within {_ANSWER_S} s", where=address,
+            fix="check the address (like tcp://host:8786) and that the scheduler runs and can be reached from here",
+        ) from error  # fmt: skip
 
 
 def _differences(client: distributed.Client, address: str) -> tuple[Problem, ...]:

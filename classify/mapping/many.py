@@ -16,6 +16,7 @@ from classify.mapping.classify_scene import MapOptions, classify_scene, origin_d
 from classify.mapping.stac import ItemFacts, identifier, write_collection, write_item
 from classify.models import TrainedModel
 from classify.progress import SILENT, Progress
+from classify.raster.remote import resolve
 from classify.raster.scene import open_scene
 from classify.raster.sources import is_remote
 from classify.settings import Project, SceneSettings
@@ -230,32 +231,45 @@ def _in_items(path: Path, settings: SceneSettings) -> Iterator[SceneFiles]:
 
 
 def _from_item(item: Mapping[str, Any], path: Path, settings: SceneSettings) -> SceneFiles:
-    """Assets go to bands by key, by the name their band is commonly known under, or by file name."""
-    by_name: dict[str, str] = {}
-    for key, asset in item["assets"].items():
+    """Assets go to bands by key, by the name their band is commonly known under, or by file name.
+
+    An item is somebody else's file: it may lead into its own folder and to public addresses, nowhere else.
+    """
+    assets = {key: asset for key, asset in item["assets"].items() if isinstance(asset, dict)}
+    hrefs: dict[str, str] = {}
+    for key, asset in assets.items():
         href = str(asset.get("href", ""))
-        location = href if is_remote(href) or Path(href).is_absolute() else str((path.parent / href).absolute())
-        bands = asset.get("bands") or asset.get("eo:bands") or []
-        known = [name for band in bands for name in (band.get("eo:common_name"), band.get("common_name")) if name]
-        for name in (Path(href).name, key, *(known if len(bands) == 1 else ())):
-            by_name.setdefault(str(name), location)
+        for name in (Path(href).name, key, *_common_names(asset)):
+            hrefs.setdefault(str(name), href)
     roles = {band.file: role for role, band in settings.bands.items()}
     files: dict[str, str] = {}
-    missing: list[str] = []
+    problems: list[Problem] = []
     for name, written in _names(settings).items():
         keys = (name, roles.get(written, name), Path(name).stem)
-        found = [by_name[key] for key in keys if key in by_name]
-        if found:
-            files[written] = found[0]
-        else:
-            missing.append(roles.get(written, name))
-    what = f"the item has no asset for {', '.join(missing)}"
-    problems = (Problem(what, str(path), f"it has: {', '.join(item['assets'])}"),) if missing else ()
-    return SceneFiles(identifier(str(item.get("id", path.stem))), str(path), files, _when(item), problems)
+        given = next((hrefs[key] for key in keys if key in hrefs), None)
+        if given is None:
+            what = f"the item has no asset for {roles.get(written, name)}"
+            problems.append(Problem(what, str(path), f"it has: {', '.join(assets)}"))
+            continue
+        try:
+            files[written] = resolve(given, str(path))
+        except DataError as error:
+            problems.extend(error.problems)
+    return SceneFiles(identifier(str(item.get("id", path.stem))), str(path), files, _when(item), tuple(problems))
+
+
+def _common_names(asset: Mapping[str, Any]) -> list[str]:
+    """Names that the only band of an asset is commonly known under."""
+    bands = asset.get("bands") or asset.get("eo:bands")
+    if not isinstance(bands, list) or len(bands) != 1 or not isinstance(bands[0], dict):
+        return []
+    return [str(bands[0][key]) for key in ("eo:common_name", "common_name") if key in bands[0]]
 
 
 def _when(item: Mapping[str, Any]) -> datetime | None:
-    properties = item.get("properties") or {}
+    properties = item.get("properties")
+    if not isinstance(properties, dict):
+        return None
     text = properties.get("datetime") or properties.get("start_datetime")
     try:
         when = datetime.fromisoformat(str(text).replace("Z", "+00:00"))
