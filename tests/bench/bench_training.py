@@ -103,7 +103,7 @@ def extraction(folder: Path, quick: bool) -> tuple[list[dict[str, object]], Trai
     loop = seconds(lambda: loop_of_masks(folder, polygons, sampled)) * number / sampled
     table = [
         {"work": "read the touched blocks", "seconds": read, "times reading": 1.0},
-        {"work": f"extract {number} polygons, {side_px} px square", "seconds": extract, "times reading": extract / read},
+        {"work": f"extract {number} polygons, {side_px} px", "seconds": extract, "times reading": extract / read},
         {"work": f"one mask per polygon (from {sampled})", "seconds": loop, "times reading": loop / read},
         {"work": "extraction is faster than the loop by", "times": loop / extract},
     ]  # fmt: skip
