@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import shutil
+from pathlib import Path
 
 import numpy as np
 import pandas as pd
@@ -123,6 +124,22 @@ def test_scenes_are_found_in_items_lists_and_folders(project, scenes, tmp_path):
     assert result.mapped == ("whole-item",)
     written = json.loads((tmp_path / "maps" / "whole-item" / "item.json").read_text())
     assert written["properties"]["datetime"] == "2024-06-11T10:00:00Z"
+
+
+@pytest.mark.parametrize(
+    "href",
+    ["/etc/passwd", "../../elsewhere/bands.tif", "/vsicurl/http://127.0.0.1/bands.tif", "http://10.0.0.1/bands.tif",
+     "https://169.254.169.254/bands.tif", "file:///etc/passwd"],
+)  # fmt: skip
+def test_an_item_leads_nowhere_that_the_user_did_not_name(project, tmp_path, href):
+    names = {Path(band.file).name for band in project.scene.bands.values()} | {"mask.tif"}
+    assets = {name: {"href": href if name == "bands.tif" else name} for name in names} | {"odd": 7}
+    item = {"type": "Feature", "id": "stranger", "assets": assets, "properties": "none"}
+    path = tmp_path / "stranger.json"
+    path.write_text(json.dumps(item), encoding="utf-8")
+    (scene,) = find_scenes([str(path)], project)
+    assert "outside its own folder" in scene.problems[0].what
+    assert not any(href in file for file in scene.files.values())
 
 
 def test_sources_that_lead_nowhere_are_all_listed(project, tmp_path):
