@@ -112,7 +112,7 @@ def fetch(url: str) -> bytes:
     opener = urllib.request.build_opener(_StayOnHttps)
     try:
         with opener.open(request, timeout=_TIMEOUT_S) as answer:
-            raw: bytes = answer.read(_MOST_BYTES + 1)
+            raw = _read_in_time(answer, time.monotonic() + _TIMEOUT_S)
     except TimeoutError as error:
         raise DataError(
             f"the address did not answer within {_TIMEOUT_S} s", where=url, fix="try again later"
