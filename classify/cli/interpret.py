@@ -73,6 +73,7 @@ def command(
 def _serve(
     call: Call, project: Project, outputs: Path, name: str, *, settle: bool, host: str, port: int, no_browser: bool
 ) -> None:
+    from classify.errors import SampleError
     from classify.interpret.pictures import Pictures
     from classify.interpret.serve import listen, serve
     from classify.interpret.session import open_session
@@ -82,15 +83,15 @@ def _serve(
     scene = open_scene(project.scene, project)
     session = open_session(project, outputs, scene.grid, name, "settling" if settle else "interpreter")
     if not session.places:
-        raise click.ClickException("There is nothing to label: " + ("no dispute is open." if settle else "no points."))
+        raise SampleError("there is nothing to label: " + ("interpreters agree" if settle else "the sample is empty"))
     pictures = Pictures(scene)
     if not listening.is_local:
         call.warn("warning: others on the network can reach this page; whoever has the address first can label, and it "
                   "is not encrypted")  # fmt: skip
 
     def ready() -> None:
-        # The address goes to standard output whatever the mode: without it the page cannot be opened.
-        click.echo(listening.address)
+        # Shown even with --quiet: without it the page cannot be opened.
+        click.echo(listening.address, err=call.as_json)
         call.warn(f"{len(session.places)} points for {name}; stop with Ctrl-C, every label is on disk")
         if not no_browser:
             webbrowser.open(listening.address)

@@ -83,7 +83,7 @@ class Pictures:
         image = np.stack(planes, axis=-1)
         image[missing] = _NO_DATA
         out = io.BytesIO()
-        Image.fromarray(image, "RGB").save(out, "PNG", compress_level=1)
+        Image.fromarray(image).save(out, "PNG", compress_level=1)
         return out.getvalue()
 
     def _spectrum(self, row: int, col: int) -> list[dict[str, Any]]:
