@@ -87,7 +87,7 @@ def test_without_a_design_the_map_classes_are_post_strata(project_folder):
     )
     pd.testing.assert_frame_equal(found.accuracy_frame, by_hand.accuracy_frame)
     pd.testing.assert_frame_equal(found.area_frame, by_hand.area_frame)
-    assert found.design_kind == "post-stratified"
+    assert found.design_kind == "simple random" and found.post_stratified
     assert any("no design was recorded" in w.casefold() for w in found.warnings)
     assert any(f"{len(table) - len(on_map)} points lie outside the map" in w for w in found.warnings)
     assert found.total_area == pytest.approx(areas["area"].sum())
@@ -149,21 +149,21 @@ def test_design_drawn_here_is_found_by_the_ids(project_folder):
     design["points"].pop("1")
     (project_folder / "outputs/sample/design.json").write_text(json.dumps(design), "utf-8")
     # Another sample than the one drawn here.
-    assert assess_project(load_project(project_folder), project_folder / "outputs").design_kind == "post-stratified"
+    assert assess_project(load_project(project_folder), project_folder / "outputs").post_stratified
     rewrite(project_folder, points_of(project_folder), 'design = "outputs/sample/design.json"\n')
     with pytest.raises(SampleError, match="point '1' is not in the design"):
         assess_project(load_project(project_folder), project_folder / "outputs")
 
 
 def simple_design(folder: Path, *, segments: bool) -> dict:
-    """A recorded simple random sample of the whole scene, of pixels or of segments of five points."""
+    """A recorded simple random sample of the whole map, of pixels or of segments of five points."""
     ids = [str(i) for i in points_of(folder)["id"]]
     points = {i: {"stratum": "whole map"} | ({"segment": int(i) // 5} if segments else {}) for i in ids}
     whole = {
         "stratum": "whole map",
         "mapped_as": None,
-        "area_m2": 100.0 * HEIGHT * WIDTH,
-        "pixels": HEIGHT * WIDTH,
+        "area_m2": 100.0 * (HEIGHT * WIDTH - 150),
+        "pixels": HEIGHT * WIDTH - 150,
         "n": 150,
     }
     if segments:
@@ -176,7 +176,7 @@ def test_recorded_simple_random_sample_is_sharpened_by_map_classes(project_folde
     undesigned = assess_project(load_project(project_folder), project_folder / "outputs")
     rewrite(project_folder, points_of(project_folder), 'design = "design.json"\n')
     found = assess_project(load_project(project_folder), project_folder / "outputs")
-    assert found.design_kind == "post-stratified" and not any("no design" in w.casefold() for w in found.warnings)
+    assert found.post_stratified and not any("no design" in w.casefold() for w in found.warnings)
     pd.testing.assert_frame_equal(found.accuracy_frame, undesigned.accuracy_frame)
 
 
@@ -186,7 +186,7 @@ def test_class_with_too_few_points_leaves_a_simple_random_sample_as_it_is(projec
     (project_folder / "design.json").write_text(json.dumps(simple_design(project_folder, segments=False)), "utf-8")
     rewrite(project_folder, frame, 'design = "design.json"\n')
     found = assess_project(load_project(project_folder), project_folder / "outputs")
-    assert found.design_kind == "simple random" and found.overall_accuracy.standard_error is not None
+    assert not found.post_stratified and found.overall_accuracy.standard_error is not None
     missing = 150 - len(frame)
     assert any(f"{missing} of 150 drawn points are not in reference.gpkg" in w for w in found.warnings)
 

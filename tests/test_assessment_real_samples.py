@@ -203,7 +203,8 @@ def test_systematic_sample_and_few_clusters_are_remarked_on():
     found = assess(sample(TWO).drop(columns="stratum"), strata(everything=100.0), options)
     assert found.design_kind == "systematic" and only_warning(found, "systematic sample")
     afterwards = assess(sample(TWO), AREAS, options)
-    assert afterwards.design_kind == "post-stratified" and only_warning(afterwards, "systematic sample")
+    assert afterwards.design_kind == "systematic" and afterwards.post_stratified
+    assert only_warning(afterwards, "systematic sample")
     clustered = assess(sample(TWO).assign(cluster=[f"c{i // 2}" for i in range(20)]), AREAS)
     assert clustered.clustered and "10 clusters" in only_warning(clustered, "number, not that of the points")
 

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections import Counter
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -10,9 +11,20 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from classify.assessment.evidence import Reservation
 from classify.assessment.sample import DESIGN_KINDS, DesignKind
 from classify.errors import DataError
 from classify.files import read_json
+
+
+@dataclass(frozen=True, slots=True)
+class DrawnMap:
+    """The map that a sample was drawn from, as far as its design tells: file as written there, "" where it is not;
+    SHA-256; grid, transform and shape as plain numbers, () where it is not recorded."""
+
+    file: str
+    sha256: str
+    grid: tuple[float, ...]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -20,29 +32,43 @@ class RecordedDesign:
     """How a sample was drawn. strata: columns stratum, area_m2, pixels, clusters (NaN where points were drawn singly).
 
     stratum_of: point id -> stratum, of all points that are to be labelled. cluster_of: point id -> the segment that was
-    drawn as one unit; empty where points were drawn singly. replaced: ids of points that others stand in for.
+    drawn as one unit; empty where points were drawn singly. replaced: id -> reason, of points that others stand in for.
+    place_of: point id -> (row, col) in the grid of `drawn_from`. class_areas: columns name, pixels, area_m2 of the map
+    classes within the population; None where the design does not tell. whole: whether the population was all of the
+    map. remarks: what a reader of estimates must know of the draw. reservations: what takes something from the claim.
     """
 
     kind: DesignKind
     strata: pd.DataFrame
     stratum_of: Mapping[str, str]
     cluster_of: Mapping[str, str]
-    replaced: frozenset[str]
+    replaced: Mapping[str, str]
+    place_of: Mapping[str, tuple[int, int]]
+    drawn_from: DrawnMap
+    class_areas: pd.DataFrame | None
+    whole: bool
+    remarks: tuple[str, ...]
+    reservations: tuple[Reservation, ...]
 
 
 def read_design(path: Path) -> RecordedDesign:
     """Read design.json as it was written when the sample was drawn. Raises DataError."""
     content = read_json(path)
     try:
-        strata = pd.DataFrame(content["strata"])
-        if "clusters" not in strata.columns:
-            strata["clusters"] = np.nan
-        strata = strata[["stratum", "area_m2", "pixels", "clusters"]].astype({"stratum": str, "area_m2": float})
         points = {str(point): entry for point, entry in content["points"].items()}
-        replaced = frozenset(point for point, entry in points.items() if "replaced_by" in entry)
+        replaced = {p: str(entry.get("reason", "")) for p, entry in points.items() if "replaced_by" in entry}
         key = {point: str(entry["stratum"]) for point, entry in points.items() if point not in replaced}
-        segments = {point: str(points[point]["segment"]) for point in key if "segment" in points[point]}
-        return RecordedDesign(_kind(content), strata, key, segments, replaced)
+        population = content.get("population", {})
+        return RecordedDesign(
+            kind=_kind(content), strata=_strata(content), stratum_of=key,
+            cluster_of={point: str(points[point]["segment"]) for point in key if "segment" in points[point]},
+            replaced=replaced,
+            place_of={p: (int(e["row"]), int(e["col"])) for p, e in points.items() if "row" in e and "col" in e},
+            drawn_from=_drawn_from(content.get("map", {})), class_areas=_class_areas(content),
+            whole=not population.get("excluded_pixels"),
+            remarks=(*_notes(content), *_replacements(replaced, len(key))),
+            reservations=tuple(_reservations(content, replaced)),
+        )  # fmt: skip
     except (KeyError, TypeError, ValueError, AttributeError) as error:
         raise DataError(
             f"this is not a recorded design ({type(error).__name__}: {error})", where=str(path),
@@ -57,3 +83,52 @@ def _kind(content: Mapping[str, Any]) -> DesignKind:
     if not found:
         raise ValueError(f"kind {written!r} is none of {', '.join(DESIGN_KINDS)}")
     return found[0]
+
+
+def _strata(content: Mapping[str, Any]) -> pd.DataFrame:
+    strata = pd.DataFrame(content["strata"])
+    if "clusters" not in strata.columns:
+        strata["clusters"] = np.nan
+    return strata[["stratum", "area_m2", "pixels", "clusters"]].astype({"stratum": str, "area_m2": float})
+
+
+def _drawn_from(content: Mapping[str, Any]) -> DrawnMap:
+    grid = tuple(float(value) for value in content.get("grid", ()))
+    return DrawnMap(str(content.get("file", "")), str(content.get("sha256", "")), grid)
+
+
+def _class_areas(content: Mapping[str, Any]) -> pd.DataFrame | None:
+    """Recorded as such, or by the strata where they are map classes."""
+    classes = content.get("population", {}).get("classes")
+    if classes is None and all(s.get("mapped_as") for s in content["strata"]):
+        classes = [{**s, "name": s["mapped_as"]} for s in content["strata"]]
+    if classes is None:
+        return None
+    table = pd.DataFrame(classes)[["name", "pixels", "area_m2"]].astype({"name": str, "area_m2": float})
+    return table.groupby("name", as_index=False, sort=False).sum()
+
+
+def _notes(content: Mapping[str, Any]) -> Iterator[str]:
+    """Notes but for those on a stratum: whether it has points is told by the points, as some may have been added."""
+    names = [repr(str(s["stratum"])) for s in content["strata"]]
+    return (str(note) for note in content.get("notes", ()) if not any(name in str(note) for name in names))
+
+
+def _replacements(replaced: Mapping[str, str], points: int) -> Iterator[str]:
+    if not replaced:
+        return
+    counts = Counter(reason or "no reason given" for reason in replaced.values())
+    reasons = ", ".join(f"{reason} ({n})" for reason, n in counts.most_common())
+    yield (
+        f"{len(replaced)} places could not be reached and others, drawn in reserve, are among the {points} points in "
+        f"their stead: {reasons}. The estimates take such places to be like those that can be reached"
+    )
+
+
+def _reservations(content: Mapping[str, Any], replaced: Mapping[str, str]) -> Iterator[Reservation]:
+    if content.get("population", {}).get("excluded_pixels"):
+        yield "part left out"
+    if content.get("apart_m"):
+        yield "distance kept"
+    if replaced:
+        yield "reserves used"

@@ -33,6 +33,7 @@ def estimate_sample(sample: ReferenceSample, options: AssessmentOptions) -> Asse
     if not EVIDENCE[sample.evidence].has_intervals:
         sample = sample.unweighted()
     t = tally(sample, finite_population=options.finite_population)
+    sample = _of_sampled_strata(sample, t)
     k = len(sample.classes)
     estimator = Estimator(t, sample, options)
     proportions = area_matrix(t.share, t, k)
@@ -41,16 +42,17 @@ def estimate_sample(sample: ReferenceSample, options: AssessmentOptions) -> Asse
     shown = iter(estimator.proportions(ratios))
     overall = next(shown)
     users, producers, harmonic, areas = ({name: next(shown) for name in sample.classes} for _ in makers)
-    mapped = sample.mapped_area or (None,) * k
+    mapped = dict(zip(sample.classes, sample.mapped_area, strict=True))
     differing, agreement = disagreement(proportions), estimator.kappa(proportions)
     return Assessment(
         evidence_name=sample.evidence, confidence_level=options.confidence_level, classes=sample.classes,
         area_unit=sample.area_unit, total_area=estimator.sampled_area * float(t.share @ t.mapped),
-        design_kind=sample.kind, clustered=t.clustered,
+        design_kind=sample.kind, post_stratified=sample.post_stratified, reservations=sample.reservations,
+        clusters=int(t.group_size.sum()) if t.clustered else None,
         strata=tuple(StratumSummary(s.name, s.area, int(n)) for s, n in zip(sample.strata, t.points, strict=True)),
         matrix_counts=counts_matrix(sample), matrix_area_proportions=proportions, overall_accuracy=overall,
         users_accuracy=users, producers_accuracy=producers, f1=harmonic,
-        area={c: AreaEstimate(m, estimator.size(areas[c])) for c, m in zip(sample.classes, mapped, strict=True)},
+        area={c: AreaEstimate(mapped[c], estimator.size(areas[c])) for c in sample.classes},
         kappa=agreement, disagreement=differing,
         either_label=_either_label(sample, t, estimator),
         unlabelled=_unlabelled(sample, options),
@@ -66,6 +68,27 @@ def require_labels(sample: ReferenceSample) -> None:
     """Raise SampleError unless a point on the map has a label."""
     if not (sample.usable & ~sample.off_map).any():
         raise SampleError("no point on the map has a reference label", fix="label the points before assessing")
+
+
+def _of_sampled_strata(sample: ReferenceSample, t: Tally) -> ReferenceSample:
+    """The sample with mapped areas of what the estimates stand for: of the strata that have points.
+
+    Where some have none, mapped areas are known if all others are map classes; but not those of a class that strata
+    without points are, as its area beside an estimate for elsewhere would say nothing.
+    """
+    mapped = sample.mapped_area or (None,) * len(sample.classes)
+    empty = [s for s, n in zip(sample.strata, t.points, strict=True) if not n and s.area > 0]
+    if not empty:
+        return replace(sample, mapped_area=mapped)
+    sampled = [s for s, n in zip(sample.strata, t.points, strict=True) if n]
+    unknown = {s.mapped_as for s in empty}
+    if any(s.mapped_as is None for s in sampled):
+        unknown = set(sample.classes)
+    within = tuple(
+        None if before is None or name in unknown else sum(s.area for s in sampled if s.mapped_as == name)
+        for name, before in zip(sample.classes, mapped, strict=True)
+    )
+    return replace(sample, mapped_area=within).with_reservation("part left out")
 
 
 def counts_matrix(sample: ReferenceSample) -> np.ndarray:

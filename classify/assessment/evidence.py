@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Collection
 from dataclasses import dataclass
 from typing import Literal
 
 EvidenceName = Literal["probability sample", "purposive sample", "held-out training polygons"]
+# What takes something from the claim of a probability sample.
+Reservation = Literal["design assumed", "part left out", "distance kept", "reserves used"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -50,3 +53,30 @@ EVIDENCE: dict[EvidenceName, Evidence] = {
         "stand for the mapped area.",
     ),
 }  # fmt: skip
+
+_ASSUMED_CLAIM = (
+    "No design was recorded, so it is assumed, not known, that every part of the mapped area had the same chance of "
+    "being sampled; only if that is so do the estimates and their confidence intervals hold."
+)
+_PART_CLAIM = (
+    "Every part of the sampled area had a known chance of being sampled, so accuracy and areas are estimated for that "
+    "area, with confidence intervals. Of the parts of the map that were left out they say nothing."
+)
+# Sentences that follow the claim, in this order.
+_RESERVED: dict[Reservation, str] = {
+    "distance kept": "As points keep a distance from each other, their chances are known nearly, not exactly.",
+    "reserves used": "Places that could not be reached are taken to be like those drawn in their stead.",
+}
+RESERVATIONS: tuple[Reservation, ...] = ("design assumed", "part left out", "distance kept", "reserves used")
+
+
+def claim_of(name: EvidenceName, reservations: Collection[Reservation] = ()) -> str:
+    """What may be said of a sample: the claim of its evidence, less what the reservations take from it."""
+    if name != "probability sample":
+        return EVIDENCE[name].claim
+    claim = EVIDENCE[name].claim
+    if "design assumed" in reservations:
+        claim = _ASSUMED_CLAIM
+    elif "part left out" in reservations:
+        claim = _PART_CLAIM
+    return " ".join([claim, *(text for one, text in _RESERVED.items() if one in reservations)])

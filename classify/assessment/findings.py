@@ -165,8 +165,9 @@ def _mapped_areas(sample: ReferenceSample) -> Iterator[Problem]:
     unknown = [name for name, area in zip(sample.classes, mapped, strict=True) if area is None]
     if unknown:
         yield _warning(
-            f"the mapped area of {_listed(unknown, 'class', 'classes')} is not known, as the strata do not say it",
-            "give 'mapped_as' in the table of strata where strata are map classes",
+            f"the mapped area of {_listed(unknown, 'class', 'classes')} is not known for what the estimates stand for, "
+            "so it is not set beside them",
+            "in a table of strata, 'mapped_as' says which map class a stratum is",
         )
 
 

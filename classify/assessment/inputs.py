@@ -105,16 +105,14 @@ def sample_from_matrix(
 
 def _sample(table: tuple[Stratum, ...], classes: tuple[str, ...], options: AssessmentOptions) -> ReferenceSample:
     """The sample but for its points."""
-    kind: DesignKind = options.kind or ("stratified" if len(table) > 1 else "simple random")
+    given = "simple random" if options.kind == "post-stratified" else options.kind
+    kind: DesignKind = given or ("stratified" if len(table) > 1 else "simple random")
     problems = (SYSTEMATIC,) if kind == "systematic" else ()
-    if kind in ("simple random", "systematic") and len(table) > 1:
-        # Strata that a design of one draw brings along can only have come after it.
-        kind = "post-stratified"
     none = np.zeros(0, dtype=np.int64)
     return ReferenceSample(
         classes=classes, strata=table, kind=kind, stratum=none, map=none, reference=none, count=none,
         mapped_area=mapped_areas(table, classes, options), area_unit=options.area_unit, evidence=options.evidence,
-        problems=problems,
+        reservations=tuple(options.reservations), problems=problems,
     )  # fmt: skip
 
 

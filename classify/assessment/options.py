@@ -4,12 +4,14 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from typing import get_args
+from typing import Literal, get_args
 
-from classify.assessment.evidence import EvidenceName
+from classify.assessment.evidence import EvidenceName, Reservation
 from classify.assessment.sample import DesignKind
 from classify.settings.model import IntervalName
 
+# A simple random sample with strata is called by its usual name too.
+SpokenKind = Literal[DesignKind, "post-stratified"]
 INTERVALS: tuple[IntervalName, ...] = get_args(IntervalName)
 
 
@@ -36,10 +38,12 @@ class AssessmentOptions:
     confidence_level: in (0.5, 1). interval: "automatic" is Wilson for proportions, else normal or Student.
     replicates, seed: of the bootstrap. finite_population: correct for the part of the population that was sampled,
     where the strata give counts of its units. kind: how points were drawn; None for stratified, or simple random with
-    one stratum. evidence: what the sample may claim. classes: names in order; None for those that occur. merge: class
+    one stratum; "post-stratified" is simple random with strata. evidence: what the sample may claim, reservations: what
+    takes something from that. classes: names in order; None for those that occur. merge: class
     -> class that it counts as. unlabelled: reference labels that mean "could not tell", beside blanks. area_unit:
     carried through. pixel_area: area of a pixel, where strata give pixels only. mapped_area: mapped area by class
-    (before merging) where strata do not say it. points, strata: what messages call the tables.
+    (before merging) where strata do not say it; None where it is not known. points, strata: what
+    messages call the tables.
     """
 
     confidence_level: float = 0.95
@@ -47,13 +51,14 @@ class AssessmentOptions:
     replicates: int = 2000
     seed: int = 0
     finite_population: bool = True
-    kind: DesignKind | None = None
+    kind: SpokenKind | None = None
     evidence: EvidenceName = "probability sample"
+    reservations: tuple[Reservation, ...] = ()
     classes: tuple[str, ...] | None = None
     merge: Mapping[str, str] = field(default_factory=dict)
     unlabelled: tuple[str, ...] = ()
     area_unit: str = ""
     pixel_area: float | None = None
-    mapped_area: Mapping[str, float] = field(default_factory=dict)
+    mapped_area: Mapping[str, float | None] = field(default_factory=dict)
     points: TableName = TableName("points")
     strata: TableName = TableName("strata")

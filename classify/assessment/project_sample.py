@@ -24,7 +24,7 @@ from classify.assessment.drawn_sample import (
     write_more,
 )
 from classify.assessment.plan import read_planned_sizes
-from classify.assessment.population import Population, Scan
+from classify.assessment.population import Population, Scan, scan
 from classify.errors import SampleError
 from classify.files import sha256
 from classify.progress import SILENT, Progress
@@ -62,10 +62,13 @@ def draw_sample(project: Project, outputs: Path, request: SampleRequest, progres
     more = {"allocation": allocation, "away_from_training_m": margin}
     design = first_design(population, drawn, request.options, _map_facts(project, cover), more)
     if margin is not None:
+        left_out = design["population"]
         design["notes"].append(
             f"Training polygons and {margin:g} m around them are not in the population: accuracy and areas speak of "
-            f"the rest of the map, {design['population']['excluded_pixels']:,} pixels less."
+            f"the rest of the map, {left_out['excluded_area_m2'] / 10_000:,.1f} ha ({left_out['excluded_pixels']:,} "
+            "pixels) less."
         )
+        left_out["classes"] = _class_areas(project, population, request.options, progress)
     return write_first(folder, with_drawn(design, population, drawn), population.grid)
 
 
@@ -134,6 +137,19 @@ def _around_training(project: Project, grid: Grid, margin_m: float) -> list[Base
     local = frame.geometry.to_crs(frame.estimate_utm_crs())
     grown: geopandas.GeoSeries = local.buffer(margin_m).to_crs(frame.crs)
     return list(grown)
+
+
+def _class_areas(
+    project: Project, population: Population, options: DrawOptions, progress: Progress
+) -> list[dict[str, str | int | float]]:
+    """Pixels and ground area of each map class within a population that is not the whole map."""
+    classes = {c.code: c.name for c in project.classes}
+    by_class = replace(population_of(population.path, classes, DrawOptions()), excluded=population.excluded)
+    found = scan(by_class, options.seed, 0, jobs=options.jobs, progress=progress)
+    return [
+        {"name": name, "pixels": pixels, "area_m2": round(area_m2, 1)}
+        for name, pixels, area_m2 in zip(by_class.names, found.pixels, found.area_m2, strict=True)
+    ]
 
 
 def _drawn(folder: Path, population: Population, request: SampleRequest, progress: Progress) -> tuple[Draw, str]:

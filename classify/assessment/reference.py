@@ -7,8 +7,8 @@ a sample drawn from an older map still serves a newer one.
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from pathlib import Path
-from typing import Any
 
 import geopandas
 import numpy as np
@@ -20,7 +20,8 @@ from rasterio.windows import Window as RasterWindow
 
 from classify.assessment.columns import Labels, faults, plain_text
 from classify.assessment.compare import Comparison, compare_sample, write_comparison
-from classify.assessment.design_file import RecordedDesign, read_design
+from classify.assessment.design_file import RecordedDesign
+from classify.assessment.drawn_points import as_drawn, design_of, stratum_of
 from classify.assessment.estimation import estimate_sample
 from classify.assessment.frames import write_assessment
 from classify.assessment.inputs import sample_from_points
@@ -28,16 +29,17 @@ from classify.assessment.options import AssessmentOptions, TableName
 from classify.assessment.result import Assessment
 from classify.assessment.sample import NO_LABEL, DesignKind, ReferenceSample
 from classify.errors import DataError, Problem, SampleError, raise_if_errors
+from classify.files import sha256
 from classify.raster.grid import Grid
 from classify.settings import ClassSettings, Project, ReferenceSettings
 from classify.settings.model import M2_PER_UNIT
 
 _BLOCK_PX = 512
 _WHOLE_MAP = "whole map"
-_ASSUMED = Problem(
-    "no design was recorded for the sample, so it is taken as a simple random one",
-    fix="if it was drawn otherwise, name its design with 'design'; if places were chosen, set evidence to "
-    "'purposive sample', as no interval holds then",
+_OTHER_POPULATION = Problem(
+    "the sample was drawn from a part of the map or from another map, and how much of each class is mapped there is "
+    "not known: the estimates stand for what was sampled, and mapped areas are left out, as those of the whole map are "
+    "no match for them",
     severity="warning",
 )
 
@@ -70,10 +72,9 @@ def read_reference(project: Project, cover: Path, outputs: Path, *, other: Path 
     settings = _settings(project)
     frame = _read_points(project, settings)
     areas = read_areas(outputs / "map" / "areas.csv")
-    design = _design(project, settings, frame, outputs)
-    warnings: list[Problem] = [_ASSUMED] if design is None else []
+    design, warnings = design_of(project, settings, frame, outputs, cover)
     if design is not None:
-        frame, found = _as_drawn(frame, settings, design)
+        frame, found = as_drawn(frame, settings, design)
         warnings += found
     points = _points_table(frame, settings, project.classes)
     points["map"] = _classes_at(cover, frame, project.classes)
@@ -84,14 +85,20 @@ def read_reference(project: Project, cover: Path, outputs: Path, *, other: Path 
                           fix="check the CRS of the points, and that this is the map they were drawn for")  # fmt: skip
     kind: DesignKind = "simple random"
     strata = areas.assign(stratum=_WHOLE_MAP).groupby("stratum", as_index=False)[["area_m2", "pixels"]].sum()
+    mapped = areas if design is None else _mapped_within(design, areas, cover)
     if design is not None:
-        points["stratum"], kind, strata = _stratum_of(frame, settings, design), design.kind, design.strata
+        points["stratum"], kind, strata = stratum_of(frame, settings, design), design.kind, design.strata
         if settings.cluster is None and design.cluster_of:
             points["cluster"] = frame["id"].map(plain_text).map(design.cluster_of)
-    if len(strata) == 1:
-        points, strata, found = _post_stratified(points, strata, areas)
+    if mapped is None:
+        warnings.append(_OTHER_POPULATION)
+    elif len(strata) == 1:
+        points, strata, found = _post_stratified(points, strata, mapped)
         warnings += found
-    options = project_options(project, kind=kind, areas=areas)
+    options = replace(
+        project_options(project, kind=kind), mapped_area=_mapped_area(project, mapped),
+        reservations=("design assumed",) if design is None else design.reservations,
+    )  # fmt: skip
     strata = strata.assign(area=strata["area_m2"] / M2_PER_UNIT[project.report.area_unit])
     sample = sample_from_points(points, strata, options, may_lie_off_map=True)
     return sample.with_problems(tuple(warnings))
@@ -109,17 +116,13 @@ def read_labels(project: Project) -> dict[str, int]:
     return {str(name): int(count) for name, count in labels.value_counts().sort_index().items()}
 
 
-def project_options(
-    project: Project, *, kind: DesignKind | None = None, areas: pd.DataFrame | None = None
-) -> AssessmentOptions:
-    """What a project file says of how to assess. areas: mapped areas as `read_areas` gives them."""
+def project_options(project: Project, *, kind: DesignKind | None = None) -> AssessmentOptions:
+    """What a project file says of how to assess."""
     settings = _settings(project)
-    unit = M2_PER_UNIT[project.report.area_unit]
-    mapped = {} if areas is None else dict(zip(areas["name"], areas["area_m2"] / unit, strict=True))
     return AssessmentOptions(
         confidence_level=project.report.confidence_level, interval=project.report.interval, seed=project.project.seed,
         kind=kind, evidence=settings.evidence, classes=tuple(c.name for c in project.classes), merge=settings.merge,
-        area_unit=project.report.area_unit, mapped_area=mapped, points=TableName(settings.points),
+        area_unit=project.report.area_unit, points=TableName(settings.points),
     )  # fmt: skip
 
 
@@ -227,59 +230,29 @@ def _classes_at(cover: Path, frame: geopandas.GeoDataFrame, classes: Sequence[Cl
     return [names[int(code)] for code in codes]
 
 
-def _design(
-    project: Project, settings: ReferenceSettings, frame: geopandas.GeoDataFrame, outputs: Path
-) -> RecordedDesign | None:
-    """The recorded design; None where the sample has none."""
-    if settings.design is not None:
-        return read_design(Path(project.path(settings.design)))
-    drawn_here = outputs / "sample" / "design.json"
-    if drawn_here.is_file():
-        design = read_design(drawn_here)
-        if settings.stratum is not None:
-            return design
-        drawn = [*design.stratum_of, *design.replaced]
-        if "id" in frame.columns and frame["id"].map(plain_text).isin(drawn).all():
-            return design
-    if settings.stratum is not None:
-        raise SampleError(
-            "a column with strata is named, but their areas are not known", where=f"{project.file.name}: reference",
-            fix="name the recorded design with 'design', or leave 'stratum' out if strata are the map's classes",
-        )  # fmt: skip
+def _mapped_within(design: RecordedDesign, areas: pd.DataFrame, cover: Path) -> pd.DataFrame | None:
+    """Mapped areas by class (columns name, pixels, area_m2) within the population of the design; None where unknown.
+
+    areas: those of the whole map. They are the population's where nothing of the map was left out and both have as many
+    pixels and as much area: so it is for a newer map of the same scene. Else the design may tell, of its own map alone.
+    """
+    same = design.strata["pixels"].sum() == areas["pixels"].sum() and np.isclose(
+        design.strata["area_m2"].sum(), areas["area_m2"].sum(), rtol=1e-3
+    )
+    if design.whole and same:
+        return areas
+    if design.class_areas is not None and design.drawn_from.sha256 == sha256(cover):
+        return design.class_areas
     return None
 
 
-def _stratum_of(frame: geopandas.GeoDataFrame, settings: ReferenceSettings, design: RecordedDesign) -> pd.Series[Any]:
-    """Stratum of each point: from its column where one is named, else by the key of the design."""
-    if settings.stratum is not None:
-        return pd.Series(frame[settings.stratum])
-    if "id" not in frame.columns:
-        raise SampleError("there is no column 'id'", where=settings.points,
-                          fix="keep the ids of the drawn points, by which the design finds their strata")  # fmt: skip
-    ids = Labels.of(frame["id"])
-    known = [design.stratum_of.get(ids.text(i), "") for i in range(len(frame))]
-    strange = np.array([not stratum for stratum in known])
-    raise_if_errors(
-        faults(strange, ids, "id", TableName(settings.points), lambda value: f"point {value!r} is not in the design",
-               "name the design that this sample was drawn by"), SampleError,
-    )  # fmt: skip
-    return pd.Series(known, index=frame.index)
-
-
-def _as_drawn(
-    frame: geopandas.GeoDataFrame, settings: ReferenceSettings, design: RecordedDesign
-) -> tuple[geopandas.GeoDataFrame, list[Problem]]:
-    """Points without those that others stand in for; and a warning of drawn points that the file lacks."""
-    if "id" not in frame.columns:
-        return frame, []
-    ids = frame["id"].map(plain_text)
-    lacking = sorted(set(design.stratum_of) - set(ids), key=lambda point: (len(point), point))
-    kept = frame[~ids.isin(design.replaced)].reset_index(drop=True)
-    if not lacking:
-        return kept, []
-    what = f"{len(lacking)} of {len(design.stratum_of)} drawn points are not in {settings.points}, first {lacking[0]!r}"
-    fix = "keep every drawn point, blank where it cannot be labelled: points left out by choice bias the estimates"
-    return kept, [Problem(what, fix=fix, severity="warning")]
+def _mapped_area(project: Project, mapped: pd.DataFrame | None) -> dict[str, float | None]:
+    """Mapped area by class in the project's unit: 0 for classes that are not mapped, None where nothing is known."""
+    if mapped is None:
+        return {c.name: None for c in project.classes}
+    unit = M2_PER_UNIT[project.report.area_unit]
+    known = dict(zip(mapped["name"], mapped["area_m2"] / unit, strict=True))
+    return {c.name: float(known.get(c.name, 0.0)) for c in project.classes}
 
 
 def _post_stratified(

@@ -12,8 +12,9 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from classify.assessment.agreement import KAPPA_REMARK, Disagreement
-from classify.assessment.evidence import EVIDENCE, Evidence, EvidenceName
+from classify.assessment.evidence import EVIDENCE, Evidence, EvidenceName, Reservation, claim_of
 from classify.assessment.intervals import Estimate
+from classify.assessment.sample import DesignKind
 from classify.errors import Problem
 
 
@@ -96,7 +97,9 @@ class Assessment:
     """Accuracy and areas estimated from one reference sample. Proportions are 0..1; areas are in `area_unit`.
 
     matrix_counts: int64 (k, k) and matrix_area_proportions: float64 (k, k), rows map, columns reference, in the order
-    of `classes`. Mappings are keyed by class name. either_label, unlabelled: None where the sample has no alternate
+    of `classes`. Mappings are keyed by class name. post_stratified: whether strata came after the draw. reservations:
+    what takes something from the claim. clusters: clusters with usable points, None where points were drawn singly;
+    it is they that make intervals narrow. either_label, unlabelled: None where the sample has no alternate
     labels, or where every point is labelled.
     """
 
@@ -105,8 +108,10 @@ class Assessment:
     classes: tuple[str, ...]
     area_unit: str
     total_area: float
-    design_kind: str
-    clustered: bool
+    design_kind: DesignKind
+    post_stratified: bool
+    reservations: tuple[Reservation, ...]
+    clusters: int | None
     strata: tuple[StratumSummary, ...]
     matrix_counts: NDArray[np.int64]
     matrix_area_proportions: NDArray[np.float64]
@@ -126,6 +131,16 @@ class Assessment:
     def evidence(self) -> Evidence:
         """What the numbers may claim."""
         return EVIDENCE[self.evidence_name]
+
+    @property
+    def claim(self) -> str:
+        """What may be said of the sample in a few sentences."""
+        return claim_of(self.evidence_name, self.reservations)
+
+    @property
+    def clustered(self) -> bool:
+        """Whether points were drawn in clusters."""
+        return self.clusters is not None
 
     @property
     def quantity_disagreement(self) -> float:
@@ -216,12 +231,15 @@ class Assessment:
         return {
             "schema": 1,
             "evidence": self.evidence_name,
+            "claim": self.claim,
             "confidence_level": self.confidence_level,
             "classes": list(self.classes),
             "area_unit": self.area_unit,
             "total_area": self.total_area,
             "design": {
-                "kind": self.design_kind, "clusters": self.clustered, "strata": self.strata_frame.to_dict("records"),
+                "kind": self.design_kind, "post_stratified": self.post_stratified, "clusters": self.clustered,
+                "cluster_count": self.clusters, "reservations": list(self.reservations),
+                "strata": self.strata_frame.to_dict("records"),
             },
             "matrix_counts": self.matrix_counts.tolist(),
             "matrix_area_proportions": self.matrix_area_proportions.tolist(),
@@ -246,7 +264,7 @@ class Assessment:
         accuracy = self.accuracy_frame.to_html(index=False, na_rep="–", float_format="{:.3f}".format)
         areas = self.area_frame.to_html(index=False, na_rep="–", float_format="{:,.1f}".format)
         notes = "".join(f"<li>{html.escape(text)}</li>" for text in (*self.warnings, KAPPA_REMARK))
-        claim = html.escape(f"{self.evidence.claim} {self.evidence.caution}".strip())
+        claim = html.escape(f"{self.claim} {self.evidence.caution}".strip())
         return f"<div><p><b>{self.evidence_name.capitalize()}.</b> {claim}</p>{accuracy}{areas}<ul>{notes}</ul></div>"
 
 

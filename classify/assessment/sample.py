@@ -8,10 +8,10 @@ from typing import Literal, get_args
 import numpy as np
 from numpy.typing import NDArray
 
-from classify.assessment.evidence import EvidenceName
+from classify.assessment.evidence import RESERVATIONS, EvidenceName, Reservation
 from classify.errors import Problem
 
-DesignKind = Literal["simple random", "systematic", "stratified", "post-stratified"]
+DesignKind = Literal["simple random", "systematic", "stratified"]
 DESIGN_KINDS: tuple[DesignKind, ...] = get_args(DesignKind)
 NO_LABEL = -1
 
@@ -37,8 +37,8 @@ class ReferenceSample:
     the map. reference: int64 (n,), NO_LABEL where the interpreter could not tell. count: int64 (n,), points that the
     entry stands for. Optional, int64 (n,) or None: alternate, the interpreter's second label, NO_LABEL where there is
     none; other_map, the class of a second map; cluster, the primary unit (None where points are drawn one by one);
-    region, a place in `regions`. mapped_area: per class, in `area_unit`; None where it is not known. problems:
-    warnings.
+    region, a place in `regions`. mapped_area: per class, in `area_unit`, within the strata; None where it is not known.
+    reservations: what takes something from the claim of the sample. problems: warnings.
     """
 
     classes: tuple[str, ...]
@@ -56,7 +56,13 @@ class ReferenceSample:
     mapped_area: tuple[float | None, ...] = ()
     area_unit: str = ""
     evidence: EvidenceName = "probability sample"
+    reservations: tuple[Reservation, ...] = ()
     problems: tuple[Problem, ...] = ()
+
+    @property
+    def post_stratified(self) -> bool:
+        """Whether strata came after the draw: those of a design of one draw can only have."""
+        return self.kind != "stratified" and len(self.strata) > 1
 
     @property
     def off_map(self) -> NDArray[np.bool_]:
@@ -73,6 +79,11 @@ class ReferenceSample:
         """The same points with no stratum weights, as befits places that were chosen and not drawn."""
         everywhere = Stratum("sampled places", sum(s.area for s in self.strata))
         return replace(self, strata=(everywhere,), stratum=np.zeros_like(self.stratum))
+
+    def with_reservation(self, reservation: Reservation) -> ReferenceSample:
+        """The same sample with one more reservation, each named once and in the order of all."""
+        there = {*self.reservations, reservation}
+        return replace(self, reservations=tuple(r for r in RESERVATIONS if r in there))
 
     def with_problems(self, problems: tuple[Problem, ...]) -> ReferenceSample:
         """The same sample with more warnings."""

@@ -71,14 +71,12 @@ def mapped_areas(
     strata: tuple[Stratum, ...], classes: tuple[str, ...], options: AssessmentOptions
 ) -> tuple[float | None, ...]:
     """Mapped area per class: as given, else from strata that are map classes; None where neither says it."""
-    known: dict[str, float] = {}
-    if options.mapped_area:
-        for name, area in options.mapped_area.items():
-            known[options.merge.get(name, name)] = known.get(options.merge.get(name, name), 0.0) + area
-    else:
-        for s in strata:
-            if s.mapped_as is not None:
-                known[s.mapped_as] = known.get(s.mapped_as, 0.0) + s.area
+    given: list[tuple[str, float | None]] = [(options.merge.get(n, n), a) for n, a in options.mapped_area.items()]
+    given = given or [(s.mapped_as, s.area) for s in strata if s.mapped_as is not None]
+    known: dict[str, float | None] = {}
+    for name, area in given:
+        before = known.get(name, 0.0)
+        known[name] = None if area is None or before is None else before + area
     # Where every stratum is a map class, a class without a stratum is not on the map.
     elsewhere = 0.0 if options.mapped_area or all(s.mapped_as is not None for s in strata) else None
     return tuple(known.get(name, elsewhere) for name in classes)

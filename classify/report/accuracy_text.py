@@ -40,8 +40,12 @@ def _areas(facts: ReportFacts, accuracy: AccuracyFacts, words: Messages) -> Iter
     if report_kind(facts) == "sample":
         yield Paragraph(words.rich("areas.text"))
         outside = [n for n in accuracy.classes if _is_outside(accuracy, n)]
-        key = "areas.outside" if outside else "areas.outside_none"
-        yield Paragraph(words.rich(key, names=", ".join(outside)))
+        unknown = [n for n in accuracy.classes if accuracy.mapped[n] is None]
+        if outside or not unknown:
+            key = "areas.outside" if outside else "areas.outside_none"
+            yield Paragraph(words.rich(key, names=", ".join(outside)))
+        if unknown:
+            yield Paragraph(words.rich("areas.unmatched", names=", ".join(unknown)), "caution")
     if len(accuracy.classes) > DRAWN_ON_PAGE_ONE:
         yield area_figure(facts, accuracy, words)
     yield _area_table(accuracy, words)

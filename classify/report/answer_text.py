@@ -13,6 +13,7 @@ from classify.report.numbers import is_symmetric, share_decimals
 
 # With more classes than this the drawing of areas would crowd the answer off page one.
 DRAWN_ON_PAGE_ONE = 10
+_RESERVED = {"distance": "distance kept", "reserves": "reserves used"}
 
 
 def report_kind(facts: ReportFacts) -> Literal["sample", "purposive", "screening"]:
@@ -48,9 +49,23 @@ def _from_sample(facts: ReportFacts, words: Messages) -> Iterator[Block]:
     yield Paragraph(
         words.rich("answer.level", level=style.percent(accuracy.level, 0), points=style.number(accuracy.points)), "note"
     )
+    if accuracy.reservations:
+        yield Paragraph(sample_claim(accuracy, words), "caution")
     if len(accuracy.classes) <= DRAWN_ON_PAGE_ONE:
         yield area_figure(facts, accuracy, words)
     yield _glance(accuracy, words)
+
+
+def sample_claim(accuracy: AccuracyFacts, words: Messages) -> Rich:
+    """What a probability sample may claim, less what its reservations take from it."""
+    base = "probability"
+    if "design assumed" in accuracy.reservations:
+        base = "assumed"
+    elif "part left out" in accuracy.reservations:
+        base = "part"
+    keys = [base, *(k for k in ("distance", "reserves") if _RESERVED[k] in accuracy.reservations)]
+    sentences = [words.rich(f"method.claim_{key}") for key in keys]
+    return tuple(span for one in sentences for span in (*one, *words.rich("answer.space")))[:-1]
 
 
 def area_figure(facts: ReportFacts, accuracy: AccuracyFacts, words: Messages) -> Figure:

@@ -99,7 +99,8 @@ class AccuracyFacts:
     """What assessment.json says, with estimates by class name. Matrices: rows map, columns reference.
 
     either: overall agreement with the first or the second label, where points have two. unlabelled: points that nobody
-    could label; unlabelled_bounds: overall accuracy if the map were wrong, or right, on all of them.
+    could label; unlabelled_bounds: overall accuracy if the map were wrong, or right, on all of them. clusters: how many
+    there are, None where points were drawn singly. reservations: what takes something from the claim of the sample.
     """
 
     evidence: EvidenceName
@@ -121,7 +122,9 @@ class AccuracyFacts:
     quantity: float | None
     allocation: float | None
     warnings: tuple[str, ...] = ()
-    clusters: bool = False
+    clusters: int | None = None
+    post_stratified: bool = False
+    reservations: tuple[str, ...] = ()
     either: Estimate | None = None
     unlabelled: int = 0
     unlabelled_bounds: tuple[float | None, float | None] = (None, None)

@@ -94,9 +94,14 @@ def accuracy_facts(content: Mapping[str, Any], path: Path) -> AccuracyFacts:
 
 
 def _extras(content: Mapping[str, Any], classes: Sequence[str]) -> dict[str, Any]:
-    """What only some samples have: clusters, second labels, points that could not be labelled, regions."""
+    """What only some samples have: strata after the draw, clusters, reservations, second labels, points that could not
+    be labelled, regions."""
     either, unlabelled = content.get("either_label"), content.get("unlabelled")
-    found: dict[str, Any] = {"clusters": bool(content["design"].get("clusters"))}
+    design = content["design"]
+    found: dict[str, Any] = {
+        "clusters": design["cluster_count"], "post_stratified": bool(design["post_stratified"]),
+        "reservations": tuple(design["reservations"]),
+    }  # fmt: skip
     if either is not None:
         found["either"] = _estimate(either["overall_accuracy"])
     if unlabelled is not None:

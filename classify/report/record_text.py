@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from typing import Any
 
-from classify.report.answer_text import report_kind, unit_word
+from classify.report.answer_text import report_kind, sample_claim, unit_word
 from classify.report.document import Block, Code, Column, Listing, Pairs, Paragraph, Section, Subheading, Table
 from classify.report.facts import AccuracyFacts, ReportFacts
 from classify.report.messages import Messages, Rich, plain
@@ -22,16 +22,18 @@ def method_section(facts: ReportFacts, words: Messages) -> Section:
 
 def _method(facts: ReportFacts, accuracy: AccuracyFacts, words: Messages) -> Iterator[Block]:
     style, unit = words.numbers, unit_word(accuracy.unit, words)
-    claims = {"probability sample": "probability", "purposive sample": "purposive"}
-    yield Paragraph(words.rich(f"method.claim_{claims.get(accuracy.evidence, 'training')}"))
+    if report_kind(facts) == "sample":
+        yield Paragraph(sample_claim(accuracy, words))
+    else:
+        yield Paragraph(words.rich(f"method.claim_{'purposive' if report_kind(facts) == 'purposive' else 'training'}"))
     yield Subheading(words.text("method.design"))
-    key = accuracy.design_kind.replace(" ", "_").replace("-", "_")
+    key = accuracy.design_kind.replace(" ", "_") + ("_post_stratified" if accuracy.post_stratified else "")
     area = style.rounded(accuracy.total_area, 4) + (f"\u00a0{unit}" if unit else "")
     yield Paragraph(
         words.rich(f"method.design_{key}", points=style.number(accuracy.points), strata=len(accuracy.strata), area=area)
     )
-    if accuracy.clusters:
-        yield Paragraph(words.rich("method.clusters"))
+    if accuracy.clusters is not None:
+        yield Paragraph(words.rich("method.clusters", clusters=style.number(accuracy.clusters)))
     yield Table(
         "strata", words.text("method.strata"),
         (

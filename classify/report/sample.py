@@ -74,11 +74,12 @@ def _strata_table(sample: ReferenceSample) -> pd.DataFrame:
 
 def _method(project: Project, sample: ReferenceSample, assessment: Mapping[str, Any]) -> dict[str, Any]:
     """Keywords of `AssessmentOptions` that give `assessment` from the tables."""
-    mapped = {name: area["mapped"] for name, area in assessment["area"].items() if area["mapped"] is not None}
+    mapped = {name: area["mapped"] for name, area in assessment["area"].items()}
     return {
         "confidence_level": assessment["confidence_level"], "interval": project.report.interval,
         "seed": project.project.seed, "kind": sample.kind, "evidence": sample.evidence,
         "classes": list(assessment["classes"]), "area_unit": assessment["area_unit"], "mapped_area": mapped,
+        "reservations": list(sample.reservations),
     }  # fmt: skip
 
 
