@@ -167,6 +167,12 @@ def test_pdf_is_tagged_and_has_outline_title_and_language(made):
     assert {"How sure are you?", "Limits and cautions"} <= set(outline)
 
 
+def test_pdf_claims_the_accessibility_standard_where_fonts_allow(all_made):
+    # ISO 14289-1 files say so in their XMP metadata; the typesetter checks what it can before it writes that.
+    metadata = pypdf.PdfReader(all_made["change"].folder / "report.pdf").trailer["/Root"]["/Metadata"].get_data()
+    assert re.search(rb"pdfuaid:part[^0-9]*1", metadata)
+
+
 def test_page_is_one_file_that_asks_for_nothing(made):
     assert not re.search(r'(?:src|href)="(?!data:|#)', made.page)
     assert "@import" not in made.page
