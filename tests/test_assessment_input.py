@@ -98,6 +98,19 @@ BAD_TABLES = [
     ({"matrix": "map,a,b\na,0,0\nb,0,0\n", "strata": STRATA}, r"matrix.csv: the matrix holds no counts"),
     ({"matrix": "map,a,b\na,1,1\na,0,2\n", "strata": STRATA}, r"matrix.csv: class 'a' names more than one row"),
     ({"matrix": MATRIX, "strata": "stratum,area\na,30\nc,70\n"}, r"map class 'b' of .*matrix.csv is no stratum"),
+    ({"points": "map,reference\na,a\na\n"}, r"points.csv, row 3: the number of fields is 1, but there are 2 columns"),
+    ({"points": "map,reference\na,a,b\n"}, r"points.csv, row 2: the number of fields is 3, but there are 2 columns"),
+    ({"points": "map,map,reference\na,b,a\n"}, r"points.csv: more than one column is called 'map'"),
+    ({"points": "map,,reference\na,b,a\n"}, r"points.csv: a column has no name"),
+    ({"points": 'map,reference\na,"a\n'}, r"points.csv: this is not a UTF-8 table"),
+    (
+        {"points": POINTS, "strata": "stratum,area\na,30\nb,0\n"},
+        r"strata.csv, column 'stratum': stratum 'b' has points, but its area is 0",
+    ),
+    (
+        {"matrix": MATRIX, "strata": "stratum,area\na,0\nb,70\n"},
+        r"strata.csv, column 'stratum': stratum 'a' has points, but its area is 0",
+    ),
     ({"points": POINTS, "strata": STRATA, "merge": "class,counts_as\na,\n"}, r"merge.csv, row 2, column 'counts_as'"),
 ]  # fmt: skip
 
@@ -125,6 +138,21 @@ def test_labels_outside_the_given_classes():
     points = pd.DataFrame({"map": ["a", "a"], "reference": ["a", "z"]})
     with pytest.raises(SampleError, match=r"row 2, column 'reference': 'z' is no class\n.*classes are 'a', 'b'"):
         assess(points, options=AssessmentOptions(classes=("a", "b")))
+
+
+def test_matrix_with_a_class_outside_the_given_ones():
+    matrix = pd.DataFrame({"map": ["a", "b"], "a": [5, 1], "b": [2, 7]})
+    with pytest.raises(SampleError, match=r"row 2, column 'map': 'b' is no class\n.*classes are 'a'"):
+        assess_matrix(matrix, options=AssessmentOptions(classes=("a",)))
+
+
+def test_blank_columns_that_spreadsheets_leave_are_dropped(run):
+    clean, _, out = run(points=POINTS, strata=STRATA)
+    expected = json.loads((out / "assessment.json").read_text("utf-8"))
+    trailing = POINTS.replace("\n", ",,\n")
+    result, error, _ = run(points="\ufeff" + trailing, strata=STRATA.replace("\n", " \r\n"))
+    assert error is None, result.output
+    assert json.loads((out / "assessment.json").read_text("utf-8")) == expected and clean.exit_code == 0
 
 
 def test_exit_code_and_message_without_traceback(tmp_path):

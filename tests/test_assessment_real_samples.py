@@ -198,6 +198,14 @@ def test_nothing_wrong_in_the_sample_is_not_certainty():
     assert only_warning(found, "kappa has no interval")
 
 
+def test_warnings_on_classes_go_by_points():
+    """A class with points has been seen, even where what was seen of it has no share in the statistic."""
+    found = assess(sample([("a", "a", "b")] * 5 + [("b", "b", "a")] * 5), AREAS)
+    assert found.overall_accuracy.estimate == 0 and found.kappa.standard_error == 0
+    assert only_warning(found, "kappa has no interval, as the labelled points of each stratum are all alike")
+    assert not any("no labelled point disagrees" in text for text in found.warnings)
+
+
 def test_systematic_sample_and_few_clusters_are_remarked_on():
     options = AssessmentOptions(kind="systematic")
     found = assess(sample(TWO).drop(columns="stratum"), strata(everything=100.0), options)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import csv
+from collections import Counter
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -82,21 +84,48 @@ def plain_text(value: object) -> str:
 
 
 def read_table(path: Path) -> pd.DataFrame:
-    """Read a CSV file as text, blanks as "". Raises DataError when it is missing, empty or not a table."""
+    """Read a CSV file as text, blanks as "". Blank columns at the end, as spreadsheets leave them, are dropped.
+
+    Raises DataError when it is missing, empty or not a table: rows of unequal length, columns that share a name.
+    """
     try:
-        table = pd.read_csv(path, dtype=str, keep_default_na=False, encoding="utf-8-sig", index_col=False)
+        with path.open(encoding="utf-8-sig", newline="") as stream:
+            rows = [row for row in csv.reader(stream, strict=True) if row]
     except FileNotFoundError as error:
         raise DataError("there is no such file", where=str(path)) from error
-    except pd.errors.EmptyDataError as error:
-        raise DataError("the file is empty", where=str(path), fix="its first row names the columns") from error
-    except (pd.errors.ParserError, UnicodeDecodeError) as error:
+    except (csv.Error, UnicodeDecodeError) as error:
         raise DataError(f"this is not a UTF-8 table of comma-separated values: {error}", where=str(path)) from error
     except OSError as error:
         raise DataError(f"the file cannot be read: {error.strerror}", where=str(path)) from error
-    table.columns = [str(column).strip() for column in table.columns]
-    if table.empty:
+    if not rows:
+        raise DataError("the file is empty", where=str(path), fix="its first row names the columns")
+    header = [column.strip() for column in rows[0]]
+    while header and not header[-1]:
+        header.pop()
+    raise_if_errors(_misshapen(header, rows[1:], path), DataError)
+    if len(rows) == 1:
         raise DataError("the table has a first row but no others", where=str(path))
-    return table
+    return pd.DataFrame([row[: len(header)] for row in rows[1:]], columns=header, dtype=object)
+
+
+def _misshapen(header: list[str], rows: list[list[str]], path: Path) -> list[Problem]:
+    """Columns that share a name or have none; rows with fewer fields than columns, or more that are not blank."""
+    again = sorted(name for name, n in Counter(header).items() if n > 1 or not name)
+    problems = [
+        Problem(f"more than one column is called {name!r}" if name else "a column has no name", str(path),
+                "each column needs a name of its own")
+        for name in again
+    ]  # fmt: skip
+    n = len(header)
+    faulty = [i for i, row in enumerate(rows) if len(row) < n or any(field.strip() for field in row[n:])]
+    problems += [
+        Problem(f"the number of fields is {len(rows[i])}, but there are {n} columns", f"{path}, row {i + 2}",
+                "separate fields by commas, blank ones too, and put text with commas in double quotes")
+        for i in faulty[:ROWS_NAMED]
+    ]  # fmt: skip
+    if len(faulty) > ROWS_NAMED:
+        problems.append(Problem(f"{len(faulty) - ROWS_NAMED} more rows with such a fault", str(path)))
+    return problems
 
 
 def require_columns(table: pd.DataFrame, wanted: Iterable[str], name: TableName) -> None:

@@ -181,12 +181,11 @@ def compare_sample(sample: ReferenceSample, options: AssessmentOptions, *, names
     pairs = iter(_pairs(estimator, firsts, seconds))
     overall = next(pairs)
     users, producers = ({name: next(pairs) for name in sample.classes} for _ in _PER_CLASS)
-    quiet = replace(sample, mapped_area=(0.0,) * k)  # mapped areas are no matter here
     return Comparison(
         evidence_name=sample.evidence, confidence_level=options.confidence_level, classes=sample.classes,
         design_kind=sample.kind, first=names[0], second=names[1], overall_accuracy=overall, users_accuracy=users,
         producers_accuracy=producers, mcnemar=_mcnemar(t, other),
-        problems=(*sample.problems, *findings(quiet, t, np.ones((k, k)) / k**2), *_about_mcnemar(t)),
+        problems=(*sample.problems, *findings(sample, t), *_about_mcnemar(t)),
     )  # fmt: skip
 
 

@@ -12,7 +12,7 @@ from classify.assessment import statistics as st
 from classify.assessment.agreement import area_matrix, disagreement, kappa, kappa_values
 from classify.assessment.estimate import Floats, Linearised, Ratio, Tally, linearise, tally
 from classify.assessment.evidence import EVIDENCE
-from classify.assessment.findings import findings, kappa_findings, region_findings, unseen_findings
+from classify.assessment.findings import class_findings, findings, kappa_findings, region_findings, unseen_findings
 from classify.assessment.intervals import Bounds, Estimate, proportion, signed
 from classify.assessment.options import AssessmentOptions
 from classify.assessment.result import (
@@ -58,8 +58,9 @@ def estimate_sample(sample: ReferenceSample, options: AssessmentOptions) -> Asse
         unlabelled=_unlabelled(sample, options),
         regions=_regions(sample, t, estimator),
         problems=(
-            *sample.problems, *findings(sample, t, proportions), *unseen_findings(sample, t, list(areas.values())),
-            *kappa_findings(agreement), *region_findings(sample, t),
+            *sample.problems, *findings(sample, t), *class_findings(sample, t),
+            *unseen_findings(sample, t, list(areas.values())), *kappa_findings(agreement, t),
+            *region_findings(sample, t),
         ),
     )  # fmt: skip
 

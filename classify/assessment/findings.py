@@ -17,14 +17,16 @@ _FEW_POINTS = 30
 _FEW_CLUSTERS = 30
 
 
-def findings(sample: ReferenceSample, t: Tally, proportions: Floats) -> tuple[Problem, ...]:
-    """Warnings about a sample and its tally. proportions: the area matrix, float64 (k, k)."""
+def findings(sample: ReferenceSample, t: Tally) -> tuple[Problem, ...]:
+    """Warnings about a sample and its tally, whatever is estimated from it."""
     inferential = EVIDENCE[sample.evidence].has_intervals
     about_chance = (*_few_clusters(t), *_empty_strata(sample, t), *_lone_units(sample, t)) if inferential else ()
-    return (
-        *_evidence(sample), *_off_map(sample), *_unlabelled(sample), *about_chance,
-        *_one_sided_classes(sample, proportions), *_mapped_areas(sample),
-    )  # fmt: skip
+    return (*_evidence(sample), *_off_map(sample), *_unlabelled(sample), *about_chance)
+
+
+def class_findings(sample: ReferenceSample, t: Tally) -> tuple[Problem, ...]:
+    """Warnings about classes that are wanting on the map or among the labels, or whose mapped area is not known."""
+    return (*_one_sided_classes(sample, t), *_mapped_areas(sample))
 
 
 def unseen_findings(sample: ReferenceSample, t: Tally, areas: Sequence[Estimate]) -> Iterator[Problem]:
@@ -55,17 +57,23 @@ def unseen_findings(sample: ReferenceSample, t: Tally, areas: Sequence[Estimate]
             )
 
 
-def kappa_findings(kappa: Estimate) -> Iterator[Problem]:
+def kappa_findings(kappa: Estimate, t: Tally) -> Iterator[Problem]:
     """Say why kappa, or its interval, is missing."""
     if kappa.estimate is None:
         yield _warning("kappa cannot be estimated, as a single class fills both map and reference")
     elif kappa.standard_error == 0 and kappa.lower is None:
-        yield _warning("kappa has no interval, as no labelled point disagrees with the map")
+        disagree = _points(t)[(t.map != t.reference)].sum() > 0
+        why = (
+            "the labelled points of each stratum are all alike"
+            if disagree
+            else "no labelled point disagrees with the map"
+        )
+        yield _warning(f"kappa has no interval, as {why}")
 
 
 def region_findings(sample: ReferenceSample, t: Tally) -> Iterator[Problem]:
     """Warnings about regions with few points or none."""
-    here = t.mapped * np.asarray(t.units.T @ t.repeats).ravel()
+    here = t.mapped * _points(t)
     for region, name in enumerate(sample.regions):
         n = round(float(here @ (t.region == region)))
         if n == 0:
@@ -141,8 +149,17 @@ def _lone_units(sample: ReferenceSample, t: Tally) -> Iterator[Problem]:
     )
 
 
-def _one_sided_classes(sample: ReferenceSample, proportions: Floats) -> Iterator[Problem]:
-    rows, columns = proportions.sum(axis=1), proportions.sum(axis=0)
+def _points(t: Tally) -> Floats:
+    """Usable points per cell, float64 (c,)."""
+    return np.asarray(t.units.T @ t.repeats, dtype=np.float64).ravel()
+
+
+def _one_sided_classes(sample: ReferenceSample, t: Tally) -> Iterator[Problem]:
+    # Points are counted, as a class may have some and yet no share of the area.
+    on_map, points = t.mapped > 0, _points(t)
+    rows, columns = (
+        np.bincount(codes[on_map], points[on_map], minlength=len(sample.classes)) for codes in (t.map, t.reference)
+    )
     for c, name in enumerate(sample.classes):
         if rows[c] == 0 and columns[c] == 0:
             yield _warning(

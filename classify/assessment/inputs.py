@@ -52,7 +52,7 @@ def sample_from_points(
         repeated = ()
     stratum, problems = _strata_of(columns.get("stratum"), table, len(columns["reference"].codes), options)
     columns, found = _prepared(columns, stratum, table, options, may_lie_off_map=may_lie_off_map)
-    raise_if_errors([*problems, *found], SampleError)
+    raise_if_errors([*problems, *found, *_points_without_area(stratum, table, options)], SampleError)
     classes = _classes(options, table, columns)
     raise_if_errors(_unknown(columns, classes, options), SampleError)
     codes = {c: columns[c].places_in(classes) for c in _LABEL_COLUMNS if c in columns}
@@ -90,6 +90,8 @@ def sample_from_matrix(
     if len(table) > 1:
         stratum_of_row, problems = _strata_of_rows(names, merged, table, options)
         raise_if_errors(problems, SampleError)
+    problems = _points_without_area(stratum_of_row[counts.any(axis=1)], table, options)
+    raise_if_errors([*_unknown({"map": Labels.of(pd.Series(merged))}, classes, options), *problems], SampleError)
     row, col = np.nonzero(counts)
     place = np.array([classes.index(m) for m in merged], dtype=np.int64)
     if len(table) > 1:
@@ -129,6 +131,16 @@ def _strata_of(
 
     fix = f"strata there: {', '.join(map(repr, names))}"
     return places, faults(places == NO_LABEL, named, "stratum", options.points, what, fix)
+
+
+def _points_without_area(
+    stratum: NDArray[np.int64], table: tuple[Stratum, ...], options: AssessmentOptions
+) -> list[Problem]:
+    return [
+        Problem(f"stratum {table[place].name!r} has points, but its area is 0", options.strata.column("stratum"),
+                "give its area; points of it would count for nothing")
+        for place in np.unique(stratum[stratum != NO_LABEL]) if table[place].area == 0
+    ]  # fmt: skip
 
 
 def _strata_of_rows(
