@@ -85,6 +85,14 @@ def test_the_collection_and_its_items_are_valid_stac_with_classes(project, scene
         assert item.datetime is not None
 
 
+def test_the_map_of_a_project_has_an_item_too(trained):
+    item = pystac.Item.from_file(str(trained / "outputs" / "map" / "item.json"))
+    assert item.properties["title"] == "A miniature of the Sorrel Basin"
+    assert {asset.get_absolute_href() for asset in item.assets.values()} == {
+        str(trained / "outputs" / "map" / name) for name in ("cover.tif", "confidence.tif", "reach.tif", "areas.csv")
+    }
+
+
 def test_maps_that_are_there_are_kept_and_others_replaced_only_when_told(project, scenes, tmp_path):
     maps = tmp_path / "maps"
     shutil.rmtree(scenes / "cut")
