@@ -57,7 +57,12 @@ def write_text(target: Path, content: str) -> None:
 
 def write_json(target: Path, content: Mapping[str, Any]) -> None:
     """Write JSON that any program reads: UTF-8, two-space indent, never NaN or Infinity. Raises OutputError."""
-    write_text(target, json.dumps(content, indent=2, ensure_ascii=False, allow_nan=False) + "\n")
+    write_text(target, json_text(content))
+
+
+def json_text(content: Mapping[str, Any]) -> str:
+    """The text that `write_json` writes."""
+    return json.dumps(content, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
 
 
 def read_json(path: Path) -> dict[str, Any]:

@@ -12,7 +12,7 @@ from click.testing import CliRunner
 
 from classify.assessment import AssessmentOptions, assess, assess_matrix
 from classify.cli.main import cli
-from classify.errors import LandassayError, SampleError
+from classify.errors import LandassayError, OutputError, SampleError
 
 POINTS = "stratum,map,reference\na,a,a\na,a,b\nb,b,b\nb,b,b\n"
 STRATA = "stratum,area\na,30\nb,70\n"
@@ -175,6 +175,13 @@ def test_exit_code_and_message_without_traceback(tmp_path):
         ["assess", "--points", "p.csv", "--matrix", "m.csv"],
         ["assess", "--strata", "s.csv"],
         ["assess", "--confidence", "0.9"],
+        ["assess", "--points", "p.csv", "--out", "o", "--force"],
+        ["assess", "--points", "p.csv", "--out", "o", "--project", "p"],
+        ["assess", "--points", "p.csv", "--out", "o", "--pixel-area", "4"],
+        ["assess", "--points", "p.csv", "--out", "o", "--seed", "4"],
+        ["assess", "--points", "p.csv", "--out", "o", "--purposive", "--confidence", "0.9"],
+        ["assess", "--matrix", "m.csv", "--out", "o", "--unlabelled", "cloud"],
+        ["compare", "--points", "p.csv", "--out", "o", "--project", "p"],
         ["compare"],
         ["compare", "other.tif", "--purposive"],
         ["compare", "other.tif", "--points", "p.csv"],
@@ -207,7 +214,45 @@ def test_json_goes_to_stdout_and_everything_else_to_stderr(run):
     assert json.loads(result.stdout) == json.loads((out / "assessment.json").read_text("utf-8"))
     assert "warning: 1 of 5 points have no reference label" in result.stderr
     names = {path.name for path in out.iterdir()}
-    assert names == {"assessment.json", "accuracy.csv", "areas.csv", "matrix.csv", "strata.csv"}
+    tables = {"accuracy.csv", "areas.csv", "matrix.csv", "strata.csv"}
+    assert names == {"assessment.json", "assessment.files.json", *tables}
+
+
+def test_inputs_and_foreign_files_are_never_written_over(run, tmp_path):
+    """The documented names of inputs are names of results, and --out may be the folder they lie in."""
+    (tmp_path / "areas.csv").write_text("mine\n")
+    for name, tables in {"strata": {"points": POINTS}, "matrix": {"matrix": MATRIX}}.items():
+        result, error, _ = run("assess", "--out", str(tmp_path), strata=STRATA, **tables)
+        assert isinstance(error, OutputError)
+        assert {p.where for p in error.problems} >= {str(tmp_path / f"{name}.csv"), str(tmp_path / "areas.csv")}
+        assert (tmp_path / "strata.csv").read_text() == STRATA and (tmp_path / "areas.csv").read_text() == "mine\n"
+        assert not (tmp_path / "assessment.json").exists(), "all targets are checked before the first is written"
+    (tmp_path / "comparison.csv").write_text("stratum,map,other_map,reference\na,a,a,a\nb,b,b,b\n")
+    arguments = ["compare", "--points", str(tmp_path / "comparison.csv"), "--strata", str(tmp_path / "strata.csv")]
+    result = CliRunner().invoke(cli, [*arguments, "--out", str(tmp_path)])
+    assert isinstance(result.exception, OutputError) and "input would be overwritten" in str(result.exception)
+
+
+def test_own_results_are_written_again_unless_they_were_changed(run):
+    regions = POINTS.replace("\n", ",north\n").replace("reference,north", "reference,region")
+    _, error, out = run(points=regions, strata=STRATA)
+    assert error is None and (out / "regions.csv").is_file()
+    _, error, _ = run(points=POINTS + "b,b,a\n", strata=STRATA)
+    assert error is None and not (out / "regions.csv").exists(), "a table of the run before would be taken for new"
+    (out / "accuracy.csv").write_text("corrected by hand\n")
+    before = (out / "assessment.json").read_bytes()
+    _, error, _ = run(points=POINTS, strata=STRATA)
+    assert isinstance(error, OutputError) and "changed since it was written" in str(error)
+    assert (out / "accuracy.csv").read_text() == "corrected by hand\n"
+    assert (out / "assessment.json").read_bytes() == before
+    (out / "assessment.files.json").write_text("not ours")
+    _, error, _ = run(points=POINTS, strata=STRATA)
+    assert len(error.problems) == 6, "without its record no file is known as ours"
+
+
+def test_pixel_area_that_changes_nothing_is_wrong_usage(run):
+    result, _, out = run("assess", "--pixel-area", "4", points=POINTS, strata=STRATA)
+    assert result.exit_code == 2 and "has a column 'area'" in result.stderr and not out.exists()
 
 
 def test_strata_under_other_names_and_options_of_the_command(run):
@@ -239,7 +284,7 @@ def test_compare_from_tables(run):
     result, error, out = run("compare", points=points, strata=STRATA)
     assert error is None
     assert "The second map is right on" in result.stdout
-    assert {path.name for path in out.iterdir()} == {"comparison.json", "comparison.csv"}
+    assert {path.name for path in out.iterdir()} == {"comparison.json", "comparison.csv", "comparison.files.json"}
 
 
 def test_matrix_columns_may_come_in_another_order():

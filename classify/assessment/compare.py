@@ -6,7 +6,7 @@ Both maps are judged at the same points, so their errors go together; difference
 from __future__ import annotations
 
 import html
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -26,8 +26,9 @@ from classify.assessment.intervals import Estimate
 from classify.assessment.options import AssessmentOptions
 from classify.assessment.result import sentence
 from classify.assessment.sample import ReferenceSample
+from classify.assessment.user_folder import write_results
 from classify.errors import Problem, SampleError
-from classify.files import write_json, write_text
+from classify.files import json_text
 
 # With fewer discordant pairs McNemar's test is the exact binomial one (common practice).
 _EXACT_BELOW = 25
@@ -189,12 +190,13 @@ def compare_sample(sample: ReferenceSample, options: AssessmentOptions, *, names
     )  # fmt: skip
 
 
-def write_comparison(comparison: Comparison, folder: Path) -> list[Path]:
-    """Write comparison.json and comparison.csv into `folder`, each whole or not at all. Returns the paths."""
-    written = [folder / "comparison.json", folder / "comparison.csv"]
-    write_json(written[0], comparison.to_json())
-    write_text(written[1], comparison.frame.to_csv(index=False, lineterminator="\n"))
-    return written
+def write_comparison(comparison: Comparison, folder: Path, *, inputs: Sequence[Path] | None = None) -> list[Path]:
+    """Write comparison.json and comparison.csv into `folder`; inputs and what is raised as for `write_assessment`."""
+    files = {
+        "comparison.json": json_text(comparison.to_json()),
+        "comparison.csv": comparison.frame.to_csv(index=False, lineterminator="\n"),
+    }
+    return write_results(folder, files, "comparison.files.json", inputs)
 
 
 _PER_CLASS = (st.users_accuracy, st.producers_accuracy)

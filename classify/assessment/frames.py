@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from pathlib import Path
 
 import pandas as pd
@@ -10,7 +11,8 @@ from classify.assessment.estimation import estimate_sample
 from classify.assessment.inputs import sample_from_matrix, sample_from_points
 from classify.assessment.options import AssessmentOptions
 from classify.assessment.result import Assessment
-from classify.files import write_json, write_text
+from classify.assessment.user_folder import write_results
+from classify.files import json_text
 
 DEFAULTS = AssessmentOptions()
 
@@ -39,10 +41,12 @@ def assess_matrix(
     return estimate_sample(sample_from_matrix(matrix, strata, options), options)
 
 
-def write_assessment(assessment: Assessment, folder: Path) -> list[Path]:
-    """Write assessment.json and the tables as CSV into `folder`, each whole or not at all. Returns the paths."""
-    written = [folder / "assessment.json"]
-    write_json(written[0], assessment.to_json())
+def write_assessment(assessment: Assessment, folder: Path, *, inputs: Sequence[Path] | None = None) -> list[Path]:
+    """Write assessment.json and the tables as CSV into `folder`, each whole or not at all. Returns the paths.
+
+    inputs: the files it was made from, where `folder` is of the user's choosing: neither they nor any file that was not
+    written here is written over. Raises OutputError, and then has written nothing.
+    """
     tables = {
         "accuracy.csv": assessment.accuracy_frame,
         "areas.csv": assessment.area_frame,
@@ -51,7 +55,6 @@ def write_assessment(assessment: Assessment, folder: Path) -> list[Path]:
     }
     if assessment.regions:
         tables["regions.csv"] = assessment.region_frame
-    for name, table in tables.items():
-        write_text(folder / name, table.to_csv(index=False, lineterminator="\n"))
-        written.append(folder / name)
-    return written
+    files = {"assessment.json": json_text(assessment.to_json())}
+    files |= {name: table.to_csv(index=False, lineterminator="\n") for name, table in tables.items()}
+    return write_results(folder, files, "assessment.files.json", inputs)

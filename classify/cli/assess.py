@@ -30,6 +30,7 @@ def command(call: Call, matrix: Path | None, force: bool, tables: SampleTables) 
         tables.refuse()
         run_stages(call, ["assess"], force=force)
     elif tables.points is None or matrix is None:
+        tables.refuse_unused(matrix=matrix is not None)
         _tables(call, matrix, tables)
     else:
         raise click.UsageError("give either --points or --matrix, not both")
@@ -42,7 +43,7 @@ def _tables(call: Call, matrix: Path | None, tables: SampleTables) -> None:
     out, file = tables.require_out(), matrix or tables.points
     assert file is not None
     assessment = (assess if matrix is None else assess_matrix)(*tables.read(file))
-    write_assessment(assessment, out)
+    write_assessment(assessment, out, inputs=tables.files(file))
     call.show(assessment.to_json(), f"{assessment_text(assessment.to_json())}\nwritten to {out}")
     for warning in assessment.warnings:
         call.warn(f"warning: {warning}")

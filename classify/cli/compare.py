@@ -32,6 +32,7 @@ def command(call: Call, other_map: Path | None, tables: SampleTables) -> None:
         tables.refuse()
         comparison, out = _project(call, other_map)
     else:
+        tables.refuse_unused()
         comparison, out = _tables(tables)
     call.show(comparison.to_json(), f"{_text(comparison)}\nwritten to {out}")
     for warning in comparison.warnings:
@@ -52,7 +53,7 @@ def _tables(tables: SampleTables) -> tuple[Comparison, Path]:
     out, points = tables.require_out(), tables.points
     assert points is not None
     comparison = compare(*tables.read(points))
-    write_comparison(comparison, out)
+    write_comparison(comparison, out, inputs=tables.files(points))
     return comparison, out
 
 

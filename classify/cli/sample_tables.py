@@ -37,6 +37,26 @@ class SampleTables:
                 f"{', '.join(self.spoken)}: only with tables; a project says this in its [reference] and [report]"
             )
 
+    def refuse_unused(self, *, matrix: bool = False) -> None:
+        """Raise UsageError for options that change nothing about tables (of points, or a matrix)."""
+        reasons = {
+            "only with a project": ("--project", "--force"),
+            "only with --points": ("--unlabelled",) if matrix else (),
+            "only with --strata": ("--pixel-area",) if self.strata is None else (),
+            "not with --purposive, which gives no intervals":
+                ("--interval", "--confidence", "--seed") if self.settings["evidence"] == "purposive sample" else (),
+            "only with --interval bootstrap": ("--seed",) if self.settings["interval"] != "bootstrap" else (),
+        }  # fmt: skip
+        spoken = (*self.spoken, *_spoken(("project_path", "force")))
+        for reason, options in reasons.items():
+            unused = [option for option in options if option in spoken]
+            if unused:
+                raise click.UsageError(f"{', '.join(unused)}: {reason}")
+
+    def files(self, table: Path) -> list[Path]:
+        """The files that results come from: `table` and whichever others were named."""
+        return [path for path in (table, self.strata, self.merge) if path is not None]
+
     def require_out(self) -> Path:
         """The folder for results. Raises UsageError where it was not given."""
         if self.out is None:
@@ -55,7 +75,12 @@ class SampleTables:
             points=TableName(str(table), 2),
             strata=TableName(str(self.strata), 2),
         )
-        return read_table(table), None if self.strata is None else read_table(self.strata), options
+        strata = None if self.strata is None else read_table(self.strata)
+        if strata is not None and "area" in strata.columns and options.pixel_area is not None:
+            raise click.UsageError(
+                f"--pixel-area: only where strata give pixels, but {self.strata} has a column 'area'"
+            )
+        return read_table(table), strata, options
 
 
 def table_options(command: Callable[..., Any]) -> Callable[..., Any]:
@@ -93,6 +118,6 @@ def table_options(command: Callable[..., Any]) -> Callable[..., Any]:
 def _spoken(names: Sequence[str]) -> tuple[str, ...]:
     """Options among `names` that stand on the command line, as they are spelt there."""
     context = click.get_current_context()
-    options = {p.name: p.opts[0] for p in context.command.params}
+    options = {p.name: p.opts[0] for p in context.command.params if p.name}
     given = click.core.ParameterSource.COMMANDLINE
-    return tuple(options[name] for name in names if context.get_parameter_source(name) is given)
+    return tuple(options[name] for name in names if name in options and context.get_parameter_source(name) is given)
