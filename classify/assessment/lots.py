@@ -49,6 +49,28 @@ def _mixed(z: NDArray[np.uint64]) -> NDArray[np.uint64]:
         return np.asarray(z ^ (z >> _S31))
 
 
+# Small kernels with few arrays each are what the compiler makes wide instructions of.
+
+
+@_compiled
+def _count(line: NDArray[np.uint8], into_cell: int, step: int, counted: NDArray[np.int32]) -> None:
+    """Count the codes of one row by cell; its first pixel is the `into_cell`-th of the first cell."""
+    for cell in range(counted.shape[0]):
+        count = counted[cell]
+        for code in line[max(cell * step - into_cell, 0) : (cell + 1) * step - into_cell]:
+            count[code] += 1
+
+
+@_compiled
+def _fill(z0: np.uint64, lot: NDArray[np.uint64]) -> None:
+    """The lots of a row, as whole numbers below 2^53, from the counter before its first pixel."""
+    for j in range(lot.shape[0]):
+        z = z0 + np.uint64(j + 1) * _STEP
+        z = (z ^ (z >> _S30)) * _MIX_1
+        z = (z ^ (z >> _S27)) * _MIX_2
+        lot[j] = (z ^ (z >> _S31)) >> _S11
+
+
 @_compiled
 def _add_up(
     counted: NDArray[np.int32], stratum_of: NDArray[np.int16], area: NDArray[np.float64], pixels: NDArray[np.int64],
@@ -91,30 +113,25 @@ def offer(  # noqa: PLR0917 - a kernel takes plain arrays
         if s >= 0:
             share = -np.expm1(-max(limit[s], 0.0) * highest)
             bound[code] = np.uint64(min(share * 1.000001 + 1e-15, 1.0) * 9007199254740992.0)
+    highest_bound = bound.max()
     counted = np.zeros((cells, 256), np.int32)
+    lot = np.empty(codes.shape[1], np.uint64)
     found = 0
     for i in range(codes.shape[0]):
         line = codes[i]
         down = (row + i) // step - top
         z0 = start + np.uint64(np.int64(row + i) * width + col) * _STEP
-        for cell in range(cells):
-            count = counted[cell]
-            first = max((left + cell) * step - col, 0)
-            for j in range(np.uint64(first), np.uint64(min((left + cell + 1) * step - col, line.shape[0]))):
-                code = line[j]
-                count[code] += 1
-                z = z0 + (j + np.uint64(1)) * _STEP
-                z = (z ^ (z >> _S30)) * _MIX_1
-                z = (z ^ (z >> _S27)) * _MIX_2
-                lot = (z ^ (z >> _S31)) >> _S11
-                if lot <= bound[code]:
-                    s = stratum_of[code]
-                    key = -np.log1p(-np.float64(lot) * _UNIT) / cell_area[down, cell]
-                    if s >= 0 and key <= limit[s]:
-                        found_unit[found] = np.int64(row + i) * width + col + np.int64(j)
-                        found_key[found] = key
-                        found_stratum[found] = s
-                        found += 1
+        _count(line, col - left * step, step, counted)
+        _fill(z0, lot)
+        for j in range(line.shape[0]):
+            if lot[j] <= highest_bound and lot[j] <= bound[line[j]]:
+                s = stratum_of[line[j]]
+                key = -np.log1p(-np.float64(lot[j]) * _UNIT) / cell_area[down, (col + j) // step - left]
+                if s >= 0 and key <= limit[s]:
+                    found_unit[found] = np.int64(row + i) * width + col + j
+                    found_key[found] = key
+                    found_stratum[found] = s
+                    found += 1
         if i + 1 == codes.shape[0] or (row + i + 1) // step != (row + i) // step:
             _add_up(counted, stratum_of, cell_area[down], pixels, areas)
     return found
