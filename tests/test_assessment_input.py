@@ -150,7 +150,7 @@ def test_blank_columns_that_spreadsheets_leave_are_dropped(run):
     clean, _, out = run(points=POINTS, strata=STRATA)
     expected = json.loads((out / "assessment.json").read_text("utf-8"))
     trailing = POINTS.replace("\n", ",,\n")
-    result, error, _ = run(points="\ufeff" + trailing, strata=STRATA.replace("\n", " \r\n"))
+    result, error, _ = run(points="\ufeff" + trailing, strata=STRATA.replace("\n", " \r\n") + "\n \n")
     assert error is None, result.output
     assert json.loads((out / "assessment.json").read_text("utf-8")) == expected and clean.exit_code == 0
 

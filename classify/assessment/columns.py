@@ -91,6 +91,8 @@ def read_table(path: Path) -> pd.DataFrame:
     try:
         with path.open(encoding="utf-8-sig", newline="") as stream:
             rows = [row for row in csv.reader(stream, strict=True) if row]
+            # A line of spaces is a blank line too, where a row has more than one field.
+            rows = [row for row in rows if len(row) > 1 or len(rows[0]) == 1 or row[0].strip()]
     except FileNotFoundError as error:
         raise DataError("there is no such file", where=str(path)) from error
     except (csv.Error, UnicodeDecodeError) as error:
