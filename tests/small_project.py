@@ -77,7 +77,8 @@ def make_small_project(folder: Path, *, project: str = PROJECT) -> Path:
     folder.mkdir(parents=True, exist_ok=True)
     random = np.random.default_rng(3)
     truth = truth_indices()
-    reflectance = SPECTRA[truth] * random.normal(1, 0.12, (HEIGHT, WIDTH, 1)) + random.normal(0, 0.015, (*truth.shape, 4))
+    reflectance = SPECTRA[truth] * random.normal(1, 0.12, (HEIGHT, WIDTH, 1))
+    reflectance += random.normal(0, 0.015, (*truth.shape, 4))
     numbers = np.clip(np.moveaxis(reflectance, -1, 0) * 10_000, 1, 65_535).astype(np.uint16)
     numbers[:, :3, :5] = 0
     _write(folder / "bands.tif", numbers)

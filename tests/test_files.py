@@ -5,11 +5,14 @@ from __future__ import annotations
 import hashlib
 import json
 import os
+from pathlib import Path
 
 import pytest
 
 from classify.errors import DataError, OutputError
 from classify.files import TEMPORARY_SUFFIX, read_json, remove_leftovers, replacing, sha256, write_json, write_text
+
+FULL = Path("/dev/full")
 
 
 def test_a_failure_midway_keeps_the_old_file_and_leaves_nothing_behind(tmp_path):
@@ -38,11 +41,11 @@ def test_a_folder_that_cannot_be_made_is_a_clear_error(tmp_path):
     assert (tmp_path / "outputs").read_text() == "a file in the way"
 
 
-@pytest.mark.skipif(not os.path.exists("/dev/full"), reason="needs a device that is always full")
+@pytest.mark.skipif(not FULL.exists(), reason="needs a device that is always full")
 def test_a_full_disk_is_a_clear_error_and_keeps_the_old_file(tmp_path):
     target = tmp_path / "a.txt"
     write_text(target, "old")
-    with pytest.raises(OutputError, match="(?i)no space"), replacing(target), open("/dev/full", "wb", 0) as full:
+    with pytest.raises(OutputError, match=r"(?i)no space"), replacing(target), FULL.open("wb", 0) as full:
         full.write(b"x")
     assert target.read_text() == "old"
 

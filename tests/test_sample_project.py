@@ -1,4 +1,4 @@
-"""The sample project, whole: what a newcomer gets from the first command, held against the truth that it was made from."""
+"""The sample project, whole: what a newcomer gets from the first command, held against the truth it was made from."""
 
 from __future__ import annotations
 
@@ -59,7 +59,7 @@ def test_the_interval_of_overall_accuracy_holds_the_true_accuracy(assessment, ma
 
 
 def test_estimated_areas_are_nearer_to_the_truth_than_their_intervals_are_wide(assessment, mapped_and_true):
-    codes, true = mapped_and_true
+    _, true = mapped_and_true
     total = assessment["total_area"]
     held = 0
     for code, name in enumerate(assessment["classes"], start=1):

@@ -414,10 +414,10 @@ class ReportSettings(_Section):
     confidence_level: float = Field(default=0.95, gt=0.5, lt=1)
     interval: IntervalName = "automatic"
     area_unit: AreaUnit = "ha"
-    language: str = Field(default="en", description="language of the documents, such as \"en\" or \"es\"")
+    language: str = Field(default="en", description='language of the documents, such as "en" or "es"')
     logo: str | None = Field(default=None, description="a picture for the title block")
     sections: list[str] | None = Field(default=None, description="sections to keep; default: all")
-    response_design: str = Field(default="", description="how points were labelled: by whom, on what, under which rules")
+    response_design: str = Field(default="", description="how points were labelled: by whom, on what, by which rules")
 
 
 class Project(_Section):
