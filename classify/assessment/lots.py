@@ -9,24 +9,16 @@ OOPSLA), applied to a counter.
 
 from __future__ import annotations
 
-from typing import Any
-
-import numba
 import numpy as np
 from numpy.typing import NDArray
+
+from classify.features.compiled import compiled
 
 _STEP = np.uint64(0x9E3779B97F4A7C15)
 _MIX_1 = np.uint64(0xBF58476D1CE4E5B9)
 _MIX_2 = np.uint64(0x94D049BB133111EB)
 _S30, _S27, _S31, _S11 = np.uint64(30), np.uint64(27), np.uint64(31), np.uint64(11)
 _UNIT = 2.0**-53
-
-
-def _compiled(function: Any) -> Any:  # noqa: ANN401 - a numba dispatcher
-    try:
-        return numba.njit(nogil=True, error_model="numpy", cache=True)(function)
-    except RuntimeError:  # no folder for the cache, neither beside the source nor in the user's own
-        return numba.njit(nogil=True, error_model="numpy")(function)
 
 
 def stream(seed: int, purpose: int) -> np.uint64:
@@ -52,7 +44,7 @@ def _mixed(z: NDArray[np.uint64]) -> NDArray[np.uint64]:
 # Small kernels with few arrays each are what the compiler makes wide instructions of.
 
 
-@_compiled
+@compiled
 def _count(line: NDArray[np.uint8], into_cell: int, step: int, counted: NDArray[np.int32]) -> None:
     """Count the codes of one row by cell; its first pixel is the `into_cell`-th of the first cell."""
     for cell in range(counted.shape[0]):
@@ -61,7 +53,7 @@ def _count(line: NDArray[np.uint8], into_cell: int, step: int, counted: NDArray[
             count[code] += 1
 
 
-@_compiled
+@compiled
 def _fill(z0: np.uint64, lot: NDArray[np.uint64]) -> None:
     """The lots of a row, as whole numbers below 2^53, from the counter before its first pixel."""
     for j in range(lot.shape[0]):
@@ -71,7 +63,7 @@ def _fill(z0: np.uint64, lot: NDArray[np.uint64]) -> None:
         lot[j] = (z ^ (z >> _S31)) >> _S11
 
 
-@_compiled
+@compiled
 def _add_up(
     counted: NDArray[np.int32], stratum_of: NDArray[np.int16], area: NDArray[np.float64], pixels: NDArray[np.int64],
     areas: NDArray[np.float64],
@@ -88,7 +80,7 @@ def _add_up(
                 counted[cell, code] = 0
 
 
-@_compiled
+@compiled
 def offer(  # noqa: PLR0917 - a kernel takes plain arrays
     codes: NDArray[np.uint8], row: int, col: int, width: int, stratum_of: NDArray[np.int16],
     cell_area: NDArray[np.float64], step: int, start: np.uint64, limit: NDArray[np.float64], pixels: NDArray[np.int64],
