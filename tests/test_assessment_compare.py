@@ -143,3 +143,13 @@ def test_display_and_frame():
     found = compare(two_maps(10), STRATA, PLAIN)
     assert set(found.frame["of"]) == {"first map", "second map", "difference"}
     assert "percentage points" in found._repr_html_()
+
+
+def test_stratum_without_points_is_told_of_both_maps():
+    empty = pd.concat([STRATA, pd.DataFrame({"stratum": ["u"], "area": [2.0]})], ignore_index=True)
+    found = compare(two_maps(2).drop(columns="cluster"), empty, PLAIN)
+    assert "of the sampled area" in found.in_words and "mapped area" not in found.in_words
+    content = found.to_json()
+    assert content["design"]["reservations"] == ["part left out"] and "left out" in content["claim"]
+    whole = compare(two_maps(2).drop(columns="cluster"), STRATA, PLAIN)
+    assert "of the mapped area" in whole.in_words and whole.reservations == ()

@@ -17,6 +17,7 @@ from classify.assessment import assess_project
 from classify.assessment.draw import DrawOptions
 from classify.assessment.evidence import RESERVATIONS, claim_of
 from classify.assessment.project_sample import SampleRequest, add_to_sample, draw_sample, replace_point
+from classify.cli.render import assessment_text
 from classify.errors import SampleError
 from classify.report import gather_facts
 from classify.report.answer_text import sample_claim
@@ -154,6 +155,7 @@ def test_distance_and_replaced_points_are_told_with_their_reasons(folder):
 def test_sample_without_a_design_says_so_on_page_one(folder):
     found = found_in(folder)
     assert found.reservations == ("design assumed",) and "assumed, not known" in found.claim
+    assert found.claim in assessment_text(found.to_json())
     (folder / "outputs/model").mkdir()
     facts = gather_facts(load_project(folder), folder / "outputs")
     answer = write_document(facts).sections[0]

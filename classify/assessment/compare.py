@@ -18,14 +18,14 @@ from scipy import stats
 from classify.assessment import statistics as st
 from classify.assessment.bootstrap import ratios_of
 from classify.assessment.estimate import Floats, Ratio, Tally, linearise_differences, tally
-from classify.assessment.estimation import Estimator, require_labels
-from classify.assessment.evidence import EVIDENCE, EvidenceName
+from classify.assessment.estimation import Estimator, of_sampled_strata, require_labels
+from classify.assessment.evidence import EVIDENCE, EvidenceName, Reservation, claim_of
 from classify.assessment.findings import findings
 from classify.assessment.inputs import sample_from_points
 from classify.assessment.intervals import Estimate
 from classify.assessment.options import AssessmentOptions
 from classify.assessment.result import sentence
-from classify.assessment.sample import ReferenceSample
+from classify.assessment.sample import DesignKind, ReferenceSample
 from classify.assessment.user_folder import write_results
 from classify.errors import Problem, SampleError
 from classify.files import json_text
@@ -76,7 +76,9 @@ class Comparison:
     evidence_name: EvidenceName
     confidence_level: float
     classes: tuple[str, ...]
-    design_kind: str
+    design_kind: DesignKind
+    post_stratified: bool
+    reservations: tuple[Reservation, ...]
     first: str
     second: str
     overall_accuracy: Pair
@@ -96,7 +98,9 @@ class Comparison:
         first, second, difference = (p.estimate for p in (
             self.overall_accuracy.first, self.overall_accuracy.second, self.overall_accuracy.difference))  # fmt: skip
         assert first is not None and second is not None and difference is not None, "both maps have labelled points"
-        where = "of the mapped area" if EVIDENCE[self.evidence_name].has_intervals else "of the sampled places"
+        where = "of the sampled area" if "part left out" in self.reservations else "of the mapped area"
+        if not EVIDENCE[self.evidence_name].has_intervals:
+            where = "of the sampled places"
         text = f"{self.second[:1].upper()}{self.second[1:]} is right on {100 * second:.1f} % {where} "
         text += f"and {self.first} on {100 * first:.1f} %: "
         if difference == 0:
@@ -134,9 +138,14 @@ class Comparison:
         return {
             "schema": 1,
             "evidence": self.evidence_name,
+            "claim": claim_of(self.evidence_name, self.reservations),
             "confidence_level": self.confidence_level,
             "classes": list(self.classes),
-            "design": {"kind": self.design_kind},
+            "design": {
+                "kind": self.design_kind,
+                "post_stratified": self.post_stratified,
+                "reservations": list(self.reservations),
+            },
             "maps": {"first": self.first, "second": self.second},
             "in_words": self.in_words,
             "overall_accuracy": self.overall_accuracy.to_json(),
@@ -176,6 +185,7 @@ def compare_sample(sample: ReferenceSample, options: AssessmentOptions, *, names
     if not EVIDENCE[sample.evidence].has_intervals:
         sample = sample.unweighted()
     t = tally(sample, finite_population=options.finite_population)
+    sample = of_sampled_strata(sample, t)
     estimator, other, k = Estimator(t, sample, options), st.on_other_map(t), len(sample.classes)
     firsts = [st.overall_accuracy(t), *(make(t, c) for make in _PER_CLASS for c in range(k))]
     seconds = [st.overall_accuracy(other), *(_anywhere(make(other, c)) for make in _PER_CLASS for c in range(k))]
@@ -184,7 +194,8 @@ def compare_sample(sample: ReferenceSample, options: AssessmentOptions, *, names
     users, producers = ({name: next(pairs) for name in sample.classes} for _ in _PER_CLASS)
     return Comparison(
         evidence_name=sample.evidence, confidence_level=options.confidence_level, classes=sample.classes,
-        design_kind=sample.kind, first=names[0], second=names[1], overall_accuracy=overall, users_accuracy=users,
+        design_kind=sample.kind, post_stratified=sample.post_stratified, reservations=sample.reservations,
+        first=names[0], second=names[1], overall_accuracy=overall, users_accuracy=users,
         producers_accuracy=producers, mcnemar=_mcnemar(t, other),
         problems=(*sample.problems, *findings(sample, t), *_about_mcnemar(t)),
     )  # fmt: skip

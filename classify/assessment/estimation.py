@@ -33,7 +33,7 @@ def estimate_sample(sample: ReferenceSample, options: AssessmentOptions) -> Asse
     if not EVIDENCE[sample.evidence].has_intervals:
         sample = sample.unweighted()
     t = tally(sample, finite_population=options.finite_population)
-    sample = _of_sampled_strata(sample, t)
+    sample = of_sampled_strata(sample, t)
     k = len(sample.classes)
     estimator = Estimator(t, sample, options)
     proportions = area_matrix(t.share, t, k)
@@ -71,7 +71,7 @@ def require_labels(sample: ReferenceSample) -> None:
         raise SampleError("no point on the map has a reference label", fix="label the points before assessing")
 
 
-def _of_sampled_strata(sample: ReferenceSample, t: Tally) -> ReferenceSample:
+def of_sampled_strata(sample: ReferenceSample, t: Tally) -> ReferenceSample:
     """The sample with mapped areas of what the estimates stand for: of the strata that have points.
 
     Where some have none, mapped areas are known if all others are map classes; but not those of a class that strata

@@ -79,6 +79,8 @@ def assessment_text(summary: Mapping[str, Any]) -> str:
         lines = [f"overall accuracy {percent(overall['estimate'])} ({level} interval {_interval(overall)})"]
     else:
         lines = [f"{evidence.accuracy_term}: {percent(overall['estimate'])} overall. {evidence.claim}"]
+    if evidence.has_intervals and summary["design"]["reservations"]:
+        lines.append(summary["claim"])
     lines.append(table(["class", "user's", "producer's", f"area, {unit}" if unit else "area"], rows))
     return "\n".join(lines)
 
