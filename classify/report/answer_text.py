@@ -80,7 +80,13 @@ def area_figure(facts: ReportFacts, accuracy: AccuracyFacts, words: Messages) ->
     )  # fmt: skip
     title = words.text("areas.figure", level=level)
     drawing = area_drawing(classes, areas, unit, title, style)
-    return Figure("areas", drawing.markup(), words.text("areas.caption", level=level), alt)
+    caption = "areas.caption" if has_mapped(accuracy) else "areas.caption_estimated"
+    return Figure("areas", drawing.markup(), words.text(caption, level=level), alt)
+
+
+def has_mapped(accuracy: AccuracyFacts) -> bool:
+    """Whether the mapped area of any class is known for what the estimates stand for."""
+    return any(area is not None for area in accuracy.mapped.values())
 
 
 def assessed_classes(facts: ReportFacts, accuracy: AccuracyFacts) -> list[ClassFact]:
@@ -146,9 +152,10 @@ def _glance(accuracy: AccuracyFacts, words: Messages) -> Table:
     )  # fmt: skip
     limits = ("margin",) if even else ("lower", "upper")
     area_columns = ("estimated", *(limits if any(a.lower is not None for a in areas) else ()))
+    area_columns = (*area_columns, *(("mapped",) if has_mapped(accuracy) else ()))
     columns = (
         Column(words.text("column.class"), "class"),
-        *(Column(words.text(f"column.{c}"), "number", area_decimals(areas), unit) for c in (*area_columns, "mapped")),
+        *(Column(words.text(f"column.{c}"), "number", area_decimals(areas), unit) for c in area_columns),
         Column(words.text("column.users"), "percent"),
         Column(words.text("column.producers"), "percent"),
     )
@@ -156,9 +163,12 @@ def _glance(accuracy: AccuracyFacts, words: Messages) -> Table:
     for name in accuracy.classes:
         area = accuracy.area[name]
         half = None if area.lower is None or area.upper is None else (area.upper - area.lower) / 2
-        values = {"estimated": area.estimate, "margin": half, "lower": area.lower, "upper": area.upper}
+        values = {
+            "estimated": area.estimate, "margin": half, "lower": area.lower, "upper": area.upper,
+            "mapped": accuracy.mapped[name],
+        }  # fmt: skip
         accuracies = accuracy.users[name].estimate, accuracy.producers[name].estimate
-        rows.append((name, *(values[c] for c in area_columns), accuracy.mapped[name], *accuracies))
+        rows.append((name, *(values[c] for c in area_columns), *accuracies))
     return Table("glance", words.text("answer.glance"), columns, tuple(rows))
 
 
