@@ -80,9 +80,17 @@ def sample(seed: int, made: MadeScene, mapped: NDArray[np.uint8]) -> Sample:
          "pixels": len(members[code]), "n": counts[code]}
         for code, name in COVERS.items()
     ]  # fmt: skip
-    of_points = {str(n): {"stratum": COVERS[int(code)]} for n, code in enumerate(mapped.ravel()[cells], start=1)}
+    rows, cols = np.unravel_index(cells, mapped.shape)
+    of_points = {
+        str(n): {"stratum": COVERS[int(mapped[row, col])], "row": int(row), "col": int(col)}
+        for n, (row, col) in enumerate(zip(rows, cols, strict=True), start=1)
+    }
+    # The pixels of the points are those of this grid: transform, rows, columns.
+    drawn_from = {
+        "file": "first_map.tif", "sha256": None, "grid": [*tuple(transform(FINE_M))[:6], *mapped.shape],
+    }  # fmt: skip
     design = {
-        "schema": 1, "kind": "stratified random", "seed": seed, "map": {"file": "first_map.tif", "sha256": None},
+        "schema": 1, "kind": "stratified random", "seed": seed, "map": drawn_from,
         "strata": strata, "points": of_points,
     }  # fmt: skip
     return Sample(gpd.GeoDataFrame(columns, geometry=gpd.points_from_xy(x, y), crs=CRS), design)

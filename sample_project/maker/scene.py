@@ -42,8 +42,9 @@ class MadeScene:
 
     @property
     def clear(self) -> NDArray[np.bool_]:
-        """bool at 10 m: neither masked nor outside the swath."""
-        return np.asarray((self.mask == CLEAR).repeat(2, axis=0).repeat(2, axis=1))
+        """bool at 10 m: neither masked nor outside the swath, which the bands cut off more finely than the mask."""
+        unmasked = (self.mask == CLEAR).repeat(2, axis=0).repeat(2, axis=1)
+        return np.asarray(unmasked & (self.bands[FINE_BANDS[0]] > 0))
 
     def reflectance(self) -> Field:
         """float32 (10, rows, cols) at 10 m, coarse bands repeated, in the order FINE_BANDS, COARSE_BANDS."""
