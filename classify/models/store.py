@@ -14,14 +14,13 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
-import numpy as np
 import skops.io
-from sklearn.ensemble import RandomForestClassifier
 
 from classify.errors import DataError, ModelError
 from classify.features.recipe import Recipe
 from classify.files import read_json, write_bytes, write_json
 from classify.models.reach import Reach
+from classify.models.soundness import unsound_parts
 from classify.models.trained import TrainedModel
 
 MODEL_FILE, CARD_FILE, REACH_FILE = "model.skops", "model.json", "reach.npz"
@@ -160,18 +159,13 @@ def _check_card(card: dict[str, Any], path: Path) -> None:
 
 
 def _check_estimator(estimator: Any, card: dict[str, Any], where: str) -> None:  # noqa: ANN401
-    """What is built must be what the card says, and a tree may not point outside itself (it is walked in C)."""
+    """What is built must be what the card says, and fit to be handed to compiled code."""
     codes = [entry["code"] for entry in card["classes"]]
     if list(estimator.classes_) != codes or estimator.n_features_in_ != len(card["features"]):
         raise ModelError("model file and card disagree on classes or features", where=where, fix=_FIX)
-    if isinstance(estimator, RandomForestClassifier):
-        for tree in (member.tree_ for member in estimator.estimators_):
-            node = np.arange(tree.node_count)
-            leaf = tree.children_left == -1
-            children = np.stack([tree.children_left[~leaf], tree.children_right[~leaf]])
-            sound = (children > node[~leaf]).all() and (children < tree.node_count).all()
-            if not sound or (tree.feature[~leaf] < 0).any() or (tree.feature[~leaf] >= estimator.n_features_in_).any():
-                raise ModelError("a tree of the model points outside itself", where=where, fix=_FIX)
+    wrong = list(unsound_parts(estimator, card["kind"], len(card["features"])))
+    if wrong:
+        raise ModelError(f"the model in the file cannot be used: {'; '.join(wrong)}", where=where, fix=_FIX)
 
 
 def _canonical(content: bytes) -> bytes:
