@@ -12,7 +12,9 @@ from training_sets import project_of, recipe_of, training_set
 from classify.errors import TrainingError
 from classify.models import ScreenOptions, TrainedModel, fit_model, screen
 from classify.models.calibrate import calibrate
+from classify.models.folds import spatial_blocks
 from classify.models.kinds import make_estimator, to_probabilities
+from classify.models.reach import fit_reach
 from classify.models.screening import Screening
 from classify.models.tuning import Candidate, choose, draw_settings, load_space
 from classify.training import TrainingSet
@@ -119,8 +121,14 @@ def test_a_kernel_machine_is_fitted_on_a_stated_number_of_pixels() -> None:
 
 
 def test_spatial_blocks_are_kept_whole() -> None:
-    model = fit(training_set(between=0.04), block_m=1000.0)
-    assert model.card["screening"]["kept_whole"] == "blocks of 1000 m"
+    training = training_set(between=0.04)
+    model = fit(training, block_m=1000.0, importance=True)
+    assert model.card["screening"]["kept_whole"] == model.card["importance"]["kept_whole"] == "blocks of 1000 m"
+    blocks = spatial_blocks(training.rows, training.cols, training.polygon, 100)
+    expected = fit_reach(training, 3, 5, groups=blocks)
+    assert expected is not None and model.reach is not None
+    assert model.reach.threshold == expected.threshold
+    assert expected.threshold != fit_reach(training, 3, 5).threshold  # type: ignore[union-attr]
 
 
 def test_search_is_seeded_and_finds_the_setting_that_matters() -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from dataclasses import replace
 
 import numpy as np
@@ -13,7 +14,7 @@ from classify.features import build_recipe
 from classify.models.folds import group_folds
 from classify.models.importance import feature_groups, measure_importance
 from classify.models.kinds import make_estimator
-from classify.models.validate import ScreenOptions
+from classify.models.validate import ScreenOptions, fit_side
 from classify.settings import FeatureSettings
 from classify.training import TrainingSet
 
@@ -89,3 +90,34 @@ def test_groups_follow_wavelengths_steps_and_dates() -> None:
     groups = feature_groups(build_recipe(FeatureSettings(bands=list(dated.roles)), dated.roles), dated)
     assert groups["date june"] == ("red@june", "nir@june") and groups["date main"] == ("red", "nir")
     assert recipe_of(project_of(training)).names == training.roles
+
+
+def by_block() -> tuple[TrainingSet, np.ndarray]:
+    """Pairs of polygons of one class, which their block's reflectance does not foretell: only a neighbour knows it."""
+    training = training_set(polygons=(24, 24), pixels=6)
+    block = ((training.polygon - 1) // 2).astype(np.int32)
+    features = np.random.default_rng(3).normal(0, 1, (24, 4))[block]
+    features += np.random.default_rng(4).normal(0, 0.01, features.shape)
+    return replace(training, features=features.astype(np.float32)), block
+
+
+def test_blocks_are_held_out_whole() -> None:
+    training, block = by_block()
+    by_polygon = measure_importance(training, forest, {}, ScreenOptions(folds=4, seed=1))
+    options = ScreenOptions(folds=4, seed=1, kept_whole="blocks of 50 m")
+    blocked = measure_importance(training, forest, {}, options, kept_whole=block)
+    assert by_polygon is not None and by_polygon.base > 0.8
+    assert blocked is not None and blocked.base < 0.65
+    assert blocked.to_json()["kept_whole"] == "blocks of 50 m"
+
+
+def test_a_class_missing_on_the_training_side_is_no_gap() -> None:
+    """A side thinned to fewer pixels than polygons may lose a class, here the first: its pixels count as wrong."""
+    training = training_set(polygons=(2, 30), pixels=6)
+    options = ScreenOptions(folds=2, seed=1, most_pixels=4)
+    for number in range(2):
+        held = group_folds(training.codes, training.polygon, 2, 1).held_out(number)
+        assert fit_side(training, ~held, forest, options).classes_.tolist() == [2]
+    found = measure_importance(training, forest, GROUPS, options)
+    assert found is not None and found.base == pytest.approx(0.5)
+    json.dumps(found.to_json(), allow_nan=False)

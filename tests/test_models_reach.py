@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from scipy.spatial.distance import cdist
@@ -85,3 +87,23 @@ def test_round_trip_and_sets_without_spread() -> None:
     flat.features[:] = 1.0
     assert fit_reach(flat) is None
     assert fit_reach(training_set(polygons=(1, 1))) is None
+
+
+def test_the_threshold_is_taken_towards_other_blocks() -> None:
+    """Neighbours that are alike make the gap to other polygons look small, unless their block is kept whole."""
+    training = training_set(polygons=(12, 12), pixels=10)
+    block = ((training.polygon - 1) // 2).astype(np.int32)
+    random = np.random.default_rng(3)
+    features = training.codes[:, None] + random.normal(0, 0.5, (12, 4))[block] + random.normal(0, 0.01, (240, 4))
+    paired = replace(training, features=features.astype(np.float32))
+    by_polygon, blocked = fit_reach(paired, folds=12), fit_reach(paired, folds=12, groups=block)
+    assert by_polygon is not None and blocked is not None
+    assert blocked.threshold > 3 * by_polygon.threshold
+
+
+def test_the_card_says_what_is_not_as_published() -> None:
+    reach = fit_reach(training_set())
+    assert reach is not None
+    card = reach.to_json()
+    assert "adapted from Meyer & Pebesma 2021" in card["method"]
+    assert "whitened" in card["differs"] and "not weighted by importance" in card["differs"]

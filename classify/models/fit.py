@@ -73,7 +73,7 @@ def fit_model(  # noqa: PLR0917 - a fixed contract
     screening = _screen(plan, plan.maker(kind, params, _SCREENING_TREES), choice)
     calibration = calibrate(screening, training.codes, training.polygon, kind)
     importance = _importance(plan, plan.maker(kind, params, _IMPORTANCE_TREES), recipe)
-    reach = fit_reach(training, project.model.folds, seed)
+    reach = fit_reach(training, project.model.folds, seed, groups=plan.groups)
     fitted_on = _thinned(training, kind, project, seed)
     progress.note(f"Fitting the {kind} on {len(fitted_on.codes)} pixels")
     estimator = plan.maker(kind, params)(seed)
@@ -136,7 +136,7 @@ def _importance(plan: _Plan, make: Maker, recipe: Recipe) -> Importance | None:
         return None
     options = replace(plan.options, most_pixels=_IMPORTANCE_PIXELS)
     groups = feature_groups(recipe, plan.training)
-    return measure_importance(plan.training, make, groups, options, progress=plan.progress)
+    return measure_importance(plan.training, make, groups, options, kept_whole=plan.groups, progress=plan.progress)
 
 
 def _thinned(training: TrainingSet, kind: ModelKind, project: Project, seed: int) -> TrainingSet:

@@ -17,8 +17,7 @@ from numpy.typing import NDArray
 
 from classify.features.recipe import Recipe
 from classify.models.folds import group_folds
-from classify.models.kinds import scorer
-from classify.models.validate import Maker, ScreenOptions, balanced_by_fold, fit_side
+from classify.models.validate import Maker, ScreenOptions, balanced_by_fold, fit_side, scores_in_order
 from classify.progress import SILENT, Progress
 from classify.training.dataset import TrainingSet
 
@@ -42,6 +41,7 @@ class Importance:
 
     features, groups: name -> (mean, standard deviation). dropped: group -> balanced accuracy of a model without it,
     None where nothing would be left. members: group -> names of its features. base: balanced accuracy with all.
+    kept_whole: what was held out, in the words of ScreenOptions.
     """
 
     base: float
@@ -49,6 +49,7 @@ class Importance:
     groups: Mapping[str, tuple[float, float]]
     dropped: Mapping[str, float | None]
     members: Mapping[str, tuple[str, ...]]
+    kept_whole: str = "polygons"
 
     def to_json(self) -> dict[str, Any]:
         """Plain data for model.json, the most important first."""
@@ -59,6 +60,7 @@ class Importance:
 
         return {
             "measure": "loss of balanced screening accuracy on held-out polygons",
+            "kept_whole": self.kept_whole,
             "balanced_screening_accuracy": self.base,
             "features": rows(self.features),
             "groups": [
@@ -92,10 +94,15 @@ def measure_importance(
     groups: Mapping[str, tuple[str, ...]],
     options: ScreenOptions,
     *,
+    kept_whole: NDArray[np.int32] | None = None,
     progress: Progress = SILENT,
 ) -> Importance | None:
-    """Scramble and drop on held-out polygons; None if nothing can be held out. Seeded, the same whatever the jobs."""
-    folds = group_folds(training.codes, training.polygon, options.folds, options.seed)
+    """Scramble and drop `groups` of features on what is held out: polygons, or the blocks of `kept_whole` (n,).
+
+    None if nothing can be held out. Seeded, the same whatever the jobs.
+    """
+    kept_whole = training.polygon if kept_whole is None else kept_whole
+    folds = group_folds(training.codes, kept_whole, options.folds, options.seed)
     names = training.feature_names
     columns = [[place] for place in range(len(names))] + [[names.index(name) for name in m] for m in groups.values()]
     held = [folds.held_out(number) for number in range(folds.count)]
@@ -128,6 +135,7 @@ def measure_importance(
         groups=dict(zip(groups, pairs[len(names) :], strict=True)),
         dropped=dict(zip(droppable, means.tolist(), strict=True)),
         members=dict(groups),
+        kept_whole=options.kept_whole,
     )
 
 
@@ -163,8 +171,7 @@ class _Trial:
         return self._accuracy(estimator, fewer.features[held], held)
 
     def _accuracy(self, estimator: Any, features: NDArray[np.float32], held: NDArray[np.bool_]) -> float:  # noqa: ANN401
-        scores = np.full((len(features), len(self.training.class_codes)), -np.inf)
-        scores[:, np.searchsorted(self.training.class_codes, estimator.classes_)] = scorer(estimator)(features)
+        scores = scores_in_order(estimator, features, self.training.class_codes)
         return balanced_by_fold(self.training, held, scores)
 
 

@@ -1,9 +1,9 @@
 """Reach: is a pixel inside what the training data cover?
 
-The dissimilarity index of Meyer & Pebesma 2021, "Predicting into unknown space? Estimating the area of applicability of
-spatial prediction models", Methods in Ecology and Evolution 12: distance to the nearest training pixel over the mean
-distance among training pixels. Its threshold is the largest index, outliers aside, of training pixels towards the
-polygons of other folds.
+A dissimilarity index adapted from Meyer & Pebesma 2021, "Predicting into unknown space? Estimating the area of
+applicability of spatial prediction models", Methods in Ecology and Evolution 12: distance to the nearest training pixel
+over the mean distance among training pixels. Its threshold is the largest index, outliers aside, of training pixels
+towards the polygons (or blocks) of other folds.
 
 Distances are taken differently from the paper: it weighs each standardised feature by its importance, which the many
 features of one scene that repeat each other share out among themselves. Here features are decorrelated and scaled by
@@ -90,18 +90,21 @@ class Reach:
     def to_json(self) -> dict[str, Any]:
         """Plain data for model.json."""
         return {
-            "method": "dissimilarity index (Meyer & Pebesma 2021)",
+            "method": "dissimilarity index adapted from Meyer & Pebesma 2021",
+            "differs": "features are whitened by their covariance within classes, not weighted by importance",
             "threshold": self.threshold,
             "mean_distance": self.mean_distance,
             "points": len(self.points),
         }
 
 
-def fit_reach(training: TrainingSet, folds: int = 5, seed: int = 0) -> Reach | None:
+def fit_reach(
+    training: TrainingSet, folds: int = 5, seed: int = 0, *, groups: NDArray[np.int32] | None = None
+) -> Reach | None:
     """Reach of a training set; None if it has no spread to measure by, or no second polygon to measure towards.
 
     The threshold is the largest index that is no outlier (upper quartile plus 1.5 interquartile ranges), where the
-    index of a training pixel is taken towards the polygons of other folds.
+    index of a training pixel is taken towards the polygons, or the blocks that `groups` (n,) names, of other folds.
     """
     chosen = _spread_over_classes(training, seed)
     features, codes = training.features[chosen].astype(np.float64), training.codes[chosen]
@@ -111,7 +114,8 @@ def fit_reach(training: TrainingSet, folds: int = 5, seed: int = 0) -> Reach | N
         return None
     points = _turn(training.features[chosen], centre, rotation)
     mean_distance = float(pdist(points[:: max(1, len(points) // 1000)]).mean())
-    fold = group_folds(training.codes, training.polygon, folds, seed).fold[chosen]
+    groups = training.polygon if groups is None else groups
+    fold = group_folds(training.codes, groups, folds, seed).fold[chosen]
     index = [
         np.sqrt(_nearest_squared(points[fold == number], points[fold != number]))
         for number in np.unique(fold[fold >= 0])

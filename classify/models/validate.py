@@ -99,15 +99,27 @@ def scores_of_held(
     training: TrainingSet, held: NDArray[np.bool_], make: Maker, options: ScreenOptions
 ) -> NDArray[np.float64]:
     """Scores float64 (m, k) of the m held-out pixels by a model of the others, in the order of the set's classes."""
-    estimator = fit_side(training, ~held, make, options)
-    score = scorer(estimator)(training.features[held])
-    classes = training.class_codes
-    known = np.searchsorted(classes, estimator.classes_)
-    # A class missing on the training side (its blocks all lie in this fold) can never be the highest.
+    return scores_in_order(fit_side(training, ~held, make, options), training.features[held], training.class_codes)
+
+
+def scores_in_order(
+    estimator: Any,  # noqa: ANN401 - any scikit-learn estimator
+    features: NDArray[np.float32],
+    classes: NDArray[np.uint8],
+) -> NDArray[np.float64]:
+    """Scores float64 (m, k), all finite, of features (m, f) in the order of `classes` (k,), which may be more than the
+    estimator knows: one missing on its training side (its blocks all lie in one fold) is never the highest."""
+    score = scorer(estimator)(features)
     least = 0.0 if kind_of(estimator) == "random forest" else float(score.min()) - 5
     part = np.full((len(score), len(classes)), least)
-    part[:, known] = score
+    part[:, np.searchsorted(classes, estimator.classes_)] = score
     return part
+
+
+def held_out_rows(scores: NDArray[np.float64]) -> NDArray[np.bool_]:
+    """Mask (n,) of the pixels that were held out, by their scores (n, k): rows of NaN were not."""
+    mask: NDArray[np.bool_] = ~np.isnan(scores[:, 0])
+    return mask
 
 
 def fit_side(training: TrainingSet, side: NDArray[np.bool_], make: Maker, options: ScreenOptions) -> Any:  # noqa: ANN401
@@ -133,7 +145,7 @@ def _leaky_folds(codes: NDArray[np.uint8], options: ScreenOptions) -> Folds | No
 
 def held_out_labels(scores: NDArray[np.float64], classes: NDArray[np.uint8]) -> NDArray[np.uint8]:
     """uint8 (n,), the class of the highest score, 0 where never held out."""
-    held = np.isfinite(scores[:, 0])
+    held = held_out_rows(scores)
     labels = np.zeros(len(scores), dtype=np.uint8)
     labels[held] = classes[np.argmax(scores[held], axis=1)]
     return labels
