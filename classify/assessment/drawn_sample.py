@@ -2,12 +2,14 @@
 
 Points carry ids dealt at random, coordinates and empty columns for labels; neither their order nor their numbers tell
 of the map. A sample that was drawn is never drawn over: it can be added to, and a point that cannot be reached can be
-replaced by the next in reserve.
+replaced by the next in reserve. points.gpkg then gets further rows and keeps all else that is in it; the other files
+are written anew, unless they are no longer as they were written (design.json has their SHA-256): then nothing is done.
 """
 
 from __future__ import annotations
 
 import json
+import shutil
 import xml.etree.ElementTree as ET
 from collections.abc import Mapping
 from dataclasses import dataclass
@@ -17,16 +19,25 @@ from typing import Any
 import geopandas
 import numpy as np
 import pandas as pd
+import pyogrio
 
 from classify.assessment.draw import IDS, Cells, Draw, DrawOptions, pixels_of
 from classify.assessment.lots import lots, stream
 from classify.assessment.population import Population
 from classify.errors import DataError, OutputError, Problem, SampleError, raise_if_errors
-from classify.files import read_json, replacing, write_bytes, write_json, write_text
+from classify.files import read_json, replacing, sha256, write_bytes, write_json
 from classify.raster.grid import Grid
 
 LABEL_COLUMNS = ("observed", "alternate", "confidence", "note")
 _KEYS = ("kind", "seed", "map", "unit", "apart_m", "strata", "points", "reserves", "draws", "notes")
+# Written whole each time, so that they must not have been changed; points.gpkg grows instead.
+_WHOLE_FILES = ("points.gpx", "points.geojson", "points.csv")
+# What a sample that was drawn leaves; labels of an earlier one would be taken for those of points of the same number.
+_TRACES = ("design.json", "points.gpkg", *_WHOLE_FILES, "labels.sqlite")
+NUMBERS_CAUTION = (
+    "Points that were added to some strata only, or that stand in for others, have the highest numbers: whoever sees "
+    "these can tell that such points are alike. Tell nobody who labels how these points came about."
+)
 DRAW_CAUTION = (
     "Keep design.json from whoever labels the points: it tells the map's classes. Every point drawn must be labelled "
     "or accounted for; dropping awkward ones breaks what the intervals rest on."
@@ -103,7 +114,13 @@ def with_drawn(design: Mapping[str, Any], population: Population, drawn: Draw) -
     for d in drawn.strata:
         if d.reserves:
             reserves.setdefault(d.stratum, []).extend({"row": r, "col": c} for r, c in d.reserves)
-    return {**design, "strata": strata, "draws": [*design["draws"], sizes], "reserves": reserves, "points": points}
+    grown = {**design, "strata": strata, "draws": [*design["draws"], sizes], "reserves": reserves, "points": points}
+    alike = design["points"] and {name for name, n in sizes.items() if n} < {s["stratum"] for s in strata if s["n"]}
+    return _with_caution(grown) if alike else grown
+
+
+def _with_caution(design: Mapping[str, Any]) -> dict[str, Any]:
+    return {**design, "cautions": list(dict.fromkeys([*design.get("cautions", ()), NUMBERS_CAUTION]))}
 
 
 def taken_cells(design: Mapping[str, Any]) -> dict[str, list[Cells]]:
@@ -136,7 +153,8 @@ def with_replacement(design: Mapping[str, Any], point: str, reason: str) -> tupl
         fresh: {"stratum": entry["stratum"], **waiting[0], "replaces": int(point)},
     }  # fmt: skip
     reserves = {**design["reserves"], entry["stratum"]: waiting[1:]}
-    return {**design, "points": points, "reserves": reserves}, fresh
+    replaced = {**design, "points": points, "reserves": reserves}
+    return (_with_caution(replaced) if len(design["strata"]) > 1 else replaced), fresh
 
 
 def points_frame(design: Mapping[str, Any], grid: Grid) -> geopandas.GeoDataFrame:
@@ -162,29 +180,65 @@ def grid_facts(grid: Grid) -> list[float]:
 def write_first(folder: Path, design: Mapping[str, Any], grid: Grid) -> DrawnSample:
     """Write a sample that was just drawn. Raises OutputError if there is one already."""
     refuse_if_drawn(folder)
-    sample = DrawnSample(design, points_frame(design, grid))
-    _write_all(folder, sample)
-    return sample
+    points = points_frame(design, grid)
+    files = _write_whole(folder, DrawnSample(design, points))
+    with replacing(folder / "points.gpkg") as temporary:
+        points.to_file(temporary, layer="points", driver="GPKG")
+    return _finished(folder, {**design, "files": files}, points)
 
 
 def write_more(folder: Path, before: DrawnSample, design: Mapping[str, Any], grid: Grid) -> DrawnSample:
-    """Write a sample that got more points; rows that are there, with whatever was entered in them, stay as they are."""
+    """Write a sample that got more points; whatever was entered in points.gpkg stays as it is, in its further columns
+    and layers too. Raises OutputError, before anything is written, when another file of points was changed or
+    points.gpkg is open elsewhere."""
+    refuse_if_changed(folder, before.design)
     whole = points_frame(design, grid)
     fresh = whole[~whole["id"].isin(before.points["id"])]
-    points = geopandas.GeoDataFrame(pd.concat([before.points, fresh], ignore_index=True), crs=before.points.crs)
-    sample = DrawnSample(design, points)
-    _write_all(folder, sample)
-    return sample
+    files = _write_whole(folder, DrawnSample(design, whole))
+    path = folder / "points.gpkg"
+    # Labels of new points are null: an empty text would be 0 in a column that was made one of numbers.
+    known = [c for c in fresh.columns if c in before.points.columns and c not in LABEL_COLUMNS]
+    with replacing(path) as temporary:
+        shutil.copyfile(path, temporary)
+        fresh[known].to_crs(before.points.crs).to_file(temporary, layer=_layer(path), driver="GPKG", mode="a")
+        points = _read_points(temporary)
+    return _finished(folder, {**design, "files": files}, points)
+
+
+def _finished(folder: Path, design: Mapping[str, Any], points: geopandas.GeoDataFrame) -> DrawnSample:
+    """The design comes last: where it stands, everything stands."""
+    write_json(folder / "design.json", design)
+    return DrawnSample(design, points)
 
 
 def refuse_if_drawn(folder: Path) -> None:
-    """Raise OutputError when a sample lies in the folder."""
-    there = [path for path in (folder / "design.json", folder / "points.gpkg") if path.exists()]
+    """Raise OutputError when a sample, or what is left of one, lies in the folder."""
+    there = [folder / name for name in _TRACES if (folder / name).exists()]
     if there:
         raise OutputError(
             "a sample was drawn already, and it is left as it is", where=str(there[0]),
             fix="add points to it with --add, or move the folder away to draw another one",
         )  # fmt: skip
+
+
+def refuse_if_changed(folder: Path, design: Mapping[str, Any]) -> None:
+    """Raise OutputError naming each file of points that is to be written anew and is not as it was written."""
+    written = design.get("files", {})
+    raise_if_errors([
+        Problem("this file was changed since it was written here, and is left as it is", str(folder / name),
+                "nothing was written: move it elsewhere first; labels in it are taken in with 'landassay interpret "
+                "--import'")
+        for name in _WHOLE_FILES if (folder / name).exists() and sha256(folder / name) != written.get(name)
+    ], OutputError)  # fmt: skip
+
+
+def refuse_if_open(folder: Path) -> None:
+    """Raise OutputError when another program holds points.gpkg open, with changes that it has not written back: a copy
+    would lack them, and would be mixed up with them afterwards. To be called before the file is opened here."""
+    for path in (folder / "points.gpkg-wal", folder / "points.gpkg-journal"):
+        if path.exists() and path.stat().st_size:
+            raise OutputError("points.gpkg is open in another program", where=str(path),
+                              fix="nothing was written: save and close it there, then try again")  # fmt: skip
 
 
 def read_drawn(folder: Path) -> DrawnSample:
@@ -198,12 +252,25 @@ def read_drawn(folder: Path) -> DrawnSample:
     if missing:
         raise DataError(f"this is not a design that 'draw' wrote: it has no {missing[0]!r}", where=str(path))
     points_path = folder / "points.gpkg"
-    try:
-        points = geopandas.read_file(points_path)
-    except Exception as error:  # pyogrio raises errors of many kinds, with no common type below Exception
-        raise DataError(f"the drawn points cannot be read: {error}", where=str(points_path)) from error
+    points = _read_points(points_path)
     _check_points(design, points, points_path)
     return DrawnSample(design, points)
+
+
+def _read_points(path: Path) -> geopandas.GeoDataFrame:
+    try:
+        points = geopandas.read_file(path, layer=_layer(path))
+    except Exception as error:  # pyogrio raises errors of many kinds, with no common type below Exception
+        raise DataError(f"the drawn points cannot be read: {error}", where=str(path)) from error
+    if points.crs is None:
+        raise DataError("the drawn points have no CRS", where=str(path), fix="restore the file as it was drawn")
+    return points
+
+
+def _layer(path: Path) -> str:
+    """The layer of the points, whatever others were put beside it; the first one where a program renamed it."""
+    names = [str(name) for name in pyogrio.list_layers(path)[:, 0]]
+    return "points" if "points" in names else names[0]
 
 
 def _check_points(design: Mapping[str, Any], points: geopandas.GeoDataFrame, path: Path) -> None:
@@ -238,19 +305,18 @@ def check_places(sample: DrawnSample, grid: Grid, path: Path) -> None:
 # --- files ----------------------------------------------------------------------------------------------------------
 
 
-def _write_all(folder: Path, sample: DrawnSample) -> None:
-    """The design comes last: where it stands, everything stands."""
+def _write_whole(folder: Path, sample: DrawnSample) -> dict[str, str]:
+    """Write all but points.gpkg and design.json; returns the SHA-256 by file name."""
     shown = sample.points[[c for c in ("id", "longitude", "latitude", "segment") if c in sample.points.columns]]
     active = shown[shown["id"].isin(sample.active_ids)]
-    write_bytes(folder / "points.gpx", _gpx(active))
-    write_text(folder / "points.geojson", _geojson(active))
     table = pd.DataFrame(active).assign(x=sample.points.geometry.x, y=sample.points.geometry.y)
     for column in LABEL_COLUMNS:
         table[column] = ""
-    write_text(folder / "points.csv", table.to_csv(index=False, lineterminator="\n"))
-    with replacing(folder / "points.gpkg") as temporary:
-        sample.points.to_file(temporary, layer="points", driver="GPKG")
-    write_json(folder / "design.json", sample.design)
+    csv = table.to_csv(index=False, lineterminator="\n")
+    contents = (_gpx(active), _geojson(active).encode("utf-8"), csv.encode("utf-8"))
+    for name, content in zip(_WHOLE_FILES, contents, strict=True):
+        write_bytes(folder / name, content)
+    return {name: sha256(folder / name) for name in _WHOLE_FILES}
 
 
 def _gpx(points: pd.DataFrame) -> bytes:

@@ -16,7 +16,9 @@ from classify.assessment.drawn_sample import (
     check_places,
     first_design,
     read_drawn,
+    refuse_if_changed,
     refuse_if_drawn,
+    refuse_if_open,
     taken_cells,
     with_drawn,
     with_replacement,
@@ -106,7 +108,9 @@ def replace_point(project: Project, outputs: Path, point: str, reason: str) -> t
 def _again(project: Project, outputs: Path, jobs: int) -> tuple[DrawnSample, Population]:
     """The sample as drawn, its map and population, all checked to be what they were."""
     folder = outputs / "sample"
+    refuse_if_open(folder)
     before = read_drawn(folder)
+    refuse_if_changed(folder, before.design)
     cover = Path(project.path(before.design["map"]["file"]))
     if sha256(cover) != before.design["map"]["sha256"]:
         raise SampleError("this is not the map that the sample was drawn from", where=str(cover),
