@@ -80,16 +80,22 @@ def _assessed(d: Design, sizes, random) -> dict:
 
 
 @given(
-    st.lists(st.tuples(st.floats(0.01, 50), st.floats(0.05, 0.99), st.integers(300, 10_000)), min_size=2, max_size=7),
+    st.lists(st.tuples(st.floats(0.01, 50), st.floats(0.05, 0.99), st.integers(2, 10_000)), min_size=2, max_size=7),
     st.integers(60, 1500),
     st.sampled_from(ALLOCATIONS),
 )
 def test_allocations_spend_all_within_bounds(strata, total, how):
     areas, users, pixels = zip(*strata, strict=True)
     d = design(areas, users, pixels, [f"s{i}" for i in range(len(areas))])
-    sizes = allocate(d, min(total, sum(pixels)), how)
-    assert sum(sizes) == min(total, sum(pixels))
+    total = min(total, sum(pixels))
+    if total < FEWEST * len(pixels):
+        return
+    sizes = allocate(d, total, how)
+    assert sum(sizes) == total
     assert all(FEWEST <= n <= p for n, p in zip(sizes, pixels, strict=True))
+    if how == "floor":
+        least = max(FEWEST, min(50, total // len(pixels)))
+        assert all(n >= min(least, p) for n, p in zip(sizes, pixels, strict=True))
 
 
 @given(st.lists(st.tuples(st.floats(0.05, 1), st.floats(0.3, 0.97)), min_size=2, max_size=5), st.integers(150, 900))
@@ -120,7 +126,7 @@ def test_pilot_keeps_doubt_where_it_saw_no_error():
 def test_what_cannot_be_planned_is_said():
     with pytest.raises(SampleError, match="stratum 'forest gain' has 1 pixels"):
         check_design(design(pixels=[10, 1, 10, 10]))
-    with pytest.raises(SampleError, match=r"300 points are asked for.*'deforestation' has 20 pixels"):
+    with pytest.raises(SampleError, match="300 points are asked for, but the strata have 80 pixels in all"):
         allocate(design(pixels=[20, 20, 20, 20]), 300, "equal")
     with pytest.raises(SampleError, match="7 points are too few for 4 strata"):
         allocate(design(), 7, "proportional")
@@ -154,3 +160,25 @@ def test_command_refuses_unknown_names_and_two_wishes(tmp_path: Path):
     assert CliRunner().invoke(cli, [*args, "--points", "9", "--half-width", "0.1"]).exit_code == 2
     with pytest.raises(SampleError, match="'c', which is no stratum"):
         CliRunner().invoke(cli, [*args, "--points", "9", "--accuracy", "c=0.9"], catch_exceptions=False)
+
+
+def test_a_class_smaller_than_the_floor_is_taken_whole(tmp_path: Path):
+    d = design((10, 60, 30), (0.8, 0.8, 0.8), [30, 60_000, 30_000], ["rare", "b", "c"])
+    # 50 each at least but for the 30 there are; the other 370 points in proportion to area over those with room.
+    assert allocate(d, 500, "floor") == (30, 50 + 247, 50 + 123)
+    (tmp_path / "strata.csv").write_text("stratum,area,pixels\nrare,10,30\nb,60,60000\nc,30,30000\n")
+    args = ["plan", "--strata", str(tmp_path / "strata.csv"), "--out", str(tmp_path), "--points", "500"]
+    assert CliRunner().invoke(cli, args, catch_exceptions=False).exit_code == 0
+    with pytest.raises(SampleError, match="stratum 'rare' has 1 pixels to draw from, and 2 points are the least"):
+        allocate(design((1, 2), (0.8, 0.8), [1, 90], ["rare", "b"]), 20, "floor")
+
+
+def test_command_refuses_options_that_change_nothing(tmp_path: Path):
+    (tmp_path / "strata.csv").write_text("stratum,area\na,1\nb,2\n")
+    tables = ["--strata", str(tmp_path / "strata.csv"), "--out", str(tmp_path)]
+    for args, message in (
+        (["--points", "9", "--level", "0.9"], "--level: only with --strata"),
+        ([*tables, "--points", "9", "--project", str(tmp_path)], "--project: not with --strata"),
+    ):
+        result = CliRunner().invoke(cli, ["plan", *args])
+        assert result.exit_code == 2 and message in result.output

@@ -136,13 +136,14 @@ def check_design(design: Design, where: str = "") -> None:
 def allocate(design: Design, total: int, how: Allocation, *, floor: int = 50) -> tuple[int, ...]:
     """Points per stratum, adding up to `total`; never fewer than two, never more than a stratum has pixels.
 
-    "neyman" is optimal for overall accuracy; "floor" gives each stratum `floor` points (or all of its equal share, if
-    that is less) and the rest in proportion to area. Raises SampleError when `total` cannot be spent.
+    "neyman" is optimal for overall accuracy; "floor" gives each stratum `floor` points (or all of its equal share or of
+    its pixels, if that is less) and the rest in proportion to area. Raises SampleError when `total` cannot be spent.
     """
     strata = design.strata
     if total < FEWEST * len(strata):
         raise SampleError(f"{total} points are too few for {len(strata)} strata",
                           fix=f"ask for at least {FEWEST * len(strata)}: two points in each stratum")  # fmt: skip
+    _check_room(strata, total)
     areas = np.array([s.area for s in strata])
     lowest = np.full(len(strata), float(FEWEST))
     if how == "equal":
@@ -153,7 +154,8 @@ def allocate(design: Design, total: int, how: Allocation, *, floor: int = 50) ->
     else:
         weights = areas
     if how == "floor":
-        lowest[:] = max(FEWEST, min(floor, total // len(strata)))
+        room = [math.inf if s.pixels is None else s.pixels for s in strata]
+        lowest = np.minimum(max(FEWEST, min(floor, total // len(strata))), room)
         return _spend(total - int(lowest.sum()), weights, np.zeros(len(strata)), design, base=lowest)
     return _spend(total, weights, lowest, design)
 
@@ -244,16 +246,24 @@ def _inverse(pixels: int | None) -> float:
 # --- whole points ---------------------------------------------------------------------------------------------------
 
 
+def _check_room(strata: Sequence[PlannedStratum], total: int) -> None:
+    """Raise SampleError when strata have fewer pixels than points are asked for, or than two."""
+    problems = [
+        Problem(f"stratum {s.name!r} has {s.pixels} pixels to draw from, and {FEWEST} points are the least",
+                fix="leave it out with 0 points of its own, merge it with another, or ask for fewer in reserve")
+        for s in strata if s.pixels is not None and s.pixels < FEWEST
+    ]  # fmt: skip
+    raise_if_errors(problems, SampleError)
+    there = sum(math.inf if s.pixels is None else s.pixels for s in strata)
+    if total > there:
+        raise SampleError(f"{total} points are asked for, but the strata have {there} pixels in all to draw from",
+                          fix="ask for fewer points")  # fmt: skip
+
+
 def _spend(total: int, weights: Floats, lowest: Floats, design: Design, base: Floats | None = None) -> tuple[int, ...]:
     """Whole points in proportion to `weights` on top of `base`, at least `lowest` and at most the pixels there are."""
     base = np.zeros_like(weights) if base is None else base
     room = np.array([math.inf if s.pixels is None else s.pixels for s in design.strata]) - base
-    if (room < lowest).any() or room.sum() < total:
-        short = design.strata[int(np.argmin(room - lowest))]
-        raise SampleError(
-            f"{int(total + base.sum())} points are asked for, but stratum {short.name!r} has {short.pixels} pixels",
-            fix="ask for fewer points, or merge the stratum with another",
-        )  # fmt: skip
     shares = _bounded(total, weights, lowest, room)
     whole = np.floor(shares + 1e-9)
     # Largest remainders get the points that rounding down left over.
