@@ -181,6 +181,24 @@ def test_segments_are_units_of_all_their_pixels(varied: Path):
         assert len(pixels) == (codes[unit[0] * 4 :, unit[1] * 4 :][:4, :4] > 0).sum()
 
 
+def test_segments_follow_ground_area_on_a_grid_in_degrees(tmp_path: Path):
+    """From 70 to 10 degrees north pixels grow threefold; each is labelled with probability in proportion to it."""
+    transform = Affine(0.05, 0, 10, 0, -0.1, 70)
+    codes = np.ones((600, 120))
+    codes[300:, :60] = 0
+    path = write_map(tmp_path / "cover.tif", codes, "EPSG:4326", transform)
+    options = DrawOptions("simple random", seed=3, segment_px=5)
+    population = population_of(path, {1: "a"}, options)
+    drawn = draw_units(population, lambda _: {"whole map": 300}, 300, options)
+    rows = np.array([r for pixels in pixels_of(population, drawn.strata[0].units) for r, _ in pixels])
+    area = ground_areas_m2(population.grid, population.grid.window) * (codes > 0)
+    ground = float((area.sum(axis=1) * np.arange(600)).sum() / area.sum())
+    alike = float(np.nonzero(codes)[0].mean())
+    error = rows.std() / np.sqrt(300)
+    assert abs(rows.mean() - ground) < 2 * error
+    assert abs(alike - ground) > 3 * error  # equal probabilities would be told apart
+
+
 def test_excluded_polygons_leave_the_population(varied: Path):
     grid_box = box(500_500, 6_498_000, 501_500, 6_499_000)
     options = DrawOptions(seed=1)
@@ -308,6 +326,18 @@ def test_a_class_without_pixels_is_said(mapped_project: Path):
     with pytest.raises(SampleError, match="stratum 'Water' has no pixels on the map"):
         draw(mapped_project, "--in", "Water=5")
     assert [s["stratum"] for s in draw(mapped_project, "--points", "40")["strata"]] == ["Pasture", "Bare soil"]
+
+
+def test_a_class_smaller_than_the_floor_and_its_reserve(mapped_project: Path):
+    cover = mapped_project / "outputs" / "map" / "cover.tif"
+    with rasterio.open(cover, "r+") as target:
+        codes = target.read(1)
+        codes[codes == 5] = 2
+        codes[50, 60:90] = 5
+        target.write(codes, 1)
+    drawn = draw(mapped_project, "--points", "200", "--reserve", "4")
+    assert {s["stratum"]: s["n"] for s in drawn["strata"]}["Water"] == 30 - 4
+    assert sum(s["n"] for s in drawn["strata"]) == 200
 
 
 def test_design_and_points_must_belong_together(mapped_project: Path):

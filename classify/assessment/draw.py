@@ -1,7 +1,8 @@
 """Draw a reference sample: stratified random, simple random (of pixels or of square segments), or systematic.
 
 The unit is the pixel, drawn with probability proportional to its ground area, so that the mean over a stratum's points
-estimates a share of its area (see `lots` for how). A systematic sample is a square lattice with a random start in an
+estimates a share of its area (see `lots` for how); a segment is drawn with that of the mean pixel in it, for then each
+of its pixels is. A systematic sample is a square lattice with a random start in an
 equal-area projection; its variance is estimated as if it were simple random, which tends to overstate it (common
 practice; Cochran 1977, chapter 8).
 """
@@ -187,7 +188,7 @@ def _no_room(
     asked = sizes[name] + options.reserve
     if not options.apart_m:
         return Problem(f"{asked:,} more points are asked of stratum {name!r}, and {short[place]:,} are left",
-                       fix="ask for fewer")  # fmt: skip
+                       fix="ask for fewer, or name other strata with --add-to")  # fmt: skip
     return Problem(
         f"only {short[place]:,} of {asked:,} points of stratum {name!r} fit with {options.apart_m:g} m between points",
         str(population.path), "ask for fewer points or a smaller distance",
@@ -249,8 +250,9 @@ def _notes(options: DrawOptions) -> tuple[str, ...]:
         )
     if options.segment_px > 1:
         notes.append(
-            f"Segments of {options.segment_px} x {options.segment_px} pixels were drawn with equal probability; all "
-            "pixels of a segment that belong to the population are labelled. Name the column 'segment' as cluster."
+            f"Segments of {options.segment_px} x {options.segment_px} pixels were drawn with probability proportional "
+            "to the ground area of a pixel there, so that shares of labelled pixels stand for shares of the ground; "
+            "all pixels of a segment that belong to the population are labelled. Name the column 'segment' as cluster."
         )
     return tuple(notes)
 

@@ -182,14 +182,15 @@ class _Collected:
                       limit, pixels, areas, units, keys, strata)  # fmt: skip
             if n:
                 self._keep(units[:n].copy(), keys[:n].copy(), strata[:n].copy())
-        segments = self._segments(codes, window) if whole else 0
+        segments = self._segments(codes, area, window) if whole else 0
         with self.lock:
             self.counts[number] = (pixels, areas, segments, excluded, lost_m2)
 
-    def _segments(self, codes: NDArray[np.uint8], window: Window) -> int:
+    def _segments(self, codes: NDArray[np.uint8], area: NDArray[np.float64], window: Window) -> int:
         """Keep the lowest keys of segments that hold a pixel of the population; returns how many there are."""
-        units = segments_of(self.population, codes, window)
-        keys = -np.log1p(-lots(self.start, units))
+        units, areas = segments_of(self.population, codes, spread(area, window, self.step), window)
+        # A segment on no ground (beyond a pole) comes last.
+        keys = -np.log1p(-lots(self.start, units)) / np.maximum(areas, 1e-9)
         self._keep(units, keys, np.zeros(len(units), np.int16))
         return len(units)
 
@@ -218,17 +219,25 @@ class _Collected:
         )  # fmt: skip
 
 
-def segments_of(population: Population, codes: NDArray[np.uint8], window: Window) -> NDArray[np.int64]:
-    """Numbers (int64) of the segments in a window that hold any pixel of the population. The window's first row and
-    column must start segments."""
+def segments_of(
+    population: Population, codes: NDArray[np.uint8], area: NDArray[np.float64], window: Window
+) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
+    """Numbers (int64, (n,)) of the segments in a window that hold any pixel of the population, and the mean area of
+    these pixels (float64, (n,)). area: of each pixel of the window (float64, (h, w)). The window's first row and column
+    must start segments."""
     k = population.segment_px
     member = population.stratum_of[codes] >= 0
-    rows, cols = -(-window.height // k), -(-window.width // k)
-    padded = np.zeros((rows * k, cols * k), bool)
-    padded[: window.height, : window.width] = member
-    held = padded.reshape(rows, k, cols, k).any(axis=(1, 3))
-    r, c = np.nonzero(held)
-    return np.asarray((r + window.row // k) * segments_across(population) + c + window.col // k, dtype=np.int64)
+    count, total = _by_segment(member, k), _by_segment(np.where(member, area, 0.0), k)
+    r, c = np.nonzero(count)
+    units = (r + window.row // k) * segments_across(population) + c + window.col // k
+    return np.asarray(units, dtype=np.int64), np.asarray(total[r, c] / count[r, c])
+
+
+def _by_segment(values: NDArray[np.generic], k: int) -> NDArray[np.float64]:
+    """Sums over squares of k x k pixels, the last ones cut off by the edge (float64)."""
+    height, width = values.shape
+    across = np.add.reduceat(values, np.arange(0, width, k), axis=1, dtype=np.float64)
+    return np.asarray(np.add.reduceat(across, np.arange(0, height, k), axis=0))
 
 
 def segments_across(population: Population) -> int:
