@@ -195,6 +195,9 @@ def test_labels_come_in_from_a_gis_and_go_out_to_assess(project: Path):
         ({"observed": "Swamp"}, "'Swamp' of point 1 is no class"),
         ({"longitude": 15.2}, "point 1 does not lie where it was drawn"),
         ({"alternate": "Swamp"}, "the alternate 'Swamp' of point 1 is no class"),
+        ({"observed": "cloud", "alternate": "Water"}, "point 1: an alternate label needs a first one"),
+        ({"confidence": "quite"}, "point 1: confidence 'quite' is none of high, medium, low"),
+        ({"note": "x" * 501}, "point 1: the note is longer than 500 characters"),
     ],
 )
 def test_labels_that_do_not_fit_come_in_not_at_all(project: Path, change: dict, message: str):
@@ -204,7 +207,7 @@ def test_labels_that_do_not_fit_come_in_not_at_all(project: Path, change: dict, 
         table.loc[0, column] = value
     table.to_csv(project / "labels.csv", index=False)
     with pytest.raises(SampleError, match=message):
-        run(project, "--import", str(project / "labels.csv"), "--interpreter", "Ada")
+        run(project, "--import", str(project / "labels.csv"), "--interpreter", "Ada", "--untold", "cloud")
     journal = project / "outputs" / "sample" / "labels.sqlite"
     assert not journal.exists() or not Journal(journal, "Ada").standing()
 
@@ -218,6 +221,19 @@ def test_a_contrary_import_does_not_overwrite(project: Path):
     with pytest.raises(SampleError, match="point 3 was labelled otherwise"):
         run(project, "--import", str(project / "labels.csv"), "--interpreter", "Ada")
     assert {i: s.label for i, s in journal.standing().items()} == {3: Label("Pasture")}
+
+
+@pytest.mark.parametrize(
+    ("args", "message"),
+    [
+        (["--untold", "cloud", "--export"], "--untold: only with --import"),
+        (["--export", "--port", "8000"], "--port: not with --export or --import"),
+        (["--export", "--interpreter", "Ada"], "--interpreter: not with --export"),
+    ],
+)
+def test_options_that_change_nothing_are_refused(tmp_path: Path, args: list[str], message: str):
+    result = CliRunner().invoke(cli, ["interpret", "--project", str(tmp_path), *args])
+    assert result.exit_code == 2 and message in result.output
 
 
 def test_a_port_in_use_and_other_mistakes(project: Path):

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import geopandas
 import numpy as np
@@ -14,8 +15,8 @@ from numpy.typing import NDArray
 from classify.assessment.columns import plain_text, read_table
 from classify.assessment.drawn_sample import DrawnSample, read_drawn
 from classify.errors import DataError, Problem, SampleError, raise_if_errors
-from classify.interpret.journal import CONFIDENCES, NOTHING, Confidence, Journal, Label
-from classify.interpret.session import JOURNAL_FILE
+from classify.interpret.journal import NOTHING, Journal, Label
+from classify.interpret.session import JOURNAL_FILE, check_label
 from classify.settings import ClassSettings, Project
 
 # A point may lie so many metres off, for the rounding of coordinates on the way.
@@ -155,13 +156,22 @@ def _labels(  # noqa: PLR0917 - what labels are read by
             problems.append(Problem(f"the alternate {alternates[row]!r} of point {i} is no class", str(path),
                                     f"classes are {names}"))  # fmt: skip
         elif i.isdigit():
-            sure = confidences[row].casefold()
-            confidence: Confidence = next((c for c in CONFIDENCES if c == sure), "high")
-            labels[int(i)] = Label(name, other if other != name else None, confidence, notes[row][:500])
+            sure: Any = confidences[row].casefold() or "high"
+            labels[int(i)] = Label(name, other if other != name else None, sure, notes[row])
+            problems += _unfit(i, labels[int(i)], [c.name for c in classes], path)
     if len(problems) > _NAMED:
-        more = Problem(f"{len(problems) - _NAMED} more labels are no classes", str(path), problems[0].fix)
+        more = Problem(f"{len(problems) - _NAMED} more labels are not fit to be taken in", str(path))
         problems = [*problems[:_NAMED], more]
     return labels, problems
+
+
+def _unfit(point: str, label: Label, names: Sequence[str], path: Path) -> list[Problem]:
+    """Why the page would not have taken such a label either."""
+    try:
+        check_label(label, names)
+    except SampleError as error:
+        return [Problem(f"point {point}: {p.what}", str(path), p.fix) for p in error.problems]
+    return []
 
 
 def _texts(table: pd.DataFrame, column: str) -> list[str]:
