@@ -5,7 +5,7 @@ from __future__ import annotations
 import functools
 import json
 import os
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -49,6 +49,21 @@ class Call:
         """Say something on standard error, whatever the output mode (not with --quiet)."""
         if not self.quiet:
             click.echo(message, err=True)
+
+
+def spoken(names: Sequence[str]) -> tuple[str, ...]:
+    """Options among `names`, of parameters, that stand on the command line, as they are spelt in its help."""
+    context = click.get_current_context()
+    options = {p.name: p.opts[0] for p in context.command.params if p.name}
+    given = click.core.ParameterSource.COMMANDLINE
+    return tuple(options[name] for name in names if name in options and context.get_parameter_source(name) is given)
+
+
+def refuse_spoken(names: Sequence[str], reason: str) -> None:
+    """Raise UsageError if any of these options was given, as it would change nothing. reason: when it would."""
+    unused = spoken(names)
+    if unused:
+        raise click.UsageError(f"{', '.join(unused)}: {reason}")
 
 
 def common_options(command: Callable[..., Any]) -> Callable[..., Any]:

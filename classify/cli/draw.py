@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
-from classify.cli.common import Call, common_options
+from classify.cli.common import Call, common_options, refuse_spoken
 from classify.cli.plan import ALLOCATIONS, Assigned
 
 if TYPE_CHECKING:
@@ -58,6 +58,12 @@ def command(
 
     if sum((add is not None, bool(add_to), replaced is not None)) > 1:
         raise click.UsageError("give one of --add, --add-to and --replace")
+    if replaced is None:
+        refuse_spoken(["reason"], "only with --replace")
+    if replaced is not None or add is not None or add_to:
+        refuse_spoken(list(fresh), "only for a first draw; points that come later are drawn as the first ones were")
+    else:
+        _refuse_unused(fresh)
     project = call.project()
     outputs = project.folder / "outputs"
     said = ""
@@ -74,6 +80,18 @@ def command(
     call.show({**design, "folder": str(folder)}, "\n".join(filter(None, [said, _text(sample), f"written to {folder}"])))
     for note in (*sample.design["notes"], *sample.design["cautions"]):
         call.warn(f"note: {note}")
+
+
+def _refuse_unused(fresh: dict[str, Any]) -> None:
+    """Raise UsageError for options that would change nothing about this draw."""
+    if fresh["kind"] != "stratified":
+        refuse_spoken(["sizes", "allocation", "floor"], "only with --kind stratified")
+    elif fresh["points"] is None:
+        refuse_spoken(["floor"], "only with --points; 'plan' has its own")
+        if fresh["sizes"]:
+            refuse_spoken(["allocation"], "only with --points, or the sizes of 'plan'")
+    elif fresh["allocation"] not in (None, "floor"):
+        refuse_spoken(["floor"], "only with --allocation floor")
 
 
 def _draw(  # noqa: PLR0917 - options

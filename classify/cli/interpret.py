@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 
 import click
 
-from classify.cli.common import Call, common_options
+from classify.cli.common import Call, common_options, refuse_spoken
 
 if TYPE_CHECKING:
     from classify.interpret.export import Export
@@ -51,6 +51,12 @@ def command(
     """Serve, import or export."""
     if settle + export_only + (imported is not None) > 1:
         raise click.UsageError("give one of --settle, --export and --import")
+    if imported is None:
+        refuse_spoken(["id_column", "label_column", "untold"], "only with --import")
+    if export_only or imported is not None:
+        refuse_spoken(["port", "host", "no_browser"], "not with --export or --import, which serve no page")
+    if export_only:
+        refuse_spoken(["interpreter"], "not with --export, which takes everyone's labels")
     project = call.project()
     outputs = project.folder / "outputs"
     name = interpreter or _user()

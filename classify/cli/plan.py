@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
-from classify.cli.common import Call, common_options
+from classify.cli.common import Call, common_options, refuse_spoken
 
 if TYPE_CHECKING:
     from classify.assessment.design import Allocation, Design, Measure
@@ -103,7 +103,9 @@ def _design(  # noqa: PLR0917 - options
     if (strata is None) != (out is None):
         raise click.UsageError("--strata and --out go together")
     if strata is not None and out is not None:
+        refuse_spoken(["project_path"], "not with --strata")
         return *table_design(strata, dict(accuracies), usual_accuracy, pilot, level), "", out
+    refuse_spoken(["level"], "only with --strata; a project says this in its [report]")
     project = call.project()
     outputs = project.folder / "outputs"
     found = project_design(project, outputs, dict(accuracies), usual_accuracy, pilot)

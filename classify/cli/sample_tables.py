@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import functools
-from collections.abc import Callable, Sequence
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import click
+
+from classify.cli.common import spoken
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -47,9 +49,9 @@ class SampleTables:
                 ("--interval", "--confidence", "--seed") if self.settings["evidence"] == "purposive sample" else (),
             "only with --interval bootstrap": ("--seed",) if self.settings["interval"] != "bootstrap" else (),
         }  # fmt: skip
-        spoken = (*self.spoken, *_spoken(("project_path", "force")))
+        given = (*self.spoken, *spoken(("project_path", "force")))
         for reason, options in reasons.items():
-            unused = [option for option in options if option in spoken]
+            unused = [option for option in options if option in given]
             if unused:
                 raise click.UsageError(f"{', '.join(unused)}: {reason}")
 
@@ -105,19 +107,11 @@ def table_options(command: Callable[..., Any]) -> Callable[..., Any]:
     @click.option("--seed", type=click.IntRange(0), default=0, help="Seed of the bootstrap.")
     @functools.wraps(command)
     def wrapped(*args: Any, **given: Any) -> Any:  # noqa: ANN401
-        spoken = _spoken(("points", "strata", "out", "merge", "unlabelled", "purposive", *_SETTINGS))
+        said = spoken(("points", "strata", "out", "merge", "unlabelled", "purposive", *_SETTINGS))
         files = {name: given.pop(name) for name in ("points", "strata", "out", "merge")}
         evidence = "purposive sample" if given.pop("purposive") else "probability sample"
         settings = {name: given.pop(name) for name in _SETTINGS}
         settings |= {"evidence": evidence, "unlabelled": tuple(given.pop("unlabelled"))}
-        return command(*args, tables=SampleTables(**files, settings=settings, spoken=spoken), **given)
+        return command(*args, tables=SampleTables(**files, settings=settings, spoken=said), **given)
 
     return wrapped
-
-
-def _spoken(names: Sequence[str]) -> tuple[str, ...]:
-    """Options among `names` that stand on the command line, as they are spelt there."""
-    context = click.get_current_context()
-    options = {p.name: p.opts[0] for p in context.command.params if p.name}
-    given = click.core.ParameterSource.COMMANDLINE
-    return tuple(options[name] for name in names if name in options and context.get_parameter_source(name) is given)
