@@ -11,7 +11,7 @@ from classify.settings import Project
 from classify.training.dataset import TrainingSet
 from classify.training.review import Evidence, TrainingReview, review_training
 
-# A small forest on a few pixels of each polygon is enough to see what a polygon looks like.
+# A small forest on a few pixels of each polygon is enough to see what a polygon looks like: so many trees at most.
 _TREES, _PIXELS = 40, 3_000
 
 
@@ -20,16 +20,18 @@ def inspect_training(
 ) -> TrainingReview:
     """Review polygons with grouped cross-validation and a learning curve of a small forest, whatever model is chosen.
 
-    Nothing is refused here: what cannot be screened is said in `problems`. Seeded by the project.
+    The forest has as many trees as the project's, 40 at most. Nothing is refused here: what cannot be screened is said
+    in `problems`. Seeded by the project.
     """
-    seed = project.project.seed
+    seed, trees = project.project.seed, min(_TREES, project.model.trees)
     problems = check_classes(training, project)
     if any(problem.severity == "error" for problem in problems):
         return review_training(training, project, Evidence.none(len(training.codes)), problems, seed)
 
     def forest(forest_seed: int) -> object:
-        params = {"n_estimators": _TREES}
-        return make_estimator("random forest", params, features=len(training.feature_names), seed=forest_seed)
+        return make_estimator(
+            "random forest", {"n_estimators": trees}, features=len(training.feature_names), seed=forest_seed
+        )
 
     screening = screen(training, forest, ScreenOptions(seed=seed, jobs=jobs, most_pixels=_PIXELS), progress=progress)
     options = ScreenOptions(seed=seed, jobs=jobs, repeats=4, most_pixels=_PIXELS)
