@@ -34,13 +34,20 @@ def sample_facts(
     frame = geopandas.read_file(project.path(settings.points), **layer)
     if len(frame) != len(sample.map):
         frame = frame[codes_at(cover, frame.geometry) != 0]
-    # Points given twice are taken once by the assessment; their rows then no longer match, and no place is shown.
-    placed = len(frame) == len(sample.map)
+    # The assessment leaves points out (given twice, replaced, off the map). Where the rest cannot be matched, no place is
+    # shown rather than a wrong one.
+    placed = len(frame) == len(sample.map) and _aligned(sample, codes_at(cover, frame.geometry))
     ids = frame["id"].astype(str) if placed and "id" in frame else [str(i + 1) for i in range(len(sample.map))]
     table = points_table(sample, list(ids))
     method = _method(project, sample, assessment)
     points = _placed(table, frame, cover) if placed else ()
     return SampleFacts(table, _strata_table(sample), method, assessment), points
+
+
+def _aligned(sample: ReferenceSample, codes: NDArray[np.uint8]) -> bool:
+    """Whether points and codes of the map are in one order: each code then stands for one class of the sample."""
+    pairs = pd.DataFrame({"code": codes, "map": sample.map})
+    return bool((pairs.groupby("code")["map"].nunique() == 1).all())
 
 
 def points_table(sample: ReferenceSample, ids: list[str]) -> pd.DataFrame:
