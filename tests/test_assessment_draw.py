@@ -303,6 +303,10 @@ def test_adding_keeps_labels_and_replacing_takes_reserves_in_order(mapped_projec
     ("args", "message"),
     [
         (["--in", "Water=5000"], "5,000 points are asked of stratum 'Water', which has 900 pixels"),
+        (
+            ["--in", "Water=898", "--reserve", "5"],
+            "898 points and 5 in reserve.*\n.*at most 895 points, or for fewer in",
+        ),
         (["--in", "Swamp=5"], "there is no stratum 'Swamp'"),
         (["--points", "5"], "5 points are too few for 3 strata"),
         ([], "the number of points is not known"),

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import os
 import signal
 import sqlite3
@@ -221,6 +222,22 @@ def test_a_contrary_import_does_not_overwrite(project: Path):
     with pytest.raises(SampleError, match="point 3 was labelled otherwise"):
         run(project, "--import", str(project / "labels.csv"), "--interpreter", "Ada")
     assert {i: s.label for i, s in journal.standing().items()} == {3: Label("Pasture")}
+
+
+@pytest.mark.skipif(os.name == "nt", reason="Ctrl-C cannot be sent to one process there")
+def test_with_json_nothing_else_is_on_standard_output(project: Path):
+    Journal(project / "outputs" / "sample" / "labels.sqlite", "Ada").write(3, Label("Pasture"), 0)
+    command = [sys.executable, "-m", "classify", "interpret", "--project", str(project), "--json", "--no-browser"]
+    with subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True) as process:
+        try:
+            assert process.stderr is not None
+            assert process.stderr.readline().startswith("http://127.0.0.1:")
+            assert "stop with Ctrl-C" in process.stderr.readline()
+            process.send_signal(signal.SIGINT)
+            said, _ = process.communicate(timeout=30)
+        finally:
+            process.kill()
+    assert json.loads(said)["points"] == {"labelled": 1, "open": 39}
 
 
 @pytest.mark.parametrize(

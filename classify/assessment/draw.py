@@ -149,8 +149,10 @@ def _enough_units(population: Population, found: Scan, sizes: Mapping[str, int],
                                     "leave it out of the sample, or merge it with another"))  # fmt: skip
         elif size and size + options.reserve > there:
             extra = f" and {options.reserve} in reserve" if options.reserve else ""
+            fix = f"ask for at most {max(there - options.reserve, 0):,} points"
+            fix += ", or for fewer in reserve" if options.reserve else ""
             problems.append(Problem(f"{size:,} points{extra} are asked of stratum {name!r}, which has {there:,} {unit}",
-                                    str(population.path), f"ask for at most {there - options.reserve:,}"))  # fmt: skip
+                                    str(population.path), fix))  # fmt: skip
     raise_if_errors(problems, SampleError)
 
 
