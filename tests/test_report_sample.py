@@ -5,10 +5,13 @@ from __future__ import annotations
 import shutil
 
 import geopandas as gpd
+import numpy as np
 import pytest
 
+from classify.assessment import read_reference
+from classify.assessment.reference import codes_at
 from classify.files import read_json
-from classify.report.sample import sample_facts
+from classify.report.sample import _aligned, sample_facts
 from classify.settings import load_project
 
 
@@ -33,19 +36,10 @@ def test_each_point_lies_where_its_file_says(project):
         assert point.at_yx[1] == pytest.approx((frame.loc[int(point.id)].geometry.x - left) / (right - left))
 
 
-def test_where_points_cannot_be_matched_none_is_shown(project):
-    # As many points drop out as come in twice: rows no longer match, though their number does.
-    file = project.folder / "reference.gpkg"
-    frame = gpd.read_file(file)
-    frame.loc[:9, "geometry"] = frame.geometry[:10].translate(1_000_000, 0)
-    frame.loc[len(frame) - 10 :, ["id", "observed"]] = frame.loc[10:19, ["id", "observed"]].to_numpy()
-    frame.loc[len(frame) - 10 :, "geometry"] = frame.geometry[10:20].to_numpy()
-    file.unlink()
-    frame.to_file(file, layer="reference")
-    sample, points = facts(project)
-    assert sample is not None
-    placed = {point.id for point in points}
-    for point in points:
-        found = frame[frame["id"].astype(str) == point.id].iloc[0]
-        assert point.reference == found["observed"]
-    assert not placed or len(placed) == len(points)
+def test_points_in_another_order_than_the_sample_are_noticed(project):
+    outputs = project.folder / "outputs"
+    sample = read_reference(project, outputs / "map" / "cover.tif", outputs)
+    codes = codes_at(outputs / "map" / "cover.tif", gpd.read_file(project.folder / "reference.gpkg").geometry)
+    codes = codes[codes != 0]
+    assert _aligned(sample, codes)
+    assert not _aligned(sample, np.roll(codes, 1))

@@ -34,8 +34,8 @@ def sample_facts(
     frame = geopandas.read_file(project.path(settings.points), **layer)
     if len(frame) != len(sample.map):
         frame = frame[codes_at(cover, frame.geometry) != 0]
-    # The assessment leaves points out (given twice, replaced, off the map). Where the rest cannot be matched, no place is
-    # shown rather than a wrong one.
+    # The assessment leaves points out (given twice, replaced, off the map). Where the rest cannot be matched, no place
+    # is shown rather than a wrong one.
     placed = len(frame) == len(sample.map) and _aligned(sample, codes_at(cover, frame.geometry))
     ids = frame["id"].astype(str) if placed and "id" in frame else [str(i + 1) for i in range(len(sample.map))]
     table = points_table(sample, list(ids))
