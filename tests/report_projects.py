@@ -45,8 +45,9 @@ def many_classes_project(folder: Path) -> Project:
 
 def screening_project(folder: Path) -> Project:
     """Trained and mapped, without a reference sample."""
-    return _finish(folder, "Ground cover, Sorrel Basin", ("Pasture", "Bare soil", "Water"), (90_000, 55_000, 7_000),
-                   None)
+    return _finish(
+        folder, "Ground cover, Sorrel Basin", ("Pasture", "Bare soil", "Water"), (90_000, 55_000, 7_000), None
+    )
 
 
 def _finish(folder, title, names, pixels, counts) -> Project:
@@ -87,7 +88,7 @@ def _sample(folder: Path, project: Project, codes: np.ndarray, pixels, counts) -
 
 def _toml(title: str, names, with_reference: bool) -> str:
     classes = "\n".join(f"[[class]]\ncode = {i}\nname = {_quoted(n)}" for i, n in enumerate(names, start=1))
-    section = "[reference]\npoints = \"reference.gpkg\"\nlabel = \"observed\"\ndesign = \"design.json\""
+    section = '[reference]\npoints = "reference.gpkg"\nlabel = "observed"\ndesign = "design.json"'
     reference = section if with_reference else ""
     return f"""
 [project]
@@ -124,8 +125,18 @@ def _map(folder: Path, project: Project, pixels) -> np.ndarray:
     percent[codes == 0] = 255
     folder.mkdir(parents=True, exist_ok=True)
     for name, values, nodata in (("cover", codes, 0), ("confidence", percent, 255)):
-        with rasterio.open(folder / f"{name}.tif", "w", driver="GTiff", dtype="uint8", count=1, height=height,
-                           width=width, crs="EPSG:32633", transform=TRANSFORM, nodata=nodata) as target:
+        with rasterio.open(
+            folder / f"{name}.tif",
+            "w",
+            driver="GTiff",
+            dtype="uint8",
+            count=1,
+            height=height,
+            width=width,
+            crs="EPSG:32633",
+            transform=TRANSFORM,
+            nodata=nodata,
+        ) as target:
             target.write(values, 1)
     table = pd.DataFrame({
         "code": [c.code for c in project.classes], "name": [c.name for c in project.classes], "pixels": pixels,
