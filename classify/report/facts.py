@@ -54,7 +54,8 @@ class MapFact:
     size_yx: pixels of the map; picture_yx: pixels of each layer; step_m, pixel_m: ground size of a pixel of the picture
     and of the map (down, across) at the centre; north_deg: true north at the centre, clockwise from up. x_ticks,
     y_ticks: position along the frame 0..1 and label. low_share: share of mapped pixels whose confidence is below
-    `low_percent`, beyond_share: of those beyond reach of the training data; None without such a map.
+    `low_percent`, beyond_share: of those beyond reach of the training data; None without such a map. tidied: whether
+    small patches or outlines were changed after the model had spoken.
     """
 
     size_yx: tuple[int, int]
@@ -69,6 +70,7 @@ class MapFact:
     low_percent: int = 50
     low_share: float | None = None
     beyond_share: float | None = None
+    tidied: bool = False
 
     def layer(self, kind: str) -> Layer | None:
         """The layer of a kind, if there is one."""

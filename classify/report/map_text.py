@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
-from classify.report.document import Block, Explorer, Figure, Legend, Section
+from classify.report.document import Block, Explorer, Figure, Legend, Paragraph, Section
 from classify.report.facts import MapFact, ReportFacts
 from classify.report.figures import map_drawing
 from classify.report.messages import Messages
@@ -24,6 +24,8 @@ def _blocks(facts: ReportFacts, fact: MapFact, words: Messages) -> Iterator[Bloc
     title = words.text("map.figure")
     names = ", ".join(c.name for c in facts.classes)
     pixel = " × ".join(style.rounded(m, 3) for m in sorted({round(m, 3) for m in fact.pixel_m})) + " m"
+    if fact.tidied:
+        yield Paragraph(words.rich("map.tidied"))
     yield Figure(
         "map", map_drawing(fact, cover, title, style).markup(),
         words.text("map.caption", crs=fact.crs, pixel=pixel),

@@ -51,8 +51,13 @@ def map_fact(folder: Path, classes: Sequence[ClassFact], more: Sequence[Layer], 
         size_yx=grid.shape_yx, picture_yx=(height, width), layers=tuple(layers),
         step_m=(pixel_m[0] * grid.height / height, pixel_m[1] * grid.width / width), pixel_m=pixel_m,
         north_deg=north_deg, crs=crs_name(grid), x_ticks=_ticks(grid, across=True), y_ticks=_ticks(grid, across=False),
-        low_percent=low_percent, low_share=low_share, beyond_share=beyond_share,
+        low_percent=low_percent, low_share=low_share, beyond_share=beyond_share, tidied=_is_tidied(cover),
     )  # fmt: skip
+
+
+def _is_tidied(cover: Path) -> bool:
+    with rasterio.open(cover) as source:
+        return "TIDIED" in source.tags()
 
 
 def picture_shape(height: int, width: int) -> tuple[int, int]:
