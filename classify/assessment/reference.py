@@ -194,11 +194,16 @@ def _read_points(project: Project, settings: ReferenceSettings) -> geopandas.Geo
     return frame.reset_index(drop=True)
 
 
+def class_lookup(classes: Sequence[ClassSettings]) -> dict[str, str]:
+    """What a label may say, casefolded -> class name: the name whatever its case, or the code."""
+    return {c.name.casefold(): c.name for c in classes} | {str(c.code): c.name for c in classes}
+
+
 def _points_table(
     frame: geopandas.GeoDataFrame, settings: ReferenceSettings, classes: Sequence[ClassSettings]
 ) -> pd.DataFrame:
     """Labels as class names ("" where there is none), by name whatever its case, or by code; and the other columns."""
-    lookup = {c.name.casefold(): c.name for c in classes} | {str(c.code): c.name for c in classes}
+    lookup = class_lookup(classes)
     name, table, problems = TableName(settings.points), pd.DataFrame(index=frame.index), []
     # Two records at one place are one point.
     table["id"] = [f"{x!r}, {y!r}" for x, y in zip(frame.geometry.x, frame.geometry.y, strict=True)]

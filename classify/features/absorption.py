@@ -65,8 +65,25 @@ def dips() -> Mapping[str, Dip]:
     return MappingProxyType(found)
 
 
+class _OfOnePixel:
+    """What steps share that read bands of single pixels."""
+
+    __slots__ = ()
+    bands: tuple[str, ...]
+
+    @property
+    def needs(self) -> tuple[str, ...]:
+        """The bands that the measures are taken from."""
+        return self.bands
+
+    @property
+    def halo_px(self) -> int:
+        """None: a spectrum is a matter of one pixel."""
+        return 0
+
+
 @dataclass(frozen=True, slots=True)
-class AbsorptionStep:
+class AbsorptionStep(_OfOnePixel):
     """Measures of one dip, one layer of `outputs` for each.
 
     bands: layers by rising wavelength, the first and last at the shoulders; wavelengths_nm: theirs. centre_nm: where
@@ -80,16 +97,6 @@ class AbsorptionStep:
     centre_nm: float
     kind: Literal["absorption"] = "absorption"
 
-    @property
-    def needs(self) -> tuple[str, ...]:
-        """The bands of the dip."""
-        return self.bands
-
-    @property
-    def halo_px(self) -> int:
-        """None: a dip is a matter of one pixel."""
-        return 0
-
     def apply(self, layers: NDArray[np.float32]) -> NDArray[np.float32]:
         """The measures, float32 (outputs, h, w), of reflectance in `layers` (float32 (bands, h, w), NaN = invalid)."""
         every = measure_dip(layers, np.array(self.wavelengths_nm), self.centre_nm)
@@ -97,7 +104,7 @@ class AbsorptionStep:
 
 
 @dataclass(frozen=True, slots=True)
-class RedEdgeStep:
+class RedEdgeStep(_OfOnePixel):
     """Slope and position of the red edge, one layer of `outputs` for each of `measures`; bands by rising wavelength."""
 
     outputs: tuple[str, ...]
@@ -105,16 +112,6 @@ class RedEdgeStep:
     bands: tuple[str, ...]
     wavelengths_nm: tuple[float, ...]
     kind: Literal["red edge"] = "red edge"
-
-    @property
-    def needs(self) -> tuple[str, ...]:
-        """The bands between 670 and 780 nm."""
-        return self.bands
-
-    @property
-    def halo_px(self) -> int:
-        """None: the red edge is a matter of one pixel."""
-        return 0
 
     def apply(self, layers: NDArray[np.float32]) -> NDArray[np.float32]:
         """The measures, float32 (outputs, h, w), of reflectance in `layers` (float32 (bands, h, w), NaN = invalid)."""

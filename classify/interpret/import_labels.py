@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -14,6 +15,7 @@ from numpy.typing import NDArray
 
 from classify.assessment.columns import plain_text, read_table
 from classify.assessment.drawn_sample import DrawnSample, read_drawn
+from classify.assessment.reference import class_lookup
 from classify.errors import DataError, Problem, SampleError, raise_if_errors
 from classify.interpret.journal import NOTHING, Journal, Label
 from classify.interpret.session import JOURNAL_FILE, check_label
@@ -108,7 +110,7 @@ def _id_faults(ids: Sequence[str], sample: DrawnSample, path: Path) -> list[Prob
     drawn = set(sample.design["points"])
     replaced = drawn - {str(i) for i in sample.active_ids}
     strange = [i for i in dict.fromkeys(ids) if i not in drawn]
-    twice = [i for i in dict.fromkeys(ids) if ids.count(i) > 1]
+    twice = [i for i, count in Counter(ids).items() if count > 1]
     return [
         *_faults(
             strange, path, "was not drawn", "import labels of drawn points only; more points come with 'draw --add'"
@@ -140,7 +142,7 @@ def _labels(  # noqa: PLR0917 - what labels are read by
     table: pd.DataFrame, ids: Sequence[str], classes: Sequence[ClassSettings], columns: ImportColumns, untold: set[str],
     path: Path,
 ) -> tuple[dict[int, Label], list[Problem]]:  # fmt: skip
-    lookup = {c.name.casefold(): c.name for c in classes} | {str(c.code): c.name for c in classes}
+    lookup = class_lookup(classes)
     given = _texts(table, columns.label)
     alternates, confidences, notes = (_texts(table, c) for c in (columns.alternate, columns.confidence, columns.note))
     names = ", ".join(repr(c.name) for c in classes)
