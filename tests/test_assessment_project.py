@@ -286,7 +286,7 @@ def test_sample_without_crs_or_design_that_is_none(project_folder):
     lost = gpd.GeoDataFrame(bare.drop(columns="geometry"), geometry=list(bare.geometry))
     with pytest.warns(UserWarning, match="crs"):
         lost.to_file(project_folder / "reference.gpkg", layer="reference")
-    with pytest.raises(DataError, match="no CRS"):
+    with pytest.raises(DataError, match="no coordinate reference system"):
         assess_project(load_project(project_folder), project_folder / "outputs")
 
 

@@ -133,7 +133,7 @@ def test_points_without_a_crs_are_refused(project: Path):
     path.unlink()
     with pytest.warns(UserWarning, match="crs"):
         points.to_file(path, layer="points")
-    with pytest.raises(DataError, match="the drawn points have no CRS"):
+    with pytest.raises(DataError, match="no coordinate reference system"):
         draw(project, "--add", "12")
 
 

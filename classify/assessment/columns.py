@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import csv
-from collections import Counter
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -15,10 +13,8 @@ from numpy.typing import NDArray
 
 from classify.assessment.options import TableName
 from classify.assessment.sample import NO_LABEL
-from classify.errors import DataError, Problem, SampleError, raise_if_errors
-
-# One message names at most so many rows with the same fault.
-ROWS_NAMED = 5
+from classify.errors import Problem, SampleError, raise_if_errors
+from classify.tables import ROWS_NAMED, read_table
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -81,53 +77,6 @@ def plain_text(value: object) -> str:
     if value is None or value is pd.NA or (isinstance(value, float) and np.isnan(value)):
         return ""
     return str(int(value)) if isinstance(value, float) and value.is_integer() else str(value).strip()
-
-
-def read_table(path: Path) -> pd.DataFrame:
-    """Read a CSV file as text, blanks as "". Blank columns at the end, as spreadsheets leave them, are dropped.
-
-    Raises DataError when it is missing, empty or not a table: rows of unequal length, columns that share a name.
-    """
-    try:
-        with path.open(encoding="utf-8-sig", newline="") as stream:
-            rows = [row for row in csv.reader(stream, strict=True) if row]
-            # A line of spaces is a blank line too, where a row has more than one field.
-            rows = [row for row in rows if len(row) > 1 or len(rows[0]) == 1 or row[0].strip()]
-    except FileNotFoundError as error:
-        raise DataError("there is no such file", where=str(path)) from error
-    except (csv.Error, UnicodeDecodeError) as error:
-        raise DataError(f"this is not a UTF-8 table of comma-separated values: {error}", where=str(path)) from error
-    except OSError as error:
-        raise DataError(f"the file cannot be read: {error.strerror}", where=str(path)) from error
-    if not rows:
-        raise DataError("the file is empty", where=str(path), fix="its first row names the columns")
-    header = [column.strip() for column in rows[0]]
-    while header and not header[-1]:
-        header.pop()
-    raise_if_errors(_misshapen(header, rows[1:], path), DataError)
-    if len(rows) == 1:
-        raise DataError("the table has a first row but no others", where=str(path))
-    return pd.DataFrame([row[: len(header)] for row in rows[1:]], columns=header, dtype=object)
-
-
-def _misshapen(header: list[str], rows: list[list[str]], path: Path) -> list[Problem]:
-    """Columns that share a name or have none; rows with fewer fields than columns, or more that are not blank."""
-    again = sorted(name for name, n in Counter(header).items() if n > 1 or not name)
-    problems = [
-        Problem(f"more than one column is called {name!r}" if name else "a column has no name", str(path),
-                "each column needs a name of its own")
-        for name in again
-    ]  # fmt: skip
-    n = len(header)
-    faulty = [i for i, row in enumerate(rows) if len(row) < n or any(field.strip() for field in row[n:])]
-    problems += [
-        Problem(f"the number of fields is {len(rows[i])}, but there are {n} columns", f"{path}, row {i + 2}",
-                "separate fields by commas, blank ones too, and put text with commas in double quotes")
-        for i in faulty[:ROWS_NAMED]
-    ]  # fmt: skip
-    if len(faulty) > ROWS_NAMED:
-        problems.append(Problem(f"{len(faulty) - ROWS_NAMED} more rows with such a fault", str(path)))
-    return problems
 
 
 def require_columns(table: pd.DataFrame, wanted: Iterable[str], name: TableName) -> None:

@@ -19,7 +19,6 @@ from typing import Any
 import geopandas
 import numpy as np
 import pandas as pd
-import pyogrio
 
 from classify.assessment.draw import IDS, Cells, Draw, DrawOptions, pixels_of
 from classify.assessment.lots import lots, stream
@@ -27,6 +26,7 @@ from classify.assessment.population import Population
 from classify.errors import DataError, OutputError, Problem, SampleError, raise_if_errors
 from classify.files import read_json, replacing, sha256, write_bytes, write_json
 from classify.raster.grid import Grid
+from classify.raster.vectors import layers_of, read_places
 
 LABEL_COLUMNS = ("observed", "alternate", "confidence", "note")
 _KEYS = ("kind", "seed", "map", "unit", "apart_m", "strata", "points", "reserves", "draws", "notes")
@@ -258,18 +258,12 @@ def read_drawn(folder: Path) -> DrawnSample:
 
 
 def _read_points(path: Path) -> geopandas.GeoDataFrame:
-    try:
-        points = geopandas.read_file(path, layer=_layer(path))
-    except Exception as error:  # pyogrio raises errors of many kinds, with no common type below Exception
-        raise DataError(f"the drawn points cannot be read: {error}", where=str(path)) from error
-    if points.crs is None:
-        raise DataError("the drawn points have no CRS", where=str(path), fix="restore the file as it was drawn")
-    return points
+    return read_places(path, "drawn points", layer=_layer(path) if path.is_file() else None)
 
 
 def _layer(path: Path) -> str:
     """The layer of the points, whatever others were put beside it; the first one where a program renamed it."""
-    names = [str(name) for name in pyogrio.list_layers(path)[:, 0]]
+    names = layers_of(path, "drawn points")
     return "points" if "points" in names else names[0]
 
 

@@ -12,11 +12,12 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from classify.assessment.columns import ROWS_NAMED, Labels, blanks, faults, require_columns
+from classify.assessment.columns import Labels, blanks, faults, require_columns
 from classify.assessment.options import AssessmentOptions, TableName
 from classify.assessment.sample import NO_LABEL, DesignKind, ReferenceSample, Stratum
 from classify.assessment.strata import mapped_areas, read_strata, recognise_classes
 from classify.errors import Problem, SampleError, raise_if_errors
+from classify.tables import ROWS_NAMED
 
 SYSTEMATIC = Problem(
     "standard errors of a systematic sample are those of a random one of the same size, which are as a rule somewhat "

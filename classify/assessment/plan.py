@@ -9,7 +9,7 @@ from typing import Any
 
 import numpy as np
 
-from classify.assessment.columns import Labels, faults, numbers, read_table, require_columns
+from classify.assessment.columns import Labels, faults, numbers, require_columns
 from classify.assessment.design import (
     ALLOCATIONS,
     FEWEST,
@@ -31,6 +31,7 @@ from classify.errors import DataError, Problem, SampleError, raise_if_errors
 from classify.files import read_json, write_json
 from classify.settings import Project
 from classify.settings.model import M2_PER_UNIT
+from classify.tables import read_table
 
 PLAN_CAUTION = (
     "Half-widths are expectations under the conjectured accuracies; those of the sample itself will differ. Where "

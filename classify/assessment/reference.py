@@ -31,6 +31,7 @@ from classify.assessment.sample import NO_LABEL, DesignKind, ReferenceSample
 from classify.errors import DataError, Problem, SampleError, raise_if_errors
 from classify.files import sha256
 from classify.raster.grid import Grid
+from classify.raster.vectors import read_places
 from classify.settings import ClassSettings, Project, ReferenceSettings
 from classify.settings.model import M2_PER_UNIT
 
@@ -70,7 +71,7 @@ def read_reference(project: Project, cover: Path, outputs: Path, *, other: Path 
     and, where the sample was drawn here, sample/design.json. Raises DataError, SampleError.
     """
     settings = _settings(project)
-    frame = _read_points(project, settings)
+    frame = read_points(project, settings)
     areas = read_areas(outputs / "map" / "areas.csv")
     design, warnings = design_of(project, settings, frame, outputs, cover)
     if design is not None:
@@ -112,7 +113,7 @@ def read_labels(project: Project) -> dict[str, int]:
     settings = project.reference
     if settings is None:
         return {}
-    labels = _points_table(_read_points(project, settings), settings, project.classes)["reference"]
+    labels = _points_table(read_points(project, settings), settings, project.classes)["reference"]
     return {str(name): int(count) for name, count in labels.value_counts().sort_index().items()}
 
 
@@ -168,23 +169,20 @@ def _settings(project: Project) -> ReferenceSettings:
     return project.reference
 
 
-def _read_points(project: Project, settings: ReferenceSettings) -> geopandas.GeoDataFrame:
+def read_points(project: Project, settings: ReferenceSettings) -> geopandas.GeoDataFrame:
+    """The records of the project's reference sample, checked to be single points with the columns it names.
+
+    Raises DataError.
+    """
     path = project.path(settings.points)
-    try:
-        frame = geopandas.read_file(path, **({"layer": settings.layer} if settings.layer else {}))
-    except Exception as error:  # pyogrio raises errors of many kinds, with no common type below Exception
-        raise DataError(f"the reference sample cannot be read: {error}", where=path) from error
-    if not isinstance(frame, geopandas.GeoDataFrame) or frame.geometry.isna().all():
-        raise DataError("the reference sample has no points", where=path)
-    if frame.crs is None:
-        raise DataError("the reference sample has no CRS", where=path, fix="save it with the CRS of its coordinates")
+    frame = read_places(path, "reference points", layer=settings.layer, setting="[reference] points")
     there = [column for column in frame.columns if column != frame.geometry.name]
     wanted = (settings.label, settings.alternate, settings.stratum, settings.cluster, settings.region)
     problems = [
         Problem(f"there is no column {column!r}", path, f"its columns are {', '.join(map(repr, there))}")
         for column in wanted if column is not None and column not in there
     ]  # fmt: skip
-    odd = np.flatnonzero((frame.geometry.geom_type != "Point").to_numpy())
+    odd = np.flatnonzero((frame.geometry.geom_type != "Point").to_numpy() | frame.geometry.is_empty.to_numpy())
     if len(odd):
         problems.append(
             Problem(f"{len(odd)} records are not single points, first record {odd[0] + 1}", path,

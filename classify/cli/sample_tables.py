@@ -68,8 +68,9 @@ class SampleTables:
     def read(self, table: Path) -> tuple[pd.DataFrame, pd.DataFrame | None, AssessmentOptions]:
         """`table` (of points or of a matrix), the strata if there are any, and the options. Raises LandassayError."""
         from classify.assessment import AssessmentOptions
-        from classify.assessment.columns import read_merge, read_table
+        from classify.assessment.columns import read_merge
         from classify.assessment.options import TableName
+        from classify.tables import read_table
 
         options = AssessmentOptions(
             **self.settings,

@@ -13,12 +13,13 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
-from classify.assessment.columns import plain_text, read_table
+from classify.assessment.columns import plain_text
 from classify.assessment.drawn_sample import DrawnSample, read_drawn
 from classify.assessment.reference import class_lookup
-from classify.errors import DataError, Problem, SampleError, raise_if_errors
+from classify.errors import Problem, SampleError, raise_if_errors
 from classify.interpret.journal import NOTHING, Journal, Label
 from classify.interpret.session import JOURNAL_FILE, check_label
+from classify.raster.vectors import read_records
 from classify.settings import ClassSettings, Project
 
 # A point may lie so many metres off, for the rounding of coordinates on the way.
@@ -88,21 +89,10 @@ def import_labels(
 
 
 def _read(path: Path) -> tuple[pd.DataFrame, geopandas.GeoSeries | None]:
-    """The table, and where its points lie if it says so: geometries, or longitude and latitude."""
-    if path.suffix.lower() == ".csv":
-        table = read_table(path)
-        if not {"longitude", "latitude"} <= set(table.columns):
-            return table, None
-        degrees = [pd.to_numeric(table[c], errors="coerce") for c in ("longitude", "latitude")]
-        return table, geopandas.GeoSeries.from_xy(*degrees, crs=4326)
-    try:
-        frame = geopandas.read_file(path)
-    except Exception as error:  # pyogrio raises errors of many kinds, with no common type below Exception
-        raise DataError(f"the labels cannot be read: {error}", where=str(path)) from error
+    """The table, and where its records lie if it says so."""
+    frame = read_records(path, "labels")
     if not isinstance(frame, geopandas.GeoDataFrame):
-        return pd.DataFrame(frame), None
-    if frame.crs is None:
-        raise DataError("the labels have no CRS", where=str(path), fix="save them with the CRS of their coordinates")
+        return frame, None
     return pd.DataFrame(frame.drop(columns=frame.geometry.name)), frame.geometry.representative_point()
 
 

@@ -13,7 +13,7 @@ import rasterio
 from numpy.typing import NDArray
 
 from classify.assessment import ReferenceSample, read_reference
-from classify.assessment.reference import codes_at
+from classify.assessment.reference import codes_at, read_points
 from classify.assessment.sample import NO_LABEL
 from classify.report.facts import PointFact, SampleFacts
 from classify.settings import Project
@@ -30,8 +30,7 @@ def sample_facts(
     if settings is None or not cover.is_file() or not Path(project.path(settings.points)).is_file():
         return None, ()
     sample = read_reference(project, cover, outputs)
-    layer = {"layer": settings.layer} if settings.layer else {}
-    frame = geopandas.read_file(project.path(settings.points), **layer)
+    frame = read_points(project, settings)
     if len(frame) != len(sample.map):
         frame = frame[codes_at(cover, frame.geometry) != 0]
     # The assessment leaves points out (given twice, replaced, off the map). Where the rest cannot be matched, no place

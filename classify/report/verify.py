@@ -13,7 +13,6 @@ from pathlib import Path
 from typing import Any
 
 from classify.assessment import AssessmentOptions
-from classify.assessment.columns import read_table
 from classify.assessment.estimation import estimate_sample
 from classify.assessment.inputs import sample_from_points
 from classify.assessment.options import TableName
@@ -26,6 +25,7 @@ from classify.report.facts import ReportFacts
 from classify.report.gather import accuracy_facts
 from classify.report.messages import load_messages
 from classify.report.readback import cells_of_html, cells_of_xlsx, printed_rows, raw_rows
+from classify.tables import read_table
 
 # Derived numbers may differ in the last bits between machines; printed ones may not differ at all.
 _RELATIVE, _ABSOLUTE = 1e-9, 1e-12

@@ -9,21 +9,19 @@ from __future__ import annotations
 import difflib
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
-from pathlib import Path
 from typing import Any
 
 import geopandas as gpd
 import numpy as np
 import pandas as pd
-import pyogrio
 import shapely
 from numpy.typing import NDArray
 
 from classify.errors import DataError, Problem, TrainingError, raise_if_errors
 from classify.raster.grid import Grid
+from classify.raster.vectors import read_places
 from classify.settings import ClassSettings, Project
 
-_PARQUET = {".parquet", ".geoparquet"}
 _AREAL = {3, 6}  # shapely type ids of Polygon and MultiPolygon
 
 
@@ -49,16 +47,7 @@ def read_polygons(project: Project, grid: Grid) -> PolygonSet:
     """
     settings = project.training
     path = project.path(settings.polygons)
-    frame = _read(path, settings.layer)
-    if not len(frame):
-        raise DataError(
-            "the layer is empty: it holds no polygon", where=path, fix="draw training polygons, or name another layer"
-        )
-    if frame.crs is None:
-        raise DataError(
-            "the polygons have no coordinate reference system", where=path,
-            fix="assign the one they were drawn in (their software can do it), then run this again",
-        )  # fmt: skip
+    frame = read_places(path, "polygons", layer=settings.layer, setting="[training] polygons")
     frame["polygon"] = np.arange(1, len(frame) + 1, dtype=np.int32)
     problems: list[Problem] = []
     frame = _labelled(frame, project, path, problems)
@@ -68,34 +57,6 @@ def read_polygons(project: Project, grid: Grid) -> PolygonSet:
     raise_if_errors(problems, TrainingError)
     columns = ["polygon", "code", "class_name", "area_m2", "geometry"]
     return PolygonSet(frame[columns].reset_index(drop=True), grid, tuple(problems))
-
-
-def _read(path: str, layer: str | None) -> gpd.GeoDataFrame:
-    if not path.startswith("/vsi") and "://" not in path and not Path(path).exists():
-        raise DataError("there is no such file", where=path, fix="correct [training] polygons")
-    try:
-        if Path(path).suffix.lower() in _PARQUET:
-            frame = gpd.read_parquet(path)
-        else:
-            frame = pyogrio.read_dataframe(path, layer=_layer(path, layer))
-    except DataError:
-        raise
-    except Exception as error:  # pyogrio, pyarrow and GDAL raise many kinds; for the user they are one
-        raise DataError(f"this cannot be read as polygons: {error}", where=path) from error
-    if not isinstance(frame, gpd.GeoDataFrame):
-        raise DataError("the table has no geometry column", where=path)
-    # A file may call its geometry anything; one name from here on.
-    return frame.rename_geometry("geometry") if frame.geometry.name != "geometry" else frame
-
-
-def _layer(path: str, wanted: str | None) -> str:
-    names = [str(name) for name in pyogrio.list_layers(path)[:, 0]]
-    if wanted is None and len(names) == 1:
-        return names[0]
-    if wanted in names:
-        return str(wanted)
-    said = f"there is no layer {wanted!r}" if wanted else "the file has several layers"
-    raise DataError(said, where=path, fix=f"set [training] layer to one of: {', '.join(names) or 'none'}")
 
 
 def _labelled(frame: gpd.GeoDataFrame, project: Project, path: str, problems: list[Problem]) -> gpd.GeoDataFrame:
