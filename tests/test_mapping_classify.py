@@ -20,7 +20,7 @@ from rio_cogeo.cogeo import cog_validate
 from small_project import make_small_project
 
 from classify.errors import DataError, OutputError
-from classify.mapping import blocks
+from classify.mapping import blocks, engines
 from classify.mapping.classify_scene import MapOptions, block_side_px, classify_scene
 from classify.mapping.tidy import TidyOptions
 from classify.mapping.unfinished import FOLDER
@@ -133,6 +133,27 @@ def test_workers_and_block_sizes_do_not_change_a_byte(made, tmp_path, options):
     map_into(tmp_path / "other", options)
     assert contents(tmp_path / "one") == contents(tmp_path / "other")
     assert {path.name for path in (tmp_path / "other").iterdir()} == set(FILES)
+
+
+def test_reading_does_not_run_ahead_of_slow_work(made, monkeypatch):
+    _, model, scene, _ = made
+    begun, ahead = [], []
+
+    class Watched(blocks.BlockWork):
+        def read(self, window):
+            begun.append(window)
+            return super().read(window)
+
+        def compute(self, *arguments):
+            time.sleep(0.03)
+            return super().compute(*arguments)
+
+    monkeypatch.setattr(engines, "_LOOK_UP_S", 0.005)
+    windows = list(enumerate(scene.grid.blocks(24)))
+    for received, _ in enumerate(engines.Threads(2).run(Watched(model, scene), windows)):
+        ahead.append(len(begun) - received)
+    assert len(ahead) == len(windows) == 20
+    assert max(ahead) <= 4
 
 
 @pytest.mark.parametrize(

@@ -8,6 +8,7 @@ from __future__ import annotations
 from collections.abc import Generator, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
 from dataclasses import dataclass
+from itertools import islice
 from threading import Event
 from typing import TYPE_CHECKING, Protocol
 
@@ -73,10 +74,8 @@ class Threads:
 
             try:
                 while True:
-                    for number, window in remaining:
+                    for number, window in islice(remaining, _UNDER_WAY * self.jobs - len(under_way)):
                         under_way.add(start(number, window))
-                        if len(under_way) >= _UNDER_WAY * self.jobs:
-                            break
                     if not under_way:
                         return
                     done, under_way = wait(under_way, timeout=_LOOK_UP_S, return_when=FIRST_COMPLETED)
