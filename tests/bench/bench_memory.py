@@ -1,4 +1,4 @@
-"""Peak resident memory of `landassay classify` by size of the scene: a small scene repeated, confidence and reach on."""
+"""Peak resident memory of `landassay classify` by size of the scene: a small one repeated, confidence and reach on."""
 
 from __future__ import annotations
 
