@@ -29,8 +29,9 @@ from classify.mapping.unfinished import Unfinished, open_unfinished
 from classify.models import TrainedModel
 from classify.progress import SILENT, Progress
 from classify.raster.grid import Grid, Window
+from classify.raster.guard import is_remote
 from classify.raster.scene import Scene
-from classify.raster.sources import is_remote, open_raster
+from classify.raster.sources import open_raster
 from classify.settings import ClassSettings, Project
 from classify.settings.model import M2_PER_UNIT
 

@@ -16,9 +16,9 @@ from classify.mapping.classify_scene import MapOptions, classify_scene, origin_d
 from classify.mapping.stac import ItemFacts, identifier, write_collection, write_item
 from classify.models import TrainedModel
 from classify.progress import SILENT, Progress
+from classify.raster.guard import is_remote
 from classify.raster.remote import resolve
 from classify.raster.scene import open_scene
-from classify.raster.sources import is_remote
 from classify.settings import Project, SceneSettings
 
 ITEM_FILE, COLLECTION_FILE, SUMMARY_FILE = "item.json", "collection.json", "areas.csv"

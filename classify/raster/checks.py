@@ -8,9 +8,10 @@ import numpy as np
 
 from classify.errors import Problem
 from classify.raster.grid import Grid, Window
+from classify.raster.guard import is_remote
 from classify.raster.reader import Scene
 from classify.raster.resample import Placement
-from classify.raster.sources import BandSource, is_remote
+from classify.raster.sources import BandSource
 
 # Windows on a lattice of this many per side, this large, stand for the whole scene in checks of its values.
 _SAMPLES_PER_SIDE = 4

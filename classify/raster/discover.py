@@ -14,10 +14,11 @@ import numpy as np
 
 from classify.errors import DataError
 from classify.raster.grid import Window
+from classify.raster.guard import is_remote
 from classify.raster.products import products_draft
 from classify.raster.roles import distinct, role_in_name, role_of_word, roles_of_wavelengths
 from classify.raster.sensors import load_sensor
-from classify.raster.sources import OpenFiles, RasterFacts, describe, is_remote, read_window
+from classify.raster.sources import OpenFiles, RasterFacts, describe, read_window
 from classify.raster.stac import item_draft, looks_like_item, read_item
 from classify.settings.starter import BandDraft, SceneDraft
 

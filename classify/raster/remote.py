@@ -8,9 +8,7 @@ refused, as an item could otherwise make this program read what the user never n
 from __future__ import annotations
 
 import http.client
-import ipaddress
 import os
-import socket
 import time
 import urllib.error
 import urllib.parse
@@ -19,6 +17,7 @@ from pathlib import Path
 from typing import Any
 
 from classify.errors import DataError
+from classify.raster.guard import addresses
 
 _TIMEOUT_S = 20.0
 _MOST_BYTES = 16 << 20
@@ -65,19 +64,8 @@ def _refuse_private(href: str, source: str) -> None:
     inner = host.endswith((".localhost", ".local", ".internal", ".lan", ".home.arpa"))
     if "." not in host.strip("[]") and ":" not in host:
         inner = True  # a bare name is found only inside a network
-    if inner or not all(ipaddress.ip_address(text).is_global for text in _addresses(host)):
+    if inner or not all(address.is_global for address in addresses(host)):
         raise _forbidden(href, source)
-
-
-def _addresses(host: str) -> list[str]:
-    try:
-        return [str(ipaddress.ip_address(host))]
-    except ValueError:
-        pass
-    try:
-        return [str(found[4][0]).partition("%")[0] for found in socket.getaddrinfo(host, 443)]
-    except (OSError, UnicodeError):
-        return []  # no such name: reading it will say so
 
 
 def read_local(path: Path) -> bytes:

@@ -7,17 +7,17 @@ import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
-from pathlib import Path, PurePosixPath
 from typing import Any
 
 import numpy as np
 import rasterio
 from numpy.typing import NDArray
-from rasterio.enums import MaskFlags
+from rasterio.enums import Interleaving, MaskFlags
 from rasterio.errors import NotGeoreferencedWarning, RasterioError
 
 from classify.errors import DataError
 from classify.raster.grid import Grid, Window
+from classify.raster.guard import check_path, driver_of, is_remote, leads_to, reachable
 
 # An address that does not answer, or sends less than 100 bytes a second for 20 s, is given up instead of hanging.
 REMOTE_OPTIONS = {
@@ -32,11 +32,15 @@ REMOTE_OPTIONS = {
 # Decoded blocks that are kept. By default it would be a share of the machine's memory, whatever the block size.
 _CACHE_BYTES = 256 << 20
 
-# How a remote file is read, by its ending, GeoTIFF being the default. Left to choose for itself, the raster library
-# would follow a document that only pretends to be an image to other files, as virtual rasters lead on.
-_REMOTE_DRIVERS = {
-    ".jp2": "JP2OpenJPEG", ".img": "HFA", ".vrt": "VRT", ".dat": "ENVI", ".bsq": "ENVI", ".bil": "ENVI", ".bip": "ENVI"
-}  # fmt: skip
+# What a raster may claim to be. A header of a few bytes can claim anything, and work would be planned by it.
+_MOST_PIXELS = 10**11
+_MOST_BANDS = 5000
+# One stored piece is decoded whole, however small a window is asked for.
+_MOST_PIECE_BYTES = 1 << 30
+# No CRS of the earth counts farther than this from its origin, be it in millimetres.
+_FARTHEST = 1e12
+# Virtual rasters of virtual rasters, and so on.
+_MOST_STEPS = 3
 
 
 @dataclass(frozen=True, slots=True)
@@ -84,11 +88,6 @@ class RasterFacts:
     good: tuple[bool, ...]
 
 
-def is_remote(path: str) -> bool:
-    """Whether GDAL reads the path through the network or another virtual file system."""
-    return path.startswith("/vsi") or "://" in path
-
-
 @contextmanager
 def gdal_errors(path: str, doing: str) -> Iterator[None]:
     """Turn errors of the raster library into a DataError about `path`."""
@@ -98,30 +97,57 @@ def gdal_errors(path: str, doing: str) -> Iterator[None]:
         reason = str(error.__cause__ or error).strip().replace("\n", " ")
         if is_remote(path):
             fix = "check the address, your access to it and the network"
-        elif not Path(path).exists():
-            fix = "check the path; it starts from the folder of the project file"
-            raise DataError("there is no such file", where=path, fix=fix) from error
         else:
             fix = "the file may be cut off or damaged; copy it again from its source"
         raise DataError(f"{doing}: {reason}", where=path, fix=fix) from error
 
 
 def _gdal_options(path: str) -> rasterio.Env:
-    """Options of the raster library while a file is opened or read."""
-    options = {} if "GDAL_CACHEMAX" in os.environ else {"GDAL_CACHEMAX": _CACHE_BYTES}
-    return rasterio.Env(**options, **(REMOTE_OPTIONS if is_remote(path) else {}))
+    """Options of the raster library while a file is opened or read: nothing but this file is asked of the network."""
+    cache = {} if "GDAL_CACHEMAX" in os.environ else {"GDAL_CACHEMAX": _CACHE_BYTES}
+    only = {"CPL_VSIL_CURL_ALLOWED_FILENAME": reachable(path) or "nothing"}
+    return rasterio.Env(**cache, **only, **(REMOTE_OPTIONS if is_remote(path) else {}))
 
 
 def open_raster(path: str) -> rasterio.DatasetReader:
-    """Open a raster for reading. Raises DataError."""
+    """Open a raster for reading, once it and all that it leads to were found fit. Raises DataError."""
+    return _open(path, depth=0)
+
+
+def _open(path: str, depth: int) -> rasterio.DatasetReader:
+    check_path(path)
+    if depth > _MOST_STEPS:
+        raise DataError(
+            "virtual rasters lead on to each other without end", where=path, fix="name their rasters instead"
+        )
+    for other in leads_to(path):
+        _open(other, depth + 1).close()
+    driver = driver_of(path, led_to=depth > 0)
     with gdal_errors(path, "this raster cannot be opened"), _gdal_options(path):
-        return rasterio.open(path, driver=_driver(path))
+        dataset = rasterio.open(path, driver=driver)
+    try:
+        _refuse_unfit(dataset, path)
+    except DataError:
+        dataset.close()
+        raise
+    return dataset
 
 
-def _driver(path: str) -> str | None:
-    if not is_remote(path):
-        return None
-    return _REMOTE_DRIVERS.get(PurePosixPath(path.partition("?")[0]).suffix.lower(), "GTiff")
+def _refuse_unfit(dataset: rasterio.DatasetReader, path: str) -> None:
+    """Refuse what could not be worked with, or would lead elsewhere."""
+    if dataset.tags(ns="OVERVIEWS").get("OVERVIEW_FILE"):
+        raise DataError("this raster's metadata lead on to another file for its overviews", where=path,
+                        fix="write it out as a new GeoTIFF without them")  # fmt: skip
+    rows, cols = dataset.shape
+    if rows * cols > _MOST_PIXELS or dataset.count > _MOST_BANDS:
+        what = f"this raster claims {rows} by {cols} pixels in {dataset.count} bands, more than can be worked with"
+        raise DataError(what, where=path, fix="cut it into sheets, or keep only the bands that are needed")
+    height, width = dataset.block_shapes[0]
+    together = dataset.count if dataset.interleaving == Interleaving.pixel else 1
+    piece = height * width * np.dtype(dataset.dtypes[0]).itemsize * together
+    if piece > _MOST_PIECE_BYTES:
+        what = f"this raster is stored in pieces of {height} by {width} pixels ({piece / 2**30:.1f} GiB each)"
+        raise DataError(what, where=path, fix="write it anew in tiles of 256 or 512 pixels")
 
 
 def read_window(dataset: rasterio.DatasetReader, path: str, bands: list[int], part: Window) -> NDArray[np.generic]:
@@ -143,7 +169,7 @@ def describe(path: str) -> RasterFacts:
                 "this raster has no coordinate reference system", where=path,
                 fix="assign it the CRS it was made in (for instance with a GIS), do not guess one",
             )  # fmt: skip
-        if dataset.transform.is_identity or dataset.transform.is_degenerate:
+        if not _has_place(dataset):
             raise DataError(
                 "this raster has no georeferencing (no pixel size or origin)", where=path,
                 fix="export it again with georeferencing, or add its world file",
@@ -163,6 +189,14 @@ def describe(path: str) -> RasterFacts:
             wavelengths_nm=tuple(_wavelength_nm(dataset, index) for index in dataset.indexes),
             good=_good_bands(dataset),
         )
+
+
+def _has_place(dataset: rasterio.DatasetReader) -> bool:
+    """Whether the transform brings pixels to places: invertible, with corners that can be reckoned with."""
+    transform = dataset.transform
+    corners = [transform @ corner for corner in ((0, 0), (dataset.width, 0), (0, dataset.height))]
+    within = all(abs(value) < _FARTHEST for corner in corners for value in corner)  # false for NaN
+    return within and not transform.is_identity and not transform.is_degenerate and abs(transform.determinant) > 1e-30
 
 
 def _scales(dataset: rasterio.DatasetReader) -> tuple[float, ...]:
