@@ -1,7 +1,7 @@
 """Files written whole or not at all, and their fingerprints.
 
 Every output goes to a temporary name beside its target, is flushed to disk and then renamed, so that a crash leaves
-the old file or the new one. Temporary names end in `TEMPORARY_SUFFIX`; stages remove leftovers of a killed run.
+the old file or the new one. Temporary names hold `TEMPORARY_SUFFIX`; the next writer removes those of a killed one.
 """
 
 from __future__ import annotations
@@ -29,19 +29,27 @@ def replacing(target: Path) -> Iterator[Path]:
     """
     temporary = target.with_name(f".{target.stem}.{uuid4().hex[:8]}{TEMPORARY_SUFFIX}{target.suffix}")
     try:
-        target.parent.mkdir(parents=True, exist_ok=True)
-        yield temporary
-        _flush(temporary)
-        temporary.replace(target)
-        _flush_folder(target.parent)
+        with write_errors(target):
+            target.parent.mkdir(parents=True, exist_ok=True)
+            yield temporary
+            _flush(temporary)
+            temporary.replace(target)
+            _flush_folder(target.parent)
+    finally:
+        with suppress(OSError):
+            temporary.unlink(missing_ok=True)
+
+
+@contextmanager
+def write_errors(target: Path) -> Iterator[None]:
+    """Turn failures to write into an OutputError about `target`."""
+    try:
+        yield
     except OSError as error:
         reason = error.strerror or str(error)
         raise OutputError(
             f"cannot be written: {reason}", where=str(target), fix="free some space or choose a folder you may write to"
         ) from error
-    finally:
-        with suppress(OSError):
-            temporary.unlink(missing_ok=True)
 
 
 def write_bytes(target: Path, content: bytes) -> None:
@@ -92,9 +100,10 @@ def sha256(path: Path) -> str:
     return digest.hexdigest()
 
 
-def remove_leftovers(folder: Path) -> int:
-    """Delete temporary files that a killed run left in `folder` (not below it). Returns how many."""
-    found = [path for path in folder.glob(f".*{TEMPORARY_SUFFIX}*") if path.is_file()]
+def remove_leftovers(folder: Path, *, below: bool = False) -> int:
+    """Delete temporary files that a killed run left in `folder`, and in all folders below it too. Returns how many."""
+    look = folder.rglob if below else folder.glob
+    found = [path for path in look(f".*{TEMPORARY_SUFFIX}*") if path.is_file()]
     for path in found:
         path.unlink(missing_ok=True)
     return len(found)

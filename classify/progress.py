@@ -131,8 +131,8 @@ class TerminalBar:
 
 
 def for_stream(*, quiet: bool) -> Progress:
-    """Choose: silent when quiet, a bar when standard error is a terminal, log lines otherwise."""
-    if quiet:
+    """Choose: silent when quiet or without standard error, a bar when that is a terminal, log lines otherwise."""
+    if quiet or sys.stderr is None:
         return SILENT
     return TerminalBar() if sys.stderr.isatty() else LogLines()
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 import hashlib
 import json
 import platform
+import time
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from datetime import UTC, datetime
@@ -22,6 +23,9 @@ from classify.errors import DataError, Problem
 from classify.files import read_json, sha256, write_json
 from classify.settings import Project
 
+# A file that changed so shortly ago can change again without another time stamp: the coarsest clocks of disks step by
+# two seconds.
+_CLOCK_STEP_NS = 3 * 10**9
 _LIBRARIES = ("numpy", "scipy", "pandas", "scikit-learn", "rasterio", "geopandas", "pyproj", "shapely", "skops")
 
 
@@ -34,6 +38,11 @@ class Snapshot:
 
     inputs: Mapping[str, Mapping[str, Any]]
     fingerprint: str
+
+    def digest(self, path: str) -> str | None:
+        """SHA-256 of an input; None if it is not there."""
+        found = self.inputs.get(path, {}).get("sha256")
+        return found if isinstance(found, str) else None
 
 
 class Record:
@@ -62,6 +71,17 @@ class Record:
         """What a stage made when it ran, below outputs/."""
         return tuple(self._content.get("stages", {}).get(stage, {}).get("outputs", {}))
 
+    def altered(self, stage: str) -> str | None:
+        """The first thing that a stage made, below outputs/, which is no longer as it was made; None if all are.
+
+        GeoPackages are left out: programs write into them when they merely show them.
+        """
+        known = self._content.get("results", {})
+        for output, digest in self._content.get("stages", {}).get(stage, {}).get("outputs", {}).items():
+            if not output.endswith(".gpkg") and self._facts(f"outputs/{output}", known)["sha256"] != digest:
+                return str(output)
+        return None
+
     def snapshot(self, sections: Iterable[str], inputs: Iterable[str], results: Iterable[str]) -> Snapshot:
         """What a stage rests on now: parts of the project file, files as written there, results below outputs/."""
         settings = self._project.model_dump(mode="json")
@@ -85,7 +105,7 @@ class Record:
         """Write that a stage has run. `whole` is False if it left something out: then it stays stale."""
         # Another stage may have been recorded since this object read the file.
         self._content = self._read()
-        facts = {output: self._facts(f"outputs/{output}", {}) for output in outputs}
+        facts = {output: self._facts(f"outputs/{output}", {}, ours=True) for output in outputs}
         stages = self._content.get("stages", {})
         stages[stage] = {
             "fingerprint": before.fingerprint if whole else None,
@@ -109,8 +129,12 @@ class Record:
         }
         write_json(self._path, self._content)
 
-    def _facts(self, written: str, known: Mapping[str, Any]) -> dict[str, Any]:
-        """Size, time of change and hash of a file; a recorded hash is kept while size and time are the same."""
+    def _facts(self, written: str, known: Mapping[str, Any], *, ours: bool = False) -> dict[str, Any]:
+        """Size, time of change and hash of a file; a recorded hash is kept while size and time are the same.
+
+        The time is left out, so that the file is always read again, while it does not tell one content from the next.
+        ours: nobody else writes this file. Times are compared for equality only, so that a clock may be set back.
+        """
         path = self._project.path(written)
         file = Path(path)
         if path.startswith("/vsi") or "://" in path or not file.is_file():
@@ -120,6 +144,8 @@ class Record:
         before: dict[str, Any] = known.get(written, {})
         if before.get("bytes") == facts.st_size and before.get("modified_ns") == facts.st_mtime_ns:
             return before
+        if not ours and time.time_ns() - facts.st_mtime_ns < _CLOCK_STEP_NS:
+            return {"bytes": facts.st_size, "modified_ns": None, "sha256": sha256(file)}
         digest = _hash_once(file, facts.st_size, facts.st_mtime_ns)
         return {"bytes": facts.st_size, "modified_ns": facts.st_mtime_ns, "sha256": digest}
 

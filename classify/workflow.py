@@ -6,6 +6,7 @@ What makes a stage stale is in `record`. A stage rests on the results of earlier
 
 from __future__ import annotations
 
+import shutil
 import time
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
@@ -16,7 +17,8 @@ from typing import Any, Literal
 from classify.assessment import assess_project
 from classify.errors import DataError, Problem
 from classify.features import Recipe, build_recipe, fit_recipe, scene_facts
-from classify.files import read_json, remove_leftovers, write_json
+from classify.files import read_json, write_json
+from classify.lock import writing
 from classify.mapping.classify_scene import MapOptions, classify_scene
 from classify.mapping.engines import cluster
 from classify.mapping.many import ManyResult, classify_many, find_scenes, time_of
@@ -71,7 +73,7 @@ class Stage:
 
     sections: parts of the project file that it reads. inputs: files of the user, as written there. reads: results of
     earlier stages, below outputs/; it cannot run without those in `needs`. outputs: what it always makes; extras: what
-    it may make besides.
+    it may make besides. scratch: a folder in which it keeps what it needs to go on after an interruption.
     """
 
     name: StageName
@@ -82,6 +84,7 @@ class Stage:
     needs: tuple[str, ...] = ()
     reads: tuple[str, ...] = ()
     extras: tuple[str, ...] = ()
+    scratch: str | None = None
     wanted: Callable[[Project], bool] = field(default=lambda project: True)
 
     @property
@@ -137,30 +140,34 @@ def run(
     """Run the named stages (default: all) that are stale, in order. A stage that is up to date gives None.
 
     `done` is called after each, so that a caller can show results as they come. Raises LandassayError from whichever
-    stage cannot go on; stages before it keep their results and their record.
+    stage cannot go on; stages before it keep their results and their record. One process at a time: raises OutputError
+    while another one writes this project's outputs.
     """
     results: dict[StageName, StageResult | None] = {}
-    for stage in STAGES:
-        if (stages is not None and stage.name not in stages) or not stage.wanted(job.project):
-            continue
-        if not force and _own_status(stage, job.project, Record(job.project)).state == "done":
-            results[stage.name] = None
-        else:
-            _require_earlier(stage, job.project)
-            results[stage.name] = _run_stage(stage, job)
-        done(stage.name, results[stage.name])
+    with writing(job.outputs, job.progress, rooms=_ROOMS):
+        for stage in STAGES:
+            if (stages is not None and stage.name not in stages) or not stage.wanted(job.project):
+                continue
+            if not force and _own_status(stage, job.project, Record(job.project)).state == "done":
+                results[stage.name] = None
+                if stage.scratch is not None:
+                    # Of a run that was interrupted and would have made something else, or the same again.
+                    shutil.rmtree(job.outputs / stage.scratch, ignore_errors=True)
+            else:
+                _require_earlier(stage, job.project)
+                results[stage.name] = _run_stage(stage, job)
+            done(stage.name, results[stage.name])
     return results
 
 
 def _run_stage(stage: Stage, job: Job) -> StageResult:
-    for name in {Path(output).parent for output in stage.outputs}:
-        if (job.outputs / name).is_dir():
-            remove_leftovers(job.outputs / name)
     outdated = [s for s in status(job.project) if s.name in _earlier(stage) and s.state == "stale"]
-    # Taken before the work: if an input changes meanwhile, the stage counts as stale afterwards.
     before = _snapshot(stage, job.project, Record(job.project))
     start = time.perf_counter()
     result = stage.work(job)
+    after = _snapshot(stage, job.project, Record(job.project))
+    if after.fingerprint != before.fingerprint:
+        result = replace(result, warnings=(*result.warnings, _changed_meanwhile(stage, before, after)), whole=False)
     said = (
         Problem(
             f"'{s.name}' is stale ({s.why}); this rests on its earlier result",
@@ -177,6 +184,16 @@ def _run_stage(stage: Stage, job: Job) -> StageResult:
         seconds=time.perf_counter() - start, warnings=result.warnings, whole=result.whole,
     )  # fmt: skip
     return result
+
+
+def _changed_meanwhile(stage: Stage, before: Snapshot, after: Snapshot) -> Problem:
+    changed = [path for path, facts in before.inputs.items() if facts["sha256"] != after.digest(path)]
+    return Problem(
+        f"this was changed while '{stage.name}' read it, so that nobody can tell what the result rests on: it counts "
+        "as stale",
+        ", ".join(changed) or "results of earlier stages", "once the files are at rest, 'landassay run' does it again",
+        "warning",
+    )  # fmt: skip
 
 
 def _require_earlier(stage: Stage, project: Project) -> None:
@@ -207,6 +224,8 @@ def _own_status(stage: Stage, project: Project, record: Record) -> StageStatus:
         return StageStatus(stage.name, "missing", f"outputs/{lacking[0]} is not there")
     if record.fingerprint(stage.name) != _snapshot(stage, project, record).fingerprint:
         return StageStatus(stage.name, "stale", "its inputs, its settings or an earlier result have changed")
+    if (altered := record.altered(stage.name)) is not None:
+        return StageStatus(stage.name, "stale", f"outputs/{altered} is not as this stage left it")
     return StageStatus(stage.name, "done")
 
 
@@ -277,7 +296,8 @@ def map_scenes(job: Job, sources: Sequence[str], folder: Path, *, overwrite: boo
     _require_earlier(next(stage for stage in STAGES if stage.name == "classify"), job.project)
     scenes = find_scenes(sources, job.project)
     model = load_model(job.outputs / "model")
-    with _map_options(job) as options:
+    rooms = [scene.name for scene in scenes]
+    with _map_options(job) as options, writing(folder, job.progress, rooms=rooms):
         return classify_many(
             model, job.project, scenes, folder, options=options, overwrite=overwrite, progress=job.progress
         )
@@ -345,6 +365,7 @@ STAGES: tuple[Stage, ...] = (
         ("map/cover.tif", "map/areas.csv", "map/item.json"), _classify,
         needs=("model/model.json", "model/model.skops"), reads=("model/reach.npz",),
         extras=("map/confidence.tif", "map/reach.tif", "map/raw.tif", "map/cover.gpkg"),
+        scratch="map/.unfinished",
     ),
     Stage(
         "assess",
@@ -360,5 +381,8 @@ STAGES: tuple[Stage, ...] = (
         ("report/report.html", "report/report.pdf", "report/tables.xlsx", "report/manifest.json"), _report,
         needs=("model/model.json", "map/cover.tif", "map/areas.csv"),
         reads=("training/review.json", "map/confidence.tif", "map/reach.tif", "assessment/assessment.json"),
+        extras=("report/data/facts.json", "report/data/areas.csv", "report/data/points.csv", "report/data/strata.csv",
+                "report/data/method.json", "report/data/assessment.json"),
     ),
 )  # fmt: skip
+_ROOMS = sorted({Path(output).parts[0] for stage in STAGES for output in stage.outputs})

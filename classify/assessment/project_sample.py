@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 
@@ -29,6 +30,7 @@ from classify.assessment.plan import read_planned_sizes
 from classify.assessment.population import Population, Scan, scan
 from classify.errors import SampleError
 from classify.files import sha256
+from classify.lock import writing
 from classify.progress import SILENT, Progress
 from classify.raster.grid import Grid
 from classify.settings import Project
@@ -55,23 +57,24 @@ class SampleRequest:
 
 def draw_sample(project: Project, outputs: Path, request: SampleRequest, progress: Progress = SILENT) -> DrawnSample:
     """Draw the sample of a project into outputs/sample/. Raises LandassayError; leaves a sample that is there alone."""
-    folder = outputs / "sample"
-    refuse_if_drawn(folder)
-    cover = request.map_file or outputs / "map" / "cover.tif"
-    population = _population(project, cover, request.options, request.away_from_training_m)
-    drawn, allocation = _drawn(folder, population, request, progress)
-    margin = request.away_from_training_m
-    more = {"allocation": allocation, "away_from_training_m": margin}
-    design = first_design(population, drawn, request.options, _map_facts(project, cover), more)
-    if margin is not None:
-        left_out = design["population"]
-        design["notes"].append(
-            f"Training polygons and {margin:g} m around them are not in the population: accuracy and areas speak of "
-            f"the rest of the map, {left_out['excluded_area_m2'] / 10_000:,.1f} ha ({left_out['excluded_pixels']:,} "
-            "pixels) less."
-        )
-        left_out["classes"] = _class_areas(project, population, request.options, progress)
-    return write_first(folder, with_drawn(design, population, drawn), population.grid)
+    with _held(outputs, progress):
+        folder = outputs / "sample"
+        refuse_if_drawn(folder)
+        cover = request.map_file or outputs / "map" / "cover.tif"
+        population = _population(project, cover, request.options, request.away_from_training_m)
+        drawn, allocation = _drawn(folder, population, request, progress)
+        margin = request.away_from_training_m
+        more = {"allocation": allocation, "away_from_training_m": margin}
+        design = first_design(population, drawn, request.options, _map_facts(project, cover), more)
+        if margin is not None:
+            left_out = design["population"]
+            design["notes"].append(
+                f"Training polygons and {margin:g} m around them are not in the population: accuracy and areas speak "
+                f"of the rest of the map, {left_out['excluded_area_m2'] / 10_000:,.1f} ha "
+                f"({left_out['excluded_pixels']:,} pixels) less."
+            )
+            left_out["classes"] = _class_areas(project, population, request.options, progress)
+        return write_first(folder, with_drawn(design, population, drawn), population.grid)
 
 
 def add_to_sample(
@@ -82,17 +85,18 @@ def add_to_sample(
     The next keys are drawn from the same map, so that old and new points together are one sample of the same design.
     Raises LandassayError.
     """
-    folder = outputs / "sample"
-    before, population = _again(project, outputs, jobs)
-    design = before.design
-    if design["kind"] == "systematic":
-        raise SampleError("a lattice cannot be added to", where=str(folder),
-                          fix="draw a new sample with more points, in another folder")  # fmt: skip
-    sizes = dict(more) if isinstance(more, Mapping) else _as_before(design["strata"], more)
-    options = replace(_options(before, jobs), reserve=0)
-    drawn = draw_units(population, lambda _: sizes, max(sizes.values(), default=0), options,
-                       taken=taken_cells(design), progress=progress)  # fmt: skip
-    return write_more(folder, before, with_drawn(design, population, drawn), population.grid)
+    with _held(outputs, progress):
+        folder = outputs / "sample"
+        before, population = _again(project, outputs, jobs)
+        design = before.design
+        if design["kind"] == "systematic":
+            raise SampleError("a lattice cannot be added to", where=str(folder),
+                              fix="draw a new sample with more points, in another folder")  # fmt: skip
+        sizes = dict(more) if isinstance(more, Mapping) else _as_before(design["strata"], more)
+        options = replace(_options(before, jobs), reserve=0)
+        drawn = draw_units(population, lambda _: sizes, max(sizes.values(), default=0), options,
+                           taken=taken_cells(design), progress=progress)  # fmt: skip
+        return write_more(folder, before, with_drawn(design, population, drawn), population.grid)
 
 
 def replace_point(project: Project, outputs: Path, point: str, reason: str) -> tuple[DrawnSample, str]:
@@ -100,9 +104,17 @@ def replace_point(project: Project, outputs: Path, point: str, reason: str) -> t
 
     Raises LandassayError.
     """
-    before, population = _again(project, outputs, 1)
-    design, fresh = with_replacement(before.design, point, reason)
-    return write_more(outputs / "sample", before, design, population.grid), fresh
+    with _held(outputs, SILENT):
+        before, population = _again(project, outputs, 1)
+        design, fresh = with_replacement(before.design, point, reason)
+        return write_more(outputs / "sample", before, design, population.grid), fresh
+
+
+@contextmanager
+def _held(outputs: Path, progress: Progress) -> Iterator[None]:
+    """No other process changes the sample meanwhile, nor the map that it is drawn from."""
+    with writing(outputs, progress), writing(outputs / "sample", progress):
+        yield
 
 
 def _again(project: Project, outputs: Path, jobs: int) -> tuple[DrawnSample, Population]:

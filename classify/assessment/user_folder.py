@@ -11,6 +11,7 @@ from pathlib import Path
 
 from classify.errors import DataError, OutputError, Problem, raise_if_errors
 from classify.files import read_json, sha256, write_json, write_text
+from classify.lock import writing
 
 
 def write_results(
@@ -22,6 +23,11 @@ def write_results(
     which nothing is checked. record: name of the file that lists what was written. Before anything is written, every
     target is checked. Raises OutputError naming each that is an input or is not ours.
     """
+    with writing(folder):
+        return _write(folder, files, record, inputs)
+
+
+def _write(folder: Path, files: Mapping[str, str], record: str, inputs: Sequence[Path] | None) -> list[Path]:
     targets = [folder / name for name in files]
     if inputs is not None:
         ours = _recorded(folder / record)

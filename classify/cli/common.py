@@ -5,6 +5,7 @@ from __future__ import annotations
 import functools
 import json
 import os
+import sys
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -41,7 +42,7 @@ class Call:
     def show(self, result: Mapping[str, Any], text: str) -> None:
         """Print the result: `result` as JSON on standard output with --json, else `text` unless --quiet."""
         if self.as_json:
-            click.echo(json.dumps(result, indent=2, ensure_ascii=False, allow_nan=False))
+            echo_json(result)
         elif not self.quiet and text:
             click.echo(text)
 
@@ -49,6 +50,12 @@ class Call:
         """Say something on standard error, whatever the output mode (not with --quiet)."""
         if not self.quiet:
             click.echo(message, err=True)
+
+
+def echo_json(content: Mapping[str, Any]) -> None:
+    """Print JSON; with characters spelt in ASCII where standard output could not take them."""
+    unicode = "utf" in (getattr(sys.stdout, "encoding", None) or "").casefold()
+    click.echo(json.dumps(content, indent=2, ensure_ascii=not unicode, allow_nan=False))
 
 
 def spoken(names: Sequence[str]) -> tuple[str, ...]:

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import errno
 import sys
 from importlib import import_module
 
 import click
 
 from classify import __version__
+from classify.cli.surroundings import Stopping, ensure_utf8, prepare_streams
 
 # command -> (module that defines `command`, one line of help). Kept here so that --help imports nothing else.
 COMMANDS = {
@@ -25,6 +27,10 @@ COMMANDS = {
     "run": ("classify.cli.run", "Run every stage that is stale, in order."),
     "status": ("classify.cli.status", "Say which stages are done, stale or missing."),
 }
+
+
+# Failures of the machine rather than of this program, wherever they come up.
+_MACHINE = {errno.ENOSPC, errno.EDQUOT, errno.EFBIG, errno.EROFS, errno.EIO, errno.EMFILE, errno.ENOMEM}
 
 
 class _LazyGroup(click.Group):
@@ -50,12 +56,17 @@ def cli() -> None:
 
 
 def entry() -> None:
-    """Run the command line. Exits 0 on success, 1 on a problem the user can mend, 2 on wrong usage."""
+    """Run the command line. Exits 0 on success, 1 on a problem the user can mend, 2 on wrong usage, and with 128 and
+    the number of the signal when it was stopped."""
+    ensure_utf8()
+    prepare_streams()
+    stopping = Stopping()
+    stopping.heed()
     try:
         cli.main(standalone_mode=False)
     except click.exceptions.Abort:
         click.echo("Stopped. Finished outputs are kept; run the same command again to go on.", err=True)
-        sys.exit(130)
+        sys.exit(stopping.exit_code)
     except click.ClickException as error:
         error.show()
         sys.exit(error.exit_code)
@@ -64,6 +75,8 @@ def entry() -> None:
     except Exception as error:
         from classify.errors import LandassayError
 
+        if isinstance(error, OSError) and error.errno in _MACHINE:
+            error = LandassayError(error.strerror or str(error), where=str(error.filename or ""))
         if not isinstance(error, LandassayError):
             raise
         click.echo(f"landassay: {error}", err=True)

@@ -2,12 +2,11 @@
 
 from __future__ import annotations
 
-import json
 from pathlib import Path
 
 import click
 
-from classify.cli.common import Call, common_options
+from classify.cli.common import Call, common_options, echo_json
 
 
 @click.command("new", help="Start a project in FOLDER (default: the current one), or export the schema.")
@@ -24,7 +23,7 @@ def command(call: Call, folder: Path | None, source: str | None, seed: int, sche
     from classify.settings.starter import PLACEHOLDER, start_project
 
     if schema:
-        click.echo(json.dumps(project_schema(), indent=2, ensure_ascii=False))
+        echo_json(project_schema())
         return
     target, draft = folder or call.project_path, PLACEHOLDER
     if source is not None:

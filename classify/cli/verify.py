@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-import json
 from dataclasses import asdict
 from pathlib import Path
 
 import click
+
+from classify.cli.common import echo_json
 
 
 @click.command("verify", help="Check a delivered report: fingerprints, numbers derived again, cells as printed.")
@@ -19,7 +20,7 @@ def command(folder: Path, quiet: bool, as_json: bool) -> None:
 
     result = verify(folder)
     if as_json:
-        click.echo(json.dumps({"sound": result.sound, **asdict(result)}, indent=2, ensure_ascii=False))
+        echo_json({"sound": result.sound, **asdict(result)})
     else:
         for finding in result.findings:
             click.echo(f"{finding.where}: {finding.what}", err=True)

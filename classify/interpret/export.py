@@ -16,6 +16,7 @@ from classify.errors import OutputError, SampleError
 from classify.files import read_json, replacing, sha256, write_json
 from classify.interpret.journal import NOTHING, Journal, Label
 from classify.interpret.session import JOURNAL_FILE, agreement
+from classify.lock import writing
 
 Status = Literal["labelled", "cannot tell", "in dispute", "settled", "open"]
 EXPORT_FILE = "reference.gpkg"
@@ -41,7 +42,11 @@ def export_labels(outputs: Path, classes: Sequence[str]) -> Export:
     observed is blank where nobody could tell, and where interpreters disagree and nobody has settled it. A file that
     another program has changed since it was written here is not overwritten. Raises LandassayError.
     """
-    folder = outputs / "sample"
+    with writing(outputs / "sample"):
+        return _export(outputs / "sample", classes)
+
+
+def _export(folder: Path, classes: Sequence[str]) -> Export:
     sample = read_drawn(folder)
     if not (folder / JOURNAL_FILE).exists():
         raise SampleError("nothing was labelled yet", where=str(folder), fix="run 'landassay interpret' first")
