@@ -125,10 +125,10 @@ def test_spatial_blocks_are_kept_whole() -> None:
     model = fit(training, block_m=1000.0, importance=True)
     assert model.card["screening"]["kept_whole"] == model.card["importance"]["kept_whole"] == "blocks of 1000 m"
     blocks = spatial_blocks(training.rows, training.cols, training.polygon, 100)
-    expected = fit_reach(training, 3, 5, groups=blocks)
+    expected = fit_reach(training, seed=5, groups=blocks)
     assert expected is not None and model.reach is not None
     assert model.reach.threshold == expected.threshold
-    assert expected.threshold != fit_reach(training, 3, 5).threshold  # type: ignore[union-attr]
+    assert expected.threshold != fit_reach(training, seed=5).threshold  # type: ignore[union-attr]
 
 
 def test_search_is_seeded_and_finds_the_setting_that_matters() -> None:

@@ -72,11 +72,7 @@ def test_a_clean_copy_raises_at_most_one_alarm_in_thirty(sample: tuple[Project, 
 
 
 def test_reach_flags_a_class_that_training_left_out(sample: tuple[Project, Scene, TrainingSet]) -> None:
-    """Away from mixed pixels at edges, over the whole scene, against the truth that no stage reads.
-
-    Clay loam and sandy soil, left out, look so much like each other and like dry grass that part of them is within
-    reach; the aim of 80 % holds for the others and on average.
-    """
+    """Away from mixed pixels at edges, over the whole scene, against the truth that no stage reads."""
     project, scene, training = sample
     with rasterio.open(FOLDER / "truth.tif") as source:
         truth = source.read(1)
@@ -89,13 +85,9 @@ def test_reach_flags_a_class_that_training_left_out(sample: tuple[Project, Scene
     usable = np.random.default_rng(0).choice(usable, 15_000, replace=False)
     pixels, truth = features[usable], truth.ravel()[usable]
     sound = training.subset(~np.isin(training.polygon, [fault["polygon"] for fault in FAULTS]))
-    flagged = {}
     for entry in project.classes:
         reach = fit_reach(sound.subset(sound.codes != entry.code))
         assert reach is not None
         beyond = reach.of(pixels) > 1
-        flagged[entry.name] = float(beyond[truth == entry.code].mean())
+        assert beyond[truth == entry.code].mean() >= 0.8, entry.name
         assert beyond[truth != entry.code].mean() <= 0.05, entry.name
-    assert np.mean(list(flagged.values())) >= 0.8, flagged
-    for name, share in flagged.items():
-        assert share >= (0.4 if name in ("Clay loam", "Sandy soil") else 0.8), flagged

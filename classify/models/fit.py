@@ -73,7 +73,7 @@ def fit_model(  # noqa: PLR0917 - a fixed contract
     screening = _screen(plan, plan.maker(kind, params, _SCREENING_TREES), choice)
     calibration = calibrate(screening, training.codes, training.polygon, kind)
     importance = _importance(plan, plan.maker(kind, params, _IMPORTANCE_TREES), recipe)
-    reach = fit_reach(training, project.model.folds, seed, groups=plan.groups)
+    reach = fit_reach(training, seed=seed, groups=plan.groups)
     fitted_on = _thinned(training, kind, project, seed)
     progress.note(f"Fitting the {kind} on {len(fitted_on.codes)} pixels")
     estimator = plan.maker(kind, params)(seed)

@@ -1,56 +1,69 @@
 """Reach: is a pixel inside what the training data cover?
 
-A dissimilarity index adapted from Meyer & Pebesma 2021, "Predicting into unknown space? Estimating the area of
-applicability of spatial prediction models", Methods in Ecology and Evolution 12: distance to the nearest training pixel
-over the mean distance among training pixels. Its threshold is the largest index, outliers aside, of training pixels
-towards the polygons (or blocks) of other folds.
+The idea is that of Meyer & Pebesma 2021, "Predicting into unknown space? Estimating the area of applicability of
+spatial prediction models", Methods in Ecology and Evolution 12: an index of how unlike the training data a pixel is,
+and a threshold from training data held out as in cross-validation. The index is another one. Theirs is the distance to
+the nearest training pixel in standardised features, weighted by their importance, over the mean distance among training
+pixels: one yardstick for all, which the class that varies most sets, so that a new class between the others stays
+within reach. Here:
 
-Distances are taken differently from the paper: it weighs each standardised feature by its importance, which the many
-features of one scene that repeat each other share out among themselves. Here features are decorrelated and scaled by
-their covariance within classes, so that a direction counts by how much it says beyond the spread of a class.
+- features are scaled and decorrelated by their covariance within polygons, so that a direction counts by how much it
+  says beyond the noise of one place;
+- the yardstick is local: the distance to the tenth nearest training pixel, over the mean of that same distance at those
+  ten. This is the local outlier factor (Breunig, Kriegel, Ng & Sander 2000, SIGMOD Record 29) in the simplified form of
+  Schubert, Zimek & Kriegel 2014, Data Mining and Knowledge Discovery 28;
+- the threshold is the value that one in twenty training pixels exceeds when their polygon is held out.
 """
 
 from __future__ import annotations
 
 import io
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.spatial.distance import pdist
 from sklearn.covariance import ledoit_wolf
 
 from classify.errors import ModelError
 from classify.models.folds import group_folds
 from classify.models.forest_kernels import jit
+from classify.models.nearest import Points, group_points
 from classify.training.dataset import TrainingSet
 from classify.training.draws import even_draw
 
 # Pixels that stand for the training set, drawn evenly over the polygons of each class.
-_POINTS = 2000
-# Points taken at a time: a few vectors of what processors hold.
-_LANES = 128
+_POINTS = 5000
+_NEIGHBOURS = 10
+# Share of training pixels, their polygon held out, that lie beyond reach.
+_BEYOND = 0.05
 
 
 @dataclass(frozen=True, eq=False)
 class Reach:
     """centre: float64 (f,). rotation: float64 (f, d), takes a pixel less the centre to the d directions in which
-    distances are measured. points: float32 (m, d), training pixels there. mean_distance: among them. threshold: index
-    beyond which a pixel is out of reach.
+    distances are measured. points: float32 (m, d), training pixels there. spacing: float32 (m,), from each to its
+    `neighbours`-th nearest. threshold: index beyond which a pixel is out of reach.
     """
 
     centre: NDArray[np.float64]
     rotation: NDArray[np.float64]
     points: NDArray[np.float32]
-    mean_distance: float
+    spacing: NDArray[np.float32]
+    neighbours: int
     threshold: float
 
+    @cached_property
+    def _arranged(self) -> Points:
+        return group_points(self.points, self.spacing)
+
     def index(self, features: NDArray[np.float32]) -> NDArray[np.float32]:
-        """Dissimilarity index of pixels with features (n, f), float32 (n,); NaN where a feature is not finite."""
+        """Local dissimilarity of pixels with features (n, f), float32 (n,): about 1 amid training pixels, more away
+        from them; NaN where a feature is not finite."""
         turned = _turn(np.ascontiguousarray(features, dtype=np.float32), self.centre, self.rotation)
-        nearest = _nearest_squared(turned, self.points)
-        return (np.sqrt(nearest) / np.float32(self.mean_distance)).astype(np.float32)
+        distance, spacing = self._arranged.nearest(turned, self.neighbours)
+        return distance / spacing
 
     def of(self, features: NDArray[np.float32]) -> NDArray[np.float32]:
         """Index over threshold, float32 (n,): up to 1 is within reach, more is beyond; NaN where not finite."""
@@ -67,8 +80,8 @@ class Reach:
         """An .npz archive of plain arrays."""
         buffer = io.BytesIO()
         np.savez(
-            buffer, centre=self.centre, rotation=self.rotation, points=self.points,
-            numbers=np.array([self.mean_distance, self.threshold]),
+            buffer, centre=self.centre, rotation=self.rotation, points=self.points, spacing=self.spacing,
+            numbers=np.array([self.neighbours, self.threshold]),
         )  # fmt: skip
         return buffer.getvalue()
 
@@ -77,76 +90,102 @@ class Reach:
         """What `to_bytes` wrote, for a model of so many features. Raises ModelError; never unpickles."""
         try:
             with np.load(io.BytesIO(content), allow_pickle=False) as held:
-                centre, rotation, points, numbers = (held[n] for n in ("centre", "rotation", "points", "numbers"))
-            shapes = centre.shape == (features,) and rotation.shape == (features, points.shape[1])
-            if not (shapes and numbers.shape == (2,) and (numbers > 0).all() and np.isfinite(points).all()):
+                names = ("centre", "rotation", "points", "spacing", "numbers")
+                centre, rotation, points, spacing, numbers = (held[name] for name in names)
+            count, width = points.shape
+            fit = (centre.shape, rotation.shape, spacing.shape) == ((features,), (features, width), (count,))
+            sound = all(np.isfinite(part).all() for part in (centre, rotation, points, spacing, numbers))
+            if not (fit and sound and (spacing > 0).all() and 1 <= numbers[0] <= count and numbers[1] > 0):
                 raise ValueError("arrays do not fit each other or the model")
         except Exception as error:  # NumPy and zipfile raise many kinds for a damaged file
             raise ModelError(
                 f"the file of the model's reach is damaged: {error}", fix="train the model again"
             ) from error
-        return cls(centre, rotation, points.astype(np.float32), float(numbers[0]), float(numbers[1]))
+        neighbours, threshold = int(numbers[0]), float(numbers[1])
+        return cls(centre, rotation, points.astype(np.float32), spacing.astype(np.float32), neighbours, threshold)
 
     def to_json(self) -> dict[str, Any]:
         """Plain data for model.json."""
         return {
-            "method": "dissimilarity index adapted from Meyer & Pebesma 2021",
-            "differs": "features are whitened by their covariance within classes, not weighted by importance",
+            "method": "local outlier factor, simplified (Schubert, Zimek & Kriegel 2014), of features whitened within "
+            "polygons; threshold from held-out polygons after Meyer & Pebesma 2021",
+            "neighbours": self.neighbours,
             "threshold": self.threshold,
-            "mean_distance": self.mean_distance,
+            "held_out_beyond": _BEYOND,
             "points": len(self.points),
         }
 
 
 def fit_reach(
-    training: TrainingSet, folds: int = 5, seed: int = 0, *, groups: NDArray[np.int32] | None = None
+    training: TrainingSet, folds: int = 10, seed: int = 0, *, groups: NDArray[np.int32] | None = None
 ) -> Reach | None:
     """Reach of a training set; None if it has no spread to measure by, or no second polygon to measure towards.
 
-    The threshold is the largest index that is no outlier (upper quartile plus 1.5 interquartile ranges), where the
-    index of a training pixel is taken towards the polygons, or the blocks that `groups` (n,) names, of other folds.
+    The threshold is exceeded by 5 % of the training pixels when each is compared with the polygons, or the blocks that
+    `groups` (n,) names, of other folds.
     """
-    chosen = _spread_over_classes(training, seed)
-    features, codes = training.features[chosen].astype(np.float64), training.codes[chosen]
-    centre = features.mean(axis=0)
-    rotation = _within_classes(features, codes)
+    centre = training.features.mean(axis=0, dtype=np.float64)
+    rotation = _directions(training.features - centre, training)
     if rotation is None:
         return None
+    chosen = _spread_over_classes(training, seed)
     points = _turn(training.features[chosen], centre, rotation)
-    mean_distance = float(pdist(points[:: max(1, len(points) // 1000)]).mean())
-    groups = training.polygon if groups is None else groups
-    fold = group_folds(training.codes, groups, folds, seed).fold[chosen]
-    index = [
-        np.sqrt(_nearest_squared(points[fold == number], points[fold != number]))
-        for number in np.unique(fold[fold >= 0])
-        if (fold != number).any()
-    ]
-    if not index or mean_distance <= 0:
+    codes, groups = training.codes, training.polygon if groups is None else groups
+    fold = group_folds(codes, groups, folds, seed).fold[chosen]
+    smallest = int(np.unique(codes[chosen], return_counts=True)[1].min())
+    neighbours = max(1, min(_NEIGHBOURS, smallest // 2))
+    index = []
+    for number in np.unique(fold[fold >= 0]):
+        known = points[fold != number]
+        if len(known) > neighbours:
+            distance, spacing = group_points(known, _spacing(known, neighbours)).nearest(
+                points[fold == number], neighbours
+            )
+            index.append(distance / spacing)
+    if not index:
         return None
-    values = np.concatenate(index) / mean_distance
-    low, high = np.quantile(values, [0.25, 0.75])
-    threshold = float(values[values <= high + 1.5 * (high - low)].max())
-    return Reach(centre, rotation, points, mean_distance, threshold) if threshold > 0 else None
+    threshold = float(np.quantile(np.concatenate(index), 1 - _BEYOND))
+    return Reach(centre, rotation, points, _spacing(points, neighbours), neighbours, threshold)
 
 
-def _within_classes(features: NDArray[np.float64], codes: NDArray[np.uint8]) -> NDArray[np.float64] | None:
-    """Directions (f, d) in which classes have unit covariance on average; shrunk, so that few pixels will do
-    (Ledoit & Wolf 2004). None if no feature moves."""
+def _spacing(points: NDArray[np.float32], neighbours: int) -> NDArray[np.float32]:
+    """From each point (m, d) to its `neighbours`-th nearest other one, float32 (m,). Pixels that repeat each other have
+    none, and would put everything else infinitely far: at least a hundredth of the usual one."""
+    distance, _ = group_points(points, np.zeros(len(points), np.float32)).nearest(points, neighbours + 1)
+    usual = np.median(distance[distance > 0]) if (distance > 0).any() else 1.0
+    return np.maximum(distance, np.float32(usual / 100))
+
+
+def _directions(features: NDArray[np.float64], training: TrainingSet) -> NDArray[np.float64] | None:
+    """Directions (f, d) in which polygons have unit covariance on average; shrunk, so that few pixels will do (Ledoit &
+    Wolf 2004). Those in which polygons differ most come first, which is where the search parts points. None if no
+    feature moves. Where polygons are so small that they show no covariance, that within classes is taken."""
     spread = features.std(axis=0)
-    moving = spread > 1e-9 * np.maximum(1.0, np.abs(features).max(axis=0))
+    moving = spread > 1e-9 * np.maximum(1.0, np.abs(training.features).max(axis=0))
     if not moving.any():
         return None
     scaled = features[:, moving] / spread[moving]
-    for code in np.unique(codes):
-        scaled[codes == code] -= scaled[codes == code].mean(axis=0)
-    variances, directions = np.linalg.eigh(ledoit_wolf(scaled, assume_centered=True)[0])
-    # A direction in which no class spreads at all would make every other pixel infinitely far.
+    spare = len(scaled) - len(np.unique(training.polygon))
+    within = _less_means(scaled, training.polygon if spare > 5 * moving.sum() else training.codes)
+    variances, axes = np.linalg.eigh(ledoit_wolf(within, assume_centered=True)[0])
+    # A direction in which no polygon spreads at all would make every other pixel infinitely far.
     kept = np.maximum(variances, 1e-4 * variances.max())
     if kept.max() <= 0:
         return None
+    white = axes / np.sqrt(kept)
+    _, turned = np.linalg.eigh(np.cov(scaled @ white, rowvar=False).reshape(len(kept), len(kept)))
     rotation = np.zeros((features.shape[1], len(kept)))
-    rotation[moving] = directions / np.sqrt(kept) / spread[moving][:, None]
+    rotation[moving] = white @ turned[:, ::-1] / spread[moving][:, None]
     return rotation
+
+
+def _less_means(values: NDArray[np.float64], groups: NDArray[Any]) -> NDArray[np.float64]:
+    """Values (n, f) less the mean of their group (n,)."""
+    _, member, size = np.unique(groups, return_inverse=True, return_counts=True)
+    sums = np.zeros((len(size), values.shape[1]))
+    np.add.at(sums, member, values)
+    centred: NDArray[np.float64] = values - (sums / size[:, None])[member]
+    return centred
 
 
 def _spread_over_classes(training: TrainingSet, seed: int) -> NDArray[np.int64]:
@@ -156,36 +195,6 @@ def _spread_over_classes(training: TrainingSet, seed: int) -> NDArray[np.int64]:
         mine = np.flatnonzero(training.codes == code)
         parts.append(mine[even_draw(training.polygon[mine], max(1, _POINTS // len(codes)), seed)])
     return np.sort(np.concatenate(parts))
-
-
-def _nearest_squared(pixels: NDArray[np.float32], points: NDArray[np.float32]) -> NDArray[np.float32]:
-    """Squared distance float32 (n,) from pixels (n, d) to the nearest of points (m, d); NaN where not finite."""
-    padded = np.full((-(-len(points) // _LANES) * _LANES, points.shape[1]), np.inf, dtype=np.float32)
-    padded[: len(points)] = points
-    lanes = np.ascontiguousarray(padded.reshape(-1, _LANES, points.shape[1]).transpose(0, 2, 1))
-    nearest = np.empty(len(pixels), dtype=np.float32)
-    _find_nearest(np.ascontiguousarray(pixels), lanes, nearest)
-    nearest[~np.isfinite(pixels).all(axis=1)] = np.nan
-    return nearest
-
-
-@jit
-def _find_nearest(pixels, lanes, nearest):  # type: ignore[no-untyped-def]  # noqa: ANN001, ANN202
-    """The same for points in groups (g, d, lanes), so that each step of the inner loops is one for a whole group."""
-    square = np.empty(_LANES, dtype=np.float32)
-    least = np.empty(_LANES, dtype=np.float32)
-    for pixel in range(len(pixels)):
-        least[:] = np.inf
-        for group in range(len(lanes)):
-            square[:] = 0
-            for direction in range(lanes.shape[1]):
-                here = pixels[pixel, direction]
-                for lane in range(_LANES):
-                    gap = lanes[group, direction, lane] - here
-                    square[lane] += gap * gap
-            for lane in range(_LANES):
-                least[lane] = square[lane] if square[lane] < least[lane] else least[lane]
-        nearest[pixel] = least.min()
 
 
 @jit
