@@ -57,7 +57,7 @@ def test_a_second_writer_is_refused_with_the_name_of_the_first_and_changes_nothi
             run(Job(project), stages)
         message = str(refused.value)
         assert f"process {first.pid} on {socket.gethostname()}" in message
-        assert str(small_project / "outputs") in message.split(":")[0]
+        assert str(small_project / "outputs") in message.split(":", maxsplit=1)[0]
         assert time.strftime("%Y-%m-%d") in message
         assert str(small_project) in message.split(", since", 1)[1], "the command line of the holder"
         assert "wait until it ends" in message
