@@ -148,7 +148,7 @@ def test_reading_does_not_run_ahead_of_slow_work(made, monkeypatch):
             time.sleep(0.03)
             return super().compute(*arguments)
 
-    monkeypatch.setattr(engines, "_LOOK_UP_S", 0.005)
+    monkeypatch.setattr(engines, "LOOK_UP_S", 0.005)
     windows = list(enumerate(scene.grid.blocks(24)))
     for received, _ in enumerate(engines.Threads(2).run(Watched(model, scene), windows)):
         ahead.append(len(begun) - received)
@@ -301,9 +301,11 @@ def run_killed(map_into, out, after_lines, pause_s):
 
 @pytest.mark.skipif(sys.platform == "win32", reason="forks")
 @pytest.mark.filterwarnings("ignore:This process:DeprecationWarning")
-def test_ctrl_c_ends_soon_and_keeps_what_is_done(made, tmp_path):
+@pytest.mark.parametrize(("block_px", "stored", "times"), [(96, 0, 1), (16, 2, 1), (16, 2, 2)])
+def test_ctrl_c_ends_soon_and_keeps_what_is_done(made, tmp_path, block_px, stored, times):
     _, model, _, map_into = made
-    # A model so slow that one block takes a quarter of a minute.
+    map_into(tmp_path / "first")  # compiles what is not yet compiled
+    # A model so slow that a block of 96 pixels takes a quarter of a minute.
     slow = model.predict_both
 
     def predict_both(pixels):
@@ -314,20 +316,31 @@ def test_ctrl_c_ends_soon_and_keeps_what_is_done(made, tmp_path):
         patch.setattr(blocks, "_ROWS", 200)
         patch.setattr(type(model), "predict_both", lambda self, pixels: predict_both(pixels))
         process = multiprocessing.get_context("fork").Process(
-            target=map_into, args=(tmp_path, replace(OPTIONS, block_px=96, jobs=2)), daemon=True
+            target=map_into, args=(tmp_path, replace(OPTIONS, block_px=block_px, jobs=2)), daemon=True
         )
         process.start()
-        while not (tmp_path / FOLDER / "journal.jsonl").exists():
+        journal = tmp_path / FOLDER / "journal.jsonl"
+        while not (journal.exists() and journal.read_bytes().count(b"\n") > stored):
             time.sleep(0.01)
         time.sleep(0.5)
         start = time.monotonic()
-        os.kill(process.pid, signal.SIGINT)
-        process.join(30)
-        assert time.monotonic() - start < 5
+        for _ in range(times):
+            os.kill(process.pid, signal.SIGINT)
+            time.sleep(0.05)
+        process.join(20)
+        assert time.monotonic() - start < 2
         assert process.exitcode == 1
     assert not (tmp_path / "cover.tif").exists()
-    map_into(tmp_path, replace(OPTIONS, block_px=96))
+    done = map_into(tmp_path, replace(OPTIONS, block_px=block_px))
+    assert done.resumed_blocks >= stored
     assert (tmp_path / "cover.tif").exists()
+
+
+def test_an_error_in_one_block_ends_the_work_while_others_wait(made, tmp_path):
+    _, _, scene, map_into = made
+    lost = replace(scene, bands=tuple(replace(band, path="/nowhere/b.tif") for band in scene.bands))
+    with pytest.raises(DataError, match="no such file"):
+        map_into(tmp_path, replace(OPTIONS, jobs=2), scene=lost)
 
 
 @pytest.mark.skipif(sys.platform == "win32", reason="forks")

@@ -29,8 +29,8 @@ NO_PERCENT = 255
 NO_VALUE: Mapping[LayerName, int] = {"cover": NO_CLASS, "confidence": NO_PERCENT, "reach": NO_PERCENT}
 # Reach in percent up to this is within what the training data cover.
 WITHIN_REACH = 100
-# Pixels labelled at a time; between such parts a block can be stopped. A fraction of a second with the slowest models.
-_ROWS = 16_384
+# Pixels labelled at a time; between such parts a block can be stopped. A second with the slowest models.
+_ROWS = 4096
 
 
 class Stopped(Exception):  # noqa: N818 - not an error: someone asked for it

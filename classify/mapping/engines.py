@@ -6,7 +6,8 @@ An engine gives blocks in whatever order they are done, with a bounded number un
 from __future__ import annotations
 
 from collections.abc import Generator, Sequence
-from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
+from concurrent.futures import FIRST_COMPLETED, Future, wait
+from contextlib import closing
 from dataclasses import dataclass
 from itertools import islice
 from threading import Event
@@ -17,14 +18,13 @@ from threadpoolctl import threadpool_limits
 from classify.errors import LandassayError, Problem
 from classify.mapping.blocks import Block, BlockWork
 from classify.raster.grid import Window
+from classify.threads import LOOK_UP_S, stoppable_pool
 
 if TYPE_CHECKING:
     from classify.mapping.cluster import Cluster
 
 # Blocks under way per worker: one computed, one read or waiting to be written.
 _UNDER_WAY = 2
-# How often the waiting thread looks up, so that Ctrl-C is heard on every system, in seconds.
-_LOOK_UP_S = 0.5
 
 Numbered = tuple[int, Window]
 
@@ -63,8 +63,9 @@ class Threads:
         remaining = iter(windows)
         with (
             threadpool_limits(1),
-            ThreadPoolExecutor(self.jobs, "read") as readers,
-            ThreadPoolExecutor(self.jobs, "compute") as computers,
+            closing(work),
+            stoppable_pool(self.jobs, "compute") as computers,
+            stoppable_pool(self.jobs, "read") as readers,
         ):
             under_way: set[Future[Block]] = set()
 
@@ -78,12 +79,8 @@ class Threads:
                         under_way.add(start(number, window))
                     if not under_way:
                         return
-                    done, under_way = wait(under_way, timeout=_LOOK_UP_S, return_when=FIRST_COMPLETED)
+                    done, under_way = wait(under_way, timeout=LOOK_UP_S, return_when=FIRST_COMPLETED)
                     for future in done:
                         yield future.result()
             finally:
                 stop.set()
-                for pool in (readers, computers):
-                    pool.shutdown(wait=False, cancel_futures=True)
-                wait(under_way)
-                work.close()

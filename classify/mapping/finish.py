@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -22,6 +21,7 @@ from classify.progress import Progress
 from classify.raster.grid import Window
 from classify.settings import ClassSettings
 from classify.settings.model import M2_PER_UNIT
+from classify.threads import stoppable_pool
 
 
 @dataclass(frozen=True, slots=True)
@@ -101,7 +101,7 @@ def _tallies(
         reach = store.raster("reach").read(window) if "reach" in store.layers else None
         return tally(store.grid, window, codes, reach, before.unreadable)
 
-    with ThreadPoolExecutor(jobs) as pool:
+    with stoppable_pool(jobs) as pool:
         return list(pool.map(one, windows, computed))
 
 

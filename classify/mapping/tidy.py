@@ -12,7 +12,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from itertools import count
 from pathlib import Path
@@ -28,6 +27,7 @@ from classify.mapping.patches import find_patches, majority, neighbours_of_small
 from classify.progress import SILENT, Progress
 from classify.raster.area import ground_areas_m2
 from classify.raster.grid import Grid, Window
+from classify.threads import stoppable_pool
 
 # The margin of a block is twice the longest patch below the unit; beyond this a block would not fit into memory.
 _LONGEST_PX = 1000
@@ -159,7 +159,7 @@ def _by_block(
         return bool((result != codes[rows, cols]).any())
 
     changed = False
-    with progress.task("Tidying the map", len(windows)) as task, ThreadPoolExecutor(jobs) as pool:
+    with progress.task("Tidying the map", len(windows)) as task, stoppable_pool(jobs) as pool:
         for differs in pool.map(one, windows):
             changed |= differs
             task.advance()

@@ -8,10 +8,9 @@ target.
 from __future__ import annotations
 
 import xml.etree.ElementTree as ET
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
-from threading import Thread
 from typing import Literal
 
 import rasterio.shutil
@@ -20,6 +19,7 @@ from rasterio.errors import RasterioError
 from classify.errors import OutputError
 from classify.files import replacing, write_bytes
 from classify.mapping.byte_raster import ByteRaster
+from classify.threads import aside
 
 TILE_PX = 512
 
@@ -46,7 +46,7 @@ def write_cog(source: ByteRaster, target: Path, layer: Layer) -> None:
     with replacing(target) as finished:
         try:
             described.write_bytes(_virtual_raster(source, layer))
-            _heeding_interrupts(lambda: _copy(described, finished, layer))
+            aside(lambda: _copy(described, finished, layer))
         except RasterioError as error:
             raise OutputError(f"cannot be written: {error}", where=str(target), fix="free some space") from error
         finally:
@@ -61,24 +61,6 @@ def _copy(source: Path, target: Path, layer: Layer) -> None:
         source, target, driver="COG", compress="deflate", blocksize=TILE_PX, overview_resampling=layer.overviews,
         overview_compress="deflate", bigtiff="if_safer", num_threads=1,
     )  # fmt: skip
-
-
-def _heeding_interrupts(work: Callable[[], None]) -> None:
-    """Do `work` in a thread of its own: GDAL would not return for Ctrl-C before its copy is complete."""
-    failed: list[BaseException] = []
-
-    def guarded() -> None:
-        try:
-            work()
-        except BaseException as error:  # handed to the waiting thread below
-            failed.append(error)
-
-    thread = Thread(target=guarded, daemon=True)
-    thread.start()
-    while thread.is_alive():
-        thread.join(0.5)
-    if failed:
-        raise failed[0]
 
 
 def _virtual_raster(source: ByteRaster, layer: Layer) -> bytes:
