@@ -12,12 +12,12 @@ from typing import Any, TypeVar
 
 from classify.assessment.reference import read_labels
 from classify.errors import LandassayError, Problem
-from classify.features import Recipe, SceneFacts, build_recipe, fit_recipe, index_availability, scene_facts
+from classify.features import Recipe, SceneFacts, build_recipe, index_availability, scene_facts, scene_recipe
 from classify.models import check_classes
 from classify.progress import SILENT, Progress
 from classify.raster.scene import Scene, open_scene
 from classify.settings import Project
-from classify.training import TrainingSet, extract_pixels, read_polygons
+from classify.training import PixelCaps, TrainingSet, extract_pixels, read_polygons
 
 _T = TypeVar("_T")
 
@@ -65,7 +65,10 @@ def check_project(project: Project, jobs: int = 1, progress: Progress = SILENT) 
         _add(result, scene.warnings)
         polygons = _attempt(result, lambda: read_polygons(project, scene.grid))
         if polygons is not None and recipe is not None:
-            result.training = _attempt(result, lambda: extract_pixels(polygons, scene, recipe, jobs, progress))
+            caps = PixelCaps.of(project)
+            result.training = _attempt(
+                result, lambda: extract_pixels(polygons, scene, recipe, jobs, progress, caps=caps)
+            )
         if result.training is not None:
             _add(result, result.training.problems)
             _add(result, check_classes(result.training, project))
@@ -90,8 +93,7 @@ def _recipe(project: Project, scene: Scene | None, progress: Progress) -> Recipe
     """The recipe, fitted if there is a scene; without one, of those features that the settings alone can judge."""
     wanted = project.features
     if scene is not None:
-        recipe = build_recipe(wanted, scene.roles, scene_facts(scene))
-        return fit_recipe(recipe, scene, project.project.seed, progress)
+        return scene_recipe(project, scene, progress)
     if wanted.terrain or wanted.absorption or wanted.smoothing or wanted.components:  # and what is made from them
         rest: dict[str, Any] = {
             "terrain": [],

@@ -16,7 +16,7 @@ from typing import Any, Literal
 
 from classify.assessment import assess_project
 from classify.errors import DataError, Problem
-from classify.features import Recipe, build_recipe, fit_recipe, scene_facts
+from classify.features import Recipe, scene_recipe
 from classify.files import read_json, write_json
 from classify.lock import writing
 from classify.mapping.classify_scene import MapOptions, classify_scene
@@ -260,14 +260,11 @@ def _train(job: Job) -> StageResult:
 
 
 def _training_pixels(job: Job) -> tuple[TrainingSet, Recipe, tuple[Problem, ...]]:
-    project, seed = job.project, job.project.project.seed
+    project = job.project
     scene = open_scene(project.scene, project)
-    recipe = build_recipe(project.features, scene.roles, scene_facts(scene))
-    recipe = fit_recipe(recipe, scene, seed, job.progress)
+    recipe = scene_recipe(project, scene, job.progress)
     polygons = read_polygons(project, scene.grid)
-    settings = project.training
-    caps = PixelCaps(settings.pixels_per_polygon, settings.pixels_per_class, seed=seed)
-    training = extract_pixels(polygons, scene, recipe, job.jobs, job.progress, caps=caps)
+    training = extract_pixels(polygons, scene, recipe, job.jobs, job.progress, caps=PixelCaps.of(project))
     return training, recipe, (*scene.warnings, *training.problems)
 
 

@@ -2,11 +2,19 @@
 
 from __future__ import annotations
 
+from typing import ClassVar
+
 import numpy as np
+import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from sklearn.ensemble import RandomForestClassifier
+from training_sets import training_set
 
-from classify.models.folds import group_folds, spatial_blocks
+from classify.models.folds import group_folds, kept_whole, spatial_blocks
+from classify.models.importance import measure_importance
+from classify.models.learning import learning_curve
+from classify.models.validate import ScreenOptions, screen
 
 
 @st.composite
@@ -68,3 +76,43 @@ def test_blocks_keep_polygons_whole_and_near_ones_together(seed: int, size: int)
         for b in range(30):
             same = by_polygon[a + 1] == by_polygon[b + 1]
             assert same == bool((middle[a] == middle[b]).all())
+
+
+class _Watched(RandomForestClassifier):
+    """A forest that remembers which pixels it was fitted on and asked for, by the number in their first feature."""
+
+    seen: ClassVar[list[_Watched]] = []
+
+    def fit(self, features: np.ndarray, codes: np.ndarray) -> _Watched:  # type: ignore[override]
+        self.learnt_, self.asked_ = set(features[:, 0].astype(int)), set[int]()
+        _Watched.seen.append(self)
+        return super().fit(features, codes)  # type: ignore[no-any-return]
+
+    def predict_proba(self, features: np.ndarray) -> np.ndarray:
+        self.asked_ |= set(features[:, 0].astype(int))
+        return super().predict_proba(features)
+
+
+@pytest.mark.parametrize("block_m", [None, 800.0])
+def test_whatever_is_held_out_no_model_is_asked_for_pixels_of_what_it_learnt_from(block_m: float | None) -> None:
+    """Screening, the learning curve and importance: every fit of every one of them, by polygons and by blocks."""
+    training = training_set(polygons=(9, 9, 9), pixels=6)
+    training.features[:, 0] = np.arange(len(training.codes))
+    groups, _ = kept_whole(training, block_m)
+    assert len(np.unique(groups)) < 27 or block_m is None
+    options = ScreenOptions(folds=4, repeats=2, leaky=False)
+    rest = {"all but the number": training.feature_names[1:]}
+
+    def forest(seed: int) -> _Watched:
+        return _Watched(5, random_state=seed)
+
+    _Watched.seen.clear()
+    screen(training, forest, options, groups=groups)
+    screened = len(_Watched.seen)
+    learning_curve(training, forest, options, groups=groups)
+    curved = len(_Watched.seen)
+    measure_importance(training, forest, rest, options, kept_whole=groups)
+    assert len(_Watched.seen) > curved > screened == 8
+    for model in _Watched.seen:
+        assert model.asked_
+        assert not set(groups[list(model.learnt_)]) & set(groups[list(model.asked_)])

@@ -3,7 +3,7 @@
 from classify.features.absorption import Dip, dips
 from classify.features.build import build_recipe
 from classify.features.facts import SceneFacts, scene_facts
-from classify.features.fit import fit_recipe
+from classify.features.fit import fit_recipe, scene_recipe
 from classify.features.fitness import recipe_findings
 from classify.features.formula import Formula, FormulaError, parse_formula
 from classify.features.indices import Availability, Index, index_availability, index_catalogue
@@ -25,4 +25,5 @@ __all__ = [
     "parse_formula",
     "recipe_findings",
     "scene_facts",
+    "scene_recipe",
 ]

@@ -12,15 +12,24 @@ import numpy as np
 from numpy.typing import NDArray
 
 from classify.errors import DataError
+from classify.features.build import build_recipe
+from classify.features.facts import scene_facts
 from classify.features.recipe import Recipe
 from classify.features.spectra import fit_projection
 from classify.features.steps import ComponentStep
 from classify.progress import SILENT, Progress
 from classify.raster.scene import Scene
+from classify.settings import Project
 from classify.settings.model import ComponentSettings
 
 WINDOW_PX = 64
 SAMPLE_PX = 100_000
+
+
+def scene_recipe(project: Project, scene: Scene, progress: Progress = SILENT) -> Recipe:
+    """The recipe of a project on its scene, components fitted. Raises SettingsError and DataError."""
+    recipe = build_recipe(project.features, scene.roles, scene_facts(scene))
+    return fit_recipe(recipe, scene, project.project.seed, progress)
 
 
 def fit_recipe(recipe: Recipe, scene: Scene, seed: int, progress: Progress = SILENT) -> Recipe:

@@ -13,7 +13,7 @@ from classify.features.recipe import Recipe
 from classify.models.calibrate import calibrate
 from classify.models.card import describe
 from classify.models.checks import check_classes
-from classify.models.folds import spatial_blocks
+from classify.models.folds import kept_whole
 from classify.models.importance import Importance, feature_groups, measure_importance
 from classify.models.kinds import make_estimator, without_workers
 from classify.models.reach import fit_reach
@@ -22,8 +22,6 @@ from classify.models.trained import TrainedModel
 from classify.models.tuning import TUNING_PIXELS, Choice, choose, draw_settings, load_space
 from classify.models.validate import Maker, ScreenOptions, screen
 from classify.progress import SILENT, Progress
-from classify.raster.area import ground_areas_m2
-from classify.raster.grid import Grid, Window
 from classify.settings import Project
 from classify.settings.model import ModelKind
 from classify.training.dataset import TrainingSet
@@ -94,19 +92,9 @@ def fit_model(  # noqa: PLR0917 - a fixed contract
 
 def _plan(training: TrainingSet, project: Project, seed: int, jobs: int, progress: Progress) -> _Plan:
     settings = project.model
-    options = ScreenOptions(folds=settings.folds, repeats=settings.repeats, seed=seed, jobs=jobs)
-    if settings.block_m is None:
-        return _Plan(training, project, training.polygon, options, progress)
-    size_px = max(1, round(settings.block_m / pixel_size_m(training.grid)))
-    groups = spatial_blocks(training.rows, training.cols, training.polygon, size_px)
-    options = replace(options, kept_whole=f"blocks of {settings.block_m:g} m")
+    groups, words = kept_whole(training, settings.block_m)
+    options = ScreenOptions(folds=settings.folds, repeats=settings.repeats, seed=seed, jobs=jobs, kept_whole=words)
     return _Plan(training, project, groups, options, progress)
-
-
-def pixel_size_m(grid: Grid) -> float:
-    """Edge in metres on the ground of the pixel in the middle of a grid (square root of its area)."""
-    middle = Window(grid.height // 2, grid.width // 2, 1, 1)
-    return float(np.sqrt(ground_areas_m2(grid, middle)[0, 0]))
 
 
 def _choose(plan: _Plan) -> Choice | None:

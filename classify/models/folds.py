@@ -7,6 +7,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from classify.raster.area import pixel_size_m
+from classify.training.dataset import TrainingSet
+
 
 @dataclass(frozen=True, eq=False)
 class Folds:
@@ -53,15 +56,23 @@ def group_folds(codes: NDArray[np.uint8], groups: NDArray[np.int32], most: int, 
     return Folds(fold_of[member], count, tuple(int(code) for code in present[alone]))
 
 
+def kept_whole(training: TrainingSet, block_m: float | None) -> tuple[NDArray[np.int32], str]:
+    """What a split keeps on one side, as group numbers (n,), and words for it: polygons, or blocks of `block_m`."""
+    if block_m is None:
+        return training.polygon, "polygons"
+    size_px = max(1, round(block_m / float(np.sqrt(np.prod(pixel_size_m(training.grid))))))
+    blocks = spatial_blocks(training.rows, training.cols, training.polygon, size_px)
+    return blocks, f"blocks of {block_m:g} m"
+
+
 def spatial_blocks(
     rows: NDArray[np.int32], cols: NDArray[np.int32], polygon: NDArray[np.int32], size_px: int
 ) -> NDArray[np.int32]:
     """Group numbers (n,) by square blocks of `size_px`; a polygon belongs wholly to the block of its middle pixel."""
-    numbers, first, member = np.unique(polygon, return_index=True, return_inverse=True)
+    _, member = np.unique(polygon, return_inverse=True)
     size = np.bincount(member)
     middle_row = np.bincount(member, rows) / size
     middle_col = np.bincount(member, cols) / size
     block = np.stack([middle_row // size_px, middle_col // size_px], axis=1).astype(np.int64)
     _, block_number = np.unique(block, axis=0, return_inverse=True)
-    assert len(first) == len(numbers)
     return block_number.reshape(-1)[member].astype(np.int32)

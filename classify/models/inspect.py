@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 from classify.models.checks import check_classes
+from classify.models.folds import kept_whole
 from classify.models.kinds import make_estimator
 from classify.models.learning import learning_curve
 from classify.models.validate import ScreenOptions, screen
@@ -33,9 +36,10 @@ def inspect_training(
             "random forest", {"n_estimators": trees}, features=len(training.feature_names), seed=forest_seed
         )
 
-    screening = screen(training, forest, ScreenOptions(seed=seed, jobs=jobs, most_pixels=_PIXELS), progress=progress)
-    options = ScreenOptions(seed=seed, jobs=jobs, repeats=4, most_pixels=_PIXELS)
-    curve = learning_curve(training, forest, options, progress=progress)
+    groups, words = kept_whole(training, project.model.block_m)
+    options = ScreenOptions(seed=seed, jobs=jobs, most_pixels=_PIXELS, kept_whole=words)
+    screening = screen(training, forest, options, groups=groups, progress=progress)
+    curve = learning_curve(training, forest, replace(options, repeats=4), groups=groups, progress=progress)
     names = {c.code: c.name for c in project.classes}
     evidence = Evidence(screening.rounds, screening.to_json(), curve.to_json(names))
     return review_training(training, project, evidence, problems, seed)

@@ -64,14 +64,22 @@ class LearningCurve:
 
 
 def learning_curve(
-    training: TrainingSet, make: Maker, options: ScreenOptions, *, progress: Progress = SILENT
+    training: TrainingSet,
+    make: Maker,
+    options: ScreenOptions,
+    *,
+    groups: NDArray[np.int32] | None = None,
+    progress: Progress = SILENT,
 ) -> LearningCurve:
-    """Learn from growing shares of each class's polygons and label the polygons held out, always the same ones.
+    """Learn from growing shares of each class's polygons and label those held out, always the same ones.
+
+    Held out are whole polygons, or the groups of them that `groups` (n,) names.
 
     One fold is held out per repeat, dealt anew; the shares are nested, so that a curve compares like with like. Every
     class keeps at least one polygon. Seeded; the same whatever the number of jobs.
     """
     tasks = [(repeat, s) for repeat in range(options.repeats) for s in range(len(SHARES))]
+    whole = training.polygon if groups is None else groups
     classes = training.class_codes
     polygons = np.zeros((len(SHARES), options.repeats, len(classes)))
     right = np.full((len(SHARES), options.repeats, len(classes)), np.nan)
@@ -79,23 +87,24 @@ def learning_curve(
 
         def run(job: tuple[int, int]) -> None:
             repeat, s = job
-            polygons[s, repeat], right[s, repeat] = _one(training, make, options, repeat, SHARES[s])
+            folds = group_folds(training.codes, whole, options.folds, options.seed + repeat)
+            held = folds.held_out(repeat % folds.count)
+            kept, polygons[s, repeat] = _nested(training, ~held, SHARES[s], options.seed + repeat)
+            right[s, repeat] = _right(training, make, options, kept, held)
             task.advance()
 
         list(pool.map(run, tasks))
     return LearningCurve(classes, polygons.mean(axis=1), right)
 
 
-def _one(
-    training: TrainingSet, make: Maker, options: ScreenOptions, repeat: int, share: float
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+def _right(
+    training: TrainingSet, make: Maker, options: ScreenOptions, kept: NDArray[np.bool_], held: NDArray[np.bool_]
+) -> NDArray[np.float64]:
+    """Share labelled right of each class's held-out pixels, float64 (k,), by a model of those kept."""
     classes = training.class_codes
-    folds = group_folds(training.codes, training.polygon, options.folds, options.seed + repeat)
-    held = folds.held_out(repeat % folds.count)
-    kept, counts = _nested(training, ~held, share, options.seed + repeat)
     right = np.full(len(classes), np.nan)
     if not held.any():
-        return counts, right
+        return right
     chosen = np.flatnonzero(kept)
     chosen = chosen[even_draw(training.polygon[chosen], options.most_pixels, options.seed)]
     estimator = without_workers(make(options.seed).fit(training.features[chosen], training.codes[chosen]))
@@ -104,7 +113,7 @@ def _one(
         mine = training.codes[held] == code
         if mine.any():
             right[k] = np.mean(labels[mine] == code)
-    return counts, right
+    return right
 
 
 def _nested(

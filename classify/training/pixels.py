@@ -18,6 +18,7 @@ from classify.features.recipe import Recipe
 from classify.progress import SILENT, Progress
 from classify.raster.grid import Window
 from classify.raster.reader import Scene, SceneReader
+from classify.settings import Project
 from classify.training.dataset import TrainingSet
 from classify.training.draws import even_draw
 from classify.training.polygons import PolygonSet, polygon_list
@@ -35,6 +36,12 @@ class PixelCaps:
     per_polygon: int | None = None
     per_class: int | None = None
     seed: int = 0
+
+    @classmethod
+    def of(cls, project: Project) -> PixelCaps:
+        """What a project file asks for."""
+        settings = project.training
+        return cls(settings.pixels_per_polygon, settings.pixels_per_class, project.project.seed)
 
 
 @dataclass(frozen=True, eq=False)
