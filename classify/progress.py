@@ -14,6 +14,8 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from typing import Protocol, TextIO
 
+from classify.text import plain
+
 
 class Task(Protocol):
     """One piece of work whose length is known."""
@@ -91,7 +93,7 @@ class LogLines:
 
     def note(self, message: str) -> None:
         """Write one line."""
-        self._stream.write(message + "\n")
+        self._stream.write(plain(message) + "\n")
         self._stream.flush()
 
 
@@ -127,7 +129,7 @@ class TerminalBar:
 
     def note(self, message: str) -> None:
         """Print one line above the bar."""
-        self._console.print(message, markup=False, highlight=False)
+        self._console.print(plain(message), markup=False, highlight=False)
 
 
 def for_stream(*, quiet: bool) -> Progress:

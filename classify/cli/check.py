@@ -9,7 +9,7 @@ from typing import Any
 
 import click
 
-from classify.cli.common import Call, common_options
+from classify.cli.common import Call, common_options, say
 from classify.cli.render import percent, table
 from classify.cli.run import run_stages
 
@@ -32,7 +32,7 @@ def command(call: Call, review: bool, indices: bool) -> None:
     call.show(facts, _text(facts))
     if not call.as_json:
         for problem in result.errors if call.quiet else result.problems:
-            click.echo(f"{problem.severity}: {problem}", err=True)
+            say(f"{problem.severity}: {problem}", err=True)
     if result.errors:
         sys.exit(1)
     if review:

@@ -13,6 +13,8 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
+from classify.text import plain, printable_json
+
 if TYPE_CHECKING:
     from classify.progress import Progress
     from classify.settings import Project
@@ -44,18 +46,23 @@ class Call:
         if self.as_json:
             echo_json(result)
         elif not self.quiet and text:
-            click.echo(text)
+            say(text)
 
     def warn(self, message: str) -> None:
         """Say something on standard error, whatever the output mode (not with --quiet)."""
         if not self.quiet:
-            click.echo(message, err=True)
+            say(message, err=True)
+
+
+def say(text: str, *, err: bool = False) -> None:
+    """Print text. Names in it may come from anyone's files: none of them is to command the terminal."""
+    click.echo(plain(text), err=err)
 
 
 def echo_json(content: Mapping[str, Any]) -> None:
     """Print JSON; with characters spelt in ASCII where standard output could not take them."""
     unicode = "utf" in (getattr(sys.stdout, "encoding", None) or "").casefold()
-    click.echo(json.dumps(content, indent=2, ensure_ascii=not unicode, allow_nan=False))
+    click.echo(printable_json(json.dumps(content, indent=2, ensure_ascii=not unicode, allow_nan=False)))
 
 
 def spoken(names: Sequence[str]) -> tuple[str, ...]:

@@ -9,6 +9,7 @@ from importlib import import_module
 import click
 
 from classify import __version__
+from classify.cli.common import say
 from classify.cli.surroundings import Stopping, ensure_utf8, prepare_streams
 
 # command -> (module that defines `command`, one line of help). Kept here so that --help imports nothing else.
@@ -79,5 +80,5 @@ def entry() -> None:
             error = LandassayError(error.strerror or str(error), where=str(error.filename or ""))
         if not isinstance(error, LandassayError):
             raise
-        click.echo(f"landassay: {error}", err=True)
+        say(f"landassay: {error}", err=True)
         sys.exit(1)

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 import click
 
-from classify.cli.common import Call, common_options
+from classify.cli.common import Call, common_options, say
 
 if TYPE_CHECKING:
     from classify.workflow import StageName, StageResult
@@ -21,7 +21,7 @@ def command(call: Call, force: bool) -> None:
     run_stages(call, None, force=force)
     report = call.project().folder / "outputs" / "report" / "report.html"
     if not call.as_json and not call.quiet and report.is_file():
-        click.echo(f"\nThe report: {report}")
+        say(f"\nThe report: {report}")
 
 
 def run_stages(

@@ -7,7 +7,7 @@ from pathlib import Path
 
 import click
 
-from classify.cli.common import echo_json
+from classify.cli.common import echo_json, say
 
 
 @click.command("verify", help="Check a delivered report: fingerprints, numbers derived again, cells as printed.")
@@ -23,14 +23,14 @@ def command(folder: Path, quiet: bool, as_json: bool) -> None:
         echo_json({"sound": result.sound, **asdict(result)})
     else:
         for finding in result.findings:
-            click.echo(f"{finding.where}: {finding.what}", err=True)
+            say(f"{finding.where}: {finding.what}", err=True)
         for note in () if quiet else result.notes:
-            click.echo(f"note: {note}", err=True)
+            say(f"note: {note}", err=True)
         if not quiet:
             checked = (
                 f"{result.files} files, {result.derived:,} numbers derived again, {result.printed:,} cells as printed"
             )
             differing = f"{len(result.findings)} differences" if result.findings else "nothing differs"
-            click.echo(f"{checked}: {differing}")
+            say(f"{checked}: {differing}")
     if not result.sound:
         raise click.exceptions.Exit(1)

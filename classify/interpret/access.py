@@ -7,12 +7,12 @@ the page itself.
 
 from __future__ import annotations
 
+import asyncio
 import hmac
 import secrets
 import threading
 from collections.abc import Awaitable, Callable
 from dataclasses import dataclass, field
-from urllib.parse import urlsplit
 
 from starlette.middleware.base import BaseHTTPMiddleware
 from starlette.requests import Request
@@ -28,6 +28,8 @@ _HEADERS = {
     "Cross-Origin-Resource-Policy": "same-origin",
     "Permissions-Policy": "camera=(), geolocation=(), microphone=()",
 }
+
+_WRONG_S = 0.5
 
 
 @dataclass
@@ -63,10 +65,7 @@ class Access:
 
     def comes_from_page(self, origin: str | None) -> bool:
         """Whether an Origin header is that of our own page."""
-        if origin is None:
-            return False
-        parts = urlsplit(origin)
-        return parts.scheme == "http" and parts.netloc.lower() in self.hosts and not parts.path
+        return origin is not None and origin.lower() in {f"http://{host}" for host in self.hosts}
 
 
 class Guard(BaseHTTPMiddleware):
@@ -78,7 +77,7 @@ class Guard(BaseHTTPMiddleware):
 
     async def dispatch(self, request: Request, call_next: Callable[[Request], Awaitable[Response]]) -> Response:
         """Check, then pass on."""
-        response = self._refusal(request) or self._entrance(request) or await call_next(request)
+        response = self._refusal(request) or await self._entrance(request) or await call_next(request)
         for name, value in _HEADERS.items():
             response.headers[name] = value
         return response
@@ -94,7 +93,7 @@ class Guard(BaseHTTPMiddleware):
             return PlainTextResponse("Only the page itself may ask for this.", 403)
         return None
 
-    def _entrance(self, request: Request) -> Response | None:
+    async def _entrance(self, request: Request) -> Response | None:
         access = self.access
         token = request.query_params.get("token")
         if request.url.path == "/" and token is not None and not access.knows(request.cookies.get(access.cookie)):
@@ -107,5 +106,7 @@ class Guard(BaseHTTPMiddleware):
             return RedirectResponse("/", 303)
         if access.knows(request.cookies.get(access.cookie)):
             return None
+        # Who guesses waits; the right token and the cookie never do, however many guess.
+        await asyncio.sleep(_WRONG_S)
         text = "This address is not valid, or was used in another browser. Start 'landassay interpret' again."
         return PlainTextResponse(text, 403)

@@ -7,21 +7,23 @@ give them away.
 from __future__ import annotations
 
 import json
+import re
+import sqlite3
 from collections.abc import Awaitable, Callable, Mapping
 from pathlib import Path
 from typing import Any
 
 from starlette.applications import Starlette
 from starlette.concurrency import run_in_threadpool
-from starlette.requests import Request
+from starlette.requests import ClientDisconnect, Request
 from starlette.responses import JSONResponse, Response
 from starlette.routing import Route
 
-from classify.errors import SampleError
+from classify.errors import LandassayError, SampleError
 from classify.interpret.access import Access, Guard
 from classify.interpret.journal import CONFIDENCES, Label, StaleEntryError
 from classify.interpret.pictures import Look, Pictures
-from classify.interpret.session import Session
+from classify.interpret.session import Place, Session
 
 _ASSETS = {
     "": ("page.html", "text/html"), "page.css": ("page.css", "text/css"), "page.js": ("page.js", "text/javascript"),
@@ -40,12 +42,13 @@ def make_app(session: Session, pictures: Pictures, title: str, access: Access) -
         *(Route(f"/{name}", _asset(file, media), methods=["GET"]) for name, (file, media) in _ASSETS.items()),
         Route("/api/start", desk.start, methods=["GET"]),
         Route("/api/points", desk.points, methods=["GET"]),
-        Route("/api/point/{id:int}", desk.point, methods=["GET"]),
-        Route("/api/picture/{id:int}/{view}", desk.picture, methods=["GET"]),
-        Route("/api/label/{id:int}", desk.label, methods=["POST"]),
+        Route("/api/point/{id}", desk.point, methods=["GET"]),
+        Route("/api/picture/{id}/{view}", desk.picture, methods=["GET"]),
+        Route("/api/label/{id}", desk.label, methods=["POST"]),
         Route("/api/undo", desk.undo, methods=["POST"]),
     ]
-    app = Starlette(routes=routes)
+    app = Starlette(routes=routes, exception_handlers={LandassayError: _failure, sqlite3.Error: _failure})
+    app.router.redirect_slashes = False
     app.add_middleware(Guard, access=access)
     return app
 
@@ -87,7 +90,7 @@ class _Desk:
 
     async def point(self, request: Request) -> Response:
         """One point: where it lies, its spectrum, and what was said of it."""
-        place = self.session.places.get(request.path_params["id"])
+        place = self._place(request)
         if place is None:
             return _refusal("there is no such point", 404)
         spectrum = await run_in_threadpool(self.pictures.spectrum, place.row, place.col)
@@ -98,7 +101,7 @@ class _Desk:
 
     async def picture(self, request: Request) -> Response:
         """A picture around one point."""
-        place = self.session.places.get(request.path_params["id"])
+        place = self._place(request)
         look = _look(request.query_params)
         if place is None or look is None or request.path_params["view"] not in self.pictures.views:
             return _refusal("there is no such picture", 404)
@@ -107,8 +110,10 @@ class _Desk:
 
     async def label(self, request: Request) -> Response:
         """Store a label; the answer comes once it is on disk."""
-        body = await _body(request)
-        if body is None or not isinstance(body.get("seen"), int):
+        place, body = self._place(request), await _body(request)
+        if place is None:
+            return _refusal("there is no such point", 404)
+        if body is None or type(body.get("seen")) is not int:
             return _refusal("this is not a label", 400)
         texts = {key: body.get(key) for key in ("label", "alternate", "confidence", "note")}
         if not all(value is None or isinstance(value, str) for value in texts.values()):
@@ -116,11 +121,10 @@ class _Desk:
         label = Label(
             texts["label"], texts["alternate"], texts["confidence"] or "high", (texts["note"] or "").strip()
         )  # fmt: skip
-        point = request.path_params["id"]
         try:
-            revision = await run_in_threadpool(self.session.label, point, label, body["seen"])
+            revision = await run_in_threadpool(self.session.label, place.id, label, body["seen"])
         except StaleEntryError:
-            return _json(await run_in_threadpool(self.session.said, point), 409)
+            return _json(await run_in_threadpool(self.session.said, place.id), 409)
         except SampleError as error:
             return _refusal(error.problems[0].what, 400)
         return _json({"revision": revision})
@@ -129,16 +133,27 @@ class _Desk:
         """Take back the last label."""
         return _json({"point": await run_in_threadpool(self.session.journal.undo)})
 
+    def _place(self, request: Request) -> Place | None:
+        text = str(request.path_params["id"])
+        return self.session.places.get(int(text)) if re.fullmatch("[0-9]{1,15}", text) else None
+
+
+async def _failure(_: Request, error: Exception) -> Response:
+    """A scene or journal that cannot be read or written now: said on the page, and the label is not taken for stored."""
+    if isinstance(error, LandassayError):
+        return _refusal(error.problems[0].what, 500)
+    return _refusal(f"the labels cannot be read or written: {error}", 500)
+
 
 async def _body(request: Request) -> dict[str, Any] | None:
     raw = b""
-    async for piece in request.stream():
-        raw += piece
-        if len(raw) > _LONGEST_BODY:
-            return None
     try:
+        async for piece in request.stream():
+            raw += piece
+            if len(raw) > _LONGEST_BODY:
+                return None
         content = json.loads(raw)
-    except ValueError:
+    except (ValueError, RecursionError, ClientDisconnect):
         return None
     return content if isinstance(content, dict) else None
 

@@ -12,8 +12,11 @@ import uvicorn
 from classify.errors import LandassayError
 from classify.interpret.access import Access
 from classify.interpret.app import make_app
+from classify.interpret.connections import Connection
 from classify.interpret.pictures import Pictures
 from classify.interpret.session import Session
+
+_MOST_HEADER_BYTES = 16 << 10
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,8 +70,11 @@ def listen(host: str = "127.0.0.1", port: int = 0) -> Listening:
 def serve(listening: Listening, session: Session, pictures: Pictures, title: str, ready: Callable[[], None]) -> None:
     """Serve until interrupted; `ready` is called once pages can be answered."""
     app = make_app(session, pictures, title, listening.access)
-    config = uvicorn.Config(app, log_level="warning", access_log=False, server_header=False, date_header=False,
-                            lifespan="off", timeout_graceful_shutdown=2)  # fmt: skip
+    config = uvicorn.Config(
+        app, http=Connection, ws="none", h11_max_incomplete_event_size=_MOST_HEADER_BYTES, timeout_keep_alive=30,
+        log_level="error", access_log=False, server_header=False, date_header=False, lifespan="off",
+        timeout_graceful_shutdown=2,
+    )  # fmt: skip
     ready()
     uvicorn.Server(config).run(sockets=[listening.socket])
 

@@ -18,6 +18,7 @@ from classify.errors import SampleError
 from classify.interpret.journal import CONFIDENCES, NOTHING, Journal, Label, Role, Standing
 from classify.raster.grid import Grid
 from classify.settings import ClassSettings, Project
+from classify.text import unseen
 
 JOURNAL_FILE = "labels.sqlite"
 _LONGEST_NOTE = 500
@@ -82,8 +83,8 @@ def open_session(project: Project, outputs: Path, grid: Grid, interpreter: str, 
     """The project's drawn sample, ready to be labelled by one person. Raises DataError, SampleError."""
     folder = outputs / "sample"
     sample = read_drawn(folder)
-    if not interpreter.strip():
-        raise SampleError("the interpreter has no name", fix="give --interpreter a name")
+    if not interpreter.strip() or unseen(interpreter):
+        raise SampleError("the interpreter has no name that can be read", fix="give --interpreter a name")
     _check_grid(sample, grid, folder)
     journal = Journal(folder / JOURNAL_FILE, interpreter.strip(), role)
     return Session(sample, grid, project.classes, journal)
@@ -93,13 +94,15 @@ def check_label(label: Label, names: Sequence[str]) -> None:
     """Raise SampleError when a label could not have been chosen."""
     for given in (label.label, label.alternate):
         if given is not None and given not in names:
-            raise SampleError(f"{given!r} is no class", fix=f"classes are {', '.join(map(repr, names))}")
+            raise SampleError(f"{given[:200]!r} is no class", fix=f"classes are {', '.join(map(repr, names))}")
     if label.alternate is not None and label.alternate == label.label:
         raise SampleError("the alternate label is the same as the first", fix="choose another class, or none")
     if label.label is None and label.alternate is not None:
         raise SampleError("an alternate label needs a first one", fix="choose the class that fits best first")
     if label.confidence not in CONFIDENCES:
         raise SampleError(f"confidence {label.confidence!r} is none of {', '.join(CONFIDENCES)}")
+    if code := unseen(label.note):
+        raise SampleError(f"the note holds a character that cannot be seen ({code})", fix="retype it")
     if len(label.note) > _LONGEST_NOTE:
         raise SampleError(f"the note is longer than {_LONGEST_NOTE} characters", fix="shorten it")
 

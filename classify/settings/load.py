@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import difflib
-from collections.abc import Mapping
+import os
+from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any, get_args
 
@@ -13,6 +14,7 @@ from pydantic_core import ErrorDetails
 from classify.errors import Problem, SettingsError
 from classify.settings.model import Project
 from classify.settings.presets import read_toml
+from classify.text import plain, unseen
 
 _UNION_TAGS = {"str", "float", "int", "list[str]", "literal['all']"}
 
@@ -20,9 +22,9 @@ _UNION_TAGS = {"str", "float", "int", "list[str]", "literal['all']"}
 def load_project(path: str | Path) -> Project:
     """Read a project file, or the project.toml of a folder. Raises SettingsError listing every problem."""
     file = Path(path)
-    if file.is_dir():
+    if os.path.isdir(file):  # noqa: PTH112 - answers for any text
         file = file / "project.toml"
-    if not file.is_file():
+    if not os.path.isfile(file):  # noqa: PTH113
         raise SettingsError(
             "there is no project file here", where=str(file),
             fix="start a project with 'landassay new', or name one with --project PATH",
@@ -32,6 +34,8 @@ def load_project(path: str | Path) -> Project:
 
 def parse_project(data: Mapping[str, Any], file: Path) -> Project:
     """Validate plain data as read from `file`. Raises SettingsError listing every problem."""
+    if hidden := list(_hidden(data, file.name)):
+        raise SettingsError(hidden)
     try:
         return Project.model_validate(dict(data)).at(file)
     except ValidationError as error:
@@ -44,6 +48,19 @@ def project_schema() -> dict[str, Any]:
     """JSON Schema of the project file, for editors that check TOML as it is typed."""
     schema = Project.model_json_schema(by_alias=True)
     return {"$schema": "https://json-schema.org/draft/2020-12/schema", "title": "Landassay project", **schema}
+
+
+def _hidden(value: object, where: str) -> Iterator[Problem]:
+    """Text with characters that nobody sees: names go into file names, tables and documents, where they would act."""
+    if isinstance(value, str) and (code := unseen(value)):
+        yield Problem(f"the text {plain(value)!r} holds a character that cannot be seen ({code})", where, "retype it")
+    elif isinstance(value, Mapping):
+        for key, inner in value.items():
+            yield from _hidden(str(key), where)
+            yield from _hidden(inner, f"{where}: {key}" if ":" not in where else f"{where}.{key}")
+    elif isinstance(value, list):
+        for number, inner in enumerate(value, 1):
+            yield from _hidden(inner, f"{where}[{number}]")
 
 
 def _problem(detail: ErrorDetails, filename: str) -> Problem:

@@ -41,7 +41,7 @@ _NAME = re.compile(r"^[A-Za-z_][A-Za-z0-9_]*$")
 
 
 class _Section(BaseModel):
-    model_config = ConfigDict(extra="forbid", frozen=True, str_strip_whitespace=True)
+    model_config = ConfigDict(extra="forbid", frozen=True, str_strip_whitespace=True, allow_inf_nan=False)
 
 
 class ProjectInfo(_Section):
@@ -60,7 +60,9 @@ class BandSettings(_Section):
     band: int = Field(default=1, ge=1, description="number of the band in the file, from 1")
     scale: float | None = Field(default=None, description="default: [scene], the file, the preset, 1")
     offset: float | None = Field(default=None, description="default: [scene], the file, the preset, 0")
-    nodata: float | None = Field(default=None, description="stored value of no data; default: [scene], file, preset")
+    nodata: float | None = Field(
+        default=None, allow_inf_nan=True, description="stored value of no data; default: [scene], file, preset"
+    )
     wavelength_nm: float | None = Field(default=None, gt=0, description="centre; default: the file, the preset")
 
 
@@ -101,7 +103,7 @@ class _Acquisition(_Section):
     sensor: str | None = Field(default=None, description="a preset: wavelengths, scale, no data, meaning of the mask")
     scale: float | None = Field(default=None, description="reflectance = stored * scale + offset, for all bands")
     offset: float | None = None
-    nodata: float | None = None
+    nodata: float | None = Field(default=None, allow_inf_nan=True)
     bands: dict[str, Annotated[BandSettings, _FILE_ALONE]] = Field(min_length=1, description="role = file or table")
     mask: MaskSettings | None = None
 
@@ -134,7 +136,7 @@ class AncillarySettings(_Section):
     band: int = Field(default=1, ge=1, description="number of the band in the file, from 1")
     scale: float | None = None
     offset: float | None = None
-    nodata: float | None = None
+    nodata: float | None = Field(default=None, allow_inf_nan=True)
     categorical: bool = Field(default=False, description="values are codes: the nearest is taken, none is blended")
 
 

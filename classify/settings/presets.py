@@ -38,16 +38,20 @@ def load_preset(kind: PresetKind, name: str) -> dict[str, Any]:
             return read_toml(configs_folder() / kind / f"{known}.toml")
     raise SettingsError(f"no {kind[:-1]} preset is called {name!r}", fix=f"choose one of: {', '.join(names) or 'none'}")
 
+_MOST_BYTES = 4 << 20
+
 
 def read_toml(path: Path) -> dict[str, Any]:
     """A TOML file as plain data. Raises SettingsError with the parser's line and column."""
     try:
+        if path.stat().st_size > _MOST_BYTES:
+            raise SettingsError("this file is far too large for settings", where=str(path))
         return tomllib.loads(path.read_text(encoding="utf-8-sig"))
     except FileNotFoundError as error:
         raise SettingsError("there is no such file", where=str(path)) from error
     except UnicodeDecodeError as error:
         raise SettingsError(f"the file is not UTF-8 text ({error.reason})", where=str(path)) from error
-    except tomllib.TOMLDecodeError as error:
+    except (ValueError, RecursionError) as error:  # also numbers and depths that the parser does not take
         raise SettingsError(f"this is not valid TOML: {error}", where=str(path)) from error
     except OSError as error:
         raise SettingsError(f"the file cannot be read: {error.strerror}", where=str(path)) from error
