@@ -67,7 +67,7 @@ def entry() -> None:
         cli.main(standalone_mode=False)
     except click.exceptions.Abort:
         click.echo("Stopped. Finished outputs are kept; run the same command again to go on.", err=True)
-        sys.exit(stopping.exit_code)
+        stopping.leave()
     except click.ClickException as error:
         error.show()
         sys.exit(error.exit_code)

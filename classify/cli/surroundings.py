@@ -2,19 +2,27 @@
 
 from __future__ import annotations
 
+import _thread
 import os
 import signal
 import sys
+import time
+from contextlib import suppress
 from io import TextIOWrapper
 from types import FrameType
+from typing import NoReturn
 
 # Stopping by Ctrl-C is SIGINT; a batch system, or a machine that shuts down, sends SIGTERM.
 _SIGNALS = (signal.SIGINT, signal.SIGTERM)
 
+# How long closing everything may take before it is done without, in seconds.
+_CLOSING_S = 1.5
+
 
 class Stopping:
-    """Turns the first signal into KeyboardInterrupt, so that everything is closed on the way out, and the second into
-    the end of the process: what is not finished then is cleared away by the next command.
+    """Turns the first signal into KeyboardInterrupt, so that everything is closed on the way out. A second signal, or
+    the time that closing may take, is the end of the process: what is not finished then is cleared away by the next
+    command. A library at work on something long does not let itself be closed.
 
     exit_code: as shells have it, 128 and the number of the signal.
     """
@@ -32,10 +40,23 @@ class Stopping:
     def _stop(self, number: int, frame: FrameType | None) -> None:
         self.exit_code = 128 + number
         if self._begun:
-            os.write(2, b"Stopped at once. Run the same command again to go on.\n")
-            os._exit(self.exit_code)
+            self._leave()
         self._begun = True
+        # Not a Thread of the library above, which takes a lock that the interrupted code may hold.
+        _thread.start_new_thread(self._leave, (_CLOSING_S,))
         raise KeyboardInterrupt
+
+    def _leave(self, after_s: float = 0.0) -> None:
+        time.sleep(after_s)
+        os.write(2, b"Stopped at once. Run the same command again to go on.\n")
+        os._exit(self.exit_code)
+
+    def leave(self) -> NoReturn:
+        """End a process that was stopped and has closed everything; freeing its memory piece by piece takes seconds."""
+        for stream in (sys.stdout, sys.stderr):
+            with suppress(OSError, ValueError):
+                stream.flush()
+        os._exit(self.exit_code)
 
 
 def prepare_streams() -> None:
