@@ -8,7 +8,9 @@ from __future__ import annotations
 
 import hashlib
 import json
+import math
 import os
+import stat
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager, suppress
 from pathlib import Path
@@ -18,6 +20,7 @@ from uuid import uuid4
 from classify.errors import DataError, OutputError
 
 TEMPORARY_SUFFIX = ".landassay-part"
+_MOST_JSON_BYTES = 256 << 20
 
 
 @contextmanager
@@ -74,18 +77,32 @@ def json_text(content: Mapping[str, Any]) -> str:
 
 
 def read_json(path: Path) -> dict[str, Any]:
-    """Read a JSON object. Raises DataError naming file, line and column."""
+    """Read a JSON object, of numbers that are numbers. Raises DataError naming file, line and column."""
     try:
-        content = json.loads(path.read_text(encoding="utf-8-sig"))
+        facts = path.stat()
+        if not stat.S_ISREG(facts.st_mode):
+            raise DataError("this is not a file", where=str(path))
+        if facts.st_size > _MOST_JSON_BYTES:
+            raise DataError("this file is far too large for what it should hold", where=str(path))
+        content = json.loads(path.read_text(encoding="utf-8-sig"), parse_constant=_no_number, parse_float=_finite)
     except FileNotFoundError as error:
         raise DataError("there is no such file", where=str(path)) from error
-    except (UnicodeDecodeError, json.JSONDecodeError) as error:
+    except (ValueError, RecursionError) as error:  # also bytes, numbers and depths that are not taken
         raise DataError(f"this is not valid JSON: {error}", where=str(path)) from error
     except OSError as error:
         raise DataError(f"the file cannot be read: {error.strerror}", where=str(path)) from error
     if not isinstance(content, dict):
         raise DataError("a JSON object is expected at the top", where=str(path))
     return content
+
+
+def _finite(text: str) -> float:
+    value = float(text)
+    return value if math.isfinite(value) else _no_number(text)
+
+
+def _no_number(text: str) -> float:
+    raise ValueError(f"{text[:40]} is no number")
 
 
 def sha256(path: Path) -> str:

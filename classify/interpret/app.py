@@ -139,7 +139,7 @@ class _Desk:
 
 
 async def _failure(_: Request, error: Exception) -> Response:
-    """A scene or journal that cannot be read or written now: said on the page, and the label is not taken for stored."""
+    """A scene or journal that cannot be read or written now: said on the page; no label is taken for stored."""
     if isinstance(error, LandassayError):
         return _refusal(error.problems[0].what, 500)
     return _refusal(f"the labels cannot be read or written: {error}", 500)

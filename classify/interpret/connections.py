@@ -1,4 +1,4 @@
-"""How many connections the page's server keeps, and for how long: a slow or greedy client costs nobody else anything."""
+"""How many connections the page's server keeps, and for how long: a slow or greedy client costs no other anything."""
 
 from __future__ import annotations
 
