@@ -18,9 +18,9 @@ from scipy import stats
 from shapely.geometry import box
 from small_project import make_small_project
 
+from classify.assessment.cells import cell_shape_yx
 from classify.assessment.draw import DrawOptions, draw_lattice, draw_units, pixels_of, population_of
 from classify.assessment.drawn_sample import read_drawn, taken_cells
-from classify.assessment.lots import lots, stream
 from classify.assessment.population import scan
 from classify.cli.main import cli
 from classify.errors import LandassayError, OutputError, SampleError
@@ -51,19 +51,17 @@ def varied(tmp_path_factory) -> Path:
 def test_inclusion_probabilities_are_equal_within_strata(tmp_path: Path):
     codes = np.where(np.arange(15 * 16).reshape(15, 16) % 3 == 0, 2, 1)
     codes[0, :4] = 0
-    path = write_map(tmp_path / "cover.tif", codes)
-    hits = np.zeros(codes.shape, int)
-    options = DrawOptions()
-    population = population_of(path, {1: "a", 2: "b"}, options)
-    members = [np.flatnonzero(codes == code) for code in (1, 2)]
+    # Pixels of 200 m: the map has four cells, in which draws are made apart.
+    path = write_map(tmp_path / "cover.tif", codes, transform=Affine(200, 0, 500_000, 0, -200, 6_500_000))
+    hits, in_cell = np.zeros(codes.size, int), np.zeros(13, int)
+    population = population_of(path, {1: "a", 2: "b"}, DrawOptions())
+    assert cell_shape_yx(population.grid) == (8, 8)
     for seed in range(2000):
-        u = [lots(stream(seed, 1), numbers) for numbers in members]
-        drawn = [numbers[np.argsort(lot)[:n]] for numbers, lot, n in zip(members, u, (12, 6), strict=True)]
-        if seed < 25:  # a pass over the file gives the same pixels, which differ in area by less than any two lots
-            found = scan(population, seed, 12).lowest
-            assert [list(d) for d in drawn] == [list(f.units[:n]) for f, n in zip(found, (12, 6), strict=True)]
-        for units in drawn:
-            hits[np.unravel_index(units, codes.shape)] += 1
+        for drawn, n in zip(scan(population, seed, 12).lowest, (12, 6), strict=True):
+            hits[drawn.units[:n]] += 1
+            if n == 12:
+                in_cell[((drawn.units // 16 < 8) & (drawn.units % 16 < 8)).sum()] += 1
+    hits = hits.reshape(codes.shape)
     assert not hits[codes == 0].any()
     for code, n in ((1, 12), (2, 6)):
         drawn = hits[codes == code]
@@ -71,6 +69,10 @@ def test_inclusion_probabilities_are_equal_within_strata(tmp_path: Path):
         # Draws without replacement: counts have variance expected * (1 - n / N), which the statistic is scaled by.
         statistic = ((drawn - expected) ** 2).sum() / (expected * (1 - n / drawn.size)) * (drawn.size - 1) / drawn.size
         assert 0.001 < stats.chi2.sf(statistic, drawn.size - 1) < 0.999
+    # How many of the 12 fall in one cell: the hypergeometric distribution, by scipy; tails together.
+    law = stats.hypergeom((codes == 1).sum(), (codes[:8, :8] == 1).sum(), 12).pmf(np.arange(13)) * 2000
+    few = law < 5
+    assert stats.chisquare([*in_cell[~few], in_cell[few].sum()], [*law[~few], law[few].sum()]).pvalue > 0.001
 
 
 def test_points_follow_ground_area_on_a_grid_in_degrees(tmp_path: Path):
@@ -78,7 +80,8 @@ def test_points_follow_ground_area_on_a_grid_in_degrees(tmp_path: Path):
     transform = Affine(0.5, 0, 10, 0, -2.0, 80)
     path = write_map(tmp_path / "cover.tif", np.ones((40, 120)), "EPSG:4326", transform)
     population = population_of(path, {1: "a"}, DrawOptions())
-    rows = np.concatenate([scan(population, seed, 30).lowest[0].units // 120 for seed in range(160)])
+    assert cell_shape_yx(population.grid) == (1, 64)
+    rows = np.concatenate([scan(population, seed, 30).lowest[0].units // 120 for seed in range(2000)])
     drawn = np.bincount(rows // 4, minlength=10)
     geod = pyproj.Geod(ellps="WGS84")
     areas = np.array(
@@ -95,7 +98,7 @@ def test_points_follow_ground_area_on_a_grid_in_degrees(tmp_path: Path):
 def test_same_points_whatever_the_blocks_and_jobs(varied: Path):
     population = population_of(varied, CLASSES, DrawOptions())
     first = scan(population, 7, 50)
-    for rows_px, jobs in ((64, 1), (17, 3), (512, 2)):
+    for rows_px, jobs in ((64, 1), (130, 3), (512, 2)):
         other = scan(population, 7, 50, jobs=jobs, rows_px=rows_px)
         assert all(np.array_equal(a.units, b.units) for a, b in zip(first.lowest, other.lowest, strict=True))
         assert first.pixels == other.pixels
@@ -103,20 +106,28 @@ def test_same_points_whatever_the_blocks_and_jobs(varied: Path):
     assert not np.array_equal(scan(population, 8, 50).lowest[0].units, first.lowest[0].units)
 
 
-def test_keys_are_those_of_a_plain_formula(varied: Path):
-    """The compiled pass against NumPy on the whole map."""
+def test_what_is_kept_is_the_start_of_one_order(varied: Path):
+    """However few are kept, they are the first of the order in which all pixels of a stratum are drawn."""
     population = population_of(varied, CLASSES, DrawOptions())
     with rasterio.open(varied) as source:
         codes = source.read(1)
-    numbers = np.flatnonzero(codes == 2)
-    area = ground_areas_m2(population.grid, population.grid.window).ravel()[numbers]
-    keys = -np.log1p(-lots(stream(3, 1), numbers)) / area
-    found = scan(population, 3, 40)
-    assert np.array_equal(found.lowest[1].units, numbers[np.argsort(keys)[:40]])
-    assert found.lowest[1].keys == pytest.approx(np.sort(keys)[:40], rel=1e-6)
+    whole = scan(population, 3, codes.size).lowest
+    for place, code in enumerate(CLASSES):
+        assert np.array_equal(np.sort(whole[place].units), np.flatnonzero(codes == code))
+        assert (np.diff(whole[place].keys) > 0).all()
+    for keep, rows_px in ((1, 64), (40, 128), (7000, 64), (20_000, 512)):
+        for few, all_of_them in zip(scan(population, 3, keep, rows_px=rows_px).lowest, whole, strict=True):
+            assert np.array_equal(few.units, all_of_them.units[:keep])
+
+
+def test_pixels_and_areas_are_those_of_plain_sums(varied: Path):
+    population = population_of(varied, CLASSES, DrawOptions())
+    with rasterio.open(varied) as source:
+        codes = source.read(1)
+    found = scan(population, 3, 0)
     for place, code in enumerate(CLASSES):
         whole = ground_areas_m2(population.grid, population.grid.window)[codes == code].sum()
-        assert found.area_m2[place] == pytest.approx(whole, rel=1e-7)
+        assert found.area_m2[place] == pytest.approx(whole, rel=1e-6)
         assert found.pixels[place] == (codes == code).sum()
 
 

@@ -1,18 +1,22 @@
-"""Random lots by number: the lot of a pixel depends on the seed and the pixel alone, not on when or where it is drawn.
+"""Random lots by number, and the order in which random draws come to the units of a population.
 
-A pixel of ground area a gets the key -log(1 - u) / a, u uniform, and the pixels with the lowest keys are drawn. The
-lowest n keys are a successive sample without replacement with probabilities proportional to area (Efraimidis & Spirakis
-2006, Information Processing Letters 97, 181-185), a simple random sample where areas are equal, and the next keys go on
-with it. u comes from the mixing function of Steele, Lea & Flood 2014 ("Fast splittable pseudorandom number generators",
-OOPSLA), applied to a counter.
+Lots come from the mixing function of Steele, Lea & Flood 2014 ("Fast splittable pseudorandom number generators",
+OOPSLA), applied to a counter: a lot depends on the seed and its number alone, not on when or where it is drawn.
+
+A unit of ground area a is drawn at a time -log(1 - u) / a, u uniform, and the units with the lowest times are the
+sample. The n lowest are a successive sample without replacement with probabilities proportional to area (Efraimidis &
+Spirakis 2006, Information Processing Letters 97, 181-185), a simple random sample where areas are equal, and the next
+ones go on with it. Of n units of one area a, the first is drawn after an exponential time of rate n a, the next after
+another one of rate (n - 1) a, and so on, and each is any of those left with one probability (Rényi 1953, Acta
+Mathematica Academiae Scientiarum Hungaricae 4, 191-231): so units are looked at by the few that are drawn.
 """
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 from numpy.typing import NDArray
-
-from classify.features.compiled import compiled
 
 _STEP = np.uint64(0x9E3779B97F4A7C15)
 _MIX_1 = np.uint64(0xBF58476D1CE4E5B9)
@@ -27,11 +31,15 @@ def stream(seed: int, purpose: int) -> np.uint64:
         return np.uint64(_mixed(np.array([seed], np.uint64) * _STEP + np.uint64(purpose))[0])
 
 
-def lots(start: np.uint64, numbers: NDArray[np.int64]) -> NDArray[np.float64]:
-    """Uniform lots in [0, 1) of the given numbers (float64, same shape)."""
+def streams(start: np.uint64 | NDArray[np.uint64], numbers: NDArray[np.int64] | int) -> NDArray[np.uint64]:
+    """Where further lots start, one stream for each number (uint64)."""
     with np.errstate(over="ignore"):
-        mixed = _mixed(start + (numbers.astype(np.uint64) + np.uint64(1)) * _STEP)
-    return np.asarray((mixed >> _S11).astype(np.float64) * _UNIT)
+        return _mixed(start + (np.asarray(numbers, np.uint64) + np.uint64(1)) * _STEP)
+
+
+def lots(start: np.uint64 | NDArray[np.uint64], numbers: NDArray[np.int64] | int) -> NDArray[np.float64]:
+    """Uniform lots in [0, 1) of the given numbers (float64)."""
+    return np.asarray((streams(start, numbers) >> _S11).astype(np.float64) * _UNIT)
 
 
 def _mixed(z: NDArray[np.uint64]) -> NDArray[np.uint64]:
@@ -41,89 +49,51 @@ def _mixed(z: NDArray[np.uint64]) -> NDArray[np.uint64]:
         return np.asarray(z ^ (z >> _S31))
 
 
-# Small kernels with few arrays each are what the compiler makes wide instructions of.
+@dataclass(frozen=True, slots=True, eq=False)
+class Arrivals:
+    """Draws in groups of units. group, rank: int64 (n,), rank 0 .. count - 1 within the group; time: float64 (n,)."""
+
+    group: NDArray[np.int64]
+    rank: NDArray[np.int64]
+    time: NDArray[np.float64]
 
 
-@compiled
-def _count(line: NDArray[np.uint8], into_cell: int, step: int, counted: NDArray[np.int32]) -> None:
-    """Count the codes of one row by cell; its first pixel is the `into_cell`-th of the first cell."""
-    for cell in range(counted.shape[0]):
-        count = counted[cell]
-        for code in line[max(cell * step - into_cell, 0) : (cell + 1) * step - into_cell]:
-            count[code] += 1
+def arrivals(
+    starts: NDArray[np.uint64], count: NDArray[np.int64], area: NDArray[np.float64], until: NDArray[np.float64]
+) -> Arrivals:
+    """All draws up to a time, from groups of `count` >= 1 units that have each the `area` (> 0): all (m,), as `until`.
 
-
-@compiled
-def _fill(z0: np.uint64, lot: NDArray[np.uint64]) -> None:
-    """The lots of a row, as whole numbers below 2^53, from the counter before its first pixel."""
-    for j in range(lot.shape[0]):
-        z = z0 + np.uint64(j + 1) * _STEP
-        z = (z ^ (z >> _S30)) * _MIX_1
-        z = (z ^ (z >> _S27)) * _MIX_2
-        lot[j] = (z ^ (z >> _S31)) >> _S11
-
-
-@compiled
-def _add_up(
-    counted: NDArray[np.int32], stratum_of: NDArray[np.int16], area: NDArray[np.float64], pixels: NDArray[np.int64],
-    areas: NDArray[np.float64],
-) -> None:  # fmt: skip
-    """Add counts by cell and code to the sums by stratum, and clear them."""
-    for cell in range(counted.shape[0]):
-        for code in range(256):
-            n = counted[cell, code]
-            if n > 0:
-                s = stratum_of[code]
-                if s >= 0:
-                    pixels[s] += n
-                    areas[s] += n * area[cell]
-                counted[cell, code] = 0
-
-
-@compiled
-def offer(  # noqa: PLR0917 - a kernel takes plain arrays
-    codes: NDArray[np.uint8], row: int, col: int, width: int, stratum_of: NDArray[np.int16],
-    cell_area: NDArray[np.float64], step: int, start: np.uint64, limit: NDArray[np.float64], pixels: NDArray[np.int64],
-    areas: NDArray[np.float64], found_unit: NDArray[np.int64], found_key: NDArray[np.float64],
-    found_stratum: NDArray[np.int16],
-) -> int:  # fmt: skip
-    """Count pixels and areas by stratum, and find the pixels whose key is at most the stratum's limit.
-
-    codes: uint8 (h, w) at (row, col) of a raster `width` wide. stratum_of: int16 (256,), -1 outside the population.
-    cell_area: float64, area of a pixel in cells of `step` x `step` pixels of the raster, from the cell that holds (row,
-    col). limit: float64 (k,). pixels int64 (k,) and areas float64 (k,) are added to. The number found is returned;
-    their units (int64), keys (float64) and strata (int16) are written to the last three, as long as `codes` is large.
+    starts: the stream of each group (uint64 (m,)), on which alone its draws depend: with a later `until` the same ones
+    come, and more.
     """
-    top, left = row // step, col // step
-    cells = cell_area.shape[1]
-    highest = cell_area.max()
-    # By code: a lot above the bound has a key above the limit whatever the pixel's area, so that most pixels need no
-    # logarithm; and those outside the population have bound 0.
-    bound = np.zeros(256, np.uint64)
-    for code in range(256):
-        s = stratum_of[code]
-        if s >= 0:
-            share = -np.expm1(-max(limit[s], 0.0) * highest)
-            bound[code] = np.uint64(min(share * 1.000001 + 1e-15, 1.0) * 9007199254740992.0)
-    highest_bound = bound.max()
-    counted = np.zeros((cells, 256), np.int32)
-    lot = np.empty(codes.shape[1], np.uint64)
-    found = 0
-    for i in range(codes.shape[0]):
-        line = codes[i]
-        down = (row + i) // step - top
-        z0 = start + np.uint64(np.int64(row + i) * width + col) * _STEP
-        _count(line, col - left * step, step, counted)
-        _fill(z0, lot)
-        for j in range(line.shape[0]):
-            if lot[j] <= highest_bound and lot[j] <= bound[line[j]]:
-                s = stratum_of[line[j]]
-                key = -np.log1p(-np.float64(lot[j]) * _UNIT) / cell_area[down, (col + j) // step - left]
-                if s >= 0 and key <= limit[s]:
-                    found_unit[found] = np.int64(row + i) * width + col + j
-                    found_key[found] = key
-                    found_stratum[found] = s
-                    found += 1
-        if i + 1 == codes.shape[0] or (row + i + 1) // step != (row + i) // step:
-            _add_up(counted, stratum_of, cell_area[down], pixels, areas)
-    return found
+    group, time = np.arange(len(starts)), np.zeros(len(starts))
+    groups, turns, times = [], [], []
+    drawn = 0
+    while len(group):
+        left = count[group] - drawn
+        time = time - np.log1p(-lots(starts[group], 2 * drawn)) / (left * area[group])
+        soon = time <= until[group]
+        group, time, left = group[soon], time[soon], left[soon]
+        groups.append(group)
+        turns.append((lots(starts[group], 2 * drawn + 1) * left).astype(np.int64))
+        times.append(time)
+        drawn += 1
+        group, time = group[left > 1], time[left > 1]
+    if not groups:
+        return Arrivals(np.zeros(0, np.int64), np.zeros(0, np.int64), np.zeros(0))
+    whose, turn = np.concatenate(groups), np.concatenate(turns)
+    return Arrivals(whose, _ranks(whose, turn, count), np.concatenate(times))
+
+
+def _ranks(group: NDArray[np.int64], turn: NDArray[np.int64], count: NDArray[np.int64]) -> NDArray[np.int64]:
+    """Ranks of units, by their places among those that earlier draws from the group have left."""
+    ranks = turn.copy()
+    # What is drawn gives its place to the last that is left (Durstenfeld 1964, Communications of the ACM 7, 420).
+    moved: dict[tuple[int, int], int] = {}
+    last = count.copy()
+    for i, (g, place) in enumerate(zip(group.tolist(), turn.tolist(), strict=True)):
+        ranks[i] = moved.get((g, place), place)
+        last[g] -= 1
+        end = int(last[g])
+        moved[g, place] = moved.get((g, end), end)
+    return ranks

@@ -1,7 +1,8 @@
 """The population of a sample: every pixel of a map with a class, streamed once whatever the size of the map.
 
-One pass counts pixels and ground area by stratum and keeps the lowest keys of each (see `lots`). What is kept does not
-depend on the order of blocks: the same seed gives the same points whatever the block size or the number of jobs.
+One pass counts pixels and ground area by stratum and cell, and keeps the pixels that are drawn first (see `lots`; the
+time of a draw is the pixel's key). A cell's draws depend on the seed and the cell alone, and those that come too late
+are not looked at: the same seed gives the same points whatever the block size or the number of jobs.
 """
 
 from __future__ import annotations
@@ -22,20 +23,18 @@ from shapely import STRtree
 from shapely.geometry import box
 from shapely.geometry.base import BaseGeometry
 
-from classify.assessment.lots import lots, offer, stream
+from classify.assessment.cells import cell_areas, cell_shape_yx, count_by_cell, locate
+from classify.assessment.lots import Arrivals, arrivals, lots, stream, streams
 from classify.errors import DataError
 from classify.progress import SILENT, Progress
-from classify.raster.area import ground_areas_m2, pixel_size_m
 from classify.raster.grid import Grid, Window
 
-# Rows at a time, and columns: strips of a wide map are quickest to read, and a few MB each.
-_ROWS_PX, _COLS_PX = 512, 8_192
-# Rows offered to the kernel between two looks at the lowest keys.
-_SLICE_PX = 64
-# Within so many metres, and so many pixels, the ground area of a pixel is taken as one.
-_CELL_M, _CELL_PX = 500.0, 64
+# Rows at a time, which hold whole tiles of a map; and pixels at a time, of all threads together.
+_ROWS_PX, _PX = 1024, 24 << 20
 _KEYS = 1
-_CACHE_BYTES = 64 << 20
+# For what lies on no ground (beyond a pole): it comes last.
+_NO_GROUND_M2 = 1e-9
+_CACHE_BYTES = 16 << 20
 
 
 @dataclass(frozen=True)
@@ -122,7 +121,7 @@ def scan(
 ) -> Scan:
     """Stream the map once; keep the `keep` lowest keys of each stratum. Raises DataError."""
     collected = _Collected(population, seed, keep)
-    windows = list(_windows(population.grid, rows_px, population.segment_px))
+    windows = list(_windows(population, rows_px, jobs))
     local = threading.local()
     opened: list[DatasetReader] = []
 
@@ -137,7 +136,8 @@ def scan(
         # GDAL would fill a share of the machine's memory with blocks that are never read again.
         cache = rasterio.Env(GDAL_CACHEMAX=_CACHE_BYTES)
         with cache, progress.task("reading the map", len(windows)) as task, ThreadPoolExecutor(jobs) as pool:
-            for _ in pool.map(work, enumerate(windows)):
+            # A new thread would cost more than a small map.
+            for _ in (map if jobs == 1 else pool.map)(work, enumerate(windows)):
                 pass
     finally:
         for source in opened:
@@ -150,10 +150,8 @@ class _Collected:
 
     def __init__(self, population: Population, seed: int, keep: int) -> None:
         self.population, self.keep, self.start = population, keep, stream(seed, _KEYS)
-        k = len(population.names)
-        self.step = cell_px(population.grid)
-        self.limit = np.full(k, np.inf if keep else -1.0)
-        self.lowest = [Lowest(np.zeros(0, np.int64), np.zeros(0)) for _ in range(k)]
+        self.cell_yx = _cell_yx(population)
+        self.lowest = [Lowest(np.zeros(0, np.int64), np.zeros(0)) for _ in population.names]
         # Sums by window, added up in the order of windows: floating-point sums depend on their order.
         self.counts: dict[int, tuple[NDArray[np.int64], NDArray[np.float64], int, int, float]] = {}
         self.lock = threading.Lock()
@@ -162,82 +160,90 @@ class _Collected:
         """Count one window and keep its lowest keys."""
         population = self.population
         codes, out = population.codes(source, window)
-        area = cell_areas(population.grid, window, self.step)
-        excluded, lost_m2 = 0, 0.0
+        area = np.maximum(cell_areas(population.grid, window, self.cell_yx), _NO_GROUND_M2)
+        whole = counts = self._counted(codes)
         if out is not None:
-            lost = out & (population.stratum_of[codes] >= 0)
-            excluded = int(lost.sum())
-            lost_m2 = float(np.sum(spread(area, window, self.step)[lost]))
             codes = np.where(out, np.uint8(_outside(population.stratum_of)), codes)
-        k = len(population.names)
-        pixels, areas = np.zeros(k, np.int64), np.zeros(k)
-        whole = population.segment_px > 1
-        for first in range(0, window.height, _SLICE_PX):
-            part = codes[first : first + _SLICE_PX]
-            row = window.row + first
-            cells = area[row // self.step - window.row // self.step :]
-            limit = np.full(k, -1.0) if whole else self.limit.copy()
-            units, keys, strata = np.empty(part.size, np.int64), np.empty(part.size), np.empty(part.size, np.int16)
-            n = offer(part, row, window.col, population.grid.width, population.stratum_of, cells, self.step, self.start,
-                      limit, pixels, areas, units, keys, strata)  # fmt: skip
-            if n:
-                self._keep(units[:n].copy(), keys[:n].copy(), strata[:n].copy())
-        segments = self._segments(codes, area, window) if whole else 0
+            counts = self._counted(codes)
+        if self.keep and population.segment_px == 1:
+            self._take_pixels(codes, counts, area, window)
+        elif self.keep:
+            self._take_segments(counts[..., 0], area, window)
+        lost = (whole - counts).sum(axis=2)
         with self.lock:
-            self.counts[number] = (pixels, areas, segments, excluded, lost_m2)
+            self.counts[number] = (
+                counts.sum(axis=(0, 1)), np.einsum("rcs,rc->s", counts, area), int(np.count_nonzero(counts[..., 0])),
+                int(lost.sum()), float((lost * area).sum()),
+            )  # fmt: skip
 
-    def _segments(self, codes: NDArray[np.uint8], area: NDArray[np.float64], window: Window) -> int:
-        """Keep the lowest keys of segments that hold a pixel of the population; returns how many there are."""
-        units, areas = segments_of(self.population, codes, spread(area, window, self.step), window)
-        # A segment on no ground (beyond a pole) comes last.
-        keys = -np.log1p(-lots(self.start, units)) / np.maximum(areas, 1e-9)
-        self._keep(units, keys, np.zeros(len(units), np.int16))
-        return len(units)
+    def _counted(self, codes: NDArray[np.uint8]) -> NDArray[np.int64]:
+        return count_by_cell(codes, self.cell_yx, self.population.stratum_of, len(self.population.names))
 
-    def _keep(self, units: NDArray[np.int64], keys: NDArray[np.float64], strata: NDArray[np.int16]) -> None:
+    def _take_pixels(
+        self, codes: NDArray[np.uint8], counts: NDArray[np.int64], area: NDArray[np.float64], window: Window
+    ) -> None:
+        """Keep the lowest keys of pixels. counts: int64 (rows, cols, strata) and area: float64 (rows, cols) by cell."""
+        population, (rows, cols) = self.population, self.cell_yx
+        down, across, stratum = np.nonzero(counts)
+        cell = (window.row // rows + down) * -(-population.grid.width // cols) + window.col // cols + across
+        # By a code, not by the place of the stratum, which changes with the list of classes.
+        code = np.array([int(np.argmax(population.stratum_of == s)) for s in range(len(population.names))])
+        starts = streams(self.start, cell * 256 + code[stratum])
+        found = self._first(stratum, starts, counts[down, across, stratum], area[down, across])
+        of, cell_yx = stratum[found.group], np.stack([down, across], axis=1)[found.group]
+        row, col = locate(codes, self.cell_yx, population.stratum_of, cell_yx, of, found.rank).T
+        units = (window.row + row) * population.grid.width + window.col + col
+        for s in np.unique(of):
+            self._keep(int(s), units[of == s], found.time[of == s])
+
+    def _first(
+        self, stratum: NDArray[np.int64], starts: NDArray[np.uint64], count: NDArray[np.int64],
+        area: NDArray[np.float64],
+    ) -> Arrivals:  # fmt: skip
+        """The draws of groups of pixels that may be among the lowest of their stratum, and not many more."""
+        k = len(self.lowest)
+        until = np.array([low.keys[-1] if len(low.keys) == self.keep else np.inf for low in self.lowest])
+        total = np.bincount(stratum, count, k)
+        wanted = np.where(np.isinf(until), np.minimum(self.keep, total), 0)
+        # So long that as many as are kept are to be expected, and four standard errors more.
+        share = (self.keep + 4 * np.sqrt(self.keep) + 8) / np.maximum(total, 1)
+        mean = np.bincount(stratum, count * area, k) / np.maximum(total, 1)
+        guessed = np.isinf(until) & (share < 1)
+        until[guessed] = -np.log1p(-share[guessed]) / mean[guessed]
+        while True:
+            found = arrivals(starts, count, area, until[stratum])
+            short = np.bincount(stratum[found.group], minlength=k) < wanted
+            if not short.any():
+                return found
+            until[short] *= 2
+
+    def _take_segments(self, counts: NDArray[np.int64], area: NDArray[np.float64], window: Window) -> None:
+        """Keep the lowest keys of segments that hold a pixel of the population; here they are the cells."""
+        k = self.population.segment_px
+        row, col = np.nonzero(counts)
+        units = (window.row // k + row) * segments_across(self.population) + window.col // k + col
+        self._keep(0, units, -np.log1p(-lots(self.start, units)) / area[row, col])
+
+    def _keep(self, s: int, units: NDArray[np.int64], keys: NDArray[np.float64]) -> None:
         with self.lock:
-            for s in np.unique(strata):
-                here = strata == s
-                old = self.lowest[s]
-                all_units = np.concatenate([old.units, units[here]])
-                all_keys = np.concatenate([old.keys, keys[here]])
-                order = np.lexsort((all_units, all_keys))[: self.keep]
-                self.lowest[s] = Lowest(all_units[order], all_keys[order])
-                if len(order) == self.keep and self.keep:
-                    self.limit[s] = self.lowest[s].keys[-1]
+            old = self.lowest[s]
+            units, keys = np.concatenate([old.units, units]), np.concatenate([old.keys, keys])
+            order = np.lexsort((units, keys))[: self.keep]
+            self.lowest[s] = Lowest(units[order], keys[order])
 
     def result(self) -> Scan:
         """Sums in the order of windows."""
         each = [self.counts[number] for number in sorted(self.counts)]
-        pixels = np.sum([c[0] for c in each], axis=0)
-        areas = np.sum([c[1] for c in each], axis=0)
-        segments = sum(c[2] for c in each)
-        units = tuple(int(n) for n in pixels) if self.population.segment_px == 1 else (segments,)
-        return Scan(
-            tuple(int(n) for n in pixels), tuple(float(a) for a in areas), units, sum(c[3] for c in each),
-            float(sum(c[4] for c in each)), tuple(self.lowest),
-        )  # fmt: skip
+        pixels = tuple(int(n) for n in np.sum([c[0] for c in each], axis=0))
+        areas = tuple(float(a) for a in np.sum([c[1] for c in each], axis=0))
+        units = pixels if self.population.segment_px == 1 else (sum(c[2] for c in each),)
+        return Scan(pixels, areas, units, sum(c[3] for c in each), float(sum(c[4] for c in each)), tuple(self.lowest))
 
 
-def segments_of(
-    population: Population, codes: NDArray[np.uint8], area: NDArray[np.float64], window: Window
-) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
-    """Numbers (int64, (n,)) of the segments in a window that hold any pixel of the population, and the mean area of
-    these pixels (float64, (n,)). area: of each pixel of the window (float64, (h, w)). The window's first row and column
-    must start segments."""
+def _cell_yx(population: Population) -> tuple[int, int]:
+    """Rows and columns of pixels that are counted together: a segment where segments are drawn."""
     k = population.segment_px
-    member = population.stratum_of[codes] >= 0
-    count, total = _by_segment(member, k), _by_segment(np.where(member, area, 0.0), k)
-    r, c = np.nonzero(count)
-    units = (r + window.row // k) * segments_across(population) + c + window.col // k
-    return np.asarray(units, dtype=np.int64), np.asarray(total[r, c] / count[r, c])
-
-
-def _by_segment(values: NDArray[np.generic], k: int) -> NDArray[np.float64]:
-    """Sums over squares of k x k pixels, the last ones cut off by the edge (float64)."""
-    height, width = values.shape
-    across = np.add.reduceat(values, np.arange(0, width, k), axis=1, dtype=np.float64)
-    return np.asarray(np.add.reduceat(across, np.arange(0, height, k), axis=0))
+    return (k, k) if k > 1 else cell_shape_yx(population.grid)
 
 
 def segments_across(population: Population) -> int:
@@ -245,29 +251,11 @@ def segments_across(population: Population) -> int:
     return -(-population.grid.width // population.segment_px)
 
 
-def cell_px(grid: Grid) -> int:
-    """Side, in pixels, of the cells in which the ground area of a pixel is taken as one."""
-    return int(np.clip(_CELL_M / max(*pixel_size_m(grid), 1e-9), 1, _CELL_PX))
-
-
-def cell_areas(grid: Grid, window: Window, step: int) -> NDArray[np.float64]:
-    """Mean ground area in m2 of a pixel in each cell that `window` touches (float64); cells start at the grid."""
-    t = grid.transform
-    cells = Grid(grid.crs, t @ t.scale(step, step), -(-grid.height // step), -(-grid.width // step))
-    row, col = window.row // step, window.col // step
-    last_row, last_col = (window.row + window.height - 1) // step, (window.col + window.width - 1) // step
-    return ground_areas_m2(cells, Window(row, col, last_row - row + 1, last_col - col + 1)) / step**2
-
-
-def spread(area: NDArray[np.float64], window: Window, step: int) -> NDArray[np.float64]:
-    """Areas of cells as areas of the window's pixels (float64, (h, w))."""
-    rows = np.arange(window.row, window.row + window.height) // step - window.row // step
-    cols = np.arange(window.col, window.col + window.width) // step - window.col // step
-    return np.asarray(area[np.ix_(rows, cols)])
-
-
-def _windows(grid: Grid, rows_px: int, segment_px: int) -> Iterator[Window]:
-    rows, cols = (max(1, size // segment_px) * segment_px for size in (rows_px, _COLS_PX))
+def _windows(population: Population, rows_px: int, jobs: int) -> Iterator[Window]:
+    """Windows of whole cells."""
+    grid, cell_yx = population.grid, _cell_yx(population)
+    most_yx = rows_px, _PX // rows_px // jobs
+    rows, cols = (max(1, most // side) * side for most, side in zip(most_yx, cell_yx, strict=True))
     for row in range(0, grid.height, rows):
         for col in range(0, grid.width, cols):
             yield Window(row, col, min(rows, grid.height - row), min(cols, grid.width - col))
