@@ -6,11 +6,11 @@ A pixel's result does not depend on the block it is computed in, nor on the thre
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass, field
 from queue import Empty, SimpleQueue
-from typing import Any, Literal
+from typing import Any, Literal, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -37,31 +37,30 @@ class Stopped(Exception):  # noqa: N818 - not an error: someone asked for it
     """The work was asked to stop."""
 
 
+class Count(NamedTuple):
+    """Of one class code (0: no class): pixels, their ground area, and how many of them are beyond reach."""
+
+    code: int
+    pixels: int
+    area_m2: float
+    beyond: int
+
+
 @dataclass(frozen=True, slots=True)
 class Tally:
-    """Of one block, by class code 0..255 (0: no class): pixels int64, ground area float64, pixels beyond reach int64.
+    """What a block holds: counts of the codes that occur. unreadable: what could not be read, or ""."""
 
-    unreadable: what could not be read, or "".
-    """
-
-    pixels: NDArray[np.int64]
-    area_m2: NDArray[np.float64]
-    beyond: NDArray[np.int64]
+    counts: tuple[Count, ...]
     unreadable: str = ""
 
     def to_json(self) -> dict[str, Any]:
-        """Plain data: [code, pixels, area, beyond] of the codes that occur."""
-        present = np.flatnonzero(self.pixels)
-        rows = [[int(c), int(self.pixels[c]), float(self.area_m2[c]), int(self.beyond[c])] for c in present]
-        return {"codes": rows, "unreadable": self.unreadable}
+        """Plain data."""
+        return {"counts": self.counts, "unreadable": self.unreadable}
 
     @classmethod
     def from_json(cls, content: Mapping[str, Any]) -> Tally:
         """What `to_json` gave."""
-        found = cls(np.zeros(256, np.int64), np.zeros(256), np.zeros(256, np.int64), str(content["unreadable"]))
-        for code, pixels, area_m2, beyond in content["codes"]:
-            found.pixels[code], found.area_m2[code], found.beyond[code] = pixels, area_m2, beyond
-        return found
+        return cls(tuple(Count(*count) for count in content["counts"]), str(content["unreadable"]))
 
 
 @dataclass(frozen=True, slots=True)
@@ -168,15 +167,30 @@ def tally(
 ) -> Tally:
     """Count codes and reach, uint8 (h, w), of a window."""
     codes = cover.ravel()
-    beyond = np.zeros(0, dtype=np.uint8)
+    pixels = np.bincount(codes, minlength=256)
+    area_m2 = np.bincount(codes, rounded_areas_m2(grid, window).ravel(), minlength=256)
+    beyond = np.zeros(256, dtype=np.int64)
     if reach is not None:
-        beyond = codes[(reach.ravel() > WITHIN_REACH) & (reach.ravel() != NO_PERCENT)]
-    return Tally(
-        np.bincount(codes, minlength=256),
-        np.bincount(codes, rounded_areas_m2(grid, window).ravel(), minlength=256).astype(np.float64),
-        np.bincount(beyond, minlength=256),
-        unreadable,
-    )
+        far = (reach.ravel() > WITHIN_REACH) & (reach.ravel() != NO_PERCENT)
+        beyond = np.bincount(codes[far], minlength=256)
+    present = np.flatnonzero(pixels)
+    columns = (values[present].tolist() for values in (pixels, area_m2, beyond))
+    counts = tuple(Count(*row) for row in zip(present.tolist(), *columns, strict=True))
+    return Tally(counts, unreadable)
+
+
+def add_up(tallies: Iterable[Tally]) -> dict[int, Count]:
+    """The whole map's counts by code, the same however it was cut into blocks."""
+    by_code: dict[int, list[Count]] = {}
+    for found in tallies:
+        for count in found.counts:
+            by_code.setdefault(count.code, []).append(count)
+    return {
+        code: Count(
+            code, sum(c.pixels for c in counts), math.fsum(c.area_m2 for c in counts), sum(c.beyond for c in counts)
+        )
+        for code, counts in by_code.items()
+    }
 
 
 def rounded_areas_m2(grid: Grid, window: Window) -> NDArray[np.float64]:

@@ -9,7 +9,6 @@ from __future__ import annotations
 
 import hashlib
 import json
-import math
 from collections.abc import Iterable, Mapping, Sequence
 from contextlib import closing
 from dataclasses import dataclass
@@ -21,7 +20,7 @@ import pandas as pd
 
 from classify import __version__
 from classify.errors import DataError, Problem
-from classify.mapping.blocks import NO_CLASS, BlockWork, LayerName, Tally
+from classify.mapping.blocks import BlockWork, LayerName, Tally
 from classify.mapping.engines import Engine, Threads
 from classify.mapping.finish import Delivery, deliver
 from classify.mapping.tidy import AS_IT_IS, TidyOptions
@@ -129,8 +128,8 @@ def classify_scene(
     return MapResult(
         files=delivered.files,
         areas=delivered.areas,
-        unmapped_pixels=sum(int(tally.pixels[NO_CLASS]) for tally in delivered.tallies),
-        unmapped_m2=math.fsum(tally.area_m2[NO_CLASS] for tally in delivered.tallies),
+        unmapped_pixels=delivered.unmapped.pixels,
+        unmapped_m2=delivered.unmapped.area_m2,
         resumed_blocks=resumed,
         unreadable_blocks=sum(bool(tally.unreadable) for tally in delivered.tallies),
         warnings=(*engine.warnings, *_unreadable(delivered.tallies, windows)),
@@ -187,7 +186,7 @@ def origin_digest(model: TrainedModel, scene: Scene, options: MapOptions, classe
 
 def _origin(work: BlockWork) -> dict[str, Any]:
     """What a stored block is made from, as plain data: if any of it changes, blocks are made anew."""
-    scene, card = work.scene, work.model.card
+    scene, card, reach = work.scene, work.model.card, work.model.reach
     files = {
         path: _stamp(path) for path in sorted({b.path for b in scene.bands} | {m.path for m in scene.masks.values()})
     }
@@ -197,7 +196,7 @@ def _origin(work: BlockWork) -> dict[str, Any]:
         "model": card.get("model_sha256") or joblib.hash(work.model.estimator),
         "calibration": card["calibration"]["temperature"],
         "recipe": hashlib.sha256(json.dumps(work.model.recipe.to_json(), sort_keys=True).encode()).hexdigest(),
-        "reach": joblib.hash(work.model.reach) if "reach" in work.layers else None,
+        "reach": hashlib.sha256(reach.to_bytes()).hexdigest() if reach and "reach" in work.layers else None,
         "scene": hashlib.sha256(described.encode()).hexdigest(),
         "files": files,
         "skip_unreadable": work.skip_unreadable,

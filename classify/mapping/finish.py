@@ -2,16 +2,14 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 
-import numpy as np
 import pandas as pd
 
 from classify.files import replacing
-from classify.mapping.blocks import NO_CLASS, NO_PERCENT, LayerName, Tally, tally
+from classify.mapping.blocks import NO_CLASS, NO_PERCENT, Count, LayerName, Tally, add_up, tally
 from classify.mapping.byte_raster import ByteRaster
 from classify.mapping.tidy import TidyOptions, tidy
 from classify.mapping.unfinished import Unfinished, write_errors
@@ -37,10 +35,11 @@ class Delivery:
 
 @dataclass(frozen=True, slots=True)
 class Delivered:
-    """Paths by layer, areas by class, and tallies of the delivered map by block."""
+    """Paths by layer, areas by class, what is without a class, and tallies of the delivered map by block."""
 
     files: Mapping[str, Path]
     areas: pd.DataFrame
+    unmapped: Count
     tallies: Sequence[Tally]
 
 
@@ -68,10 +67,11 @@ def deliver(
         files["polygons"] = folder / "cover.gpkg"
         write_polygons(delivered["cover"][0], files["polygons"], wanted.classes, wanted.area_unit, progress)
     _remove_old(folder, files)
-    areas = _area_table(tallies, wanted.classes, wanted.area_unit, reach="reach" in store.layers)
+    total = add_up(tallies)
+    areas = _area_table(total, wanted.classes, wanted.area_unit, reach="reach" in store.layers)
     with replacing(folder / "areas.csv") as temporary:
         areas.to_csv(temporary, index=False, lineterminator="\n")
-    return Delivered(files, areas, tallies)
+    return Delivered(files, areas, total.get(NO_CLASS, Count(NO_CLASS, 0, 0.0, 0)), tallies)
 
 
 def layer_of(name: LayerName, classes: Sequence[ClassSettings]) -> Layer:
@@ -113,11 +113,10 @@ def _remove_old(folder: Path, files: Mapping[str, Path]) -> None:
             (folder / f"{name}.aux.xml").unlink(missing_ok=True)
 
 
-def _area_table(tallies: Sequence[Tally], classes: Sequence[ClassSettings], unit: str, *, reach: bool) -> pd.DataFrame:
-    rows = []
-    pixels, beyond = (np.sum([getattr(t, name) for t in tallies], axis=0) for name in ("pixels", "beyond"))
-    for c in classes:
-        area_m2 = math.fsum(t.area_m2[c.code] for t in tallies)
-        rows.append((c.code, c.name, pixels[c.code], area_m2, area_m2 / M2_PER_UNIT[unit], unit, beyond[c.code]))
+def _area_table(
+    total: Mapping[int, Count], classes: Sequence[ClassSettings], unit: str, *, reach: bool
+) -> pd.DataFrame:
+    found = [(c, total.get(c.code, Count(c.code, 0, 0.0, 0))) for c in classes]
+    rows = [(c.code, c.name, n.pixels, n.area_m2, n.area_m2 / M2_PER_UNIT[unit], unit, n.beyond) for c, n in found]
     table = pd.DataFrame(rows, columns=["code", "name", "pixels", "area_m2", "area", "unit", "beyond_reach_pixels"])
     return table if reach else table.drop(columns="beyond_reach_pixels")

@@ -13,6 +13,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Literal
 
+import rasterio
 import rasterio.shutil
 from rasterio.errors import RasterioError
 
@@ -22,6 +23,8 @@ from classify.mapping.byte_raster import ByteRaster
 from classify.threads import aside
 
 TILE_PX = 512
+# Decoded blocks that are kept while a file is copied: a row of tiles; more does not make it faster.
+_CACHE_BYTES = 32 << 20
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,11 +59,12 @@ def write_cog(source: ByteRaster, target: Path, layer: Layer) -> None:
 
 
 def _copy(source: Path, target: Path, layer: Layer) -> None:
-    # Deflate rather than zstd in the delivered file: every reader of GeoTIFF has it.
-    rasterio.shutil.copy(
-        source, target, driver="COG", compress="deflate", blocksize=TILE_PX, overview_resampling=layer.overviews,
-        overview_compress="deflate", bigtiff="if_safer", num_threads=1,
-    )  # fmt: skip
+    with rasterio.Env(GDAL_CACHEMAX=_CACHE_BYTES):
+        # Deflate rather than zstd in the delivered file: every reader of GeoTIFF has it.
+        rasterio.shutil.copy(
+            source, target, driver="COG", compress="deflate", blocksize=TILE_PX, overview_resampling=layer.overviews,
+            overview_compress="deflate", bigtiff="if_safer", num_threads=1,
+        )  # fmt: skip
 
 
 def _virtual_raster(source: ByteRaster, layer: Layer) -> bytes:
