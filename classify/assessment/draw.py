@@ -254,7 +254,7 @@ def _notes(options: DrawOptions) -> tuple[str, ...]:
         notes.append(
             f"Segments of {options.segment_px} x {options.segment_px} pixels were drawn with probability proportional "
             "to the ground area of a pixel there, so that shares of labelled pixels stand for shares of the ground; "
-            "all pixels of a segment that belong to the population are labelled, and estimates take each segment as one unit."
+            "all pixels of a segment in the population are labelled, and estimates take each segment as one unit."
         )
     return tuple(notes)
 
