@@ -17,7 +17,7 @@ from classify.features import Recipe, build_recipe, fit_recipe, scene_facts
 from classify.features.spectra import fit_projection, smoothing_weights
 from classify.raster.scene import Scene, open_scene
 from classify.settings import FeatureSettings, load_project
-from classify.settings.model import ComponentSettings
+from classify.settings.features import ComponentSettings
 
 BANDS, HEIGHT, WIDTH = 12, 150, 170
 NM = [500 + 20 * band for band in range(BANDS)]

@@ -14,7 +14,7 @@ from classify.errors import ModelError, SettingsError
 from classify.features import Recipe, SceneFacts, build_recipe, dips, recipe_findings
 from classify.features.absorption import DIP_MEASURES, EDGE_MEASURES
 from classify.settings import FeatureSettings
-from classify.settings.model import TerrainStatistic, TextureStatistic
+from classify.settings.features import TerrainStatistic, TextureStatistic
 
 ROLES = ("blue", "green", "red", "nir", "swir_1", "swir_2")
 CUBE = {f"c{nm}": float(nm) for nm in range(650, 2420, 20)}

@@ -30,7 +30,7 @@ from numpy.typing import NDArray
 
 from classify.errors import SettingsError
 from classify.features.compiled import compiled
-from classify.settings.model import AbsorptionMeasure
+from classify.settings.features import AbsorptionMeasure
 from classify.settings.presets import configs_folder, read_toml
 
 DIP_MEASURES: tuple[AbsorptionMeasure, ...] = ("depth", "area", "position", "asymmetry")

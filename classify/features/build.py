@@ -16,7 +16,7 @@ from classify.features.neighbourhood import terrain_step, texture_steps
 from classify.features.recipe import Recipe
 from classify.features.spectra import smoothing_weights
 from classify.features.steps import ComponentStep, FormulaStep, SmoothedBand, Step
-from classify.settings.model import FeatureSettings
+from classify.settings.features import FeatureSettings
 
 
 def build_recipe(settings: FeatureSettings, roles: Collection[str], facts: SceneFacts = NO_FACTS) -> Recipe:

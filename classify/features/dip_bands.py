@@ -16,7 +16,7 @@ from classify.features.absorption import (
     RedEdgeStep,
     dips,
 )
-from classify.settings.model import AbsorptionSettings
+from classify.settings.features import AbsorptionSettings
 
 # A shoulder may lie this share of the dip's width beside where it should, and a dip needs so many bands within.
 _SHOULDER_SHARE = 0.2

@@ -20,7 +20,7 @@ from classify.features.steps import ComponentStep
 from classify.progress import SILENT, Progress
 from classify.raster.scene import Scene
 from classify.settings import Project
-from classify.settings.model import ComponentSettings
+from classify.settings.features import ComponentSettings
 
 WINDOW_PX = 64
 SAMPLE_PX = 100_000

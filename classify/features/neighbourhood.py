@@ -10,7 +10,7 @@ from classify.features.facts import SceneFacts
 from classify.features.indices import find_index
 from classify.features.terrain import TerrainStep
 from classify.features.texture import CO_OCCURRENCE, TextureStep
-from classify.settings.model import TerrainSettings, TextureSettings
+from classify.settings.features import TerrainSettings, TextureSettings
 
 
 def texture_steps(

@@ -11,7 +11,7 @@ from scipy.linalg import eigh
 from threadpoolctl import threadpool_limits
 
 from classify.errors import DataError
-from classify.settings.model import ComponentSettings
+from classify.settings.features import ComponentSettings
 
 # Weights of bands are kept to so many significant digits: far finer than reflectance is known.
 _DIGITS = 12

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from classify.features.compiled import compiled
 from classify.features.texture import row_sums
-from classify.settings.model import TerrainStatistic
+from classify.settings.features import TerrainStatistic
 
 # East and north metres per column, then per row: of a pixel's right-hand and lower neighbour.
 PixelVectors = tuple[float, float, float, float]

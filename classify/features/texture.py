@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from classify.features.co_occurrence import entropy, grey_levels, pair_statistics
 from classify.features.compiled import compiled
-from classify.settings.model import TextureStatistic
+from classify.settings.features import TextureStatistic
 
 MOMENTS: tuple[TextureStatistic, ...] = ("mean", "standard deviation", "range")
 CO_OCCURRENCE: tuple[TextureStatistic, ...] = ("contrast", "homogeneity", "entropy", "correlation")

@@ -1,23 +1,25 @@
 """The project file as typed models, and the presets that ship in configs/."""
 
+from classify.settings.features import FeatureSettings
 from classify.settings.load import load_project, parse_project, project_schema
 from classify.settings.model import (
-    AncillarySettings,
-    BandSettings,
     ClassSettings,
-    CompositeSettings,
-    DateSettings,
-    FeatureSettings,
     MapSettings,
-    MaskSettings,
     ModelSettings,
     Project,
     ReferenceSettings,
     ReportSettings,
-    SceneSettings,
     TrainingSettings,
 )
 from classify.settings.presets import configs_folder, load_preset, preset_names
+from classify.settings.scene import (
+    AncillarySettings,
+    BandSettings,
+    CompositeSettings,
+    DateSettings,
+    MaskSettings,
+    SceneSettings,
+)
 
 __all__ = [
     "AncillarySettings",

@@ -38,6 +38,7 @@ def load_preset(kind: PresetKind, name: str) -> dict[str, Any]:
             return read_toml(configs_folder() / kind / f"{known}.toml")
     raise SettingsError(f"no {kind[:-1]} preset is called {name!r}", fix=f"choose one of: {', '.join(names) or 'none'}")
 
+
 _MOST_BYTES = 4 << 20
 
 
