@@ -24,32 +24,34 @@ _MOST_JSON_BYTES = 256 << 20
 
 
 @contextmanager
-def replacing(target: Path) -> Iterator[Path]:
+def replacing(target: Path, *failures: type[Exception]) -> Iterator[Path]:
     """A temporary path beside `target`, with the same extension; renamed over it when the context ends well.
 
     The caller writes the file and closes it inside the context. On any exception the temporary file is removed and
-    `target` is untouched. Raises OutputError when the folder or the file cannot be written.
+    `target` is untouched. Raises OutputError when the folder or the file cannot be written: on OSError, and on
+    `failures`, by which libraries say so.
     """
     temporary = target.with_name(f".{target.stem}.{uuid4().hex[:8]}{TEMPORARY_SUFFIX}{target.suffix}")
     try:
-        with write_errors(target):
+        with write_errors(target, *failures):
             target.parent.mkdir(parents=True, exist_ok=True)
             yield temporary
             _flush(temporary)
             temporary.replace(target)
-            _flush_folder(target.parent)
+            flush_folder(target.parent)
     finally:
         with suppress(OSError):
             temporary.unlink(missing_ok=True)
 
 
 @contextmanager
-def write_errors(target: Path) -> Iterator[None]:
-    """Turn failures to write into an OutputError about `target`."""
+def write_errors(target: Path, *failures: type[Exception]) -> Iterator[None]:
+    """Turn failures to write (OSError and `failures`) into an OutputError about `target`."""
+    meant: tuple[type[Exception], ...] = (OSError, *failures)
     try:
         yield
-    except OSError as error:
-        reason = error.strerror or str(error)
+    except meant as error:
+        reason = getattr(error, "strerror", None) or str(error)
         raise OutputError(
             f"cannot be written: {reason}", where=str(target), fix="free some space or choose a folder you may write to"
         ) from error
@@ -131,7 +133,8 @@ def _flush(path: Path) -> None:
         os.fsync(stream.fileno())
 
 
-def _flush_folder(folder: Path) -> None:
+def flush_folder(folder: Path) -> None:
+    """See to it that names in a folder are on disk."""
     # Windows cannot open a folder; there the rename itself is durable enough.
     if os.name == "nt":
         return

@@ -62,7 +62,7 @@ def _export(folder: Path, classes: Sequence[str]) -> Export:
         journal.close()
     kept = frame.drop(columns=[c for c in LABEL_COLUMNS if c in frame.columns])
     whole = geopandas.GeoDataFrame(kept.merge(table, on="id"), geometry="geometry", crs=frame.crs)
-    with replacing(path) as temporary:
+    with replacing(path, RuntimeError) as temporary:  # which every error of pyogrio is
         whole.to_file(temporary, layer="reference", driver="GPKG")
     counts = {str(k): int(v) for k, v in table["status"].value_counts().sort_index().items()}
     export = Export(path, counts, pairs)

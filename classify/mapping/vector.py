@@ -21,7 +21,6 @@ from rasterio.features import shapes
 from shapely.affinity import affine_transform
 from shapely.geometry import shape
 
-from classify.errors import OutputError
 from classify.files import replacing
 from classify.mapping.blocks import NO_CLASS, rounded_areas_m2
 from classify.mapping.byte_raster import ByteRaster
@@ -77,7 +76,7 @@ def write_polygons(
         waiting.clear()
 
     before = {key: pyogrio.get_gdal_config_option(key) for key in _FIXED_DATE}
-    with replacing(target) as temporary:
+    with replacing(target, RuntimeError) as temporary:  # which every error of pyogrio is
         try:
             pyogrio.set_gdal_config_options(_FIXED_DATE)
             for patch in _patches(source, progress):
@@ -86,8 +85,6 @@ def write_polygons(
                     flush(temporary)
             if waiting or not temporary.exists():
                 flush(temporary)
-        except pyogrio.errors.DataSourceError as error:
-            raise OutputError(f"cannot be written: {error}", where=str(target), fix="free some space") from error
         finally:
             pyogrio.set_gdal_config_options(before)
 

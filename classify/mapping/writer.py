@@ -15,9 +15,9 @@ from typing import Literal
 
 import rasterio
 import rasterio.shutil
+from rasterio._err import CPLE_BaseError  # GDAL's own errors, which a copy lets through as they are
 from rasterio.errors import RasterioError
 
-from classify.errors import OutputError
 from classify.files import replacing, write_bytes
 from classify.mapping.byte_raster import ByteRaster
 from classify.threads import aside
@@ -46,12 +46,10 @@ class Layer:
 def write_cog(source: ByteRaster, target: Path, layer: Layer) -> None:
     """Write `target` as a valid COG of all bytes of `source`, and class names beside it. Raises OutputError."""
     described = source.path.with_suffix(".vrt")
-    with replacing(target) as finished:
+    with replacing(target, RasterioError, CPLE_BaseError) as finished:
         try:
             described.write_bytes(_virtual_raster(source, layer))
             aside(lambda: _copy(described, finished, layer))
-        except RasterioError as error:
-            raise OutputError(f"cannot be written: {error}", where=str(target), fix="free some space") from error
         finally:
             described.unlink(missing_ok=True)
     if layer.categories:
