@@ -14,7 +14,7 @@ from training_sets import project_of, training_set
 
 from classify.models import inspect_training
 from classify.training.review import Evidence, review_training
-from classify.training.separability import jeffries_matusita, separability, transformed_divergence
+from classify.training.separability import Normal, jeffries_matusita, separability, transformed_divergence
 from classify.training.suspects import class_distances, held_out_by_polygon
 
 
@@ -34,7 +34,7 @@ def test_jeffries_matusita_is_its_defining_integral(gap: float, sd_a: float, sd_
     # Steps of a tenth of the smallest deviation: exact to rounding for a smooth function that dies away.
     x = np.linspace(-41, 41, 4_101)
     integral = integrate.trapezoid((np.sqrt(p.pdf(x)) - np.sqrt(q.pdf(x))) ** 2, x)
-    found = jeffries_matusita(one(0), square(sd_a**2), one(gap), square(sd_b**2))
+    found = jeffries_matusita(Normal.of(one(0), square(sd_a**2)), Normal.of(one(gap), square(sd_b**2)))
     assert found**2 == pytest.approx(integral, abs=1e-8)
 
 
@@ -46,17 +46,17 @@ def test_divergence_is_the_sum_of_both_relative_entropies(gap: float, sd_a: floa
     p, q = stats.norm(0, sd_a).pdf(x), stats.norm(gap, sd_b).pdf(x)
     floor = 1e-300
     divergence = stats.entropy(p + floor, q + floor) + stats.entropy(q + floor, p + floor)
-    found = transformed_divergence(one(0), square(sd_a**2), one(gap), square(sd_b**2))
+    found = transformed_divergence(Normal.of(one(0), square(sd_a**2)), Normal.of(one(gap), square(sd_b**2)))
     assert found == pytest.approx(2 * (1 - np.exp(-divergence / 8)), abs=1e-4)
 
 
 def test_limits_of_both_measures() -> None:
     """Jeffries-Matusita 0..sqrt(2), transformed divergence 0..2; the maximum for classes that do not overlap."""
-    same = np.zeros(3), np.eye(3)
-    far = np.full(3, 1e3), np.eye(3)
-    assert jeffries_matusita(*same, *same) == transformed_divergence(*same, *same) == 0
-    assert jeffries_matusita(*same, *far) == pytest.approx(np.sqrt(2))
-    assert transformed_divergence(*same, *far) == pytest.approx(2)
+    same = Normal.of(np.zeros(3), np.eye(3))
+    far = Normal.of(np.full(3, 1e3), np.eye(3))
+    assert jeffries_matusita(same, same) == transformed_divergence(same, same) == 0
+    assert jeffries_matusita(same, far) == pytest.approx(np.sqrt(2))
+    assert transformed_divergence(same, far) == pytest.approx(2)
 
 
 @given(seed=st.integers(0, 500))

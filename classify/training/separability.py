@@ -14,7 +14,9 @@ from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.linalg import cho_factor, cho_solve
 from sklearn.covariance import ledoit_wolf
+from threadpoolctl import threadpool_limits
 
 from classify.training.dataset import TrainingSet
 from classify.training.draws import even_draw
@@ -42,21 +44,42 @@ class Pair:
         return "weak" if self.jeffries_matusita < _FAIR else "fair" if self.jeffries_matusita < _GOOD else "good"
 
 
-def jeffries_matusita(mean_a: Array, cov_a: Array, mean_b: Array, cov_b: Array) -> float:
-    """Distance of two normal distributions, 0..sqrt(2). Means (f,), covariances (f, f), positive definite."""
-    gap, middle = mean_a - mean_b, (cov_a + cov_b) / 2
-    bhattacharyya = gap @ np.linalg.solve(middle, gap) / 8 + 0.5 * (
-        _log_det(middle) - 0.5 * (_log_det(cov_a) + _log_det(cov_b))
-    )
-    return math.sqrt(2 * -math.expm1(-max(float(bhattacharyya), 0.0)))
+@dataclass(frozen=True, eq=False)
+class Normal:
+    """A class as a normal distribution: mean (f,), covariance (f, f), positive definite, its inverse and the logarithm
+    of its determinant."""
+
+    mean: Array
+    covariance: Array
+    inverse: Array
+    log_det: float
+
+    @classmethod
+    def of(cls, mean: Array, covariance: Array) -> Normal:
+        """With what follows from the two."""
+        return cls(mean, covariance, np.asarray(np.linalg.inv(covariance)), float(np.linalg.slogdet(covariance)[1]))
 
 
-def transformed_divergence(mean_a: Array, cov_a: Array, mean_b: Array, cov_b: Array) -> float:
-    """Transformed divergence of two normal distributions, 0..2. Means (f,), covariances (f, f), positive definite."""
-    gap = mean_a - mean_b
-    inverse_a, inverse_b = np.linalg.inv(cov_a), np.linalg.inv(cov_b)
-    divergence = 0.5 * np.trace((cov_a - cov_b) @ (inverse_b - inverse_a)) + 0.5 * gap @ (inverse_a + inverse_b) @ gap
+def jeffries_matusita(a: Normal, b: Normal) -> float:
+    """Distance of two normal distributions, 0..sqrt(2)."""
+    gap = a.mean - b.mean
+    middle, lower = cho_factor((a.covariance + b.covariance) / 2, lower=True)
+    log_det = 2 * np.log(np.diag(middle)).sum()
+    bhattacharyya = gap @ cho_solve((middle, lower), gap) / 8 + 0.5 * (log_det - 0.5 * (a.log_det + b.log_det))
+    return float(_from_bhattacharyya(bhattacharyya))
+
+
+def transformed_divergence(a: Normal, b: Normal) -> float:
+    """Transformed divergence of two normal distributions, 0..2."""
+    gap = a.mean - b.mean
+    # The trace of a product of two matrices, the second symmetric, is the sum over their elements.
+    trace = np.sum((a.covariance - b.covariance) * (b.inverse - a.inverse))
+    divergence = 0.5 * trace + 0.5 * gap @ (a.inverse + b.inverse) @ gap
     return 2 * -math.expm1(-max(float(divergence), 0.0) / 8)
+
+
+def _from_bhattacharyya(distance: Array | np.float64) -> Array:
+    return np.asarray(np.sqrt(2 * -np.expm1(-np.maximum(distance, 0.0))))
 
 
 def separability(training: TrainingSet, seed: int = 0) -> tuple[Pair, ...]:
@@ -75,31 +98,36 @@ def separability(training: TrainingSet, seed: int = 0) -> tuple[Pair, ...]:
     if not changing.any():
         return ()
     names = np.array(training.feature_names)[changing]
-    moments = {code: _moments(part[:, changing] / within[changing]) for code, part in parts.items() if len(part) > 1}
-    pairs = [_pair(a, b, moments[a], moments[b], names) for a, b in combinations(sorted(moments), 2)]
+    # Matrices are small: the linear algebra library's threads would wait for each other most of the time.
+    with threadpool_limits(limits=1):
+        moments = {
+            code: _moments(part[:, changing] / within[changing]) for code, part in parts.items() if len(part) > 1
+        }
+        pairs = [_pair(a, b, moments[a], moments[b], names) for a, b in combinations(sorted(moments), 2)]
     return tuple(sorted(pairs, key=lambda pair: (pair.jeffries_matusita, pair.a, pair.b)))
 
 
-def _moments(part: Array) -> tuple[Array, Array]:
+def _moments(part: Array) -> Normal:
     shrunk = ledoit_wolf(part)[0]
     # A class may be constant in a feature in which others are not; its covariance must stay invertible.
-    return part.mean(axis=0), shrunk + 1e-6 * np.eye(part.shape[1])
+    return Normal.of(part.mean(axis=0), shrunk + 1e-6 * np.eye(part.shape[1]))
 
 
-def _pair(a: int, b: int, first: tuple[Array, Array], second: tuple[Array, Array], names: NDArray[np.str_]) -> Pair:
-    alone = [
-        jeffries_matusita(first[0][[f]], first[1][[f]][:, [f]], second[0][[f]], second[1][[f]][:, [f]])
-        for f in range(len(names))
-    ]
+def _pair(a: int, b: int, first: Normal, second: Normal, names: NDArray[np.str_]) -> Pair:
+    alone = _each_alone(first, second)
     best = np.argsort(alone, kind="stable")[::-1][:3]
     return Pair(
         a,
         b,
-        jeffries_matusita(*first, *second),
-        transformed_divergence(*first, *second),
-        tuple((str(names[f]), alone[f]) for f in best),
+        jeffries_matusita(first, second),
+        transformed_divergence(first, second),
+        tuple((str(names[f]), float(alone[f])) for f in best),
     )
 
 
-def _log_det(matrix: Array) -> float:
-    return float(np.linalg.slogdet(matrix)[1])
+def _each_alone(first: Normal, second: Normal) -> Array:
+    """Jeffries-Matusita distance by each feature on its own, float64 (f,)."""
+    one, other = np.diag(first.covariance), np.diag(second.covariance)
+    middle = (one + other) / 2
+    gap = first.mean - second.mean
+    return _from_bhattacharyya(gap**2 / middle / 8 + 0.5 * np.log(middle / np.sqrt(one * other)))
