@@ -65,12 +65,12 @@ def test_both_measures_are_symmetric_and_blind_to_units(seed: int) -> None:
     random = np.random.default_rng(seed)
     a, b = (random.normal(size=(9, 4)) for _ in range(2))
     mean_a, mean_b = random.normal(size=4), random.normal(size=4)
-    first, second = (mean_a, a.T @ a / 9), (mean_b, b.T @ b / 9)
+    first, second = Normal.of(mean_a, a.T @ a / 9), Normal.of(mean_b, b.T @ b / 9)
     units = random.normal(size=(4, 4)) + 3 * np.eye(4)
-    turned = [(units @ mean, units @ cov @ units.T) for mean, cov in (first, second)]
+    turned = [Normal.of(units @ one.mean, units @ one.covariance @ units.T) for one in (first, second)]
     for measure in (jeffries_matusita, transformed_divergence):
-        assert measure(*first, *second) == pytest.approx(measure(*second, *first), abs=1e-9)
-        assert measure(*first, *second) == pytest.approx(measure(*turned[0], *turned[1]), abs=1e-6)
+        assert measure(first, second) == pytest.approx(measure(second, first), abs=1e-9)
+        assert measure(first, second) == pytest.approx(measure(*turned), abs=1e-6)
 
 
 def test_pairs_are_ranked_and_the_parting_feature_is_named() -> None:
