@@ -17,6 +17,7 @@ from small_project import make_small_project
 from classify.cli.main import cli
 from classify.errors import DataError
 from classify.mapping.many import find_scenes
+from classify.raster.stac import item_files
 from classify.settings import load_project
 from classify.workflow import Job, map_scenes, run
 
@@ -132,6 +133,20 @@ def test_scenes_are_found_in_items_lists_and_folders(project, scenes, tmp_path):
     assert result.mapped == ("whole-item",)
     written = json.loads((tmp_path / "maps" / "whole-item" / "item.json").read_text())
     assert written["properties"]["datetime"] == "2024-06-11T10:00:00Z"
+
+
+def test_bands_are_found_by_what_an_item_says_of_them(tmp_path):
+    assets = {
+        "coarse": {"href": "a.tif", "gsd": 20, "eo:bands": [{"common_name": "red"}]},
+        "fine": {"href": "b.tif", "gsd": 10, "bands": [{"eo:common_name": "red"}]},
+        "both": {"href": "c.tif", "eo:bands": [{"common_name": "nir"}, {"common_name": "green"}]},
+        "water": {"href": "d.tif"},
+    }
+    described = {"type": "Feature", "id": "x", "properties": {}, "assets": assets}
+    wanted = {"scene/r.tif": "red", "scene/n.tif": "nir", "scene/water.tif": None}
+    files, problems = item_files(described, str(tmp_path / "x.json"), wanted)
+    assert files == {"scene/r.tif": str(tmp_path / "b.tif"), "scene/water.tif": str(tmp_path / "d.tif")}
+    assert [problem.what for problem in problems] == ["the item has no asset for nir"]
 
 
 @pytest.mark.parametrize(

@@ -17,8 +17,8 @@ from classify.mapping.stac import ItemFacts, identifier, write_collection, write
 from classify.models import TrainedModel
 from classify.progress import SILENT, Progress
 from classify.raster.guard import is_remote
-from classify.raster.remote import resolve
 from classify.raster.scene import open_scene
+from classify.raster.stac import acquired, item_files, read_items
 from classify.settings import Project, SceneSettings
 
 ITEM_FILE, COLLECTION_FILE, SUMMARY_FILE = "item.json", "collection.json", "areas.csv"
@@ -219,60 +219,17 @@ def _in_folder(folder: Path, settings: SceneSettings) -> SceneFiles | None:
 
 def _in_items(path: Path, settings: SceneSettings) -> Iterator[SceneFiles]:
     try:
-        content = read_json(path)
+        items = read_items(str(path))
     except DataError:
         if path.suffix == ".json":
             raise
         return
-    items = content.get("features", []) if content.get("type") == "FeatureCollection" else [content]
+    roles: dict[str, list[str]] = {}
+    for role, band in settings.bands.items():
+        roles.setdefault(band.file, []).append(role)
+    wanted = {
+        written: held[0] if len(held := roles.get(written, [])) == 1 else None for written in _names(settings).values()
+    }
     for item in items:
-        if isinstance(item, dict) and item.get("type") == "Feature" and isinstance(item.get("assets"), dict):
-            yield _from_item(item, path, settings)
-
-
-def _from_item(item: Mapping[str, Any], path: Path, settings: SceneSettings) -> SceneFiles:
-    """Assets go to bands by key, by the name their band is commonly known under, or by file name.
-
-    An item is somebody else's file: it may lead into its own folder and to public addresses, nowhere else.
-    """
-    assets = {key: asset for key, asset in item["assets"].items() if isinstance(asset, dict)}
-    hrefs: dict[str, str] = {}
-    for key, asset in assets.items():
-        href = str(asset.get("href", ""))
-        for name in (Path(href).name, key, *_common_names(asset)):
-            hrefs.setdefault(str(name), href)
-    roles = {band.file: role for role, band in settings.bands.items()}
-    files: dict[str, str] = {}
-    problems: list[Problem] = []
-    for name, written in _names(settings).items():
-        keys = (name, roles.get(written, name), Path(name).stem)
-        given = next((hrefs[key] for key in keys if key in hrefs), None)
-        if given is None:
-            what = f"the item has no asset for {roles.get(written, name)}"
-            problems.append(Problem(what, str(path), f"it has: {', '.join(assets)}"))
-            continue
-        try:
-            files[written] = resolve(given, str(path))
-        except DataError as error:
-            problems.extend(error.problems)
-    return SceneFiles(identifier(str(item.get("id", path.stem))), str(path), files, _when(item), tuple(problems))
-
-
-def _common_names(asset: Mapping[str, Any]) -> list[str]:
-    """Names that the only band of an asset is commonly known under."""
-    bands = asset.get("bands") or asset.get("eo:bands")
-    if not isinstance(bands, list) or len(bands) != 1 or not isinstance(bands[0], dict):
-        return []
-    return [str(bands[0][key]) for key in ("eo:common_name", "common_name") if key in bands[0]]
-
-
-def _when(item: Mapping[str, Any]) -> datetime | None:
-    properties = item.get("properties")
-    if not isinstance(properties, dict):
-        return None
-    text = properties.get("datetime") or properties.get("start_datetime")
-    try:
-        when = datetime.fromisoformat(str(text).replace("Z", "+00:00"))
-    except ValueError:
-        return None
-    return when if when.tzinfo else when.replace(tzinfo=UTC)
+        files, problems = item_files(item, str(path), wanted)
+        yield SceneFiles(identifier(str(item.get("id", path.stem))), str(path), files, acquired(item), tuple(problems))

@@ -7,10 +7,11 @@ import re
 import urllib.parse
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
+from datetime import UTC, datetime
 from pathlib import Path, PurePosixPath
 from typing import Any
 
-from classify.errors import DataError
+from classify.errors import DataError, Problem
 from classify.raster.remote import fetch, read_local, resolve
 from classify.raster.roles import holds, red_edge_role, role_in_name, role_of_word
 from classify.raster.sensors import Sensor, load_sensor
@@ -32,18 +33,38 @@ def looks_like_item(source: str) -> bool:
     return Path(source).suffix.lower() in (".json", ".geojson")
 
 
+def read_items(source: str) -> list[Json]:
+    """The items of a document: itself, or those of a feature collection; none of any other JSON.
+
+    Raises DataError when it cannot be reached or is no JSON.
+    """
+    content = _read(source)
+    listed = _list(content.get("features")) if content.get("type") == "FeatureCollection" else [content]
+    return [item for item in listed if _is_item(item)]
+
+
 def read_item(source: str) -> Json:
     """The item. Raises DataError when it cannot be reached or is no STAC item."""
-    raw = fetch(source) if "://" in source else read_local(Path(source))
-    try:
-        item = json.loads(raw)
-    except (UnicodeDecodeError, json.JSONDecodeError, RecursionError) as error:
-        raise DataError(f"this is not valid JSON: {error}", where=source) from error
-    kind = item.get("type") if isinstance(item, dict) else None
-    if kind != "Feature" or not isinstance(item.get("assets"), dict):
+    item = _read(source)
+    if not _is_item(item):
+        kind = item.get("type")
         found = f"a STAC {kind}" if kind in ("Catalog", "Collection") else "some other JSON"
         raise DataError(f"a STAC item is expected, but this is {found}", where=source, fix="name one item of it")
-    return dict(item)
+    return item
+
+
+def _read(source: str) -> Json:
+    """A JSON object; empty if the document holds anything else."""
+    raw = fetch(source) if "://" in source else read_local(Path(source))
+    try:
+        content = json.loads(raw)
+    except (UnicodeDecodeError, json.JSONDecodeError, RecursionError) as error:
+        raise DataError(f"this is not valid JSON: {error}", where=source) from error
+    return content if isinstance(content, dict) else {}
+
+
+def _is_item(content: object) -> bool:
+    return isinstance(content, dict) and content.get("type") == "Feature" and isinstance(content.get("assets"), dict)
 
 
 def item_draft(item: Json, source: str) -> SceneDraft:
@@ -81,6 +102,52 @@ def item_draft(item: Json, source: str) -> SceneDraft:
         mask=mask,
         assumptions=tuple(notes),
     )
+
+
+def item_files(item: Json, source: str, wanted: Mapping[str, str | None]) -> tuple[dict[str, str], list[Problem]]:
+    """Where an item keeps files that are wanted by name, and why some are not to be had.
+
+    wanted: file as written -> role, if it is the file of one band. An asset fits by its file's name, by its key, or as
+    the only band of that role. It may lead into the item's own folder and to public addresses, nowhere else.
+    """
+    assets = {key: asset for key, asset in item["assets"].items() if isinstance(asset, dict)}
+    sensor_name = _sensor_of(item)
+    sensor = load_sensor(sensor_name) if sensor_name else None
+    hrefs: dict[str, str] = {}
+    for key, asset in sorted(assets.items(), key=lambda pair: _pixel_size(pair[1])):
+        href = str(asset.get("href", ""))
+        single = _is_raster(asset) and len(_band_tables(asset)) <= 1
+        roles = [band.role for band in _asset_bands(key, asset, sensor)] if single else []
+        for name in (PurePosixPath(href).name, key, *roles):
+            hrefs.setdefault(name, href)
+    files: dict[str, str] = {}
+    problems: list[Problem] = []
+    for written, role in wanted.items():
+        path = Path(written)
+        given = next((hrefs[name] for name in (path.name, role, path.stem) if name in hrefs), None)
+        if given is None:
+            problems.append(
+                Problem(f"the item has no asset for {role or path.name}", source, f"it has: {', '.join(assets)}")
+            )
+            continue
+        try:
+            files[written] = resolve(given, source)
+        except DataError as error:
+            problems.extend(error.problems)
+    return files, problems
+
+
+def acquired(item: Json) -> datetime | None:
+    """When the scene of an item was taken, with a time zone; None if it does not say."""
+    properties = item.get("properties")
+    if not isinstance(properties, dict):
+        return None
+    text = properties.get("datetime") or properties.get("start_datetime")
+    try:
+        when = datetime.fromisoformat(str(text).replace("Z", "+00:00"))
+    except ValueError:
+        return None
+    return when if when.tzinfo else when.replace(tzinfo=UTC)
 
 
 # --- what an item says ----------------------------------------------------------------------------------------------
