@@ -20,8 +20,9 @@ from typing import Any
 
 from classify import __version__
 from classify.errors import DataError, Problem
-from classify.files import read_json, sha256, write_json
+from classify.files import sha256, write_json
 from classify.settings import Project
+from classify.shapes import RunRecord, read_shaped
 
 # A file that changed so shortly ago can change again without another time stamp: the coarsest clocks of disks step by
 # two seconds.
@@ -57,7 +58,7 @@ class Record:
         if not self._path.is_file():
             return {}
         try:
-            return read_json(self._path)
+            return read_shaped(self._path, RunRecord, fix="")
         except DataError:
             # A damaged record only means that every stage counts as stale; it is written anew by the next run.
             return {}

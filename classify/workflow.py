@@ -24,6 +24,7 @@ from classify.mapping.engines import cluster
 from classify.mapping.many import ManyResult, classify_many, find_scenes, time_of
 from classify.mapping.stac import ItemFacts, identifier, write_item
 from classify.models import check_scene, fit_model, inspect_training, load_model, save_model
+from classify.models.card_check import check_card
 from classify.progress import SILENT, Progress
 from classify.raster.scene import open_scene
 from classify.record import Record, Snapshot
@@ -123,10 +124,11 @@ def model_facts(project: Project) -> dict[str, Any] | None:
     if not path.is_file():
         return None
     card = read_json(path)
+    check_card(card, str(path))
     return {
-        "kind": card.get("kind"), "needs": card.get("needs", []), "features": card.get("features", []),
-        "classes": [c.get("name") for c in card.get("classes", [])], "versions": card.get("versions", {}),
-        "screening_accuracy": card.get("screening", {}).get("screening_accuracy"),
+        "kind": card["kind"], "needs": card["needs"], "features": card["features"],
+        "classes": [c["name"] for c in card["classes"]], "versions": card["versions"],
+        "screening_accuracy": card["screening"].get("screening_accuracy"),
     }  # fmt: skip
 
 

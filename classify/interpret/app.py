@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import json
 import re
-import sqlite3
 from collections.abc import Awaitable, Callable, Mapping
 from pathlib import Path
 from typing import Any
@@ -47,7 +46,7 @@ def make_app(session: Session, pictures: Pictures, title: str, access: Access) -
         Route("/api/label/{id}", desk.label, methods=["POST"]),
         Route("/api/undo", desk.undo, methods=["POST"]),
     ]
-    app = Starlette(routes=routes, exception_handlers={LandassayError: _failure, sqlite3.Error: _failure})
+    app = Starlette(routes=routes, exception_handlers={LandassayError: _failure})
     app.router.redirect_slashes = False
     app.add_middleware(Guard, access=access)
     return app
@@ -140,9 +139,8 @@ class _Desk:
 
 async def _failure(_: Request, error: Exception) -> Response:
     """A scene or journal that cannot be read or written now: said on the page; no label is taken for stored."""
-    if isinstance(error, LandassayError):
-        return _refusal(error.problems[0].what, 500)
-    return _refusal(f"the labels cannot be read or written: {error}", 500)
+    assert isinstance(error, LandassayError)
+    return _refusal(error.problems[0].what, 500)
 
 
 async def _body(request: Request) -> dict[str, Any] | None:

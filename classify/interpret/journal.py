@@ -17,6 +17,7 @@ from pathlib import Path
 from typing import Any, Literal, get_args
 
 from classify.errors import DataError, SampleError
+from classify.text import unseen
 
 Confidence = Literal["high", "medium", "low"]
 CONFIDENCES: tuple[Confidence, ...] = get_args(Confidence)
@@ -122,24 +123,26 @@ class Journal:
 
     def standing(self) -> dict[int, Standing]:
         """What holds for every point that this journal's author has said anything of."""
-        with self._lock:
-            return _standings(self._db, self.role, self.interpreter)
+        with self._at_work() as db:
+            return _standings(db, self.role, self.interpreter)
 
     def interpreters(self) -> list[str]:
         """Names of all who have labelled points, in the order of their names."""
-        with self._lock:
-            rows = self._db.execute("SELECT DISTINCT interpreter FROM entry WHERE role = 'interpreter' ORDER BY 1")
-            return [str(row[0]) for row in rows]
+        with self._at_work() as db:
+            rows = db.execute("SELECT DISTINCT interpreter FROM entry WHERE role = 'interpreter' ORDER BY 1").fetchall()
+            if strange := [row[0] for row in rows if not isinstance(row[0], str) or unseen(row[0])]:
+                raise sqlite3.DataError(f"{str(strange[0])[:80]!r} is no name of an interpreter")
+            return [row[0] for row in rows]
 
     def standing_of(self, interpreter: str) -> dict[int, Standing]:
         """What holds by another interpreter."""
-        with self._lock:
-            return _standings(self._db, "interpreter", interpreter)
+        with self._at_work() as db:
+            return _standings(db, "interpreter", interpreter)
 
     def settled(self) -> dict[int, Standing]:
         """What holds of disputes that were settled, by whomever did so last."""
-        with self._lock:
-            return _standings(self._db, "settling", None)
+        with self._at_work() as db:
+            return _standings(db, "settling", None)
 
     @contextmanager
     def _entry(self, point: int, seen: int) -> Iterator[sqlite3.Connection]:
@@ -155,26 +158,45 @@ class Journal:
     @contextmanager
     def _transaction(self) -> Iterator[sqlite3.Connection]:
         """The write lock is taken before anything is read; the commit returns when the data are on disk."""
+        with self._at_work() as db:
+            db.execute("BEGIN IMMEDIATE")
+            try:
+                yield db
+                db.execute("COMMIT")
+            except BaseException:
+                if db.in_transaction:
+                    db.execute("ROLLBACK")
+                raise
+
+    @contextmanager
+    def _at_work(self) -> Iterator[sqlite3.Connection]:
+        """The file, for one thread at a time. Raises DataError for one held by another program, or damaged."""
         with self._lock:
-            self._db.execute("BEGIN IMMEDIATE")
             try:
                 yield self._db
-            except BaseException:
-                self._db.execute("ROLLBACK")
-                raise
-            self._db.execute("COMMIT")
+            except sqlite3.Error as error:
+                raise _failure(error, self.path) from error
 
 
 def _open(path: Path) -> sqlite3.Connection:
+    db = None
     try:
         db = sqlite3.connect(path, isolation_level=None, check_same_thread=False, timeout=10)
+        # A file from elsewhere may bring triggers and views: they get no say beyond plain SQL.
+        db.execute("PRAGMA trusted_schema = OFF")
         db.execute("PRAGMA journal_mode = WAL")
         db.execute("PRAGMA synchronous = FULL")
         db.executescript(_LAYOUT)
     except sqlite3.Error as error:
-        fix = "check that the folder can be written to and that the file is whole"
-        raise DataError(f"the labels cannot be opened: {error}", where=str(path), fix=fix) from error
+        if db is not None:
+            db.close()
+        raise _failure(error, path) from error
     return db
+
+
+def _failure(error: sqlite3.Error, path: Path) -> DataError:
+    fix = "check that the folder can be written to, that no other program holds the file, and that it is whole"
+    return DataError(f"the labels cannot be read or written: {error}", where=str(path), fix=fix)
 
 
 def _standings(db: sqlite3.Connection, role: Role, interpreter: str | None) -> dict[int, Standing]:
@@ -182,6 +204,9 @@ def _standings(db: sqlite3.Connection, role: Role, interpreter: str | None) -> d
         "SELECT number, point, undoes, label, alternate, confidence, note FROM entry WHERE role = ? "
         "AND (? IS NULL OR interpreter = ?) ORDER BY number", (role, interpreter, interpreter),
     ).fetchall()  # fmt: skip
+    for row in rows:
+        if not _is_entry(*row):
+            raise sqlite3.DataError(f"entry {row[0]} is none that was written here")
     undone = {row[2] for row in rows if row[2] is not None}
     found: dict[int, Standing] = {}
     for number, point, undoes, *said in rows:
@@ -193,6 +218,13 @@ def _standings(db: sqlite3.Connection, role: Role, interpreter: str | None) -> d
         else:
             found[point] = Standing(Label(*said), number)
     return found
+
+
+def _is_entry(number: object, point: object, undoes: object, *said: object) -> bool:
+    label, alternate, confidence, note = said
+    numbers = isinstance(point, int) and isinstance(undoes, int | None)
+    texts = all(isinstance(text, str) and not unseen(text) for text in (label, alternate, note) if text is not None)
+    return isinstance(number, int) and numbers and texts and note is not None and confidence in CONFIDENCES
 
 
 def _latest(rows: list[Any], point: int, undone: set[int]) -> Label | None:

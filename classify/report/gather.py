@@ -11,6 +11,7 @@ from classify.assessment.intervals import Estimate
 from classify.assessment.reference import read_areas
 from classify.errors import DataError
 from classify.files import read_json
+from classify.models.card_check import check_card
 from classify.report.facts import (
     AccuracyFacts,
     ClassFact,
@@ -28,6 +29,7 @@ from classify.report.sample import sample_facts
 from classify.report.scene_picture import scene_layers
 from classify.settings import Project
 from classify.settings.model import M2_PER_UNIT
+from classify.shapes import AssessmentRecord, RunRecord, read_shaped
 
 _MADE_BY: dict[StageKey, str] = {
     "train": "model/model.json", "classify": "map/cover.tif", "assess": "assessment/assessment.json",
@@ -40,9 +42,10 @@ def gather_facts(project: Project, outputs: Path) -> ReportFacts:
     Raises DataError when a file that is there cannot be read.
     """
     missing = tuple(stage for stage, path in _MADE_BY.items() if not (outputs / path).is_file())
-    record = _json(outputs / "run.json") or {}
+    record = _record(outputs / "run.json", RunRecord, "run") or {}
     classes = _classes(project, outputs)
-    card, assessment = _json(outputs / _MADE_BY["train"]), _json(outputs / _MADE_BY["assess"])
+    card = _card(outputs / _MADE_BY["train"])
+    assessment = _record(outputs / _MADE_BY["assess"], AssessmentRecord, "assess")
     sample, points = (None, ()) if assessment is None else sample_facts(project, outputs, assessment)
     return ReportFacts(
         heading=Heading(
@@ -88,7 +91,7 @@ def accuracy_facts(content: Mapping[str, Any], path: Path) -> AccuracyFacts:
             quantity=content["quantity_disagreement"], allocation=content["allocation_disagreement"],
             warnings=tuple(content["warnings"]), **_extras(content, classes),
         )  # fmt: skip
-    except (KeyError, TypeError, ValueError) as error:
+    except (KeyError, TypeError, ValueError, AttributeError) as error:
         raise DataError(f"this assessment lacks {error}", where=str(path),
                         fix="run 'landassay assess' again") from error  # fmt: skip
 
@@ -186,3 +189,14 @@ def _date(record: Mapping[str, Any]) -> str:
 
 def _json(path: Path) -> dict[str, Any] | None:
     return read_json(path) if path.is_file() else None
+
+
+def _record(path: Path, shape: type, command: str) -> dict[str, Any] | None:
+    return read_shaped(path, shape, fix=f"run 'landassay {command}' again") if path.is_file() else None
+
+
+def _card(path: Path) -> dict[str, Any] | None:
+    card = _json(path)
+    if card is not None:
+        check_card(card, str(path))
+    return card
