@@ -192,6 +192,7 @@ def test_places_that_cannot_be_checked_are_told(folder):
     draw(folder)
     path = folder / "outputs/sample/design.json"
     design = json.loads(path.read_text("utf-8"))
+    del design["map"]["crs"]
     design["map"]["grid"][0] = 20.0
     path.write_text(json.dumps(design), "utf-8")
     assert any("could not be checked" in text for text in found_in(folder).warnings)

@@ -17,7 +17,7 @@ from shapely.geometry import Point
 
 from classify.assessment.drawn_sample import read_drawn
 from classify.cli.main import cli
-from classify.errors import DataError, OutputError
+from classify.errors import DataError, OutputError, SampleError
 
 
 @pytest.fixture
@@ -173,3 +173,24 @@ def test_numbers_that_tell_are_cautioned_of(project: Path):
 def test_options_that_change_nothing_are_refused(tmp_path: Path, args: list[str], message: str):
     result = CliRunner().invoke(cli, ["draw", "--project", str(tmp_path), *args])
     assert result.exit_code == 2 and message in result.output
+
+
+def test_points_that_were_moved_are_refused_by_all(project: Path):
+    """The design tells grid and CRS of its map, so that places are checked also where that map is gone."""
+    path = project / "outputs" / "sample" / "points.gpkg"
+    design = json.loads((path.parent / "design.json").read_text())
+    assert design["map"]["crs"] == "EPSG:32633"
+    points = geopandas.read_file(path)
+    label_csv(path.with_name("points.csv"))
+    path.with_name("points.csv").rename(project / "field.csv")
+    (project / "outputs" / "map" / "cover.tif").unlink()
+    imports = ["interpret", "--project", str(project), "--import", str(project / "field.csv"), "--interpreter"]
+    points.to_crs(4326).to_file(path, layer="points")
+    assert CliRunner().invoke(cli, [*imports, "Ada"], catch_exceptions=False).exit_code == 0
+    points.translate(20, 0).to_frame("geometry").assign(id=points["id"]).to_file(path, layer="points")
+    with pytest.raises(SampleError, match="40 points do not lie where they were drawn"):
+        CliRunner().invoke(cli, [*imports, "Bea"], catch_exceptions=False)
+    design["map"]["crs"] = "EPSG:0"
+    (path.parent / "design.json").write_text(json.dumps(design))
+    with pytest.raises(DataError, match=r"design\.json: map: the grid of the map is not readable"):
+        read_drawn(path.parent)

@@ -205,7 +205,7 @@ def write_comparison(comparison: Comparison, folder: Path, *, inputs: Sequence[P
     """Write comparison.json and comparison.csv into `folder`; inputs and what is raised as for `write_assessment`."""
     files = {
         "comparison.json": json_text(comparison.to_json()),
-        "comparison.csv": comparison.frame.to_csv(index=False, lineterminator="\n"),
+        "comparison.csv": csv_text(comparison.frame),
     }
     return write_results(folder, files, "comparison.files.json", inputs)
 

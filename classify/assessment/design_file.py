@@ -10,21 +10,26 @@ from typing import Any
 
 import numpy as np
 import pandas as pd
+from affine import Affine
+from rasterio.crs import CRS
+from rasterio.errors import CRSError
 
 from classify.assessment.evidence import Reservation
 from classify.assessment.sample import DESIGN_KINDS, DesignKind
 from classify.errors import DataError
 from classify.files import read_json
+from classify.raster.grid import Grid
 
 
 @dataclass(frozen=True, slots=True)
 class DrawnMap:
     """The map that a sample was drawn from, as far as its design tells: file as written there, "" where it is not;
-    SHA-256; grid, transform and shape as plain numbers, () where it is not recorded."""
+    SHA-256; transform and shape as plain numbers, () where they are not recorded; grid, None where the CRS is not."""
 
     file: str
     sha256: str
-    grid: tuple[float, ...]
+    transform_and_shape: tuple[float, ...]
+    grid: Grid | None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -64,7 +69,7 @@ def read_design(path: Path) -> RecordedDesign:
             cluster_of={point: str(points[point]["segment"]) for point in key if "segment" in points[point]},
             replaced=replaced,
             place_of={p: (int(e["row"]), int(e["col"])) for p, e in points.items() if "row" in e and "col" in e},
-            drawn_from=_drawn_from(content.get("map", {})), class_areas=_class_areas(content),
+            drawn_from=_drawn_from(content.get("map", {}), path), class_areas=_class_areas(content),
             whole=not population.get("excluded_pixels"),
             remarks=(*_notes(content), *_replacements(replaced, len(key))),
             reservations=tuple(_reservations(content, replaced)),
@@ -92,9 +97,26 @@ def _strata(content: Mapping[str, Any]) -> pd.DataFrame:
     return strata[["stratum", "area_m2", "pixels", "clusters"]].astype({"stratum": str, "area_m2": float})
 
 
-def _drawn_from(content: Mapping[str, Any]) -> DrawnMap:
-    grid = tuple(float(value) for value in content.get("grid", ()))
-    return DrawnMap(str(content.get("file", "")), str(content.get("sha256", "")), grid)
+def _drawn_from(content: Mapping[str, Any], path: Path) -> DrawnMap:
+    plain = tuple(float(value) for value in content.get("grid", ()))
+    return DrawnMap(str(content.get("file", "")), str(content.get("sha256", "")), plain, drawn_grid(content, path))
+
+
+def grid_facts(grid: Grid) -> dict[str, Any]:
+    """A grid as a design records that of its map: grid, transform and shape as plain numbers, and crs."""
+    return {"grid": [*tuple(grid.transform)[:6], grid.height, grid.width], "crs": grid.crs.to_string()}
+
+
+def drawn_grid(content: Mapping[str, Any], path: Path) -> Grid | None:
+    """The grid that a design records of its map; None where it has no CRS, as old ones have not. Raises DataError."""
+    if "crs" not in content:
+        return None
+    try:
+        *transform, height, width = (float(value) for value in content["grid"])
+        return Grid(CRS.from_user_input(content["crs"]), Affine(*transform), int(height), int(width))
+    except (CRSError, KeyError, TypeError, ValueError) as error:
+        raise DataError(f"the grid of the map is not readable: {error}", where=f"{path}: map",
+                        fix="put back the design as it was drawn") from error  # fmt: skip
 
 
 def _class_areas(content: Mapping[str, Any]) -> pd.DataFrame | None:

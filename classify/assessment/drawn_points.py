@@ -13,8 +13,7 @@ import rasterio
 from rasterio.errors import RasterioError
 
 from classify.assessment.columns import Labels, faults, plain_text
-from classify.assessment.design_file import RecordedDesign, read_design
-from classify.assessment.drawn_sample import grid_facts
+from classify.assessment.design_file import RecordedDesign, grid_facts, read_design
 from classify.assessment.options import TableName
 from classify.errors import Problem, SampleError, raise_if_errors
 from classify.raster.grid import Grid
@@ -147,7 +146,9 @@ def _maps(project: Project, design: RecordedDesign, cover: Path) -> list[Path]:
 
 
 def _grid(design: RecordedDesign, maps: Sequence[Path]) -> Grid | None:
-    """The grid of the first map that is there and is that of the design."""
+    """The grid that the design records; where it has no CRS, that of the first map that is there and fits it."""
+    if design.drawn_from.grid is not None:
+        return design.drawn_from.grid
     for path in maps:
         if not path.is_file():
             continue
@@ -156,11 +157,7 @@ def _grid(design: RecordedDesign, maps: Sequence[Path]) -> Grid | None:
                 crs, grid = source.crs, Grid(source.crs, source.transform, source.height, source.width)
         except RasterioError:
             continue  # the assessed map is read, and found faulty, elsewhere
-        facts = grid_facts(grid)
-        if (
-            crs is not None
-            and len(design.drawn_from.grid) == len(facts)
-            and np.allclose(facts, design.drawn_from.grid, rtol=1e-12, atol=1e-12)
-        ):
+        known = design.drawn_from.transform_and_shape
+        if crs is not None and len(known) == 8 and np.allclose(grid_facts(grid)["grid"], known, rtol=1e-12, atol=1e-12):
             return grid
     return None

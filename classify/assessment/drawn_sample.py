@@ -20,16 +20,18 @@ import geopandas
 import numpy as np
 import pandas as pd
 
+from classify.assessment.design_file import drawn_grid, grid_facts
 from classify.assessment.draw import IDS, Cells, Draw, DrawOptions, pixels_of
 from classify.assessment.lots import lots, stream
 from classify.assessment.population import Population
 from classify.errors import DataError, OutputError, Problem, SampleError, raise_if_errors
-from classify.files import read_json, replacing, sha256, write_bytes, write_json
+from classify.files import replacing, sha256, write_bytes, write_json
 from classify.raster.grid import Grid
 from classify.raster.vectors import layers_of, read_places
+from classify.shapes import Design, read_shaped
+from classify.together import finish_replacing, is_unfinished, replacing_together
 
 LABEL_COLUMNS = ("observed", "alternate", "confidence", "note")
-_KEYS = ("kind", "seed", "map", "unit", "apart_m", "strata", "points", "reserves", "draws", "notes")
 # Written whole each time, so that they must not have been changed; points.gpkg grows instead.
 _WHOLE_FILES = ("points.gpx", "points.geojson", "points.csv")
 # What a sample that was drawn leaves; labels of an earlier one would be taken for those of points of the same number.
@@ -79,7 +81,7 @@ def first_design(
     notes = [*drawn.notes, *(f"No points were drawn in {name!r}: no estimate covers it." for name in left_out)]
     return {
         "schema": 1, "kind": options.kind, "seed": options.seed,
-        "map": {**map_facts, "grid": grid_facts(population.grid)},
+        "map": {**map_facts, **grid_facts(population.grid)},
         "unit": {"kind": "pixel" if options.segment_px == 1 else "segment", "side_px": options.segment_px},
         "apart_m": options.apart_m, **more,
         "population": {"pixels": sum(found.pixels), "area_m2": round(sum(found.area_m2), 1),
@@ -172,19 +174,14 @@ def points_frame(design: Mapping[str, Any], grid: Grid) -> geopandas.GeoDataFram
     return frame[[*(c for c in frame.columns if c != "geometry"), "geometry"]]
 
 
-def grid_facts(grid: Grid) -> list[float]:
-    """Transform and shape of a grid as plain numbers, by which a design knows its map's grid again."""
-    return [*tuple(grid.transform)[:6], grid.height, grid.width]
-
-
 def write_first(folder: Path, design: Mapping[str, Any], grid: Grid) -> DrawnSample:
     """Write a sample that was just drawn. Raises OutputError if there is one already."""
     refuse_if_drawn(folder)
     points = points_frame(design, grid)
-    files = _write_whole(folder, DrawnSample(design, points))
-    with replacing(folder / "points.gpkg") as temporary:
-        points.to_file(temporary, layer="points", driver="GPKG")
-    return _finished(folder, {**design, "files": files}, points)
+    with replacing_together(folder) as staged:
+        with replacing(staged / "points.gpkg", RuntimeError) as temporary:  # which every error of pyogrio is
+            points.to_file(temporary, layer="points", driver="GPKG")
+        return _with_files(staged, DrawnSample(design, points), points)
 
 
 def write_more(folder: Path, before: DrawnSample, design: Mapping[str, Any], grid: Grid) -> DrawnSample:
@@ -194,25 +191,34 @@ def write_more(folder: Path, before: DrawnSample, design: Mapping[str, Any], gri
     refuse_if_changed(folder, before.design)
     whole = points_frame(design, grid)
     fresh = whole[~whole["id"].isin(before.points["id"])]
-    files = _write_whole(folder, DrawnSample(design, whole))
     path = folder / "points.gpkg"
     # Labels of new points are null: an empty text would be 0 in a column that was made one of numbers.
     known = [c for c in fresh.columns if c in before.points.columns and c not in LABEL_COLUMNS]
-    with replacing(path) as temporary:
-        shutil.copyfile(path, temporary)
-        fresh[known].to_crs(before.points.crs).to_file(temporary, layer=_layer(path), driver="GPKG", mode="a")
-        points = _read_points(temporary)
-    return _finished(folder, {**design, "files": files}, points)
+    with replacing_together(folder) as staged:
+        with replacing(staged / path.name, RuntimeError) as temporary:
+            shutil.copyfile(path, temporary)
+            fresh[known].to_crs(before.points.crs).to_file(temporary, layer=_layer(path), driver="GPKG", mode="a")
+            points = _read_points(temporary)
+        return _with_files(staged, DrawnSample(design, whole), points)
 
 
-def _finished(folder: Path, design: Mapping[str, Any], points: geopandas.GeoDataFrame) -> DrawnSample:
-    """The design comes last: where it stands, everything stands."""
-    write_json(folder / "design.json", design)
+def _with_files(staged: Path, sample: DrawnSample, points: geopandas.GeoDataFrame) -> DrawnSample:
+    """The sample as written beside points.gpkg: its other files, and the design that knows them."""
+    design = {**sample.design, "files": _write_whole(staged, sample)}
+    write_json(staged / "design.json", design)
     return DrawnSample(design, points)
+
+
+def recover(folder: Path) -> None:
+    """End what a command that was stopped had begun to write. Raises OutputError where that is not possible."""
+    if is_unfinished(folder):
+        refuse_if_open(folder)
+        finish_replacing(folder)
 
 
 def refuse_if_drawn(folder: Path) -> None:
     """Raise OutputError when a sample, or what is left of one, lies in the folder."""
+    recover(folder)
     there = [folder / name for name in _TRACES if (folder / name).exists()]
     if there:
         raise OutputError(
@@ -244,17 +250,19 @@ def refuse_if_open(folder: Path) -> None:
 def read_drawn(folder: Path) -> DrawnSample:
     """A drawn sample, checked: the points are those of the design, where the design has them. Raises DataError,
     SampleError."""
+    recover(folder)
     path = folder / "design.json"
     if not path.exists():
         raise DataError("no sample was drawn yet", where=str(path), fix="run 'landassay draw' first")
-    design = read_json(path)
-    missing = [key for key in _KEYS if key not in design]
-    if missing:
-        raise DataError(f"this is not a design that 'draw' wrote: it has no {missing[0]!r}", where=str(path))
+    design = read_shaped(path, Design, fix="put back the design.json that 'draw' wrote")
     points_path = folder / "points.gpkg"
     points = _read_points(points_path)
     _check_points(design, points, points_path)
-    return DrawnSample(design, points)
+    sample = DrawnSample(design, points)
+    grid = drawn_grid(design["map"], path)
+    if grid is not None:
+        check_places(sample, grid, points_path)
+    return sample
 
 
 def _read_points(path: Path) -> geopandas.GeoDataFrame:
@@ -306,7 +314,7 @@ def _write_whole(folder: Path, sample: DrawnSample) -> dict[str, str]:
     table = pd.DataFrame(active).assign(x=sample.points.geometry.x, y=sample.points.geometry.y)
     for column in LABEL_COLUMNS:
         table[column] = ""
-    csv = table.to_csv(index=False, lineterminator="\n")
+    csv = csv_text(table)
     contents = (_gpx(active), _geojson(active).encode("utf-8"), csv.encode("utf-8"))
     for name, content in zip(_WHOLE_FILES, contents, strict=True):
         write_bytes(folder / name, content)

@@ -56,5 +56,5 @@ def write_assessment(assessment: Assessment, folder: Path, *, inputs: Sequence[P
     if assessment.regions:
         tables["regions.csv"] = assessment.region_frame
     files = {"assessment.json": json_text(assessment.to_json())}
-    files |= {name: table.to_csv(index=False, lineterminator="\n") for name, table in tables.items()}
+    files |= {name: csv_text(table) for name, table in tables.items()}
     return write_results(folder, files, "assessment.files.json", inputs)

@@ -22,6 +22,7 @@ from classify.assessment.columns import Labels, faults, plain_text
 from classify.assessment.compare import Comparison, compare_sample, write_comparison
 from classify.assessment.design_file import RecordedDesign
 from classify.assessment.drawn_points import as_drawn, design_of, stratum_of
+from classify.assessment.drawn_sample import recover
 from classify.assessment.estimation import estimate_sample
 from classify.assessment.frames import write_assessment
 from classify.assessment.inputs import sample_from_points
@@ -71,6 +72,7 @@ def read_reference(project: Project, cover: Path, outputs: Path, *, other: Path 
     and, where the sample was drawn here, sample/design.json. Raises DataError, SampleError.
     """
     settings = _settings(project)
+    recover(outputs / "sample")
     frame = read_points(project, settings)
     areas = read_areas(outputs / "map" / "areas.csv")
     design, warnings = design_of(project, settings, frame, outputs, cover)

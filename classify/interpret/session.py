@@ -13,7 +13,7 @@ import numpy as np
 import pandas as pd
 
 from classify.assessment import assess_matrix
-from classify.assessment.drawn_sample import DrawnSample, check_places, grid_facts, read_drawn
+from classify.assessment.drawn_sample import DrawnSample, read_drawn
 from classify.errors import SampleError
 from classify.interpret.journal import CONFIDENCES, NOTHING, Journal, Label, Role, Standing
 from classify.raster.grid import Grid
@@ -85,7 +85,6 @@ def open_session(project: Project, outputs: Path, grid: Grid, interpreter: str, 
     sample = read_drawn(folder)
     if not interpreter.strip() or unseen(interpreter):
         raise SampleError("the interpreter has no name that can be read", fix="give --interpreter a name")
-    _check_grid(sample, grid, folder)
     journal = Journal(folder / JOURNAL_FILE, interpreter.strip(), role)
     return Session(sample, grid, project.classes, journal)
 
@@ -171,11 +170,3 @@ def _places(sample: DrawnSample, grid: Grid) -> list[Place]:
         Place(int(i), int(r), int(c), round(float(x), 6), round(float(y), 6))
         for i, r, c, x, y in zip(frame["id"], rows, cols, degrees.x, degrees.y, strict=True)
     ]
-
-
-def _check_grid(sample: DrawnSample, grid: Grid, folder: Path) -> None:
-    """Points of a map of another grid are placed by their coordinates; on the scene's own grid they must lie where the
-    design has them."""
-    kept = sample.design["map"].get("grid")
-    if kept == grid_facts(grid):
-        check_places(sample, grid, folder / "points.gpkg")
