@@ -130,6 +130,14 @@ class Record:
         }
         write_json(self._path, self._content)
 
+    def renewed(self, stage: str, output: str) -> None:
+        """Write that one of the outputs of a stage was made anew, and rightly."""
+        self._content = self._read()
+        fact = self._facts(f"outputs/{output}", {}, ours=True)
+        self._content["stages"][stage]["outputs"][output] = fact["sha256"]
+        self._content["results"][f"outputs/{output}"] = fact
+        write_json(self._path, self._content)
+
     def _facts(self, written: str, known: Mapping[str, Any], *, ours: bool = False) -> dict[str, Any]:
         """Size, time of change and hash of a file; a recorded hash is kept while size and time are the same.
 

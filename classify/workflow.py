@@ -22,7 +22,7 @@ from classify.lock import writing
 from classify.mapping.classify_scene import MapOptions, classify_scene
 from classify.mapping.engines import cluster
 from classify.mapping.many import ManyResult, classify_many, find_scenes, time_of
-from classify.mapping.stac import ItemFacts, identifier, write_item
+from classify.mapping.stac import ItemFacts, identifier, rename_item, write_item
 from classify.models import check_scene, fit_model, inspect_training, load_model, save_model
 from classify.models.card_check import check_card
 from classify.progress import SILENT, Progress
@@ -74,7 +74,8 @@ class Stage:
 
     sections: parts of the project file that it reads. inputs: files of the user, as written there. reads: results of
     earlier stages, below outputs/; it cannot run without those in `needs`. outputs: what it always makes; extras: what
-    it may make besides. scratch: a folder in which it keeps what it needs to go on after an interruption.
+    it may make besides. scratch: a folder in which it keeps what it needs to go on after an interruption. renew: brings
+    outputs up to date with settings that do not make the stage stale, and says which it changed.
     """
 
     name: StageName
@@ -86,6 +87,7 @@ class Stage:
     reads: tuple[str, ...] = ()
     extras: tuple[str, ...] = ()
     scratch: str | None = None
+    renew: Callable[[Job], tuple[str, ...]] = lambda job: ()
     wanted: Callable[[Project], bool] = field(default=lambda project: True)
 
     @property
@@ -152,6 +154,8 @@ def run(
                 continue
             if not force and _own_status(stage, job.project, Record(job.project)).state == "done":
                 results[stage.name] = None
+                for output in stage.renew(job):
+                    Record(job.project).renewed(stage.name, output)
                 if stage.scratch is not None:
                     # Of a run that was interrupted and would have made something else, or the same again.
                     shutil.rmtree(job.outputs / stage.scratch, ignore_errors=True)
@@ -279,7 +283,7 @@ def _classify(job: Job) -> StageResult:
     with _map_options(job) as options:
         result = classify_scene(model, scene, folder, classes=project.classes, options=options, progress=job.progress)
     when, source = time_of([band.path for band in scene.bands])
-    item = ItemFacts(identifier(project.project.title), project.project.title, when, source, {})
+    item = ItemFacts(identifier(_title(job)), _title(job), when, source, {})
     files = {**result.files, "areas": folder / "areas.csv"}
     write_item(folder / "item.json", item, scene.grid, files, project.classes)
     summary = {
@@ -288,6 +292,15 @@ def _classify(job: Job) -> StageResult:
         "unmapped_m2": result.unmapped_m2,
     }
     return StageResult(summary, (*scene.warnings, *findings, *result.warnings), whole=not result.unreadable_blocks)
+
+
+def _title(job: Job) -> str:
+    return job.project.project.title
+
+
+def _name_map(job: Job) -> tuple[str, ...]:
+    path = "map/item.json"
+    return (path,) if rename_item(job.outputs / path, identifier(_title(job)), _title(job)) else ()
 
 
 def map_scenes(job: Job, sources: Sequence[str], folder: Path, *, overwrite: bool = False) -> ManyResult:
@@ -363,7 +376,7 @@ STAGES: tuple[Stage, ...] = (
         "classify", ("scene", "classes", "map", "report.area_unit"), _scene_inputs,
         ("map/cover.tif", "map/areas.csv", "map/item.json"), _classify,
         needs=("model/model.json", "model/model.skops"), reads=("model/reach.npz",),
-        extras=("map/confidence.tif", "map/reach.tif", "map/raw.tif", "map/cover.gpkg"),
+        extras=("map/confidence.tif", "map/reach.tif", "map/raw.tif", "map/cover.gpkg"), renew=_name_map,
         scratch="map/.unfinished",
     ),
     Stage(

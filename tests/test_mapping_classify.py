@@ -17,7 +17,7 @@ import numpy as np
 import pytest
 import rasterio
 from rio_cogeo.cogeo import cog_validate
-from small_project import make_small_project
+from small_project import make_small_project, read_json
 
 from classify.errors import DataError, OutputError
 from classify.mapping import blocks, engines
@@ -30,7 +30,7 @@ from classify.raster.area import ground_areas_m2
 from classify.raster.grid import Grid
 from classify.raster.scene import open_scene
 from classify.settings import load_project
-from classify.workflow import Job, run
+from classify.workflow import Job, run, status
 
 OPTIONS = MapOptions(block_px=32, reach=True)
 FILES = ("cover.tif", "cover.tif.aux.xml", "confidence.tif", "reach.tif", "areas.csv")
@@ -280,6 +280,25 @@ def test_a_tidied_map_keeps_the_raw_one_and_is_what_areas_and_polygons_tell_of(m
     map_into(tmp_path / "tidied")
     assert contents(tmp_path / "tidied") == contents(tmp_path / "plain")
     assert {path.name for path in (tmp_path / "tidied").iterdir()} == set(FILES)
+
+
+def test_a_project_that_is_renamed_or_wants_less_leaves_nothing_old_behind(tmp_path):
+    folder = make_small_project(tmp_path / "miniature")
+    run(Job(load_project(folder)), ["train", "classify"])
+    maps, written = folder / "outputs" / "map", (folder / "project.toml").read_text(encoding="utf-8")
+    item, cover = read_json(maps / "item.json"), (maps / "cover.tif").stat().st_mtime_ns
+    renamed = written.replace("A miniature of the Sorrel Basin", "Sorrel in small")
+    (folder / "project.toml").write_text(renamed, encoding="utf-8")
+    assert run(Job(load_project(folder)), ["classify"]) == {"classify": None}
+    now = read_json(maps / "item.json")
+    assert (now["id"], now["properties"].pop("title")) == ("Sorrel-in-small", "Sorrel in small")
+    del item["id"], item["properties"]["title"], now["id"]
+    assert now == item
+    assert (maps / "cover.tif").stat().st_mtime_ns == cover
+    assert [s.state for s in status(load_project(folder)) if s.name == "classify"] == ["done"]
+    (folder / "project.toml").write_text(renamed + "[map]\nconfidence = false\nreach = false\n", encoding="utf-8")
+    assert run(Job(load_project(folder)), ["classify"])["classify"] is not None
+    assert {path.name for path in maps.iterdir()} == {"cover.tif", "cover.tif.aux.xml", "areas.csv", "item.json"}
 
 
 def run_killed(map_into, out, after_lines, pause_s):

@@ -12,7 +12,7 @@ from typing import Any
 from rasterio.warp import transform_bounds, transform_geom
 from shapely.geometry import box, mapping
 
-from classify.files import write_json
+from classify.files import read_json, write_json
 from classify.mapping.blocks import NO_CLASS
 from classify.raster.grid import Grid
 from classify.settings import ClassSettings
@@ -79,6 +79,16 @@ def write_item(
     }  # fmt: skip
     write_json(path, item)
     return item
+
+
+def rename_item(path: Path, name: str, title: str) -> bool:
+    """Give an item that is there another name and title; whether it had others. Raises DataError, OutputError."""
+    item = read_json(path)
+    properties = item.get("properties", {})
+    if (item.get("id"), properties.get("title")) == (name, title):
+        return False
+    write_json(path, {**item, "id": name, "properties": {**properties, "title": title}})
+    return True
 
 
 def write_collection(path: Path, name: str, description: str, items: Mapping[str, Mapping[str, Any]]) -> None:
