@@ -59,3 +59,14 @@ def test_json_alone_on_standard_output(small_project):
     assert result.returncode == 0, result.stderr
     stages = json.loads(result.stdout)["stages"]
     assert {stage["state"] for stage in stages} == {"missing"}
+
+
+@pytest.mark.parametrize(("options", "shown"), [([], False), (["-W", "default"], True)])
+def test_warnings_of_libraries_are_not_for_users(options, shown):
+    """Whatever the filters are at that moment: libraries that work in threads set them aside."""
+    code = (
+        "import warnings; from classify.cli.surroundings import hush_libraries; hush_libraries(); "
+        "warnings.resetwarnings(); warnings.warn('for programmers')"
+    )
+    done = subprocess.run([sys.executable, *options, "-c", code], capture_output=True, text=True, check=True)
+    assert ("for programmers" in done.stderr) == shown

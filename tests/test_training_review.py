@@ -155,6 +155,15 @@ def test_a_review_of_data_that_cannot_be_screened_is_still_made() -> None:
     assert content["classes"][1]["signature"] is None
 
 
+@pytest.mark.filterwarnings("error")
+@pytest.mark.parametrize("polygons", [(1, 1), (2, 1), (3, 2, 1)])
+def test_classes_of_few_polygons_are_reviewed_without_a_warning_of_numpy(polygons: tuple[int, ...]) -> None:
+    training = training_set(polygons=polygons)
+    review = inspect_training(training, project_of(training))
+    json.dumps(review.to_json(), allow_nan=False)
+    assert any("one usable polygon" in problem.what for problem in review.problems)
+
+
 def test_conflicts_and_clouds_make_suspects_by_themselves() -> None:
     training = training_set(polygons=(5, 5))
     table = training.table.assign(

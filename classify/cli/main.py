@@ -10,7 +10,7 @@ import click
 
 from classify import __version__
 from classify.cli.common import say
-from classify.cli.surroundings import Stopping, ensure_utf8, prepare_streams
+from classify.cli.surroundings import Stopping, ensure_utf8, hush_libraries, prepare_streams
 
 # command -> (module that defines `command`, one line of help). Kept here so that --help imports nothing else.
 COMMANDS = {
@@ -61,6 +61,7 @@ def entry() -> None:
     the number of the signal when it was stopped."""
     ensure_utf8()
     prepare_streams()
+    hush_libraries()
     stopping = Stopping()
     stopping.heed()
     try:

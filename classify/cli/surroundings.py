@@ -7,6 +7,7 @@ import os
 import signal
 import sys
 import time
+import warnings
 from contextlib import suppress
 from io import TextIOWrapper
 from types import FrameType
@@ -17,6 +18,15 @@ _SIGNALS = (signal.SIGINT, signal.SIGTERM)
 
 # How long closing everything may take before it is done without, in seconds.
 _CLOSING_S = 1.5
+
+
+def hush_libraries() -> None:
+    """Warnings of libraries, meant for programmers, stay off the user's terminal, unless Python was told to show some.
+
+    Not by a filter: libraries that fit models in threads set the filters of the whole process aside for moments.
+    """
+    if not sys.warnoptions:
+        warnings.showwarning = lambda *_args, **_named: None
 
 
 class Stopping:

@@ -43,7 +43,8 @@ class LearningCurve:
             classes.append({"code": int(code), "name": name, "points": points})
             if len(points) == len(SHARES) and self._still_rising(k):
                 advice.append(f"{name}: still rising with the number of polygons; draw more.")
-        balanced = np.nanmean(self.right, axis=2)
+        seen = np.isfinite(self.right)
+        balanced = np.where(seen, self.right, 0).sum(axis=2) / np.where(seen.any(axis=2), seen.sum(axis=2), np.nan)
         overall = [
             {"share": share, "polygons": float(self.polygons[s].sum()), **band}
             for s, share in enumerate(SHARES)
@@ -58,9 +59,9 @@ class LearningCurve:
 
     def _still_rising(self, k: int) -> bool:
         before, last = self.right[-2, :, k], self.right[-1, :, k]
-        gain = last - before
-        error = float(np.nanstd(gain, ddof=1) / np.sqrt(len(gain))) if len(gain) > 1 else 0.0
-        return bool(np.nanmean(gain) > max(_GAIN, error))
+        gain = (last - before)[np.isfinite(last - before)]
+        error = float(gain.std(ddof=1) / np.sqrt(len(gain))) if len(gain) > 1 else 0.0
+        return bool(len(gain) and gain.mean() > max(_GAIN, error))
 
 
 def learning_curve(

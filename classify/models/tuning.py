@@ -68,8 +68,9 @@ class Candidate:
 
     @property
     def mean(self) -> float:
-        """Mean over folds of the mean share right per class."""
-        return float(np.nanmean(self.by_fold))
+        """Mean over folds of the mean share right per class; NaN without a fold."""
+        held = self.by_fold[np.isfinite(self.by_fold)]
+        return float(held.mean()) if len(held) else float("nan")
 
     @property
     def error(self) -> float:
