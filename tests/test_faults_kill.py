@@ -7,8 +7,6 @@ import os
 import random
 import shutil
 import signal
-import subprocess
-import sys
 import time
 import zipfile
 from contextlib import suppress
@@ -16,6 +14,7 @@ from io import BytesIO
 from pathlib import Path
 
 import pytest
+from forked_commands import commands
 from small_project import PROJECT, make_small_project, read_json
 
 from classify.files import TEMPORARY_SUFFIX, write_json
@@ -25,45 +24,22 @@ from classify.workflow import STAGES, Job, run, status
 
 SAMPLE = Path(__file__).parent.parent / "sample_project"
 
-# Everything is imported once; each run is a fork, so that a kill hits work and not the loading of libraries.
-RUNNER = """
-import os, sys, traceback
-from classify.settings import load_project
-from classify.workflow import Job, run
-for line in sys.stdin:
-    child = os.fork()
-    if child == 0:
-        try:
-            run(Job(load_project(line.rstrip("\\n")), jobs=2))
-            os._exit(0)
-        except BaseException:
-            traceback.print_exc()
-            os._exit(1)
-    print(child, flush=True)
-    print(os.waitpid(child, 0)[1], flush=True)
-"""
-
 
 @pytest.fixture
-def runner():
+def runner(tmp_path):
     """Run a project in a process of its own, which is killed after some seconds if it has not ended by then."""
-    with subprocess.Popen(
-        [sys.executable, "-c", RUNNER], stdin=subprocess.PIPE, stdout=subprocess.PIPE, text=True
-    ) as process:
+    with commands(tmp_path / "said.txt") as forked:
 
         def killed_after(folder: Path, seconds: float) -> bool:
-            process.stdin.write(f"{folder}\n")
-            process.stdin.flush()
-            child = int(process.stdout.readline())
+            process = forked.start("run", "--quiet", "--jobs", 2, "--project", folder)
             time.sleep(seconds)
             with suppress(ProcessLookupError):
-                os.kill(child, signal.SIGKILL)
-            ended = int(process.stdout.readline())
-            assert ended in (0, signal.SIGKILL), "a run that nobody disturbed must end well"
-            return ended == signal.SIGKILL
+                os.kill(process, signal.SIGKILL)
+            ended, said = forked.end()
+            assert ended in (0, -signal.SIGKILL), said
+            return ended != 0
 
         yield killed_after
-        process.kill()
 
 
 def contents(folder: Path) -> dict[str, bytes]:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import numba
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -133,17 +132,3 @@ def test_other_estimators_are_left_to_scikit_learn():
     assert compile_estimator(GradientBoostingClassifier(n_estimators=2).fit(x, y)) is None
     assert CompiledForest.from_sklearn(RandomForestClassifier(2).fit(x, np.stack([y, y], axis=1))) is None
     assert isinstance(compile_estimator(RandomForestClassifier(2).fit(x, y)), CompiledForest)
-
-
-def test_a_cache_that_cannot_be_written_costs_only_time(monkeypatch):
-    real, asked = numba.njit, []
-
-    def njit(*args, cache=False, **options):
-        asked.append(cache)
-        if cache:
-            raise RuntimeError("cannot cache function: no locator available")
-        return real(*args, **options)
-
-    monkeypatch.setattr(numba, "njit", njit)
-    assert forest_kernels.jit(lambda value: value + 1)(1) == 2
-    assert asked == [True, False]

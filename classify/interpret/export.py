@@ -17,6 +17,7 @@ from classify.files import read_json, replacing, sha256, write_json
 from classify.interpret.journal import NOTHING, Journal, Label
 from classify.interpret.session import JOURNAL_FILE, agreement
 from classify.lock import writing
+from classify.raster.written import check_layer
 
 Status = Literal["labelled", "cannot tell", "in dispute", "settled", "open"]
 EXPORT_FILE = "reference.gpkg"
@@ -64,6 +65,7 @@ def _export(folder: Path, classes: Sequence[str]) -> Export:
     whole = geopandas.GeoDataFrame(kept.merge(table, on="id"), geometry="geometry", crs=frame.crs)
     with replacing(path, RuntimeError) as temporary:  # which every error of pyogrio is
         whole.to_file(temporary, layer="reference", driver="GPKG")
+        check_layer(temporary, "reference", len(whole))
     counts = {str(k): int(v) for k, v in table["status"].value_counts().sort_index().items()}
     export = Export(path, counts, pairs)
     write_json(folder / _RECORD, {**export.to_json(), "sha256": sha256(path)})

@@ -7,10 +7,10 @@ from __future__ import annotations
 
 import numpy as np
 
-from classify.models.forest_kernels import jit
+from classify.features.compiled import compiled
 
 
-@jit
+@compiled
 def find_patches(codes, areas_m2, corners):
     """Patches of codes uint8 (h, w), over corners too or over edges alone.
 
@@ -55,7 +55,7 @@ def find_patches(codes, areas_m2, corners):
     return labels, sizes_m2, classes
 
 
-@jit
+@compiled
 def _root(parent, label):
     while parent[label] != label:
         parent[label] = parent[parent[label]]
@@ -63,7 +63,7 @@ def _root(parent, label):
     return label
 
 
-@jit
+@compiled
 def _join(parent, one, other):
     """The common root of two labels, the first of which may be -1."""
     other = _root(parent, other)
@@ -74,7 +74,7 @@ def _join(parent, one, other):
     return low
 
 
-@jit
+@compiled
 def neighbours_of_small(labels, small, classes):
     """For every pixel edge between a small patch and another patch with a class: (small patch, other), int64 (n, 2)."""
     height, width = labels.shape
@@ -99,7 +99,7 @@ def neighbours_of_small(labels, small, classes):
     return pairs
 
 
-@jit
+@compiled
 def majority(codes, side):
     """The most frequent class in the square around each pixel, uint8 (h, w).
 

@@ -21,15 +21,17 @@ from rasterio.features import shapes
 from shapely.affinity import affine_transform
 from shapely.geometry import shape
 
-from classify.files import replacing
+from classify.files import replacing, write_errors
 from classify.mapping.blocks import NO_CLASS, rounded_areas_m2
 from classify.mapping.byte_raster import ByteRaster
 from classify.mapping.patches import find_patches
 from classify.progress import SILENT, Progress
 from classify.raster.grid import Grid, Window
+from classify.raster.written import check_layer
 from classify.settings import ClassSettings
 from classify.settings.model import M2_PER_UNIT
 
+_LAYER = "cover"
 _STRIP_PIXELS = 8_000_000
 _WRITE_EVERY = 20_000
 # GeoPackage stores when it was written; a fixed date keeps the same map the same bytes.
@@ -59,7 +61,7 @@ def write_polygons(
     area_column = f"area_{unit}"
     waiting: list[_Patch] = []
 
-    def flush(path: Path) -> None:
+    def flush(path: Path) -> int:
         frame = gpd.GeoDataFrame(
             {
                 "code": [p.code for p in waiting],
@@ -70,21 +72,25 @@ def write_polygons(
             geometry=[_placed(p, source.grid) for p in waiting],
             crs=source.grid.crs,
         )
-        pyogrio.write_dataframe(
-            frame, path, layer="cover", driver="GPKG", append=path.exists(), geometry_type="Polygon"
-        )
+        with write_errors(target, RuntimeError):  # which every error of pyogrio is
+            pyogrio.write_dataframe(
+                frame, path, layer=_LAYER, driver="GPKG", append=path.exists(), geometry_type="Polygon"
+            )
         waiting.clear()
+        return len(frame)
 
     before = {key: pyogrio.get_gdal_config_option(key) for key in _FIXED_DATE}
-    with replacing(target, RuntimeError) as temporary:  # which every error of pyogrio is
+    with replacing(target) as temporary:
         try:
             pyogrio.set_gdal_config_options(_FIXED_DATE)
+            written = 0
             for patch in _patches(source, progress):
                 waiting.append(patch)
                 if len(waiting) >= _WRITE_EVERY:
-                    flush(temporary)
+                    written += flush(temporary)
             if waiting or not temporary.exists():
-                flush(temporary)
+                written += flush(temporary)
+            check_layer(temporary, _LAYER, written)
         finally:
             pyogrio.set_gdal_config_options(before)
 

@@ -20,6 +20,7 @@ from rasterio.errors import RasterioError
 
 from classify.files import replacing, write_bytes
 from classify.mapping.byte_raster import ByteRaster
+from classify.raster.written import check_raster
 from classify.threads import aside
 
 TILE_PX = 512
@@ -49,20 +50,21 @@ def write_cog(source: ByteRaster, target: Path, layer: Layer) -> None:
     with replacing(target, RasterioError, CPLE_BaseError) as finished:
         try:
             described.write_bytes(_virtual_raster(source, layer))
-            aside(lambda: _copy(described, finished, layer))
+            aside(lambda: _copy(described, finished, source, layer))
         finally:
             described.unlink(missing_ok=True)
     if layer.categories:
         write_bytes(target.with_name(target.name + ".aux.xml"), category_sidecar(layer))
 
 
-def _copy(source: Path, target: Path, layer: Layer) -> None:
+def _copy(described: Path, target: Path, source: ByteRaster, layer: Layer) -> None:
     with rasterio.Env(GDAL_CACHEMAX=_CACHE_BYTES):
         # Deflate rather than zstd in the delivered file: every reader of GeoTIFF has it.
         rasterio.shutil.copy(
-            source, target, driver="COG", compress="deflate", blocksize=TILE_PX, overview_resampling=layer.overviews,
+            described, target, driver="COG", compress="deflate", blocksize=TILE_PX, overview_resampling=layer.overviews,
             overview_compress="deflate", bigtiff="if_safer", num_threads=1,
         )  # fmt: skip
+        check_raster(target, source.grid, source.read)
 
 
 def _virtual_raster(source: ByteRaster, layer: Layer) -> bytes:

@@ -5,7 +5,7 @@
 
 from __future__ import annotations
 
-from typing import Any, NamedTuple
+from typing import NamedTuple
 
 import numba
 import numpy as np
@@ -13,6 +13,8 @@ from llvmlite import ir
 from numba.core import cgutils, types
 from numba.extending import intrinsic
 from numpy.typing import NDArray
+
+from classify.features.compiled import compiled
 
 # Pixels in step: eight or four vectors of what current processors hold. More spill out of the registers.
 LANES = 64
@@ -41,14 +43,6 @@ class Trees(NamedTuple):
     feature_bits: int
 
 
-def jit(function: Any) -> Any:  # noqa: ANN401 - a numba dispatcher
-    """Compile on first use; keep the machine code on disk where a cache folder can be written."""
-    try:
-        return numba.njit(nogil=True, error_model="numpy", cache=True)(function)
-    except RuntimeError:  # no folder for the cache, neither beside this file nor in the user's own
-        return numba.njit(nogil=True, error_model="numpy")(function)
-
-
 @intrinsic
 def _stack_lanes(_context):
     """Memory for one unsigned 32-bit integer per lane on the stack.
@@ -64,7 +58,7 @@ def _stack_lanes(_context):
     return types.CPointer(types.uint32)(), generate
 
 
-@jit
+@compiled
 def _transpose(bits, pixels, count, lanes):
     """Features of `count` pixels in groups of lanes: (groups, f, lanes), as integers in the order of the floats."""
     features = bits.shape[1]
@@ -77,7 +71,7 @@ def _transpose(bits, pixels, count, lanes):
             lanes[base + j * LANES] = value ^ np.int32(0x7FFFFFFF) if value < 0 else value
 
 
-@jit
+@compiled
 def _add_tree(lanes, count, trees, t, sums):
     """Add the leaf shares of tree `t` to sums (slots, k) for `count` pixels laid out by `_transpose`."""
     at = numba.carray(_stack_lanes(), (LANES,))
@@ -118,7 +112,7 @@ def _add_tree(lanes, count, trees, t, sums):
                     sums[start + lane, c] += trees.shares[-1 - code, c]
 
 
-@jit
+@compiled
 def sum_shares(bits, trees, sums):
     """Add every tree's shares, in the order of the trees, to sums float64 (n, k) for features' bits int32 (n, f)."""
     lanes = np.zeros(BLOCK * bits.shape[1], dtype=np.int32)
@@ -129,7 +123,7 @@ def sum_shares(bits, trees, sums):
             _add_tree(lanes, count, trees, t, sums[begin : begin + count])
 
 
-@jit
+@compiled
 def find_labels(bits, trees, labels):
     """Write the index of the class to labels intp (n,) for features' bits int32 (n, f)."""
     total = len(trees.rounds)
@@ -151,7 +145,7 @@ def find_labels(bits, trees, labels):
             count = left
 
 
-@jit
+@compiled
 def _drop_decided(sums, pixels, count, total, done, labels):  # noqa: PLR0917
     """Label the pixels whose leader cannot be caught in the trees left; move the others to the front and count them."""
     kept = 0

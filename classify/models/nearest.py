@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from classify.models.forest_kernels import jit
+from classify.features.compiled import compiled
 
 # Points of a group, for which distances are taken together: a few vectors of what processors hold.
 _LANES = 64
@@ -64,7 +64,7 @@ def _split(points: NDArray[np.float32], rows: NDArray[np.int64]) -> list[NDArray
     return [*_split(points, ordered[:half]), *_split(points, ordered[half:])]
 
 
-@jit
+@compiled
 def _bound(pixel, low, high, bound):  # type: ignore[no-untyped-def]  # noqa: ANN001, ANN202
     # Squared distances (g,) from a pixel (d,) to the boxes.
     bound[:] = 0
@@ -75,7 +75,7 @@ def _bound(pixel, low, high, bound):  # type: ignore[no-untyped-def]  # noqa: AN
             bound[group] += gap * gap
 
 
-@jit
+@compiled
 def _find(pixels, lanes, weights, low, high, count, far, mean):  # type: ignore[no-untyped-def]  # noqa: ANN001, ANN202, PLR0917
     width, groups = low.shape
     least = np.empty(count, dtype=np.float32)

@@ -27,8 +27,8 @@ from numpy.typing import NDArray
 from sklearn.covariance import ledoit_wolf
 
 from classify.errors import ModelError
+from classify.features.compiled import compiled
 from classify.models.folds import group_folds
-from classify.models.forest_kernels import jit
 from classify.models.nearest import Points, group_points
 from classify.training.dataset import TrainingSet
 from classify.training.draws import even_draw
@@ -197,7 +197,7 @@ def _spread_over_classes(training: TrainingSet, seed: int) -> NDArray[np.int64]:
     return np.sort(np.concatenate(parts))
 
 
-@jit
+@compiled
 def _turn(features, centre, rotation):  # type: ignore[no-untyped-def]  # noqa: ANN001, ANN202
     """(features - centre) @ rotation, float32; a library product may depend on the number of rows in its last bits."""
     turned = np.empty((len(features), rotation.shape[1]), dtype=np.float32)
