@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import copy
+import json
+import re
 from pathlib import Path
 
 import jsonschema
@@ -12,6 +14,7 @@ from hypothesis import strategies as st
 
 from classify.errors import SettingsError
 from classify.settings import configs_folder, load_preset, load_project, parse_project, preset_names, project_schema
+from classify.settings.starter import project_text
 
 VALID = {
     "project": {"title": "Ground cover, Sorrel Basin", "seed": 7},
@@ -153,3 +156,19 @@ def test_presets_are_copies_whatever_the_case_and_unknown_ones_list_the_valid(tm
     assert "changed" not in load_preset("sensors", name)
     with pytest.raises(SettingsError, match=f"(?s)'no such sensor'.*{name}"):
         load_preset("sensors", "no such sensor")
+
+
+AT_REST = [number for number, line in enumerate(project_text().splitlines()) if re.match(r"# [a-z_]+ = ", line)]
+
+
+@pytest.mark.parametrize("number", AT_REST)
+def test_every_setting_at_rest_in_a_new_project_can_be_taken_into_use(number, tmp_path):
+    """With the # of one line taken away, or of its whole section where that is at rest, the file is still a project."""
+    lines = project_text().splitlines()
+    start = next(n for n in range(number, 0, -1) if lines[n].startswith(("[", "# [")))
+    end = next(n for n in range(number, len(lines)) if not lines[n])
+    wake = range(start, end) if lines[start].startswith("# [") else [number]
+    text = "\n".join(line.removeprefix("# ") if n in wake else line for n, line in enumerate(lines))
+    (tmp_path / "project.toml").write_text(text, encoding="utf-8")
+    project = load_project(tmp_path)
+    assert lines[number].split()[1] in json.dumps(project.model_dump(exclude_unset=True, mode="json"))
