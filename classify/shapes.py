@@ -25,10 +25,10 @@ class _File(TypedDict):
 
 
 class _Stage(TypedDict):
-    fingerprint: str | None
+    fingerprint: NotRequired[str | None]
     finished: str
     seconds: float
-    outputs: dict[str, str | None]
+    outputs: NotRequired[dict[str, str | None]]
     warnings: list[str]
 
 

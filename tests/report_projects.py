@@ -151,9 +151,14 @@ def _card(project: Project) -> dict:
     counts = (np.diag(np.arange(k) * 7 + 90) + 2).tolist()
     right = [counts[i][i] for i in range(k)]
     return {
-        "schema": 1, "kind": "random forest", "features": ["red", "nir", "ndvi"],
+        "schema": 1, "kind": "random forest", "needs": ["red", "nir"], "features": ["red", "nir", "ndvi"],
+        "recipe": {}, "versions": {}, "model_sha256": "ab" * 32,
         "classes": [{"code": c.code, "name": c.name, "colour": c.colour} for c in project.classes],
-        "training": {"polygons": 4 * k, "pixels": 200 * k}, "settings": {"trees": 300},
+        "training": {
+            "polygons": 4 * k, "pixels": 200 * k,
+            "quantiles": {"values": {name: [0.1, 0.2, 0.3] for name in ("red", "nir", "ndvi")}},
+        },
+        "settings": {"trees": 300},
         "calibration": {"temperature": 1.2, "error": 0.021},
         "warnings": ["class 'Water' has few polygons"],
         "screening": {
