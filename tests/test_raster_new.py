@@ -17,6 +17,7 @@ from classify.cli.new import command
 from classify.errors import OutputError
 from classify.settings import load_project, parse_project, project_schema
 from classify.settings.starter import BandDraft, MaskDraft, SceneDraft, project_text, start_project
+from classify.text import unseen
 
 
 def test_a_plain_new_project_is_valid_and_says_that_nothing_was_read(tmp_path):
@@ -60,7 +61,8 @@ def test_every_setting_at_rest_is_valid_when_it_is_woken():
     assert project.training.exclude
 
 
-text = st.text(min_size=1, max_size=20).filter(lambda s: s.strip() == s and s)
+# What a project file may hold: text that can be seen.
+text = st.text(min_size=1, max_size=20).filter(lambda s: s.strip() == s and s and unseen(s) is None)
 number = st.none() | st.floats(-1e6, 1e6, allow_nan=False)
 band = st.builds(
     BandDraft, role=st.from_regex(r"[a-z_][a-z0-9_]{0,8}", fullmatch=True), file=text, band=st.integers(1, 300),
