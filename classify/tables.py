@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import csv
+import re
 from collections import Counter
 from pathlib import Path
 
 import pandas as pd
 
 from classify.errors import DataError, Problem, raise_if_errors
+from classify.text import unseen
 
 # One message names at most so many rows with the same fault.
 ROWS_NAMED = 5
@@ -16,6 +18,8 @@ ROWS_NAMED = 5
 MOST_BYTES = 1 << 29
 MOST_RECORDS = 1_000_000
 MOST_COLUMNS = 1_000
+# How formulas begin in spreadsheets, some of which first drop white space. Numbers with a sign are none.
+_FORMULA = re.compile(r"\s*[=@\t\r]|\s*[+-](?!\s*[\d.]+([eE][+-]?\d+)?\s*$)")
 
 
 def read_table(path: Path) -> pd.DataFrame:
@@ -34,6 +38,24 @@ def read_table(path: Path) -> pd.DataFrame:
     if len(rows) == 1:
         raise DataError("the table has a first row but no others", where=str(path))
     return pd.DataFrame([row[: len(header)] for row in rows[1:]], columns=header, dtype=object)
+
+
+def csv_text(table: pd.DataFrame) -> str:
+    """A table as comma-separated values. A spreadsheet would run text that begins like a formula: it gets an apostrophe
+    in front, which spreadsheets take for the sign of text."""
+    shown = table.rename(columns=_as_text).copy()
+    for place, dtype in enumerate(shown.dtypes):
+        if not pd.api.types.is_numeric_dtype(dtype):
+            shown.isetitem(place, [_as_text(value) for value in shown.iloc[:, place]])
+    return str(shown.to_csv(index=False, lineterminator="\n"))
+
+
+def _as_text(value: object) -> object:
+    return f"'{value}" if isinstance(value, str) and _FORMULA.match(value) else value
+
+
+def _from_text(field: str) -> str:
+    return field[1:] if field.startswith("'") and _FORMULA.match(field, 1) else field
 
 
 def refuse_large(where: str, *, size_bytes: int = 0, records: int = 0, columns: int = 0) -> None:
@@ -56,7 +78,11 @@ def _rows(path: Path) -> list[list[str]]:
         refuse_large(str(path), size_bytes=path.stat().st_size)
         rows: list[list[str]] = []
         with path.open(encoding="utf-8-sig", newline="") as stream:
-            for row in csv.reader(stream, strict=True):
+            for fields in csv.reader(stream, strict=True):
+                row = [_from_text(field) for field in fields]
+                if code := next(filter(None, (unseen(field.replace("\r\n", "\n")) for field in row)), None):
+                    what = f"row {len(rows) + 1} holds a character that cannot be seen ({code})"
+                    raise DataError(what, where=str(path), fix="retype it, or save the table as UTF-8 text again")
                 refuse_large(str(path), records=len(rows), columns=len(row))
                 # A line of spaces is a blank line too, where a row has more than one field.
                 if len(row) > 1 or (row and (row[0].strip() or not rows or len(rows[0]) == 1)):

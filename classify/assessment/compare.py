@@ -29,6 +29,7 @@ from classify.assessment.sample import DesignKind, ReferenceSample
 from classify.assessment.user_folder import write_results
 from classify.errors import Problem, SampleError
 from classify.files import json_text
+from classify.tables import csv_text
 
 # With fewer discordant pairs McNemar's test is the exact binomial one (common practice).
 _EXACT_BELOW = 25

@@ -13,6 +13,7 @@ from classify.assessment.options import AssessmentOptions
 from classify.assessment.result import Assessment
 from classify.assessment.user_folder import write_results
 from classify.files import json_text
+from classify.tables import csv_text
 
 DEFAULTS = AssessmentOptions()
 

@@ -35,6 +35,7 @@ from classify.raster.grid import Grid
 from classify.raster.vectors import read_places
 from classify.settings import ClassSettings, Project, ReferenceSettings
 from classify.settings.model import M2_PER_UNIT
+from classify.tables import read_table
 
 _BLOCK_PX = 512
 _WHOLE_MAP = "whole map"
@@ -132,8 +133,9 @@ def project_options(project: Project, *, kind: DesignKind | None = None) -> Asse
 def read_areas(path: Path) -> pd.DataFrame:
     """Mapped pixels and ground area per class: columns code, name, pixels, area_m2. Raises DataError."""
     try:
-        return pd.read_csv(path, dtype={"name": str}, keep_default_na=False)[["code", "name", "pixels", "area_m2"]]
-    except (OSError, KeyError, ValueError) as error:
+        table = read_table(path)[["code", "name", "pixels", "area_m2"]]
+        return table.astype({"code": int, "name": object, "pixels": int, "area_m2": float})
+    except (DataError, KeyError, ValueError, OverflowError) as error:
         raise DataError(f"the areas of the map cannot be read: {error}", where=str(path),
                         fix="run 'landassay classify' again") from error  # fmt: skip
 

@@ -19,6 +19,7 @@ from classify.progress import Progress
 from classify.raster.grid import Window
 from classify.settings import ClassSettings
 from classify.settings.model import M2_PER_UNIT
+from classify.tables import csv_text
 from classify.threads import stoppable_pool
 
 
@@ -70,7 +71,7 @@ def deliver(
     total = add_up(tallies)
     areas = _area_table(total, wanted.classes, wanted.area_unit, reach="reach" in store.layers)
     with replacing(folder / "areas.csv") as temporary:
-        areas.to_csv(temporary, index=False, lineterminator="\n")
+        temporary.write_bytes(csv_text(areas).encode())
     return Delivered(files, areas, total.get(NO_CLASS, Count(NO_CLASS, 0, 0.0, 0)), tallies)
 
 

@@ -20,6 +20,7 @@ from classify.raster.guard import is_remote
 from classify.raster.scene import open_scene
 from classify.raster.stac import acquired, item_files, read_items
 from classify.settings import Project, SceneSettings
+from classify.tables import csv_text
 
 ITEM_FILE, COLLECTION_FILE, SUMMARY_FILE = "item.json", "collection.json", "areas.csv"
 _ORIGIN = "landassay:origin"
@@ -103,7 +104,11 @@ def classify_many(
         try:
             done, found = _map_one(model, project, scene, folder, options, overwrite=overwrite, progress=progress)
             items[f"{scene.name}/{ITEM_FILE}"] = read_json(folder / scene.name / ITEM_FILE)
-            tables.append(pd.read_csv(folder / scene.name / "areas.csv").assign(scene=scene.name))
+            tables.append(
+                pd.read_csv(folder / scene.name / "areas.csv", dtype={"name": str}, keep_default_na=False).assign(
+                    scene=scene.name
+                )
+            )
         except LandassayError as error:
             failed[scene.name] = error.problems
             continue
@@ -114,7 +119,7 @@ def classify_many(
     if items:
         areas = areas[["scene", *(name for name in areas.columns if name != "scene")]]
         with replacing(folder / SUMMARY_FILE) as temporary:
-            areas.to_csv(temporary, index=False, lineterminator="\n")
+            temporary.write_bytes(csv_text(areas).encode())
         name = identifier(project.project.title)
         write_collection(folder / COLLECTION_FILE, name, f"Maps of {len(items)} scenes: {project.project.title}", items)
     return ManyResult(areas, tuple(mapped), tuple(kept), failed, warnings)

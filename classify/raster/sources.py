@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 import rasterio
 from numpy.typing import NDArray
+from rasterio._err import CPLE_BaseError
 from rasterio.enums import Interleaving, MaskFlags
 from rasterio.errors import NotGeoreferencedWarning, RasterioError
 
@@ -93,7 +94,7 @@ def gdal_errors(path: str, doing: str) -> Iterator[None]:
     """Turn errors of the raster library into a DataError about `path`."""
     try:
         yield
-    except RasterioError as error:
+    except (RasterioError, CPLE_BaseError) as error:
         reason = str(error.__cause__ or error).strip().replace("\n", " ")
         if is_remote(path):
             fix = "check the address, your access to it and the network"
@@ -126,7 +127,8 @@ def _open(path: str, depth: int) -> rasterio.DatasetReader:
     with gdal_errors(path, "this raster cannot be opened"), _gdal_options(path):
         dataset = rasterio.open(path, driver=driver)
     try:
-        _refuse_unfit(dataset, path)
+        with gdal_errors(path, "what this raster says of itself cannot be read"):
+            _refuse_unfit(dataset, path)
     except DataError:
         dataset.close()
         raise
@@ -163,7 +165,7 @@ def describe(path: str) -> RasterFacts:
         # Said below, as an error of ours.
         warnings.simplefilter("ignore", NotGeoreferencedWarning)
         dataset = open_raster(path)
-    with dataset:
+    with dataset, gdal_errors(path, "what this raster says of itself cannot be read"):
         if dataset.crs is None:
             raise DataError(
                 "this raster has no coordinate reference system", where=path,

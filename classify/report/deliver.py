@@ -25,6 +25,7 @@ from classify.report.facts import (
     ReportFacts,
     StratumFact,
 )
+from classify.tables import csv_text
 
 MANIFEST = "manifest.json"
 FACTS, ASSESSMENT, METHOD = "data/facts.json", "data/assessment.json", "data/method.json"
@@ -78,7 +79,7 @@ def read_facts(folder: Path) -> ReportFacts:
 
 
 def _csv(path: Path, table: pd.DataFrame) -> Path:
-    write_text(path, table.to_csv(index=False, lineterminator="\n"))
+    write_text(path, csv_text(table))
     return path
 
 

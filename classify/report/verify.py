@@ -5,9 +5,8 @@ What it needs lies in the folder itself, so that whoever receives the report can
 
 from __future__ import annotations
 
-import csv
 import math
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any
@@ -29,6 +28,8 @@ from classify.tables import read_table
 
 # Derived numbers may differ in the last bits between machines; printed ones may not differ at all.
 _RELATIVE, _ABSOLUTE = 1e-9, 1e-12
+# Gives what is stored and what follows from the tables.
+_Work = Callable[[], tuple[Any, Any]]
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,31 +91,53 @@ def _fingerprints(folder: Path, listed: Mapping[str, str]) -> Iterator[Finding]:
 
 
 def _derive(folder: Path, facts: ReportFacts) -> tuple[int, list[Finding], tuple[str, ...]]:
-    count, findings = 0, []
-    notes: list[str] = []
-    for name, stored, again in _pairs(folder, facts, notes):
+    count = 0
+    findings: list[Finding] = []
+    works, notes = _works(folder, facts)
+    for name, work in works:
+        try:
+            stored, again = work()
+        except LandassayError as error:
+            findings.extend(Finding(name, f"cannot be derived again: {problem.what}") for problem in error.problems)
+            continue
+        except (OSError, KeyError, TypeError, ValueError) as error:  # what a file mangled in any way may lead to
+            findings.append(Finding(name, f"cannot be derived again, as what it rests on is damaged: {error!r}"))
+            continue
         for place, a, b in _leaves(stored, again):
             count += 1
             if not _same(a, b):
                 findings.append(Finding(f"{name}: {place}", f"reported {a!r}, derived again {b!r}"))
-    return count, findings, tuple(notes)
+    return count, findings, notes
 
 
-def _pairs(folder: Path, facts: ReportFacts, notes: list[str]) -> Iterator[tuple[str, Any, Any]]:
-    """What is stored beside what follows from the tables: (name, stored, derived)."""
+def _works(folder: Path, facts: ReportFacts) -> tuple[list[tuple[str, _Work]], tuple[str, ...]]:
+    """What gives the stored beside what follows from the tables, by name; and what cannot be checked."""
+    works: list[tuple[str, _Work]] = []
+    notes: tuple[str, ...] = ()
     if (folder / deliver.METHOD).is_file():
-        stored = read_json(folder / deliver.ASSESSMENT)
-        yield deliver.ASSESSMENT, stored, {**_assessed_again(folder), "warnings": stored["warnings"]}
+        works.append((deliver.ASSESSMENT, lambda: _assessment(folder)))
         if facts.accuracy is not None:
-            again = asdict(accuracy_facts(stored, folder / deliver.ASSESSMENT))
-            yield f"{deliver.FACTS}: accuracy", asdict(facts.accuracy), again
+            works.append((f"{deliver.FACTS}: accuracy", lambda: _accuracy(folder, facts)))
     elif facts.accuracy is not None:
-        notes.append("the points are not part of this folder, so accuracies and areas could not be derived again")
+        notes = ("the points are not part of this folder, so accuracies and areas could not be derived again",)
     if (folder / deliver.AREAS).is_file():
-        yield f"{deliver.FACTS}: classes", [[c.code, c.name, c.pixels, c.mapped] for c in facts.classes], _areas(folder)
+        held = [[c.code, c.name, c.pixels, c.mapped] for c in facts.classes]
+        works.append((f"{deliver.FACTS}: classes", lambda: (held, _areas(folder))))
     screening = facts.model.screening if facts.model else None
     if screening and screening.get("screening_accuracy") is not None:
-        yield f"{deliver.FACTS}: screening", *_screening(screening)
+        works.append((f"{deliver.FACTS}: screening", lambda: _screening(screening)))
+    return works, notes
+
+
+def _assessment(folder: Path) -> tuple[Any, Any]:
+    stored = read_json(folder / deliver.ASSESSMENT)
+    return stored, {**_assessed_again(folder), "warnings": stored["warnings"]}
+
+
+def _accuracy(folder: Path, facts: ReportFacts) -> tuple[Any, Any]:
+    assert facts.accuracy is not None, facts
+    path = folder / deliver.ASSESSMENT
+    return asdict(facts.accuracy), asdict(accuracy_facts(read_json(path), path))
 
 
 def _assessed_again(folder: Path) -> dict[str, Any]:
@@ -129,8 +152,8 @@ def _assessed_again(folder: Path) -> dict[str, Any]:
 
 
 def _areas(folder: Path) -> list[list[Any]]:
-    with (folder / deliver.AREAS).open(encoding="utf-8", newline="") as stream:
-        return [[int(r["code"]), r["name"], int(r["pixels"]), float(r["area"])] for r in csv.DictReader(stream)]
+    rows = read_table(folder / deliver.AREAS).to_dict("records")
+    return [[int(r["code"]), r["name"], int(r["pixels"]), float(r["area"])] for r in rows]
 
 
 def _screening(screening: Mapping[str, Any]) -> tuple[dict[str, Any], dict[str, Any]]:
