@@ -29,6 +29,7 @@ from classify.files import replacing, sha256, write_bytes, write_json
 from classify.raster.grid import Grid
 from classify.raster.vectors import layers_of, read_places
 from classify.shapes import Design, read_shaped
+from classify.tables import csv_text
 from classify.together import finish_replacing, is_unfinished, replacing_together
 
 LABEL_COLUMNS = ("observed", "alternate", "confidence", "note")
