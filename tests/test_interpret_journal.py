@@ -77,7 +77,7 @@ def test_a_log_cut_short_loses_only_what_was_cut(tmp_path: Path):
 def test_a_file_that_is_no_journal_is_refused_and_left(tmp_path: Path):
     path = tmp_path / "labels.sqlite"
     path.write_bytes(b"this is not a database, and somebody may want it" * 30)
-    with pytest.raises(DataError, match="labels cannot be opened"):
+    with pytest.raises(DataError, match="labels cannot be read or written"):
         Journal(path, "Ada")
     assert path.read_bytes().startswith(b"this is not")
 
@@ -117,6 +117,9 @@ def test_undo_walks_back_through_a_plain_stack(tmp_path_factory, steps):
             stack.append(step)
     wanted = dict(stack)
     assert {i: s.label.label for i, s in journal.standing().items() if s.label} == wanted
+    everyone = journal.standing()
+    assert [journal.standing_at(i) for i in range(5)] == [everyone.get(i, NOTHING) for i in range(5)]
+    assert journal.standing_at(1, "Bea") == NOTHING and journal.standing_at(1, "Ada") == everyone.get(1, NOTHING)
     journal.close()
 
 

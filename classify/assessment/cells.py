@@ -57,9 +57,10 @@ def locate(  # noqa: PLR0917 - plain arrays, as the kernels take them
 
     cell_yx: row and column of the cell (int64 (n, 2)); stratum and rank: int64 (n,), rank below the count there.
     """
+    order = np.lexsort((rank, stratum, cell_yx[:, 1], cell_yx[:, 0]))
     places = np.empty(cell_yx.shape, np.int64)
-    _locate(codes, *shape_yx, stratum_of, cell_yx, stratum, rank, places)
-    return places
+    _locate(codes, *shape_yx, stratum_of, cell_yx[order], stratum[order], rank[order], places)
+    return places[np.argsort(order)]
 
 
 @compiled
@@ -94,15 +95,20 @@ def _locate(  # noqa: PLR0917 - a kernel takes plain arrays
     codes: NDArray[np.uint8], rows: int, cols: int, stratum_of: NDArray[np.int16], cell_yx: NDArray[np.int64],
     stratum: NDArray[np.int64], rank: NDArray[np.int64], places: NDArray[np.int64],
 ) -> None:  # fmt: skip
+    """As `locate`, of places in ascending order: a cell is gone through once for all that are sought of a stratum."""
     height, width = codes.shape
-    for e in range(cell_yx.shape[0]):
+    e, n = 0, len(rank)
+    while e < n:
         down, across = cell_yx[e]
-        left = rank[e]
+        code, seen, last = stratum[e], 0, e
+        while last < n and cell_yx[last, 0] == down and cell_yx[last, 1] == across and stratum[last] == code:
+            last += 1
         for i in range(down * rows, min((down + 1) * rows, height)):
             for j in range(across * cols, min((across + 1) * cols, width)):
-                if stratum_of[codes[i, j]] == stratum[e]:
-                    if left == 0:
+                if stratum_of[codes[i, j]] == code:
+                    if e < last and rank[e] == seen:
                         places[e, 0], places[e, 1] = i, j
-                    left -= 1
-            if left < 0:
+                        e += 1
+                    seen += 1
+            if e == last:
                 break

@@ -172,11 +172,13 @@ def _choose(
         size = sizes.get(name, 0)
         if not size:
             continue
-        known = set(taken.get(name, ()))
-        offered = [(int(u) // across, int(u) % across) for u in found.lowest[place].units]
-        fresh = [unit for unit in offered if unit not in known]
-        wanted = size + options.reserve
-        chosen = fresh[:wanted] if not options.apart_m else spacing.pick(fresh, wanted)
+        known = [row * across + col for row, col in taken.get(name, ())]
+        offered, wanted = found.lowest[place].units, size + options.reserve
+        fresh = offered[~np.isin(offered, known)]
+        if not options.apart_m:
+            fresh = fresh[:wanted]
+        cells = list(zip((fresh // across).tolist(), (fresh % across).tolist(), strict=True))
+        chosen = cells if not options.apart_m else spacing.pick(cells, wanted)
         if len(chosen) < wanted:
             short[place] = len(chosen)
         drawn[name] = Drawn(name, tuple(chosen[:size]), tuple(chosen[size:]))

@@ -18,6 +18,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from classify.features.compiled import compiled
+
 _STEP = np.uint64(0x9E3779B97F4A7C15)
 _MIX_1 = np.uint64(0xBF58476D1CE4E5B9)
 _MIX_2 = np.uint64(0x94D049BB133111EB)
@@ -51,7 +53,8 @@ def _mixed(z: NDArray[np.uint64]) -> NDArray[np.uint64]:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Arrivals:
-    """Draws in groups of units. group, rank: int64 (n,), rank 0 .. count - 1 within the group; time: float64 (n,)."""
+    """Draws in groups of units, by group and then by time. group, rank: int64 (n,), rank from 0 within the group; time:
+    float64 (n,)."""
 
     group: NDArray[np.int64]
     rank: NDArray[np.int64]
@@ -81,19 +84,28 @@ def arrivals(
         group, time = group[left > 1], time[left > 1]
     if not groups:
         return Arrivals(np.zeros(0, np.int64), np.zeros(0, np.int64), np.zeros(0))
-    whose, turn = np.concatenate(groups), np.concatenate(turns)
-    return Arrivals(whose, _ranks(whose, turn, count), np.concatenate(times))
+    whose = np.concatenate(groups)
+    order = np.argsort(whose, kind="stable")
+    whose, rank = whose[order], np.concatenate(turns)[order]
+    _settle(whose, count[whose], rank)
+    return Arrivals(whose, rank, np.concatenate(times)[order])
 
 
-def _ranks(group: NDArray[np.int64], turn: NDArray[np.int64], count: NDArray[np.int64]) -> NDArray[np.int64]:
-    """Ranks of units, by their places among those that earlier draws from the group have left."""
-    ranks = turn.copy()
-    # What is drawn gives its place to the last that is left (Durstenfeld 1964, Communications of the ACM 7, 420).
-    moved: dict[tuple[int, int], int] = {}
-    last = count.copy()
-    for i, (g, place) in enumerate(zip(group.tolist(), turn.tolist(), strict=True)):
-        ranks[i] = moved.get((g, place), place)
-        last[g] -= 1
-        end = int(last[g])
-        moved[g, place] = moved.get((g, end), end)
-    return ranks
+@compiled
+def _settle(group: NDArray[np.int64], count: NDArray[np.int64], rank: NDArray[np.int64]) -> None:
+    """Turn places among the units that earlier draws from a group have left into ranks within the group."""
+    left = np.empty(count.max() if len(count) else 0, np.int64)
+    first = 0
+    while first < len(group):
+        end = first + 1
+        while end < len(group) and group[end] == group[first]:
+            end += 1
+        if end > first + 1:
+            for i in range(count[first]):
+                left[i] = i
+            # What is drawn gives its place to the last that is left (Durstenfeld 1964, Comm. of the ACM 7, 420).
+            for e in range(first, end):
+                place = rank[e]
+                rank[e] = left[place]
+                left[place] = left[count[e] - 1 - (e - first)]
+        first = end

@@ -14,7 +14,7 @@ from contextlib import contextmanager
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from pathlib import Path
-from typing import Any, Literal, get_args
+from typing import Literal, get_args
 
 from classify.errors import DataError, SampleError
 from classify.text import unseen
@@ -126,6 +126,12 @@ class Journal:
         with self._at_work() as db:
             return _standings(db, self.role, self.interpreter)
 
+    def standing_at(self, point: int, interpreter: str | None = None) -> Standing:
+        """What holds for one point: by this journal's author, or by an interpreter."""
+        with self._at_work() as db:
+            role, name = (self.role, self.interpreter) if interpreter is None else ("interpreter", interpreter)
+            return _standings(db, role, name, point).get(point, NOTHING)
+
     def interpreters(self) -> list[str]:
         """Names of all who have labelled points, in the order of their names."""
         with self._at_work() as db:
@@ -199,25 +205,29 @@ def _failure(error: sqlite3.Error, path: Path) -> DataError:
     return DataError(f"the labels cannot be read or written: {error}", where=str(path), fix=fix)
 
 
-def _standings(db: sqlite3.Connection, role: Role, interpreter: str | None) -> dict[int, Standing]:
+def _standings(
+    db: sqlite3.Connection, role: Role, interpreter: str | None, point: int | None = None
+) -> dict[int, Standing]:
+    """What holds by one interpreter, or by all together for None; of all points, or of one."""
+    given = {"role": role, "interpreter": interpreter, "point": point}
+    wanted = {column: value for column, value in given.items() if value is not None}
     rows = db.execute(
-        "SELECT number, point, undoes, label, alternate, confidence, note FROM entry WHERE role = ? "
-        "AND (? IS NULL OR interpreter = ?) ORDER BY number", (role, interpreter, interpreter),
-    ).fetchall()  # fmt: skip
+        "SELECT number, point, undoes, label, alternate, confidence, note FROM entry WHERE "
+        + " AND ".join(f"{column} = ?" for column in wanted) + " ORDER BY number",
+        tuple(wanted.values()),
+    )  # fmt: skip
+    held: dict[int, dict[int, Label]] = {}  # by point, labels that were not undone by number, the last one last
+    last: dict[int, int] = {}
     for row in rows:
         if not _is_entry(*row):
             raise sqlite3.DataError(f"entry {row[0]} is none that was written here")
-    undone = {row[2] for row in rows if row[2] is not None}
-    found: dict[int, Standing] = {}
-    for number, point, undoes, *said in rows:
-        before = found.get(point, NOTHING).label
+        number, about, undoes, *said = row
+        last[about] = number
         if undoes is not None:
-            found[point] = Standing(_latest(rows, point, undone), number)
-        elif number in undone:
-            found[point] = Standing(before, number)
+            held.setdefault(about, {}).pop(undoes, None)
         else:
-            found[point] = Standing(Label(*said), number)
-    return found
+            held.setdefault(about, {})[number] = Label(*said)
+    return {about: Standing(next(reversed(held[about].values()), None), number) for about, number in last.items()}
 
 
 def _is_entry(number: object, point: object, undoes: object, *said: object) -> bool:
@@ -225,12 +235,6 @@ def _is_entry(number: object, point: object, undoes: object, *said: object) -> b
     numbers = isinstance(point, int) and isinstance(undoes, int | None)
     texts = all(isinstance(text, str) and not unseen(text) for text in (label, alternate, note) if text is not None)
     return isinstance(number, int) and numbers and texts and note is not None and confidence in CONFIDENCES
-
-
-def _latest(rows: list[Any], point: int, undone: set[int]) -> Label | None:
-    """The last label of a point that was not undone."""
-    kept = [row for row in rows if row[1] == point and row[2] is None and row[0] not in undone]
-    return Label(*kept[-1][3:]) if kept else None
 
 
 def _now() -> str:

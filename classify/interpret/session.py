@@ -69,11 +69,11 @@ class Session:
 
     def said(self, point: int) -> dict[str, Any]:
         """What holds for one point, and in settling what the interpreters said."""
-        standing = self.journal.standing().get(point, NOTHING)
+        standing = self.journal.standing_at(point)
         found: dict[str, Any] = {"revision": standing.revision, "said": _plain(standing.label)}
         if self.journal.role == "settling":
             found["originals"] = [
-                {"interpreter": name, **_plain_of(self.journal.standing_of(name).get(point, NOTHING))}
+                {"interpreter": name, **_plain_of(self.journal.standing_at(point, name))}
                 for name in self.journal.interpreters()
             ]
         return found
@@ -135,10 +135,11 @@ def agreement(journal: Journal, ids: Sequence[int], names: Sequence[str]) -> lis
 def _pair_agreement(both: Sequence[Sequence[str]], names: Sequence[str]) -> dict[str, Any]:
     if not both:
         return {"points": 0, "same": None, "kappa": None}
-    used = [name for name in names if any(name in pair for pair in both)]
+    occurring = {label for pair in both for label in pair}
+    used = [name for name in names if name in occurring]
+    place = {name: i for i, name in enumerate(used)}
     counts = np.zeros((len(used), len(used)), dtype=np.int64)
-    for a, b in both:
-        counts[used.index(a), used.index(b)] += 1
+    np.add.at(counts, tuple(np.array([[place[a], place[b]] for a, b in both]).T), 1)
     matrix = pd.DataFrame(counts, columns=used)
     matrix.insert(0, "first interpreter", used)
     result = assess_matrix(matrix)

@@ -5,7 +5,7 @@ import { drawSpectrum } from "./spectrum.js";
 import { centre, nudge, setUpViews, showPoint, stretch, warmUp, zoom } from "./views.js";
 
 const $ = (id) => document.getElementById(id);
-const LETTERS = "rtyuiopghjkl";
+const LETTERS = "rtyuiopghjklasdfbm";
 const CONFIDENCE_KEYS = "qwe";
 const UNTOLD = "\u0000";
 
@@ -17,7 +17,8 @@ let current = null;
 let busy = false;
 const known = new Map();
 
-const keyOf = (i) => (i < 9 ? String(i + 1) : LETTERS[i - 9]);
+// Classes beyond the keys are reached with Tab and chosen with Enter.
+const keyOf = (i) => (i < 9 ? String(i + 1) : LETTERS[i - 9] ?? "");
 const empty = () => ({ label: null, untold: false, alternate: null, confidence: "high", note: "" });
 
 function say(text, kind = "") {
@@ -218,9 +219,14 @@ async function undo() {
     const { body } = await post("/api/undo");
     if (body.point === null) return say("There is nothing to take back.");
     known.delete(body.point);
-    await refreshPoints();
     const index = points.findIndex((p) => p.id === body.point);
-    if (index >= 0) await open(index);
+    if (index >= 0) {
+      const { said, revision } = await load(body.point);
+      const state = said === null ? "open" : said.label === null ? "untold" : "done";
+      Object.assign(points[index], { state, label: said?.label ?? null, revision });
+      progress();
+      await open(index);
+    }
     say(`Took back the label of point ${body.point}.`, "good");
   } catch (error) {
     if (!(error instanceof Silence)) throw error;
