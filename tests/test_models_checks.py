@@ -60,4 +60,4 @@ def test_shift_by_hand() -> None:
     features = np.array([[2, np.nan], [-1.9, np.nan], [6.1, np.nan], [-2.1, np.nan]], dtype=np.float32)
     found = distribution_shift(quantiles, features)
     assert found["b"] is None
-    assert found["a"] == {"beyond": 0.5, "times_off": 1.0, "middle": pytest.approx(0.05), "expected": 2.0}
+    assert found["a"] == {"beyond": 0.5, "middle": pytest.approx(0.05), "expected": 2.0}

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
 import pytest
@@ -11,12 +12,12 @@ from training_sets import project_of, recipe_of, training_set
 
 from classify.errors import TrainingError
 from classify.models import ScreenOptions, TrainedModel, fit_model, screen
-from classify.models.calibrate import calibrate
+from classify.models.calibrate import Calibration, calibrate
 from classify.models.folds import spatial_blocks
 from classify.models.kinds import make_estimator, to_probabilities
 from classify.models.reach import fit_reach
 from classify.models.screening import Screening
-from classify.models.tuning import Candidate, choose, draw_settings, load_space
+from classify.models.tuning import Candidate, choose, draw_settings, load_space, simplest_within_error
 from classify.training import TrainingSet
 
 
@@ -34,6 +35,7 @@ def test_screening_counts_are_those_of_scikit_learn() -> None:
     found = screen(training, forest, ScreenOptions(folds=4, repeats=2, seed=3))
     labels = found.rounds[0]
     assert (labels > 0).all()
+    assert (found.rounds[0] != found.rounds[1]).any(), "repeats are dealt anew"
     assert np.array_equal(found.counts, confusion_matrix(training.codes, labels))
     for (overall, balanced), labels in zip(found.repeats, found.rounds, strict=True):
         assert overall == pytest.approx(accuracy_score(training.codes, labels))
@@ -161,6 +163,43 @@ def test_the_simplest_within_one_standard_error_is_chosen() -> None:
     assert any("chosen on the same polygons" in note for note in model.card["screening"]["notes"])
 
 
+@pytest.mark.parametrize(
+    ("simple", "other"),
+    [
+        (("linear support vector machine", {}), ("random forest", {})),
+        (("random forest", {}), ("support vector machine", {})),
+        (("random forest", {"min_samples_leaf": 8}), ("random forest", {"min_samples_leaf": 2})),
+        (("random forest", {"max_features": 0.2}), ("random forest", {"max_features": 0.7})),
+        (("support vector machine", {"C": 1.0}), ("support vector machine", {"C": 100.0})),
+        (("support vector machine", {"gamma_times_features": 0.2}), ("support vector machine", {})),
+    ],
+)
+def test_a_simpler_candidate_is_taken_within_one_standard_error_and_not_beyond(simple: Any, other: Any) -> None:
+    """The better one has 0.90 with a standard error of 0.02; the other is just within, then just beyond."""
+    folds = np.array([0.02, -0.02])
+    best = Candidate(*other, 0.90 + folds)
+    for order in (1, -1):
+        near, far = Candidate(*simple, 0.881 + folds), Candidate(*simple, 0.879 + folds)
+        assert simplest_within_error([best, near][::order]).chosen is near
+        assert simplest_within_error([best, far][::order]).chosen is best
+        better = Candidate(*simple, 0.95 + folds)
+        assert simplest_within_error([best, better][::order]).chosen is better
+
+
+def test_search_keeps_blocks_whole() -> None:
+    """Labels that say nothing, on neighbours that are twins: found from the twin unless it is held out as well."""
+    training = training_set(polygons=(16, 16), pixels=10)
+    block = ((training.polygon - 1) // 2).astype(np.int32)
+    random = np.random.default_rng(3)
+    codes = random.permutation(np.repeat([1, 2], 8))[block].astype(np.uint8)
+    features = random.normal(0, 0.5, (16, 4))[block] + random.normal(0, 0.01, (320, 4))
+    twins = replace(training, codes=codes, features=features.astype(np.float32))
+    wanted = [("random forest", {})]
+    options = ScreenOptions(folds=8)
+    assert choose(twins, wanted, options).best.mean > 0.9
+    assert choose(twins, wanted, options, groups=block).best.mean < 0.8
+
+
 def test_standard_error_of_a_candidate() -> None:
     found = Candidate("random forest", {}, np.array([0.8, 0.9, 0.85, np.nan]))
     assert found.mean == pytest.approx(0.85)
@@ -185,3 +224,29 @@ def test_calibration_finds_the_temperature_that_made_the_labels() -> None:
     assert found.raw_error > 0.05
     assert all(abs(row["said"] - row["right"]) < 0.04 for row in found.reliability if row["pixels"] > 500)
     assert sum(row["share"] for row in found.reliability) == pytest.approx(1)
+
+
+def test_calibration_counts_polygons_and_adds_up_what_is_off() -> None:
+    """A polygon weighs the same however often its pixels are repeated; expected calibration error as its paper has it
+    (Naeini, Cooper & Hauskrecht 2015, AAAI, from memory): the gaps of the bins, by share."""
+    random = np.random.default_rng(5)
+    classes = np.array([1, 2, 3], dtype=np.uint8)
+    scores = random.normal(0, 2, (600, 3))
+    codes = np.where(random.random(600) < 0.6, classes[scores.argmax(axis=1)], random.choice(classes, 600))
+    codes = codes.astype(np.uint8)
+    polygon = np.repeat(np.arange(60), 10).astype(np.int32)
+    # One polygon that contradicts the others, once with its ten pixels and once with a thousand.
+    codes[polygon == 0] = classes[scores[polygon == 0].argmin(axis=1)]
+    repeated = np.concatenate([np.repeat(np.flatnonzero(polygon == 0), 100), np.flatnonzero(polygon != 0)])
+
+    def of(rows: np.ndarray) -> Calibration:
+        labels = classes[scores[rows].argmax(axis=1)]
+        screening = Screening(classes, np.zeros((3, 3), np.int64), np.zeros((1, 2)), labels[None], scores[rows], 5)
+        return calibrate(screening, codes[rows], polygon[rows], "support vector machine")
+
+    once, often = of(np.arange(600)), of(repeated)
+    assert once.temperature == pytest.approx(often.temperature, rel=2e-3)
+    assert once.error == pytest.approx(often.error, abs=2e-3)
+    gaps = [(row["said"] - row["right"], row["share"]) for row in once.raw]
+    assert min(gap for gap, _ in gaps) < 0 < max(gap for gap, _ in gaps)
+    assert once.raw_error == pytest.approx(sum(abs(gap) * share for gap, share in gaps))

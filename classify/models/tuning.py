@@ -124,7 +124,7 @@ def choose(
     groups: NDArray[np.int32] | None = None,
     progress: Progress = SILENT,
 ) -> Choice:
-    """Try every candidate on the same folds and choose by the one-standard-error rule (Breiman et al. 1984, CART).
+    """Try every candidate on the same folds and choose by the one-standard-error rule.
 
     All candidates and folds share one pool of `options.jobs` threads; the result does not depend on it.
     """
@@ -139,12 +139,18 @@ def choose(
             task.advance()
 
         list(pool.map(run, tasks))
-    tried = tuple(Candidate(kind, params, row) for (kind, params), row in zip(wanted, results, strict=True))
-    best = max(tried, key=lambda candidate: candidate.mean if np.isfinite(candidate.by_fold).any() else -1.0)
+    return simplest_within_error(
+        [Candidate(kind, params, row) for (kind, params), row in zip(wanted, results, strict=True)]
+    )
+
+
+def simplest_within_error(tried: Sequence[Candidate]) -> Choice:
+    """The simplest candidate whose mean is within one standard error of the best one's (Breiman et al. 1984, CART)."""
     space = load_space()
+    best = max(tried, key=lambda candidate: candidate.mean if np.isfinite(candidate.by_fold).any() else -1.0)
     within = [candidate for candidate in tried if candidate.mean >= best.mean - best.error]
     chosen = min(within or [best], key=lambda candidate: _complexity(candidate, space))
-    return Choice(chosen, best, tried)
+    return Choice(chosen, best, tuple(tried))
 
 
 def _one(
