@@ -2,10 +2,14 @@
 
 from __future__ import annotations
 
+import atexit
+import shutil
 import subprocess
 import sys
+import tempfile
 from collections.abc import Iterator
 from contextlib import contextmanager
+from functools import cache
 from pathlib import Path
 
 import numpy as np
@@ -17,7 +21,16 @@ from classify.cli.main import cli
 
 
 def drawn_project(folder: Path) -> Path:
-    """Write the project, a map that is right but for its names' order, and the sample."""
+    """A copy of the project, made in a folder that is not there yet."""
+    shutil.copytree(_template(), folder)
+    return folder
+
+
+@cache
+def _template() -> Path:
+    """Write the project, a map that is right but for its names' order, and the sample: once for all tests."""
+    folder = Path(tempfile.mkdtemp(prefix="landassay-tests-"))
+    atexit.register(shutil.rmtree, folder, ignore_errors=True)
     make_small_project(folder)
     codes = np.array([1, 2, 5])[truth_indices()]
     (folder / "outputs" / "map").mkdir(parents=True)
