@@ -1,5 +1,5 @@
 """A server of this machine's own network, as a process of its own, that notes who asks for what. For attacks: nothing
-may ask it for anything unless the user named it."""
+may ask it for anything unless the user named it. A path /to/ADDRESS is passed on to that address."""
 
 from __future__ import annotations
 
@@ -39,7 +39,10 @@ class _Noting(BaseHTTPRequestHandler):
     def do_GET(self) -> None:
         with Path(sys.argv[1]).open("a") as log:
             log.write(self.path + "\n")
-        self.send_response(404)
+        _, passed_on, to = self.path.partition("/to/")
+        self.send_response(302 if passed_on else 404)
+        if passed_on:
+            self.send_header("Location", to)
         self.send_header("Content-Length", "0")
         self.end_headers()
 

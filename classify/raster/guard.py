@@ -63,7 +63,7 @@ def check_path(path: str) -> None:
         if inner.startswith("/vsi") or "://" in inner:
             raise _refusal("an archive that is itself remote is not read", path, "download the archive first")
     elif reachable(path).startswith("/vsicurl/"):
-        _check_address(reachable(path).removeprefix("/vsicurl/"), path)
+        check_address(reachable(path).removeprefix("/vsicurl/"), path)
     elif is_remote(path) and not reachable(path):
         fix = "name a file, an address (https, s3, gs, az), or an archive as /vsizip/ARCHIVE/FILE"
         raise _refusal("this is no address that rasters are read from", path, fix)
@@ -73,7 +73,7 @@ def check_path(path: str) -> None:
         raise _refusal("there is no such file", path, "check the path; it starts from the folder of the project file")
 
 
-def _check_address(url: str, path: str) -> None:
+def check_address(url: str, path: str) -> None:
     """An http address as it may be read: without credentials, and not of the service that hands them out."""
     parts = _split(url, path)
     if parts.scheme not in ("http", "https") or not parts.hostname:

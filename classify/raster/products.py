@@ -10,6 +10,7 @@ from pathlib import Path
 import numpy as np
 
 from classify.errors import DataError
+from classify.raster.remote import read_local
 from classify.raster.sensors import Sensor, load_sensor
 from classify.settings import preset_names
 from classify.settings.starter import BandDraft, MaskDraft, SceneDraft
@@ -161,9 +162,9 @@ def _stated_scaling(match: _Match, folder: Path) -> float | None:
     for file in (parent / "MTD_MSIL2A.xml" for parent in parents):
         if not file.is_file():
             continue
-        text = file.read_text(encoding="utf-8", errors="replace")
-        offsets = {float(value) for value in re.findall(r"<BOA_ADD_OFFSET[^>]*>\s*(-?\d+)\s*<", text)}
-        over = re.search(r"<BOA_QUANTIFICATION_VALUE[^>]*>\s*(\d+)\s*<", text)
-        if over and len(offsets) <= 1:
+        text = read_local(file).decode("utf-8", errors="replace")
+        offsets = {float(value) for value in re.findall(r"<BOA_ADD_OFFSET[^>]*>\s*(-?\d{1,9})\s*<", text)}
+        over = re.search(r"<BOA_QUANTIFICATION_VALUE[^>]*>\s*(\d{1,9})\s*<", text)
+        if over and float(over[1]) and len(offsets) <= 1:
             return next(iter(offsets), 0.0) / float(over[1])
     return None

@@ -13,13 +13,15 @@ import time
 import urllib.error
 import urllib.parse
 import urllib.request
+from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
 from classify.errors import DataError
-from classify.raster.guard import addresses
+from classify.raster.guard import addresses, check_address
 
 _TIMEOUT_S = 20.0
+_LANDING_S = 5.0
 _MOST_BYTES = 16 << 20
 _OBJECT_STORES = {"s3", "gs", "az"}
 
@@ -88,6 +90,35 @@ class _StayOnHttps(urllib.request.HTTPRedirectHandler):
             raise _forbidden(newurl, req.full_url)
         _refuse_private(newurl, req.full_url)
         return super().redirect_request(req, fp, code, msg, headers, newurl)
+
+
+class _Watched(urllib.request.HTTPRedirectHandler):
+    """Follows redirects to addresses that may be read; from the public network to no other."""
+
+    def redirect_request(self, req: Any, fp: Any, code: Any, msg: Any, headers: Any, newurl: str) -> Any:  # noqa: ANN401, PLR0917
+        check_address(newurl, req.full_url)
+        if _is_public(req.full_url) and not _is_public(newurl):
+            what = f"this address passes its readers on to {newurl[:120]!r}, inside your own network"
+            raise DataError(what, where=req.full_url, fix="if you trust it, name that address itself")
+        return super().redirect_request(req, fp, code, msg, headers, newurl)
+
+
+def _is_public(url: str) -> bool:
+    return all(address.is_global for address in addresses(urllib.parse.urlsplit(url).hostname or ""))
+
+
+@lru_cache(maxsize=4096)
+def check_landing(url: str) -> None:
+    """Refuse an http address of a raster that passes its readers on to where the user did not mean them to go.
+
+    The raster library follows redirects without a word. Whatever else is wrong with the address, it will say itself.
+    Raises DataError.
+    """
+    request = urllib.request.Request(url, method="HEAD", headers={"User-Agent": "GDAL"})
+    try:
+        urllib.request.build_opener(_Watched).open(request, timeout=_LANDING_S).close()
+    except (OSError, http.client.HTTPException, ValueError):
+        return
 
 
 def fetch(url: str) -> bytes:

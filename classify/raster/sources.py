@@ -19,6 +19,7 @@ from rasterio.errors import NotGeoreferencedWarning, RasterioError
 from classify.errors import DataError
 from classify.raster.grid import Grid, Window
 from classify.raster.guard import check_path, driver_of, is_remote, leads_to, reachable
+from classify.raster.remote import check_landing
 
 # An address that does not answer, or sends less than 100 bytes a second for 20 s, is given up instead of hanging.
 REMOTE_OPTIONS = {
@@ -117,6 +118,8 @@ def open_raster(path: str) -> rasterio.DatasetReader:
 
 def _open(path: str, depth: int) -> rasterio.DatasetReader:
     check_path(path)
+    if reachable(path).startswith("/vsicurl/"):
+        check_landing(reachable(path).removeprefix("/vsicurl/"))
     if depth > _MOST_STEPS:
         raise DataError(
             "virtual rasters lead on to each other without end", where=path, fix="name their rasters instead"

@@ -20,6 +20,7 @@ from classify.settings.starter import BandDraft, MaskDraft, SceneDraft
 
 _RASTER_TYPES = ("image/tiff", "image/jp2", "image/vnd.stac.geotiff", "application/x-geotiff")
 _RASTER_ENDINGS = (".tif", ".tiff", ".jp2")
+_LARGEST = 1e30
 _NOT_BANDS = {"thumbnail", "overview", "visual", "metadata", "graphic"}
 
 Json = Mapping[str, Any]
@@ -58,7 +59,7 @@ def _read(source: str) -> Json:
     raw = fetch(source) if "://" in source else read_local(Path(source))
     try:
         content = json.loads(raw)
-    except (UnicodeDecodeError, json.JSONDecodeError, RecursionError) as error:
+    except (ValueError, RecursionError) as error:  # also bytes, numbers and depths that are not taken
         raise DataError(f"this is not valid JSON: {error}", where=source) from error
     return content if isinstance(content, dict) else {}
 
@@ -246,4 +247,4 @@ def _either(table: Json, *names: str, otherwise: object = None) -> object:
 def _number(value: object) -> float | None:
     if isinstance(value, bool) or not isinstance(value, int | float):
         return float("nan") if value == "nan" else None
-    return float(value)
+    return float(value) if abs(value) < _LARGEST else None

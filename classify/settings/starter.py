@@ -11,6 +11,7 @@ from string import Template
 from classify.errors import OutputError
 from classify.files import write_text
 from classify.settings.presets import configs_folder
+from classify.text import plain
 
 # Indices worth starting with, where the scene has their bands: all of them are in the index catalogue.
 _FIRST_INDICES = {"ndvi": {"red", "nir"}, "ndti": {"swir_1", "swir_2"}}
@@ -80,7 +81,7 @@ def project_text(draft: SceneDraft = PLACEHOLDER, *, seed: int = 1) -> str:
     roles = {band.role for band in draft.bands}
     indices = [name for name, needed in _FIRST_INDICES.items() if needed <= roles]
     return template.substitute(
-        title=_toml(draft.title),
+        title=_toml(plain(draft.title)),
         seed=seed,
         scene=_scene_text(draft),
         indices="[" + ", ".join(map(_toml, indices)) + "]",
