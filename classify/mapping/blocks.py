@@ -30,7 +30,7 @@ NO_VALUE: Mapping[LayerName, int] = {"cover": NO_CLASS, "confidence": NO_PERCENT
 # Reach in percent up to this is within what the training data cover.
 WITHIN_REACH = 100
 # Pixels labelled at a time; between such parts a block can be stopped. A second with the slowest models.
-_ROWS = 4096
+_ROWS = 16_384
 
 
 class Stopped(Exception):  # noqa: N818 - not an error: someone asked for it

@@ -5,7 +5,7 @@
 
 from __future__ import annotations
 
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numba
 import numpy as np
@@ -14,12 +14,12 @@ from numba.core import cgutils, types
 from numba.extending import intrinsic
 from numpy.typing import NDArray
 
-from classify.features.compiled import compiled
-
 # Pixels in step: eight or four vectors of what current processors hold. More spill out of the registers.
 LANES = 64
 # Pixels that pass over all trees together: their features (a few hundred KiB) stay in the second-level cache.
 BLOCK = 2048
+# Pixels are put in order by so many steps in so many trees: together the bits of a key.
+_KEY_TREES, _KEY_STEPS = 8, 8
 # With labels alone, pixels whose leader can no longer be caught are looked for after so many trees, from half on.
 TREES_PER_CHECK = 8
 # Sums of a few thousand shares are off by far less; pixels closer than this are never decided early.
@@ -43,6 +43,14 @@ class Trees(NamedTuple):
     feature_bits: int
 
 
+def jit(function: Any) -> Any:  # noqa: ANN401 - a numba dispatcher
+    """Compile on first use; keep the machine code on disk where a cache folder can be written."""
+    try:
+        return numba.njit(nogil=True, error_model="numpy", cache=True)(function)
+    except RuntimeError:  # no folder for the cache, neither beside this file nor in the user's own
+        return numba.njit(nogil=True, error_model="numpy")(function)
+
+
 @intrinsic
 def _stack_lanes(_context):
     """Memory for one unsigned 32-bit integer per lane on the stack.
@@ -58,7 +66,7 @@ def _stack_lanes(_context):
     return types.CPointer(types.uint32)(), generate
 
 
-@compiled
+@jit
 def _transpose(bits, pixels, count, lanes):
     """Features of `count` pixels in groups of lanes: (groups, f, lanes), as integers in the order of the floats."""
     features = bits.shape[1]
@@ -71,7 +79,26 @@ def _transpose(bits, pixels, count, lanes):
             lanes[base + j * LANES] = value ^ np.int32(0x7FFFFFFF) if value < 0 else value
 
 
-@compiled
+@jit
+def _common_way(x, tree, rounds, shift, mask):
+    """Where all lanes are after the steps that they take together, one node looked at for all; and the steps left."""
+    at = np.uint32(0)
+    while rounds > 0:
+        node = tree[at]
+        low = np.uint32(node)
+        values = (low & mask) * np.uint32(LANES)
+        threshold = np.int32(node >> 32)
+        right = np.int32(0)
+        for lane in range(LANES):
+            right += np.int32(x[values + np.uint32(lane)] > threshold)
+        if 0 < right < LANES:
+            break
+        at = (low >> shift) + np.uint32(right != 0)
+        rounds -= 1
+    return at, rounds
+
+
+@jit
 def _add_tree(lanes, count, trees, t, sums):
     """Add the leaf shares of tree `t` to sums (slots, k) for `count` pixels laid out by `_transpose`."""
     at = numba.carray(_stack_lanes(), (LANES,))
@@ -83,10 +110,11 @@ def _add_tree(lanes, count, trees, t, sums):
     group = len(lanes) // BLOCK * LANES
     for start in range(0, count, LANES):
         x = lanes[start // LANES * group : (start // LANES + 1) * group]
+        together, left = _common_way(x, tree, trees.rounds[t], shift, mask)
         for lane in range(LANES):
-            at[lane] = np.uint32(0)
+            at[lane] = together
         # Two steps to a round; only the second asks whether any pixel is still on its way.
-        for _ in range(0, trees.rounds[t], 2):
+        for _ in range(0, left, 2):
             for lane in range(LANES):
                 node = tree[at[lane]]
                 low = np.uint32(node)
@@ -112,25 +140,53 @@ def _add_tree(lanes, count, trees, t, sums):
                     sums[start + lane, c] += trees.shares[-1 - code, c]
 
 
-@compiled
+@jit
+def _alike_together(bits, trees):
+    """The pixels, int64 (n,), ordered by their first steps in the first trees: those that resemble each other meet."""
+    keys = np.zeros(len(bits), dtype=np.uint64)
+    mask = np.int64((1 << trees.feature_bits) - 1)
+    for pixel in range(len(bits)):
+        key = np.uint64(0)
+        for t in range(min(_KEY_TREES, len(trees.rounds))):
+            at, start = np.int64(0), trees.roots[t]
+            for _ in range(_KEY_STEPS):
+                node = trees.nodes[start + at]
+                low = node & np.int64(0xFFFFFFFF)
+                value = bits[pixel, low & mask]
+                value = value ^ np.int32(0x7FFFFFFF) if value < 0 else value
+                right = np.int64(value > np.int32(node >> 32))
+                at = (low >> trees.feature_bits) + right
+                key = (key << np.uint64(1)) | np.uint64(right)
+        keys[pixel] = key
+    return np.argsort(keys)
+
+
+@jit
 def sum_shares(bits, trees, sums):
     """Add every tree's shares, in the order of the trees, to sums float64 (n, k) for features' bits int32 (n, f)."""
+    order = _alike_together(bits, trees)
     lanes = np.zeros(BLOCK * bits.shape[1], dtype=np.int32)
+    own = np.empty((BLOCK, sums.shape[1]), dtype=np.float64)
     for begin in range(0, len(bits), BLOCK):
         count = min(BLOCK, len(bits) - begin)
-        _transpose(bits, np.arange(begin, begin + count), count, lanes)
+        pixels = order[begin : begin + count]
+        _transpose(bits, pixels, count, lanes)
+        own[:] = 0
         for t in range(len(trees.rounds)):
-            _add_tree(lanes, count, trees, t, sums[begin : begin + count])
+            _add_tree(lanes, count, trees, t, own)
+        for slot in range(count):
+            sums[pixels[slot]] += own[slot]
 
 
-@compiled
+@jit
 def find_labels(bits, trees, labels):
     """Write the index of the class to labels intp (n,) for features' bits int32 (n, f)."""
     total = len(trees.rounds)
+    order = _alike_together(bits, trees)
     lanes = np.zeros(BLOCK * bits.shape[1], dtype=np.int32)
     for begin in range(0, len(bits), BLOCK):
         count = min(BLOCK, len(bits) - begin)
-        pixels = np.arange(begin, begin + count)
+        pixels = order[begin : begin + count].copy()
         sums = np.zeros((count, trees.shares.shape[1]), dtype=np.float64)
         _transpose(bits, pixels, count, lanes)
         done = 0
@@ -145,7 +201,7 @@ def find_labels(bits, trees, labels):
             count = left
 
 
-@compiled
+@jit
 def _drop_decided(sums, pixels, count, total, done, labels):  # noqa: PLR0917
     """Label the pixels whose leader cannot be caught in the trees left; move the others to the front and count them."""
     kept = 0
