@@ -1,4 +1,4 @@
-"""The pipeline on a large scene: against its parts, by workers, by scene size (memory), and starting up."""
+"""The pipeline on a large scene: against its parts, by workers, and starting up."""
 
 from __future__ import annotations
 
@@ -48,37 +48,27 @@ print(json.dumps([seconds, resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 
 
 
 def rows(quick: bool) -> list[dict[str, object]]:
-    side, large, trees = (1100, 2200, 30) if quick else (5000, 20_000, 200)
+    side, trees = (1100, 30) if quick else (5000, 200)
     found: list[dict[str, object]] = []
     with tempfile.TemporaryDirectory() as place:
         folder = Path(place)
         make_scene(folder, side)
         make_model(folder, trees)
-        pixels = side * side
-        alone = {what: measured(folder, 2, what)[0] for what in ("read", "infer")}
-        for jobs in (1, 2, 4):
-            seconds, peak = measured(folder, jobs, "map")
-            longest = max(alone.values()) if jobs == 2 else None
+        works = {"reading alone": (2, "read"), "features and inference alone": (2, "infer")}
+        works |= {f"map, jobs {jobs}": (jobs, "map") for jobs in (2, 1, 4)}
+        seconds = {}
+        for name, (jobs, what) in works.items():
+            seconds[name], peak = measured(folder, jobs, what)
             found.append({
-                "work": f"map, {side} x {side}", "jobs": jobs, "seconds": seconds, "pixels/s": pixels / seconds,
-                "peak MiB": peak, "reading alone, s": alone["read"] if jobs == 2 else None,
-                "features and inference alone, s": alone["infer"] if jobs == 2 else None,
-                "ratio to the longer": round(seconds / longest, 2) if longest else None,
+                "work": f"{name}, {side} x {side}", "jobs": jobs, "seconds": seconds[name],
+                "pixels/s": side * side / seconds[name], "peak MiB": peak,
             })  # fmt: skip
-        base = next(row["peak MiB"] for row in found if row["jobs"] == 2)
-        make_scene(folder, large)
-        make_model(folder, 5)
-        seconds, peak = measured(folder, 2, "map")
-        found.append({
-            "work": f"map, {large} x {large}, few trees", "jobs": 2, "seconds": seconds,
-            "pixels/s": large**2 / seconds, "peak MiB": peak, "ratio to the smaller's peak": round(peak / base, 2),
-        })  # fmt: skip
+        longer = max(seconds["reading alone"], seconds["features and inference alone"])
+        found[2]["share outside the longer"] = round(1 - longer / seconds["map, jobs 2"], 3)
     for command in ("--help", "classify --help", "status --project /nonexistent"):
         call = [sys.executable, "-m", "classify", *command.split()]
-        seconds = alternate({"start": lambda call=call: subprocess.run(call, capture_output=True, check=False)})[
-            "start"
-        ]
-        found.append({"work": f"landassay {command}", "seconds": seconds})
+        seconds = alternate({"start": lambda call=call: subprocess.run(call, capture_output=True, check=False)})
+        found.append({"work": f"landassay {command}", "seconds": seconds["start"]})
     return found
 
 
