@@ -120,6 +120,16 @@ def test_what_is_kept_is_the_start_of_one_order(varied: Path):
             assert np.array_equal(few.units, all_of_them.units[:keep])
 
 
+def test_the_start_of_the_order_is_whole_where_pixels_differ_in_size(tmp_path: Path):
+    """From 86 degrees north to the equator: large pixels come so early that a guess by their mean brings too few."""
+    path = write_map(tmp_path / "cover.tif", np.ones((43, 120)), "EPSG:4326", Affine(0.5, 0, 10, 0, -2.0, 86))
+    population = population_of(path, {1: "a"}, DrawOptions())
+    whole = scan(population, 1, 43 * 120).lowest[0].units
+    assert len(set(whole)) == 43 * 120
+    for keep in (3000, 4500, 5000):
+        assert np.array_equal(scan(population, 1, keep).lowest[0].units, whole[:keep])
+
+
 def test_pixels_and_areas_are_those_of_plain_sums(varied: Path):
     population = population_of(varied, CLASSES, DrawOptions())
     with rasterio.open(varied) as source:

@@ -46,12 +46,14 @@ def test_times_of_a_group_are_those_of_single_units():
 
 
 def test_every_order_of_a_group_is_as_likely():
-    """Three units drawn 6000 times: each of the six orders comes about a thousand times."""
+    """Three units drawn 6000 times: each of the six orders comes about a thousand times, whenever its first comes."""
     found = groups(2, [3] * 6000, [1.0] * 6000)
     order = np.lexsort((found.time, found.group))
     ranks = found.rank[order].reshape(6000, 3)
     assert (np.sort(ranks, axis=1) == [0, 1, 2]).all()
     assert stats.chisquare(np.unique(ranks @ [9, 3, 1], return_counts=True)[1]).pvalue > 0.001
+    first = found.time[order].reshape(6000, 3)[:, 0]
+    assert stats.kruskal(*(first[ranks[:, 0] == rank] for rank in range(3))).pvalue > 0.001
 
 
 @settings(max_examples=40)
