@@ -24,7 +24,7 @@ from classify.mapping.byte_raster import ByteRaster
 from classify.mapping.vector import write_polygons
 from classify.mapping.writer import Layer, write_cog
 from classify.progress import SILENT
-from classify.raster.grid import Grid, Window
+from classify.raster.grid import Grid
 from classify.settings import ClassSettings
 
 NOBODY = 65534
@@ -110,33 +110,35 @@ def no_file_beyond(size: int):
         resource.setrlimit(resource.RLIMIT_FSIZE, limits)
 
 
-@pytest.fixture(scope="module")
-def stored(tmp_path_factory):
-    """A raster of bytes as the map writer has it: some 2000 patches in three classes."""
-    grid = Grid(CRS.from_epsg(32633), Affine(10, 0, 500_000, 0, -10, 4_200_000), 160, 160)
-    raster = ByteRaster(tmp_path_factory.mktemp("bytes") / "cover.bytes", grid)
+def stored(folder: Path, side: int) -> ByteRaster:
+    """A raster of bytes as the map writer has it: patches of two by two pixels in three classes."""
+    grid = Grid(CRS.from_epsg(32633), Affine(10, 0, 500_000, 0, -10, 4_200_000), side, side)
+    raster = ByteRaster(folder / "cover.bytes", grid)
     raster.create()
-    codes = np.random.default_rng(1).integers(1, 4, (80, 80), dtype=np.uint8).repeat(2, axis=0).repeat(2, axis=1)
-    raster.write(Window(0, 0, 160, 160), codes)
+    codes = np.random.default_rng(1).integers(1, 4, (side // 2, side // 2), dtype=np.uint8)
+    raster.write(grid.window, codes.repeat(2, axis=0).repeat(2, axis=1))
     return raster
 
 
 CLASSES = [ClassSettings(code=c, name=f"Class {c}", colour="#123456") for c in (1, 2, 3)]
+# By file name: side of the raster, and how it is written.
 WRITERS = {
-    "map.tif": lambda stored, path: write_cog(stored, path, Layer(0, "mode", "cover")),
-    "map.gpkg": lambda stored, path: write_polygons(stored, path, CLASSES, "ha", SILENT),
+    "map.tif": (600, lambda stored, path: write_cog(stored, path, Layer(0, "mode", "cover"))),
+    "map.gpkg": (160, lambda stored, path: write_polygons(stored, path, CLASSES, "ha", SILENT)),
 }
 
 
 @pytest.mark.parametrize("name", WRITERS)
 @pytest.mark.parametrize("share", [0.0, 0.1, 0.5, 0.9])
-def test_a_disk_that_fills_while_gdal_writes_is_our_error_and_keeps_the_old_file(stored, tmp_path, name, share):
+def test_a_disk_that_fills_while_gdal_writes_is_our_error_and_keeps_the_old_file(tmp_path, name, share):
     """GDAL and SQLite report it in errors of their own, of several kinds, depending on how far they are."""
-    WRITERS[name](stored, tmp_path / "whole" / name)
+    side, write = WRITERS[name]
+    raster = stored(tmp_path, side)
+    write(raster, tmp_path / "whole" / name)
     size = (tmp_path / "whole" / name).stat().st_size
     (tmp_path / name).write_bytes(b"old")
     # The description of the source, some kilobytes, is to fit.
     with pytest.raises(OutputError, match=rf"{name}: cannot be written"), no_file_beyond(max(4096, int(share * size))):
-        WRITERS[name](stored, tmp_path / name)
+        write(raster, tmp_path / name)
     assert (tmp_path / name).read_bytes() == b"old"
     assert litter(tmp_path) == []
