@@ -25,14 +25,16 @@ def test_index_and_threshold_are_those_of_the_definition() -> None:
     reach = fit_reach(training, folds=4, seed=2)
     assert reach is not None and len(reach.points) == 360 and reach.neighbours == 10
     x = training.features.astype(np.float64)
-    centred = x / x.std(axis=0)
+    centred = x.copy()
     for number in np.unique(training.polygon):
         centred[training.polygon == number] -= centred[training.polygon == number].mean(axis=0)
+    scale = centred.std(axis=0)
+    centred /= scale
     inverse = np.linalg.inv(LedoitWolf(assume_centered=True).fit(centred).covariance_)
 
     def index(pixels: np.ndarray, known: np.ndarray) -> np.ndarray:
         def distances(a: np.ndarray) -> np.ndarray:
-            return cdist(a / x.std(axis=0), known / x.std(axis=0), "mahalanobis", VI=inverse)
+            return cdist(a / scale, known / scale, "mahalanobis", VI=inverse)
 
         spacing = np.sort(distances(known), axis=1)[:, 10]
         away = distances(pixels)
@@ -77,6 +79,19 @@ def test_a_class_left_out_is_beyond_and_held_out_polygons_are_within(left_out: i
         assert np.mean(reach.of(training.features[~known]) > 1) >= 0.8
         beyond.append(np.mean(reach.of(training.features[held]) > 1))
     assert 0.01 <= np.mean(beyond) <= 0.08
+
+
+def test_of_many_features_the_directions_that_part_polygons_are_kept() -> None:
+    """Four features that say something among 96 of noise, which by themselves would fill the directions thrice."""
+    training = training_set(polygons=(16, 16, 16), pixels=30, between=0.006)
+    noise = np.random.default_rng(2).normal(0, 1, (len(training.codes), 96))
+    features = np.hstack([noise[:, :48], training.features, noise[:, 48:]]).astype(np.float32)
+    many = replace(training, features=features, feature_names=tuple(f"f{n}" for n in range(100)))
+    known = many.codes != 3
+    reach = fit_reach(many.subset(known))
+    assert reach is not None and reach.points.shape[1] == 32
+    assert np.mean(reach.of(features[~known]) > 1) >= 0.8
+    assert np.mean(reach.of(features[known]) > 1) <= 0.05
 
 
 def test_percent_and_invalid_pixels() -> None:

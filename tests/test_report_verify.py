@@ -64,6 +64,14 @@ def test_a_missing_file_is_named(copy):
     assert ("report.pdf", "the file is missing") in {(f.where, f.what) for f in verify(copy).findings}
 
 
+@pytest.mark.parametrize("name", ["points.csv", "strata.csv", "areas.csv", "assessment.json", "method.json"])
+@pytest.mark.parametrize("content", [b"", b"\x00\xff\xfe", b"a,b\n1\n", b"{}", b'"stratum\n'])
+def test_a_mangled_table_is_listed_among_what_else_is_wrong(copy, name, content):
+    (copy / "data" / name).write_bytes(content)
+    seal(copy)
+    assert any("again" in finding.what for finding in verify(copy).findings)
+
+
 def test_a_point_relabelled_and_resealed_is_found_by_deriving_again(copy):
     points = pd.read_csv(copy / "data" / "points.csv", dtype=str, keep_default_na=False)
     points.loc[0, "reference"] = points["reference"].iloc[-1]

@@ -6,6 +6,7 @@ import json
 from dataclasses import replace
 
 import numpy as np
+import pandas as pd
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
@@ -153,6 +154,20 @@ def test_a_review_of_data_that_cannot_be_screened_is_still_made() -> None:
     content = json.loads(json.dumps(review.to_json(), allow_nan=False))
     assert content["screening"] is None and content["learning_curve"] is None
     assert content["classes"][1]["signature"] is None
+
+
+def test_distance_of_a_polygon_is_in_robust_standard_deviations() -> None:
+    """By scipy's median absolute deviation, scaled to the standard deviation of a normal distribution."""
+    training = training_set(polygons=(9, 12), between=0.03)
+    found = class_distances(training)
+    frame = pd.DataFrame(training.features.astype(np.float64)).assign(polygon=training.polygon, code=training.codes)
+    means = frame.groupby(["code", "polygon"]).mean()
+    spread = {code: stats.median_abs_deviation(part, scale="normal") for code, part in means.groupby(level=0)}
+    common = np.median(list(spread.values()), axis=0)
+    for code, part in means.groupby(level=0):
+        z = (part - part.median()) / np.maximum(spread[code], common)
+        expected = np.sqrt((z**2).mean(axis=1))
+        assert [found[number] for _, number in expected.index] == pytest.approx(expected.tolist(), rel=1e-4)
 
 
 @pytest.mark.filterwarnings("error")

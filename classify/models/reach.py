@@ -36,6 +36,10 @@ from classify.training.draws import even_draw
 # Pixels that stand for the training set, drawn evenly over the polygons of each class.
 _POINTS = 5000
 _NEIGHBOURS = 10
+# Of many features, so many directions, those in which polygons differ most: the search takes time by their number.
+_DIRECTIONS = 32
+# Spread within polygons that counts at least, in units of the spread of all pixels.
+_LEAST_SPREAD = 0.01
 # Share of training pixels, their polygon held out, that lie beyond reach.
 _BEYOND = 0.05
 
@@ -164,18 +168,19 @@ def _directions(features: NDArray[np.float64], training: TrainingSet) -> NDArray
     moving = spread > 1e-9 * np.maximum(1.0, np.abs(training.features).max(axis=0))
     if not moving.any():
         return None
-    scaled = features[:, moving] / spread[moving]
-    spare = len(scaled) - len(np.unique(training.polygon))
-    within = _less_means(scaled, training.polygon if spare > 5 * moving.sum() else training.codes)
-    variances, axes = np.linalg.eigh(ledoit_wolf(within, assume_centered=True)[0])
-    # A direction in which no polygon spreads at all would make every other pixel infinitely far.
-    kept = np.maximum(variances, 1e-4 * variances.max())
-    if kept.max() <= 0:
+    features, spread = features[:, moving], spread[moving]
+    spare = len(features) - len(np.unique(training.polygon))
+    within = _less_means(features, training.polygon if spare > 5 * moving.sum() else training.codes)
+    # A feature that does not vary within polygons would make every other value infinitely far.
+    scale = np.maximum(within.std(axis=0), _LEAST_SPREAD * spread)
+    variances, axes = np.linalg.eigh(ledoit_wolf(within / scale, assume_centered=True)[0])
+    if variances.max() <= 0:
         return None
-    white = axes / np.sqrt(kept)
-    _, turned = np.linalg.eigh(np.cov(scaled @ white, rowvar=False).reshape(len(kept), len(kept)))
-    rotation = np.zeros((features.shape[1], len(kept)))
-    rotation[moving] = white @ turned[:, ::-1] / spread[moving][:, None]
+    white = axes / np.sqrt(np.maximum(variances, _LEAST_SPREAD**2 * variances.max())) / scale[:, None]
+    _, turned = np.linalg.eigh(np.cov(features @ white, rowvar=False).reshape(len(scale), len(scale)))
+    kept = (white @ turned[:, ::-1])[:, :_DIRECTIONS]
+    rotation = np.zeros((len(moving), kept.shape[1]))
+    rotation[moving] = kept
     return rotation
 
 
