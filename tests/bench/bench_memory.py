@@ -38,14 +38,14 @@ def rows(quick: bool) -> list[dict[str, object]]:
     return found
 
 
-def run(folder: Path, command: str) -> tuple[float, float]:
+def run(folder: Path, *command: str) -> tuple[float, float]:
     """Seconds and peak MiB of a command in a process of its own."""
-    call = [sys.executable, "-m", "classify", command, "--project", str(folder), "--jobs", str(JOBS), "--quiet"]
+    call = [sys.executable, "-m", "classify", *command, "--project", str(folder), "--jobs", str(JOBS), "--quiet"]
     start = time.perf_counter()
     process = subprocess.Popen(call)
     _, status, usage = os.wait4(process.pid, 0)
     if status:
-        raise RuntimeError(f"{command} failed")
+        raise RuntimeError(f"{command[0]} failed")
     return time.perf_counter() - start, usage.ru_maxrss / 1024
 
 
