@@ -9,14 +9,13 @@ from typing import Any
 import geopandas
 import numpy as np
 import pandas as pd
-import rasterio
-from rasterio.errors import RasterioError
 
 from classify.assessment.columns import Labels, faults, plain_text
 from classify.assessment.design_file import RecordedDesign, grid_facts, read_design
 from classify.assessment.options import TableName
-from classify.errors import Problem, SampleError, raise_if_errors
+from classify.errors import DataError, Problem, SampleError, raise_if_errors
 from classify.raster.grid import Grid
+from classify.raster.sources import open_raster
 from classify.settings import Project, ReferenceSettings
 
 ASSUMED = Problem(
@@ -153,9 +152,9 @@ def _grid(design: RecordedDesign, maps: Sequence[Path]) -> Grid | None:
         if not path.is_file():
             continue
         try:
-            with rasterio.open(path) as source:
+            with open_raster(str(path)) as source:
                 crs, grid = source.crs, Grid(source.crs, source.transform, source.height, source.width)
-        except RasterioError:
+        except DataError:
             continue  # the assessed map is read, and found faulty, elsewhere
         known = design.drawn_from.transform_and_shape
         if crs is not None and len(known) == 8 and np.allclose(grid_facts(grid)["grid"], known, rtol=1e-12, atol=1e-12):

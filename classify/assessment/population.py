@@ -28,6 +28,7 @@ from classify.assessment.lots import Arrivals, arrivals, lots, stream, streams
 from classify.errors import DataError
 from classify.progress import SILENT, Progress
 from classify.raster.grid import Grid, Window
+from classify.raster.sources import open_raster
 
 # Rows at a time, which hold whole tiles of a map; and pixels at a time, of all threads together.
 _ROWS_PX, _PX = 1024, 24 << 20
@@ -105,9 +106,9 @@ class Scan:
 def open_map(path: Path) -> DatasetReader:
     """A map opened for reading. Raises DataError when it is none."""
     try:
-        source = rasterio.open(path)
-    except RasterioError as error:
-        raise DataError(f"the map cannot be read: {error}", where=str(path),
+        source = open_raster(str(path))
+    except DataError as error:
+        raise DataError(f"the map cannot be read: {error.problems[0].what}", where=str(path),
                         fix="run 'landassay classify' first, or name another map") from error  # fmt: skip
     if source.crs is None:
         raise DataError("the map has no CRS", where=str(path))

@@ -13,7 +13,6 @@ from pathlib import Path
 import geopandas
 import numpy as np
 import pandas as pd
-import rasterio
 from numpy.typing import NDArray
 from rasterio.errors import RasterioError
 from rasterio.windows import Window as RasterWindow
@@ -32,6 +31,7 @@ from classify.assessment.sample import NO_LABEL, DesignKind, ReferenceSample
 from classify.errors import DataError, Problem, SampleError, raise_if_errors
 from classify.files import sha256
 from classify.raster.grid import Grid
+from classify.raster.sources import open_raster
 from classify.raster.vectors import read_places
 from classify.settings import ClassSettings, Project, ReferenceSettings
 from classify.settings.model import M2_PER_UNIT
@@ -146,7 +146,7 @@ def codes_at(cover: Path, points: geopandas.GeoSeries) -> NDArray[np.uint8]:
     Only the blocks that points fall on are read. Raises DataError.
     """
     try:
-        with rasterio.open(cover) as source:
+        with open_raster(str(cover)) as source:
             if source.crs is None:
                 raise DataError("the map has no CRS", where=str(cover))
             grid = Grid(source.crs, source.transform, source.height, source.width)

@@ -17,6 +17,7 @@ from rasterio.errors import RasterioError
 
 from classify.errors import DataError
 from classify.raster.grid import Grid
+from classify.raster.sources import open_raster
 from classify.report.facts import ClassFact, Layer, MapFact
 
 # Long side of a picture: sharp on a full-width print at 200 dots per inch, and small enough to carry four layers.
@@ -56,7 +57,7 @@ def map_fact(folder: Path, classes: Sequence[ClassFact], more: Sequence[Layer], 
 
 
 def _is_tidied(cover: Path) -> bool:
-    with rasterio.open(cover) as source:
+    with open_raster(str(cover)) as source:
         return "TIDIED" in source.tags()
 
 
@@ -69,7 +70,7 @@ def picture_shape(height: int, width: int) -> tuple[int, int]:
 def read_small(path: Path) -> tuple[Grid, NDArray[np.uint8]]:
     """The grid of a raster and its first band decimated from the overviews, uint8 (h, w). Raises DataError."""
     try:
-        with rasterio.open(path) as source:
+        with open_raster(str(path)) as source:
             grid = Grid(source.crs, source.transform, source.height, source.width)
             shape = picture_shape(source.height, source.width)
             return grid, source.read(1, out_shape=shape, resampling=Resampling.nearest)
@@ -79,8 +80,8 @@ def read_small(path: Path) -> tuple[Grid, NDArray[np.uint8]]:
 
 
 def read_grid(path: Path) -> Grid:
-    """The grid of a raster. Raises RasterioError."""
-    with rasterio.open(path) as source:
+    """The grid of a raster. Raises DataError."""
+    with open_raster(str(path)) as source:
         return Grid(source.crs, source.transform, source.height, source.width)
 
 
@@ -186,7 +187,7 @@ def read_logo(path: Path) -> bytes:
 def _share(path: Path, part: slice) -> float | None:
     """Share of the pixels with a value (0..254) whose value lies in `part`, from all pixels, in strips."""
     inside = total = 0
-    with rasterio.open(path) as source:
+    with open_raster(str(path)) as source:
         for row in range(0, source.height, _PIECE_ROWS):
             rows = min(_PIECE_ROWS, source.height - row)
             values = source.read(1, window=rasterio.windows.Window(0, row, source.width, rows))

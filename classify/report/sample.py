@@ -9,12 +9,12 @@ from typing import Any
 import geopandas
 import numpy as np
 import pandas as pd
-import rasterio
 from numpy.typing import NDArray
 
 from classify.assessment import ReferenceSample, read_reference
 from classify.assessment.reference import codes_at, read_points
 from classify.assessment.sample import NO_LABEL
+from classify.raster.sources import open_raster
 from classify.report.facts import PointFact, SampleFacts
 from classify.settings import Project
 
@@ -90,7 +90,7 @@ def _method(project: Project, sample: ReferenceSample, assessment: Mapping[str, 
 
 
 def _placed(table: pd.DataFrame, frame: geopandas.GeoDataFrame, cover: Path) -> tuple[PointFact, ...]:
-    with rasterio.open(cover) as source:
+    with open_raster(str(cover)) as source:
         there = frame.geometry.to_crs(source.crs)
         cols, rows = ~source.transform @ (there.x.to_numpy(), there.y.to_numpy())
         places = list(zip(rows / source.height, cols / source.width, strict=True))

@@ -8,7 +8,6 @@ from pathlib import Path
 from typing import Literal
 
 import numpy as np
-import rasterio
 from affine import Affine
 from numpy.typing import NDArray
 from PIL import Image
@@ -19,6 +18,7 @@ from rasterio.vrt import WarpedVRT
 from classify.errors import LandassayError
 from classify.raster.grid import Grid
 from classify.raster.scene import BandSource, open_scene
+from classify.raster.sources import open_raster
 from classify.report.facts import Layer
 from classify.report.picture import picture_shape, read_grid
 from classify.settings import Project
@@ -66,7 +66,7 @@ def _decimated(band: BandSource, grid: Grid) -> NDArray[np.float32]:
     transform = grid.transform @ Affine.scale(grid.width / width, grid.height / height)
     smooth = height == grid.height and width == grid.width
     with (
-        rasterio.open(band.path) as source,
+        open_raster(band.path) as source,
         WarpedVRT(source, crs=grid.crs, transform=transform, width=width, height=height, nodata=band.nodata,
                   resampling=Resampling.bilinear if smooth else Resampling.nearest) as view,
     ):  # fmt: skip
