@@ -13,14 +13,19 @@ import traceback
 from pathlib import Path
 
 from fuzz_properties import PROPERTIES, Property, World
-from hypothesis import HealthCheck, given, seed, settings
+from hypothesis import HealthCheck, Phase, given, seed, settings
 
 
 def examine(found: Property, world: World, examples: int, number: int | None = None) -> int:
     """Try so many inputs on a property; returns how many were tried. number: a seed, for the same ones again."""
     tried = 0
 
-    @settings(max_examples=examples, deadline=None, database=None, suppress_health_check=list(HealthCheck))
+    # Without a search for which parts of an input matter, which takes minutes.
+    phases = (Phase.explicit, Phase.generate, Phase.shrink)
+
+    @settings(
+        max_examples=examples, deadline=None, database=None, phases=phases, suppress_health_check=list(HealthCheck)
+    )
     @given(found.strategy)
     def one(value: object) -> None:
         nonlocal tried

@@ -98,6 +98,19 @@ def test_strange_shapes_beside_a_sound_one(folder: Path, tmp_path: Path, kind: s
     assert len(found.frame) == 2 or found.problems
 
 
+def test_metres_taken_for_degrees(folder: Path, tmp_path: Path) -> None:
+    """A document that says nothing of its CRS is in degrees: these places are nowhere on earth."""
+    shape = {"type": "Polygon", "coordinates": [square(X, Y)]}
+    document = {
+        "type": "FeatureCollection",
+        "features": [{"type": "Feature", "properties": {"cover": "Water"}, "geometry": shape}],
+    }
+    path = tmp_path / "p.geojson"
+    path.write_text(json.dumps(document))
+    found = told(folder, path)
+    assert "outside the scene" in str(found if isinstance(found, LandassayError) else found.problems)
+
+
 @pytest.mark.parametrize("text", ["NaN", "Infinity", "1e400", '"500100"', "null", "[1]", "true"])
 def test_coordinates_that_are_no_numbers(folder: Path, tmp_path: Path, text: str) -> None:
     ring = json.dumps(square(X, Y)).replace("500200.0", text)

@@ -190,8 +190,12 @@ def _outside(geometry: NDArray[Any], grid: Grid) -> tuple[NDArray[np.bool_], NDA
         x, y = xy[:, 0], xy[:, 1]
         return np.column_stack([inverse.a * x + inverse.b * y + inverse.c, inverse.d * x + inverse.e * y + inverse.f])
 
-    bounds = shapely.bounds(shapely.transform(geometry, to_pixels))
-    finite = np.isfinite(bounds).all(axis=1)
+    # Places that the grid's CRS does not know have come out as infinite.
+    corners, owner = shapely.get_coordinates(geometry, return_index=True)
+    finite = np.ones(len(geometry), dtype=bool)
+    finite[owner[~np.isfinite(corners).all(axis=1)]] = False
+    bounds = np.full((len(geometry), 4), np.nan)
+    bounds[finite] = shapely.bounds(shapely.transform(geometry[finite], to_pixels))
     left, top, right, bottom = bounds.T
     with np.errstate(invalid="ignore"):
         inside = finite & (right > 0) & (bottom > 0) & (left < grid.width) & (top < grid.height)
