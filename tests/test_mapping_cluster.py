@@ -8,9 +8,12 @@ import socket
 import sys
 import time
 from dataclasses import replace
+from pathlib import Path
 
 import distributed
+import numpy as np
 import pytest
+import rasterio
 from small_project import make_small_project
 
 from classify.errors import DataError, LandassayError
@@ -43,8 +46,9 @@ def mapping(tmp_path_factory):
     run(Job(project), ["train"])
     model, scene = load_model(folder / "outputs" / "model"), open_scene(project.scene, project)
 
-    def map_into(target, engine=None, *, scene=scene):
-        classify_scene(model, scene, target, classes=project.classes, options=replace(OPTIONS, engine=engine))
+    def map_into(target, engine=None, *, scene=scene, **changes):
+        options = replace(OPTIONS, engine=engine, **changes)
+        classify_scene(model, scene, target, classes=project.classes, options=options)
         return {name: (target / name).read_bytes() for name in FILES}
 
     return scene, map_into
@@ -74,6 +78,30 @@ def test_the_same_bytes_although_a_worker_is_killed_midway(workers, mapping, tmp
             assert time.monotonic() < deadline
             time.sleep(0.1)
         assert victim not in alive
+
+
+def test_blocks_of_128_and_of_512_give_the_same_bytes_here_and_there(workers, mapping, tmp_path):
+    scene, map_into = mapping
+    for path in {band.path for band in scene.bands} | {mask.path for mask in scene.masks.values()}:
+        with rasterio.open(path) as source:
+            values = np.tile(source.read(), (1, 6, 5))
+            profile = source.profile | {"height": values.shape[1], "width": values.shape[2]}
+        with rasterio.open(tmp_path / Path(path).name, "w", **profile) as target:
+            target.write(values)
+    grid = replace(scene.grid, height=values.shape[1], width=values.shape[2])
+    assert min(grid.shape_yx) > 512
+
+    def moved(part):
+        return replace(part, path=str(tmp_path / Path(part.path).name), native=grid)
+
+    larger = replace(
+        scene, grid=grid, bands=tuple(map(moved, scene.bands)), masks={k: moved(m) for k, m in scene.masks.items()}
+    )
+    expected = map_into(tmp_path / "threads", scene=larger, block_px=512)
+    assert map_into(tmp_path / "small", scene=larger, block_px=128, jobs=2) == expected
+    with engines.cluster(workers.scheduler_address) as engine:
+        for side in (128, 512):
+            assert map_into(tmp_path / f"cluster_{side}", engine, scene=larger, block_px=side) == expected
 
 
 def test_an_error_on_a_worker_comes_back_with_its_place(workers, mapping, tmp_path):
