@@ -184,7 +184,7 @@ def test_a_raster_of_a_million_a_side_is_refused_by_every_command(tmp_path: Path
             command,
             result.exception,
         )
-        assert time.monotonic() - before < 15
+        assert time.monotonic() - before < 60
 
 
 def test_a_map_that_leads_elsewhere_is_not_followed(tmp_path: Path) -> None:
