@@ -107,7 +107,7 @@ def rows(quick: bool) -> list[dict[str, object]]:
     points, found = 10_000 if quick else 100_000, []
     for number in (points // 10, points):
         with tempfile.TemporaryDirectory() as name, ProcessPoolExecutor(1, mp_context=get_context("spawn")) as pool:
-            make_project(Path(name), 1000 if quick else 4000)
+            pool.submit(make_project, Path(name), 1000 if quick else 4000).result()
             found.append(pool.submit(run, Path(name), number).result())
     (tenth, _), (whole, peak) = found
     return [
