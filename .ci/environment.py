@@ -17,28 +17,46 @@ ROOT = Path(__file__).resolve().parent.parent
 OLDEST = (3, 11)
 
 
-def environment(*extras: str) -> Path:
-    """Path of the Python inside .venv, where landassay is installed with `extras`. Exits with a message on failure."""
+def environment(
+    *extras: str, folder: str = ".venv", constraints: Path | None = None, tools: tuple[str, ...] = ()
+) -> Path:
+    """Path of the Python inside `folder`, where landassay is installed with `extras`. Exits with a message on failure.
+
+    constraints: a file of versions to keep to. tools: further packages.
+    """
     if sys.version_info < OLDEST:
         sys.exit(f"Landassay needs Python {OLDEST[0]}.{OLDEST[1]} or newer; this is {sys.version.split()[0]}.")
-    folder = ROOT / ".venv"
-    python = folder / ("Scripts/python.exe" if os.name == "nt" else "bin/python")
-    stamp = folder / f"landassay-{'-'.join(('base', *extras))}.stamp"
-    wanted = hashlib.sha256((ROOT / "pyproject.toml").read_bytes() + sys.version.encode()).hexdigest()
+    place = ROOT / folder
+    python = place / ("Scripts/python.exe" if os.name == "nt" else "bin/python")
+    stamp = place / f"landassay-{'-'.join(('base', *extras))}.stamp"
+    described = (ROOT / "pyproject.toml").read_bytes() + (constraints.read_bytes() if constraints else b"")
+    wanted = hashlib.sha256(described + " ".join((*tools, sys.version)).encode()).hexdigest()
     if python.exists() and stamp.exists() and stamp.read_text() == wanted:
         return python
     if not python.exists():
-        print("Making the environment .venv ...", flush=True)
+        print(f"Making the environment {folder} ...", flush=True)
         try:
-            venv.create(folder, with_pip=True)
+            venv.create(place, with_pip=True)
         except (subprocess.CalledProcessError, OSError) as error:
             sys.exit(
-                f"The environment .venv cannot be made ({error}). On Debian and Ubuntu the module 'venv' is a package "
-                "of its own: python3-venv."
+                f"The environment {folder} cannot be made ({error}). On Debian and Ubuntu the module 'venv' is a "
+                "package of its own: python3-venv."
             )
     target = f"{ROOT}[{','.join(extras)}]" if extras else str(ROOT)
     print("Installing Landassay and the packages it needs (a few minutes the first time) ...", flush=True)
-    install = [str(python), "-m", "pip", "install", "--quiet", "--disable-pip-version-check", "--editable", target]
+    install = [
+        str(python),
+        "-m",
+        "pip",
+        "install",
+        "--quiet",
+        "--disable-pip-version-check",
+        "--editable",
+        target,
+        *tools,
+    ]
+    if constraints is not None:
+        install += ["--constraint", str(constraints)]
     if subprocess.run(install, check=False).returncode:
         sys.exit("The installation failed; the lines above say why. The same command can be run again.")
     stamp.write_text(wanted)

@@ -3,9 +3,8 @@
 from __future__ import annotations
 
 import re
-import shutil
-from pathlib import Path
 
+import golden
 import numpy as np
 import pandas as pd
 import pytest
@@ -16,18 +15,11 @@ from small_project import read_json
 
 from classify.cli.main import cli
 
-SAMPLE = Path(__file__).parent.parent / "sample_project"
-# What the pipeline may read; the truth is not among it.
-GIVEN = ("project.toml", "training.gpkg", "reference.gpkg", "reference_design.json", "first_map.tif")
-
 
 @pytest.fixture(scope="module")
 def finished(tmp_path_factory):
     """The sample project after `landassay run`, in a folder without the truth."""
-    folder = tmp_path_factory.mktemp("sorrel basin")
-    for name in GIVEN:
-        shutil.copy(SAMPLE / name, folder)
-    shutil.copytree(SAMPLE / "scene", folder / "scene")
+    folder = golden.copy_sample(tmp_path_factory.mktemp("sorrel basin"))
     result = CliRunner().invoke(
         cli, ["run", "--project", str(folder), "--quiet", "--jobs", "2"], catch_exceptions=False
     )
@@ -45,7 +37,7 @@ def mapped_and_true(finished):
     """Codes of the map and of the truth where the map has a class."""
     with (
         rasterio.open(finished / "outputs" / "map" / "cover.tif") as cover,
-        rasterio.open(SAMPLE / "truth.tif") as truth,
+        rasterio.open(golden.SAMPLE / "truth.tif") as truth,
     ):
         codes, true = cover.read(1), truth.read(1)
     return codes[codes > 0], true[codes > 0]
@@ -104,3 +96,21 @@ def test_the_report_is_one_file_that_names_its_evidence(finished):
     assert not re.search(r"""(?:src|href)\s*=\s*["']?(?:https?:)?//""", page)
     assert "screening accuracy" in page.casefold()
     assert "Sorrel Basin Water Board" in page
+
+
+def test_results_have_not_drifted(finished):
+    found = golden.drift(read_json(golden.FILE), golden.results(finished), golden.versions())
+    assert not found, "\n".join([*found, "If this is meant: python tests/golden.py --reason '...'"])
+
+
+def test_drift_is_seen_strictly_with_the_same_versions_and_loosely_with_others():
+    kept = {"versions": {"numpy": "1.0"}, "results": {"a": {"b": 0.5, "c": 1000}, "sound": True}}
+
+    def drifted(b=0.5, c=1000, sound=True, **versions):
+        return len(golden.drift(kept, {"a": {"b": b, "c": c}, "sound": sound}, versions or kept["versions"]))
+
+    assert drifted() == drifted(numpy="2.0") == 0
+    assert drifted(b=0.5000001) == drifted(c=1001) == drifted(sound=False) == 1
+    assert drifted(b=0.51, c=1040, numpy="2.0") == 0
+    assert drifted(b=0.53, c=1060, sound=False, numpy="2.0") == 3
+    assert len(golden.drift(kept, {"a": {"b": 0.5}}, {})) == 1
