@@ -264,6 +264,20 @@ def test_a_file_of_another_format_is_refused_whatever_its_name(tmp_path: Path) -
             open_raster(str(tmp_path / name))
 
 
+def test_one_format_is_never_read_as_another(tmp_path: Path) -> None:
+    """A picture or a document of tiles with a header beside it is what the header says: numbers, and nothing else."""
+    header = (
+        "ENVI\nsamples = 3\nlines = 3\nbands = 1\nheader offset = 0\ndata type = 1\ninterleave = bsq\nbyte order = 0\n"
+    )
+    with rasterio.open(tmp_path / "a.png", "w", driver="PNG", count=1, dtype="uint8", height=9, width=9) as target:
+        target.write(np.ones((1, 9, 9), np.uint8))
+    (tmp_path / "b.dat").write_text("<GDAL_WMS><ServerUrl>http://127.0.0.1:1/</ServerUrl></GDAL_WMS>")
+    for name in ("a.png", "b.dat"):
+        (tmp_path / name).with_suffix(".hdr").write_text(header)
+        with open_raster(str(tmp_path / name)) as dataset:
+            assert dataset.driver == "ENVI" and dataset.shape == (3, 3)
+
+
 @pytest.mark.parametrize("driver", ["GTiff", "HFA", "ENVI", "EHdr", "JP2OpenJPEG"])
 def test_formats_that_are_read(tmp_path: Path, driver: str) -> None:
     path = raster(tmp_path / "some.bin", driver=driver, **({"REVERSIBLE": "YES"} if driver.startswith("JP2") else {}))
