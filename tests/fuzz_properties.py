@@ -344,13 +344,13 @@ class Property:
 
 
 PROPERTIES = {
-    "project files": Property(EDITS, project_file, 40),
-    "tables": Property(sample_tables(), tables, 60),
+    "project files": Property(EDITS, project_file, 25),
+    "tables": Property(sample_tables(), tables, 40),
     "formulas": Property(FORMULAS, formula, 150),
-    "vector layers": Property(layers(), vector, 40),
-    "damaged files": Property(BYTES, binary_file, 15),
-    "journals": Property(JOURNALS, journal_file, 20),
-    "designs": Property(CHANGES, design_file, 30),
-    "model cards": Property(CHANGES, model_card, 40),
-    "results": Property(st.tuples(st.sampled_from(RESULTS), CHANGES), result_files, 40),
+    "vector layers": Property(layers(), vector, 20),
+    "damaged files": Property(BYTES, binary_file, 8),
+    "journals": Property(JOURNALS, journal_file, 8),
+    "designs": Property(CHANGES, design_file, 15),
+    "model cards": Property(CHANGES, model_card, 20),
+    "results": Property(st.tuples(st.sampled_from(RESULTS), CHANGES), result_files, 15),
 }
