@@ -9,7 +9,6 @@ from __future__ import annotations
 
 import threading
 from collections.abc import Iterator, Sequence
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -29,6 +28,7 @@ from classify.errors import DataError
 from classify.progress import SILENT, Progress
 from classify.raster.grid import Grid, Window
 from classify.raster.sources import open_raster
+from classify.threads import stoppable_pool
 
 # Rows at a time, which hold whole tiles of a map; and pixels at a time, of all threads together.
 _ROWS_PX, _PX = 1024, 24 << 20
@@ -136,7 +136,7 @@ def scan(
     try:
         # GDAL would fill a share of the machine's memory with blocks that are never read again.
         cache = rasterio.Env(GDAL_CACHEMAX=_CACHE_BYTES)
-        with cache, progress.task("reading the map", len(windows)) as task, ThreadPoolExecutor(jobs) as pool:
+        with cache, progress.task("reading the map", len(windows)) as task, stoppable_pool(jobs) as pool:
             # A new thread would cost more than a small map.
             for _ in (map if jobs == 1 else pool.map)(work, enumerate(windows)):
                 pass

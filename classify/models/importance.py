@@ -8,7 +8,6 @@ groups are scrambled together, and dropped together, to show that.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from typing import Any
 
@@ -19,6 +18,7 @@ from classify.features.recipe import Recipe
 from classify.models.folds import group_folds
 from classify.models.validate import Maker, ScreenOptions, balanced_by_fold, fit_side, scores_in_order
 from classify.progress import SILENT, Progress
+from classify.threads import stoppable_pool
 from classify.training.dataset import TrainingSet
 
 _ROUNDS = 3
@@ -112,7 +112,7 @@ def measure_importance(
     trial = _Trial(training, make, options)
     droppable = [group for group, members in groups.items() if len(members) < len(names)]
     total = len(held) * (1 + len(droppable))
-    with progress.task("What drives the model", total) as task, ThreadPoolExecutor(options.jobs) as pool:
+    with progress.task("What drives the model", total) as task, stoppable_pool(options.jobs) as pool:
 
         def scramble(number: int) -> tuple[float, NDArray[np.float64]]:
             result = trial.losses(held[number], columns, number)

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from typing import Any
 
@@ -13,6 +12,7 @@ from classify.models.folds import group_folds
 from classify.models.kinds import scorer, without_workers
 from classify.models.validate import Maker, ScreenOptions
 from classify.progress import SILENT, Progress
+from classify.threads import stoppable_pool
 from classify.training.dataset import TrainingSet
 from classify.training.draws import even_draw
 
@@ -84,7 +84,7 @@ def learning_curve(
     classes = training.class_codes
     polygons = np.zeros((len(SHARES), options.repeats, len(classes)))
     right = np.full((len(SHARES), options.repeats, len(classes)), np.nan)
-    with progress.task("Learning curve over polygons", len(tasks)) as task, ThreadPoolExecutor(options.jobs) as pool:
+    with progress.task("Learning curve over polygons", len(tasks)) as task, stoppable_pool(options.jobs) as pool:
 
         def run(job: tuple[int, int]) -> None:
             repeat, s = job

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Literal
@@ -20,6 +19,7 @@ from classify.progress import SILENT, Progress
 from classify.settings import configs_folder
 from classify.settings.model import ModelKind
 from classify.settings.presets import read_toml
+from classify.threads import stoppable_pool
 from classify.training.dataset import TrainingSet
 
 # Enough to rank settings; the chosen ones are then screened and fitted in full.
@@ -132,7 +132,7 @@ def choose(
     folds = group_folds(training.codes, groups, options.folds, options.seed)
     results = np.full((len(wanted), folds.count), np.nan)
     tasks = [(c, f) for c in range(len(wanted)) for f in range(folds.count)]
-    with progress.task("Tuning with polygons kept whole", len(tasks)) as task, ThreadPoolExecutor(options.jobs) as pool:
+    with progress.task("Tuning with polygons kept whole", len(tasks)) as task, stoppable_pool(options.jobs) as pool:
 
         def run(job: tuple[int, int]) -> None:
             results[job] = _one(training, wanted[job[0]], folds.held_out(job[1]), options)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from typing import Any
 
@@ -15,6 +14,7 @@ from classify.models.folds import Folds, group_folds
 from classify.models.kinds import kind_of, scorer, without_workers
 from classify.models.screening import Screening
 from classify.progress import SILENT, Progress
+from classify.threads import stoppable_pool
 from classify.training.dataset import TrainingSet
 from classify.training.draws import even_draw
 
@@ -82,7 +82,7 @@ def held_out_scores(
     tasks = [
         (result, folds, number) for result, folds in zip(results, rounds, strict=True) for number in range(folds.count)
     ]
-    with progress.task("Screening on held-out polygons", len(tasks)) as task, ThreadPoolExecutor(options.jobs) as pool:
+    with progress.task("Screening on held-out polygons", len(tasks)) as task, stoppable_pool(options.jobs) as pool:
 
         def run(job: tuple[NDArray[np.float64], Folds, int]) -> None:
             result, folds, number = job

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import threading
 from collections.abc import Iterator
-from concurrent.futures import ThreadPoolExecutor
 from contextlib import ExitStack
 from dataclasses import dataclass, replace
 
@@ -19,6 +18,7 @@ from classify.progress import SILENT, Progress
 from classify.raster.grid import Window
 from classify.raster.reader import Scene, SceneReader
 from classify.settings import Project
+from classify.threads import stoppable_pool
 from classify.training.dataset import TrainingSet
 from classify.training.draws import even_draw
 from classify.training.polygons import PolygonSet, polygon_list
@@ -170,7 +170,7 @@ def _read_features(
             features[chosen], reflectance[chosen] = _read_block(row, col, scene, local.reader, recipe)
             task.advance()
 
-        with ThreadPoolExecutor(max_workers=max(jobs, 1)) as pool:
+        with stoppable_pool(max(jobs, 1)) as pool:
             list(pool.map(read, groups))
     return features, reflectance
 
