@@ -118,3 +118,12 @@ def test_a_local_crs_is_refused():
     local = CRS.from_wkt('LOCAL_CS["mine",UNIT["metre",1],AXIS["x",EAST],AXIS["y",NORTH]]')
     with pytest.raises(DataError, match="local"):
         ground_areas_m2(Grid(local, Affine(1, 0, 0, 0, -1, 0), 5, 5), Window(0, 0, 1, 1))
+
+
+def test_a_point_that_is_nowhere_is_outside_the_grid():
+    grid = Grid(CRS.from_epsg(32633), Affine(10, 0, 500_000, 0, -10, 4_200_000), 5, 5)
+    x, y = np.array([500_015, np.inf, np.nan, 500_015]), np.array([4_199_985, 4_199_985, 0, -np.inf])
+    rows, cols = grid.rowcol(x, y)
+    assert rows.tolist() == [1, -1, -1, -1]
+    assert cols.tolist() == [1, -1, -1, -1]
+    assert grid.contains(rows, cols).tolist() == [True, False, False, False]

@@ -94,12 +94,18 @@ class Grid:
                 yield Window(row, col, min(size_px, self.height - row), min(size_px, self.width - col))
 
     def rowcol(self, x: NDArray[np.float64], y: NDArray[np.float64]) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-        """Row and column (int64, shape (n,)) of the pixel that holds each point; may lie outside the grid."""
+        """Row and column (int64, shape (n,)) of the pixel that holds each point; may lie outside the grid, and are -1
+        for a point that is nowhere (infinite or NaN, as places that a CRS does not know become)."""
         inverse = ~self.transform
         x, y = np.asarray(x, dtype=np.float64), np.asarray(y, dtype=np.float64)
+        somewhere = np.isfinite(x) & np.isfinite(y)
+        x, y = np.where(somewhere, x, 0), np.where(somewhere, y, 0)
         cols = inverse.a * x + inverse.b * y + inverse.c
         rows = inverse.d * x + inverse.e * y + inverse.f
-        return np.floor(rows).astype(np.int64), np.floor(cols).astype(np.int64)
+        return (
+            np.where(somewhere, np.floor(rows), -1).astype(np.int64),
+            np.where(somewhere, np.floor(cols), -1).astype(np.int64),
+        )
 
     def xy(self, rows: NDArray[np.int64], cols: NDArray[np.int64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """CRS coordinates (float64, shape (n,)) of pixel centres."""
