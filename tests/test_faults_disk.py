@@ -35,6 +35,7 @@ def litter(folder: Path) -> list[Path]:
     return [p for p in folder.rglob("*") if TEMPORARY_SUFFIX in p.name or p.name == LOCK_FILE]
 
 
+@pytest.mark.usefixtures("finished_project")  # with which kernels are compiled and kept, once
 def test_no_file_may_grow_any_more_in_any_stage_and_the_next_run_goes_on(tmp_path):
     """RLIMIT_FSIZE makes writing fail as on a full disk, within a file; the limit rises until the run succeeds."""
     folder = make_small_project(tmp_path / "p", project=PROJECT.replace("trees = 30", "trees = 4"))
