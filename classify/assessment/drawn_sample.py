@@ -28,6 +28,7 @@ from classify.errors import DataError, OutputError, Problem, SampleError, raise_
 from classify.files import replacing, sha256, write_bytes, write_text
 from classify.raster.grid import Grid
 from classify.raster.vectors import layers_of, read_places
+from classify.raster.written import check_layer
 from classify.shapes import Design, read_shaped
 from classify.tables import csv_text
 from classify.together import finish_replacing, is_unfinished, replacing_together
@@ -182,6 +183,7 @@ def write_first(folder: Path, design: Mapping[str, Any], grid: Grid) -> DrawnSam
     with replacing_together(folder) as staged:
         with replacing(staged / "points.gpkg", RuntimeError) as temporary:  # which every error of pyogrio is
             points.to_file(temporary, layer="points", driver="GPKG")
+            check_layer(temporary, "points", len(points))
         return _with_files(staged, DrawnSample(design, points), points)
 
 
