@@ -67,9 +67,6 @@ def same_bytes(a: np.ndarray, b: np.ndarray) -> bool:
     return a.dtype == b.dtype and a.shape == b.shape and np.array_equal(a, b, equal_nan=True)
 
 
-# --- values ---------------------------------------------------------------------------------------------------------
-
-
 def test_scale_offset_and_no_data_by_band_scene_file_and_preset(tmp_path):
     stored = np.array([[0, 1000, 2000], [3000, 4000, 65535]], dtype=np.uint16)
     write(tmp_path / "plain.tif", stored)
