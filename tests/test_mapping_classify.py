@@ -9,7 +9,7 @@ import resource
 import signal
 import sys
 import time
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import replace
 
 import geopandas as gpd
@@ -331,15 +331,21 @@ def test_ctrl_c_ends_soon_and_keeps_what_is_done(made, tmp_path, block_px, store
         time.sleep(len(pixels) / 800)
         return slow(pixels)
 
+    def interrupted():
+        # Without what a process made by forking this one does at its end, which takes as long as this one is large.
+        with suppress(KeyboardInterrupt):
+            map_into(tmp_path, replace(OPTIONS, block_px=block_px, jobs=2))
+            os._exit(0)
+        os._exit(1)
+
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(blocks, "_ROWS", 200)
         patch.setattr(type(model), "predict_both", lambda self, pixels: predict_both(pixels))
-        process = multiprocessing.get_context("fork").Process(
-            target=map_into, args=(tmp_path, replace(OPTIONS, block_px=block_px, jobs=2)), daemon=True
-        )
+        process = multiprocessing.get_context("fork").Process(target=interrupted, daemon=True)
         process.start()
         journal = tmp_path / FOLDER / "journal.jsonl"
         while not (journal.exists() and journal.read_bytes().count(b"\n") > stored):
+            assert process.is_alive()
             time.sleep(0.01)
         time.sleep(0.5)
         start = time.monotonic()

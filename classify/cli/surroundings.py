@@ -52,6 +52,9 @@ class Stopping:
         if self._begun:
             self._leave()
         self._begun = True
+        # An interrupt that falls into a library's callback ends there, with a traceback of no use to anyone; the time
+        # that closing may take then ends the process.
+        sys.unraisablehook = lambda _: None
         # Not a Thread of the library above, which takes a lock that the interrupted code may hold.
         _thread.start_new_thread(self._leave, (_CLOSING_S,))
         raise KeyboardInterrupt
