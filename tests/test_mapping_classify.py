@@ -332,7 +332,8 @@ def test_ctrl_c_ends_soon_and_keeps_what_is_done(made, tmp_path, block_px, store
         return slow(pixels)
 
     def interrupted():
-        # Without what a process made by forking this one does at its end, which takes as long as this one is large.
+        # Whoever runs the tests in the background has Ctrl-C ignored in all that is begun from here.
+        signal.signal(signal.SIGINT, signal.default_int_handler)
         with suppress(KeyboardInterrupt):
             map_into(tmp_path, replace(OPTIONS, block_px=block_px, jobs=2))
             os._exit(0)
