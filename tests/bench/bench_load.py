@@ -6,11 +6,7 @@ of a quarter of the polygons and points; 4 is proportional.
 
 from __future__ import annotations
 
-import os
-import subprocess
-import sys
 import tempfile
-import time
 from itertools import combinations
 from pathlib import Path
 
@@ -19,6 +15,7 @@ import numpy as np
 import rasterio
 import shapely
 from affine import Affine
+from bench_memory import run
 
 ROLES = ("blue", "green", "red", "red_edge_1", "red_edge_2", "red_edge_3", "nir", "nir_narrow", "swir_1", "swir_2")
 CLASSES, FEATURES, SIDE_PX, PATCH_PX, PIXEL_M = 40, 200, 2000, 20, 10.0
@@ -75,27 +72,13 @@ def label_points(folder: Path) -> None:
         project.write(f'[reference]\npoints = "points.gpkg"\nlabel = "observed"\ndesign = "{design}"\n')
 
 
-def timed(folder: Path, command: str) -> tuple[float, float]:
-    """Seconds and peak MiB of one command."""
-    start = time.perf_counter()
-    child = subprocess.Popen(
-        [sys.executable, "-m", "classify", *command.split(), "--project", str(folder), "--quiet"],
-        stdout=subprocess.DEVNULL,
-    )
-    _, status, usage = os.wait4(child.pid, 0)
-    child.returncode = os.waitstatus_to_exitcode(status)
-    if child.returncode:
-        raise RuntimeError(f"landassay {command} failed")
-    return time.perf_counter() - start, usage.ru_maxrss / 1024
-
-
 def chain(polygons: int, points: int, trees: int) -> dict[str, tuple[float, float]]:
     found = {}
     with tempfile.TemporaryDirectory() as place:
         folder = Path(place)
         make(folder, polygons, trees)
         for stage in STAGES:
-            found[stage] = timed(folder, f"draw --points {points}" if stage == "draw" else stage)
+            found[stage] = run(folder, *(f"draw --points {points}" if stage == "draw" else stage).split())
             if stage == "draw":
                 label_points(folder)
     return found
